@@ -1,0 +1,1 @@
+"""From terrain to design flood hydrographs for ungauged outlets."""

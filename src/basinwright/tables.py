@@ -1,0 +1,393 @@
+"""The schema of every table that crosses a wall: column, type, unit, meaning.
+
+Columns are written here once, in the units used inside; the CSV files, the GeoPackage layers, ``tables.json`` and
+the documentation derive from it. In a project with ``units = "us"`` the columns of a changing quantity take the US
+suffix and unit; `Table.fields` does the naming.
+"""
+
+from __future__ import annotations
+
+import csv
+from collections.abc import Iterable, Iterator, Mapping, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, Literal
+
+from basinwright.units import SHOWN, System
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+Type = Literal["text", "number", "integer", "boolean"]
+
+
+@dataclass(frozen=True)
+class Column:
+    """One column of a table.
+
+    Parameters
+    ----------
+    stem : str
+        Its name; without the unit where the quantity changes with the unit system. ``{T}`` stands for the return
+        period: the column is repeated for each.
+    type : {"text", "number", "integer", "boolean"}
+        What its cells hold.
+    meaning : str
+        What it is, as the documentation says it.
+    quantity : str
+        A key of `basinwright.units.SHOWN`, or empty where the unit is fixed.
+    unit : str
+        The fixed unit (``h``, ``%``, ``1``), or empty.
+    editable : bool
+        Whether a person may change it before `retime`.
+    optional : bool
+        Whether it appears only where the project asks for it.
+    choices : tuple of str
+        The closed list of its values, if any.
+    """
+
+    stem: str
+    type: Type
+    meaning: str
+    quantity: str = ""
+    unit: str = ""
+    editable: bool = False
+    optional: bool = False
+    choices: tuple[str, ...] = ()
+
+    @property
+    def per_return_period(self) -> bool:
+        """Whether the column is repeated for every return period."""
+        return "{T}" in self.stem
+
+    def name(self, system: System = "si", period: str = "") -> str:
+        """Return the column's name in a unit system."""
+        stem = self.stem.replace("{T}", period)
+        return f"{stem}_{SHOWN[self.quantity].suffix(system)}" if self.quantity else stem
+
+    def unit_in(self, system: System = "si") -> str:
+        """Return the column's unit in a unit system; empty where it has none."""
+        return SHOWN[self.quantity].unit(system) if self.quantity else self.unit
+
+    def inside_per_shown(self, system: System) -> float:
+        """Return the factor from the number in the table to the one used inside."""
+        return SHOWN[self.quantity].inside_per_shown(system) if self.quantity else 1.0
+
+
+@dataclass(frozen=True)
+class Field:
+    """A column as it stands in a file: its name there, its schema, and the return period it is for."""
+
+    name: str
+    inside: str
+    column: Column
+    factor: float
+
+
+@dataclass(frozen=True)
+class Table:
+    """One table.
+
+    Parameters
+    ----------
+    name : str
+        File name without its ending.
+    meaning : str
+        What a row is.
+    key : tuple of str
+        Stems of the columns that identify a row.
+    columns : tuple of Column
+        In order.
+    """
+
+    name: str
+    meaning: str
+    key: tuple[str, ...]
+    columns: tuple[Column, ...]
+
+    def fields(
+        self, system: System = "si", periods: Sequence[str] = (), optional: Iterable[str] = ()
+    ) -> list[Field]:
+        """List the columns as they stand in a file.
+
+        Parameters
+        ----------
+        system : {"us", "si"}
+            Unit system of the project.
+        periods : sequence of str
+            Return periods as written in the project.
+        optional : iterable of str
+            Stems of the optional columns that are present.
+
+        Returns
+        -------
+        list of Field
+            In order; the columns per return period stand together, period by period.
+        """
+        present = set(optional)
+        listed: list[Field] = []
+        repeated = [column for column in self.columns if column.per_return_period]
+        for column in self.columns:
+            if column.per_return_period:
+                if column is repeated[0]:
+                    listed += [_field(entry, system, period) for period in periods for entry in repeated]
+            elif not column.optional or column.stem in present:
+                listed.append(_field(column, system, ""))
+        return listed
+
+    def column(self, stem: str) -> Column:
+        """Return a column by its stem."""
+        return next(column for column in self.columns if column.stem == stem)
+
+
+def _field(column: Column, system: System, period: str) -> Field:
+    return Field(column.name(system, period), column.name("si", period), column, column.inside_per_shown(system))
+
+
+# Short constructors keep the schema below readable as a table.
+def _text(stem: str, meaning: str, **more: Any) -> Column:
+    return Column(stem, "text", meaning, **more)
+
+
+def _count(stem: str, meaning: str, **more: Any) -> Column:
+    return Column(stem, "integer", meaning, **more)
+
+
+def _yes(stem: str, meaning: str, **more: Any) -> Column:
+    return Column(stem, "boolean", meaning, **more)
+
+
+def _number(stem: str, meaning: str, unit: str = "", **more: Any) -> Column:
+    return Column(stem, "number", meaning, unit=unit, **more)
+
+
+def _shown(stem: str, quantity: str, meaning: str, **more: Any) -> Column:
+    return Column(stem, "number", meaning, quantity=quantity, **more)
+
+
+_ID = _text("outlet_id", "identifier of the outlet, as text")
+
+REGIMES = ("sheet", "shallow", "channel", "open_water")
+
+OUTLETS = Table(
+    "outlets",
+    "one outlet: where it is, its basin, its times and its peaks",
+    ("outlet_id",),
+    (
+        _ID,
+        _text("name", "name from the outlet layer"),
+        _text("status", "ok: no flag; flagged; failed: not computed", choices=("ok", "flagged", "failed")),
+        _text("flags", "flags raised, separated by spaces; flags.csv says why"),
+        _number("x", "easting or longitude of the outlet's cell in the working CRS", "CRS unit"),
+        _number("y", "northing or latitude of the outlet's cell in the working CRS", "CRS unit"),
+        _number("longitude", "longitude of the outlet's cell, WGS 84", "degree"),
+        _number("latitude", "latitude of the outlet's cell, WGS 84", "degree"),
+        _shown("snap", "length", "how far the point was moved onto its flow line"),
+        _text("downstream_outlet_id", "the next outlet downstream in this run"),
+        _shown("area", "area", "drainage area", editable=True),
+        _shown("centroid_length", "length", "length along the longest flow path from the outlet to the point nearest the basin's centroid"),
+        _shown("path_length", "length", "length of the longest flow path, divide to outlet", editable=True),
+        _shown("path_length_raw", "length", "the same before any correction of the grid's staircase"),
+        _shown("sheet_length", "length", "length of the path in sheet flow"),
+        _shown("shallow_length", "length", "length of the path in shallow concentrated flow"),
+        _shown("channel_length", "length", "length of the path in channels and open water"),
+        _shown("relief", "length", "highest minus lowest elevation of the basin, unconditioned terrain"),
+        _number("basin_slope_pct", "mean land slope (Horn 1981), unconditioned terrain", "%", editable=True),
+        _number("path_slope_pct", "fall of the longest flow path over its length", "%"),
+        _number("path_slope_1085_pct", "slope between 10 and 85 % of the path's length from the outlet", "%"),
+        _number("curve_number", "area-weighted mean curve number, class II, ratio 0.2", "1", editable=True),
+        _number("curve_number_used", "curve number that gives the runoff actually used, class and ratio applied", "1"),
+        _number("impervious_pct", "impervious share of the basin", "%"),
+        _number("open_water_pct", "open-water share of the basin", "%"),
+        _number("tc_h", "adopted time of concentration", "h", editable=True),
+        _number("tc_bankfull_h", "travel time along the path, channels at bankfull stage", "h"),
+        _number("tc_half_bankfull_h", "the same at half the bankfull depth", "h"),
+        _number("lag_h", "basin lag, 0.6 of the time of concentration (NEH 630 ch. 15 eq. 15-3)", "h"),
+        _number("unit_duration_h", "duration of the unit hydrograph's excess rain", "h"),
+        _number("time_to_peak_h", "time to peak of the unit hydrograph", "h"),
+        _shown("unit_peak", "unit_flow", "peak of the unit hydrograph"),
+        _shown("depth_{T}yr", "depth", "storm depth"),
+        _shown("runoff_{T}yr", "depth", "storm runoff"),
+        _shown("peak_{T}yr", "flow", "peak flow"),
+        _number("peak_time_{T}yr_h", "time of the peak from the storm's start", "h"),
+        _shown("capacity", "flow", "capacity as supplied", optional=True),
+        _text("exceeded_at_yr", "smallest tested return period whose peak exceeds the capacity; empty: none; unknown: no verdict", optional=True),
+    ),
+)  # fmt: skip
+
+SEGMENTS = Table(
+    "segments",
+    "one piece of the longest flow path in one flow regime, in downstream order",
+    ("outlet_id", "segment"),
+    (
+        _ID,
+        _count("segment", "number of the segment within its outlet"),
+        _text("regime", "flow regime", editable=True, choices=REGIMES),
+        _text("cover", "land-cover class it crosses", editable=True),
+        _shown("from", "length", "distance of its top from the divide", editable=True),
+        _shown("to", "length", "distance of its bottom from the divide", editable=True),
+        _shown("top_elevation", "length", "elevation of its top, conditioned terrain", editable=True),
+        _shown("bottom_elevation", "length", "elevation of its bottom, conditioned terrain", editable=True),
+        _number("slope", "fall over length, not under the floor", "1", editable=True),
+        _number("roughness", "sheet and channel: Manning n; shallow: velocity over root slope, ft/s or m/s", editable=True),
+        _shown("area", "area", "contributing area at its middle"),
+        _shown("bankfull_width", "length", "bankfull width"),
+        _shown("bankfull_depth", "length", "bankfull depth"),
+        _shown("hydraulic_radius", "length", "hydraulic radius at bankfull", editable=True),
+        _shown("hydraulic_radius_half", "length", "hydraulic radius at half the bankfull depth", editable=True),
+        _shown("velocity", "speed", "velocity (channel: at bankfull)"),
+        _shown("velocity_half", "speed", "velocity (channel: at half the bankfull depth)"),
+        _number("travel_time_h", "travel time (channel: at bankfull)", "h"),
+        _number("travel_time_half_h", "travel time (channel: at half the bankfull depth)", "h"),
+        _text("basis", "where the numbers of this row come from"),
+        _yes("edited", "whether a person changed the row"),
+        _text("note", "a person's note", editable=True),
+    ),
+)  # fmt: skip
+
+COVER_SHARES = Table(
+    "cover_shares",
+    "the curve-number worksheet: one land-cover class on one soil group in one basin",
+    ("outlet_id", "cover", "soil_group"),
+    (
+        _ID,
+        _text("cover", "land-cover class", editable=True),
+        _text("soil_group", "hydrologic soil group", editable=True),
+        _shown("area", "area", "area of the patch", editable=True),
+        _number("curve_number", "curve number, class II, ratio 0.2", "1", editable=True),
+        _number("impervious_pct", "impervious share of the patch", "%", editable=True),
+        _text("source", "where the curve number was published", editable=True),
+    ),
+)
+
+TIMING = Table(
+    "timing",
+    "one timing method for one outlet",
+    ("outlet_id", "method"),
+    (
+        _ID,
+        _text("method", "key of the method"),
+        _number("tc_h", "time of concentration by this method", "h"),
+        _yes("adopted", "whether the hydrographs use it"),
+        _yes("applicable", "whether the basin lies inside the method's published range"),
+        _text("reason", "why it is not applicable or not computed"),
+        _text("source", "where the method was published"),
+    ),
+)
+
+UNIT_HYDROGRAPHS = Table(
+    "unit_hydrographs",
+    "one ordinate of an outlet's unit hydrograph",
+    ("outlet_id", "time_h"),
+    (_ID, _number("time_h", "time from the start of the excess rain", "h"), _shown("flow", "unit_flow", "flow per unit of excess")),
+)  # fmt: skip
+
+HYDROGRAPHS = Table(
+    "hydrographs",
+    "one time step of one design flood",
+    ("outlet_id", "return_period_yr", "time_h"),
+    (
+        _ID,
+        _number("return_period_yr", "return period of the storm", "yr"),
+        _number("time_h", "time from the storm's start", "h"),
+        _shown("rain", "depth", "rain in the step that ends at this time"),
+        _shown("excess", "depth", "excess rain in the step that ends at this time"),
+        _shown("flow", "flow", "flow at this time"),
+    ),
+)
+
+FLAGS_TABLE = Table(
+    "flags",
+    "one doubt about one outlet",
+    (),
+    (
+        _ID,
+        _text("flag", "kind of doubt"),
+        _text("severity", "how much it weighs", choices=("note", "warning", "serious")),
+        _text("message", "the case in words"),
+    ),
+)
+
+ALL: tuple[Table, ...] = (OUTLETS, SEGMENTS, COVER_SHARES, TIMING, UNIT_HYDROGRAPHS, HYDROGRAPHS, FLAGS_TABLE)
+"""Every table a run can write."""
+
+
+def cell_text(value: Any) -> str:
+    """Return a value as its CSV cell: floats read back exactly, ``true``/``false``, empty where missing."""
+    if value is None or value != value:  # NaN and NaT differ from themselves
+        return ""
+    if isinstance(value, bool) or type(value).__name__ == "bool_":
+        return "true" if value else "false"
+    if isinstance(value, float):
+        return repr(float(value))
+    return str(value)
+
+
+def write_csv(path: Path, names: Sequence[str], rows: Iterable[Sequence[Any]]) -> None:
+    """Write a CSV file by RFC 4180 (UTF-8, CRLF, one header row).
+
+    Parameters
+    ----------
+    path : Path
+        File to write.
+    names : sequence of str
+        Header.
+    rows : iterable of sequences
+        Values; see `cell_text`.
+    """
+    with path.open("w", encoding="utf-8", newline="") as stream:
+        writer = csv.writer(stream, lineterminator="\r\n")
+        writer.writerow(names)
+        writer.writerows([cell_text(value) for value in row] for row in rows)
+
+
+def read_csv(path: Path) -> pd.DataFrame:
+    """Read a CSV file with every cell as the text that stands there.
+
+    Parameters
+    ----------
+    path : Path
+        File to read; a byte-order mark is tolerated.
+
+    Returns
+    -------
+    pandas.DataFrame
+        All columns of dtype object, empty cells as ``""``.
+    """
+    import pandas as pd
+
+    return pd.read_csv(path, dtype=str, keep_default_na=False, na_filter=False, encoding="utf-8-sig")
+
+
+def frictionless_schema(fields: Sequence[Field], system: System, key: Sequence[str]) -> dict[str, Any]:
+    """Return the Frictionless Table Schema of a table.
+
+    Parameters
+    ----------
+    fields : sequence of Field
+        As `Table.fields` lists them.
+    system : {"us", "si"}
+        Unit system of the project.
+    key : sequence of str
+        Stems of the primary key; empty for none.
+    """
+    kinds = {"text": "string", "number": "number", "integer": "integer", "boolean": "boolean"}
+
+    def entries() -> Iterator[Mapping[str, Any]]:
+        for field in fields:
+            entry: dict[str, Any] = {
+                "name": field.name,
+                "type": kinds[field.column.type],
+                "description": field.column.meaning,
+            }
+            if unit := field.column.unit_in(system):
+                entry["unit"] = unit
+            if field.column.choices:
+                entry["constraints"] = {"enum": list(field.column.choices)}
+            yield entry
+
+    schema: dict[str, Any] = {"fields": list(entries()), "missingValues": [""]}
+    if key:
+        by_stem = {field.column.stem: field.name for field in fields}
+        schema["primaryKey"] = [by_stem[stem] for stem in key]
+    return schema
