@@ -1,0 +1,57 @@
+"""Flow directions as they are written: azimuths in degrees clockwise from grid north."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from basinwright.errors import TerrainError
+from basinwright.kernels import VOID
+
+AZIMUTH_EXIT = 65534
+"""Water leaves the raster here."""
+AZIMUTH_NODATA = 65535
+
+_AZIMUTHS = np.array([0, 45, 90, 135, 180, 225, 270, 315, AZIMUTH_EXIT, AZIMUTH_NODATA], np.uint16)
+
+
+def to_azimuth(directions: np.ndarray) -> np.ndarray:
+    """Azimuths of direction codes.
+
+    Parameters
+    ----------
+    directions : uint8 array, any shape
+        Finished directions: 0 to 7, EXIT or VOID.
+
+    Returns
+    -------
+    uint16 array, same shape [degrees]
+        0, 45, ... 315; 65534 where water leaves; 65535 without data.
+    """
+    return _AZIMUTHS[directions]
+
+
+def from_azimuth(azimuth: np.ndarray) -> np.ndarray:
+    """Direction codes of azimuths, the inverse of `to_azimuth`.
+
+    Parameters
+    ----------
+    azimuth : uint16 array, any shape [degrees]
+
+    Returns
+    -------
+    uint8 array, same shape
+
+    Raises
+    ------
+    TerrainError
+        Where a value is none of the ten.
+    """
+    codes = np.searchsorted(_AZIMUTHS, azimuth).astype(np.uint8)
+    wrong = (codes > VOID) | (_AZIMUTHS[np.minimum(codes, VOID)] != azimuth)
+    if wrong.any():
+        value = np.asarray(azimuth)[wrong].flat[0]
+        raise TerrainError(
+            f"flow direction {value} is not an azimuth of 0, 45, ... 315 degrees, {AZIMUTH_EXIT} (exit) or "
+            f"{AZIMUTH_NODATA} (no data): recode the raster"
+        )
+    return codes

@@ -1,0 +1,234 @@
+"""Conditioning and routing of a rectangle of terrain in memory."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from basinwright.errors import TerrainError
+from basinwright.terrain.encoding import to_azimuth
+from basinwright.terrain.summable import summable_areas_m2
+
+_BLOCK_ROWS = 256
+_MOST_CELLS = 2**31 - 1
+
+
+@dataclass(frozen=True, eq=False)
+class Terrain:
+    """Filled terrain with flow directions, contributing area and order, as flat padded arrays.
+
+    Cell (row, col) has the index ``(row + 1) * (ncols + 2) + col + 1``; see `basinwright.kernels`. The
+    properties that end in ``_grid`` are views of the raster proper, shape (nrows, ncols).
+
+    Attributes
+    ----------
+    nrows, ncols : int
+    filled_m : float32 array, shape (cells,) [m]
+        Elevations without depressions; +inf in voids and in the halo.
+    directions : uint8 array, shape (cells,)
+        0 to 7 clockwise from north, EXIT or VOID.
+    area_m2 : float64 array, shape (cells,) [m2]
+        Contributing area, the cell's own included; 0 in voids.
+    order : int32 array, shape (data_cells,)
+        Cells from the divides downstream: every cell after all cells that drain into it.
+    row_area_m2 : float64 array, shape (nrows,) [m2]
+        Area of a cell of each row, rounded so that sums are exact.
+    step_um : int64 array, shape (nrows, 8) [micrometres]
+        Length of a step out of a cell, by row and direction.
+    data_cells, flat_cells, filled_cells : int
+        Cells with elevation; of these, cells without a lower neighbour after filling, and cells raised by it.
+    filled_volume_m3, deepest_fill_m : float
+        By filling.
+    largest_rounding_m : float
+        Largest change of an elevation by rounding it to float32; 0 for float32 input and for whole numbers
+        up to 2**24.
+    """
+
+    nrows: int
+    ncols: int
+    filled_m: np.ndarray
+    directions: np.ndarray
+    area_m2: np.ndarray
+    order: np.ndarray
+    row_area_m2: np.ndarray
+    step_um: np.ndarray
+    data_cells: int
+    flat_cells: int
+    filled_cells: int
+    filled_volume_m3: float
+    deepest_fill_m: float
+    largest_rounding_m: float
+
+    def grid(self, padded: np.ndarray) -> np.ndarray:
+        """View of a flat padded array as the raster proper, shape (nrows, ncols)."""
+        return padded.reshape(self.nrows + 2, self.ncols + 2)[1:-1, 1:-1]
+
+    @property
+    def filled_grid(self) -> np.ndarray:
+        """Filled elevations [m], +inf in voids."""
+        return self.grid(self.filled_m)
+
+    @property
+    def directions_grid(self) -> np.ndarray:
+        """Direction codes."""
+        return self.grid(self.directions)
+
+    @property
+    def area_grid(self) -> np.ndarray:
+        """Contributing area [m2]."""
+        return self.grid(self.area_m2)
+
+    def azimuths(self) -> np.ndarray:
+        """Directions as azimuths, uint16, shape (nrows, ncols) [degrees]; a copy."""
+        return to_azimuth(self.directions_grid)
+
+    def cells_at(self, rows: np.ndarray, cols: np.ndarray) -> np.ndarray:
+        """Padded indices, int32, of cells inside the raster."""
+        index = (np.asarray(rows, np.int64) + 1) * (self.ncols + 2) + np.asarray(cols, np.int64) + 1
+        return index.astype(np.int32)
+
+    def rows_cols(self, cells: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Rows and columns, int64, of padded indices."""
+        rows, cols = np.divmod(np.asarray(cells, np.int64), self.ncols + 2)
+        return rows - 1, cols - 1
+
+
+def step_lengths_um(dx_m: np.ndarray, dy_m: np.ndarray) -> np.ndarray:
+    """Length of a step out of a cell by row and direction, in whole micrometres so that sums are exact.
+
+    Parameters
+    ----------
+    dx_m, dy_m : arrays, shape (nrows,) [m]
+        Cell sizes. A step into a neighbouring row is measured with the sizes of the row it leaves.
+
+    Returns
+    -------
+    int64 array, shape (nrows, 8) [micrometres]
+    """
+    dx = np.asarray(dx_m, np.float64)
+    dy = np.asarray(dy_m, np.float64)
+    diagonal = np.hypot(dx, dy)
+    metres = np.stack([dy, diagonal, dx, diagonal, dy, diagonal, dx, diagonal], axis=1)
+    return np.rint(metres * 1e6).astype(np.int64)
+
+
+def condition_and_route(
+    elevation_m: np.ndarray, dx_m: np.ndarray, dy_m: np.ndarray, cell_area_m2: np.ndarray
+) -> Terrain:
+    """Fill depressions, route every cell by D8, resolve flats and sum contributing areas.
+
+    A cell at the rim or beside a void drains inward if it has a lower neighbour; else water leaves there. Every
+    cell with elevation drains to such an exit.
+
+    Parameters
+    ----------
+    elevation_m : float array, shape (nrows, ncols) [m]
+        Rows from north to south. NaN (or infinite) in voids. float64 is rounded to float32, by at most half a
+        millimetre below 8192 m; `Terrain.largest_rounding_m` says how much it was.
+    dx_m, dy_m : arrays, shape (nrows,) [m]
+        Cell sizes of each row, positive.
+    cell_area_m2 : array, shape (nrows,) [m2]
+        Area of a cell of each row, positive.
+
+    Returns
+    -------
+    Terrain
+
+    Raises
+    ------
+    TerrainError
+        No cell has an elevation; more than 2**31 - 1 cells; sizes that do not fit; undrained cells or a
+        cycle (never expected).
+    """
+    from basinwright.kernels import accumulate, directions, fill, flats
+
+    if elevation_m.ndim != 2 or elevation_m.size == 0:
+        raise TerrainError(f"elevations must be a raster of rows and columns, not of shape {elevation_m.shape}")
+    nrows, ncols = elevation_m.shape
+    sizes = [np.ascontiguousarray(size, np.float64) for size in (dx_m, dy_m, cell_area_m2)]
+    for name, size in zip(("dx_m", "dy_m", "cell_area_m2"), sizes, strict=True):
+        if size.shape != (nrows,) or not (np.isfinite(size) & (size > 0)).all():
+            raise TerrainError(f"{name} must hold a positive number for each of the {nrows} rows")
+    dx, dy, cell_area = sizes
+    cells = (nrows + 2) * (ncols + 2)
+    if cells > _MOST_CELLS:
+        raise TerrainError(
+            f"{nrows} x {ncols} cells are more than the {_MOST_CELLS} that can be routed at once: "
+            "cut the terrain or use larger cells"
+        )
+
+    z, largest_rounding = _pad(elevation_m)
+    code = np.empty(cells, np.uint8)
+    work = np.empty(cells, np.int32)
+    link = np.empty(cells, np.int32)
+    fill.raise_single_pits(z, nrows, ncols)
+    fill.fill_depressions(z, code, nrows, ncols, work, link)
+    directions.steepest_descent(z, nrows, ncols, dx, dy, code)
+    flat_cells = flats.resolve_flats(z, code, nrows, ncols, work, link)
+    del link
+    data_cells, undrained = accumulate.count_cells(code)
+    if data_cells == 0:
+        raise TerrainError("no cell of the terrain has an elevation: is its nodata value right?")
+    if undrained:
+        raise TerrainError(f"{undrained} of {data_cells} cells do not drain after filling")
+
+    row_area = summable_areas_m2(cell_area, ncols)
+    donors = np.empty(cells, np.uint8)
+    area = np.zeros(cells, np.float64)
+    accumulate.count_donors(code, nrows, ncols, donors)
+    visited = accumulate.contributing_area(code, nrows, ncols, row_area, donors, area, work)
+    if visited != data_cells:
+        raise TerrainError(f"{data_cells - visited} of {data_cells} cells lie on or below a cycle of directions")
+
+    filled_cells, volume, deepest = _filling(elevation_m, z, row_area)
+    return Terrain(
+        nrows=nrows,
+        ncols=ncols,
+        filled_m=z,
+        directions=code,
+        area_m2=area,
+        order=work[:visited],
+        row_area_m2=row_area,
+        step_um=step_lengths_um(dx, dy),
+        data_cells=data_cells,
+        flat_cells=flat_cells,
+        filled_cells=filled_cells,
+        filled_volume_m3=volume,
+        deepest_fill_m=deepest,
+        largest_rounding_m=largest_rounding,
+    )
+
+
+def _pad(elevation_m: np.ndarray) -> tuple[np.ndarray, float]:
+    """Elevations as a flat padded float32 array with -inf in voids and halo, and the largest rounding [m]."""
+    nrows, ncols = elevation_m.shape
+    z = np.full((nrows + 2, ncols + 2), -np.inf, np.float32)
+    largest_rounding = 0.0
+    for first in range(0, nrows, _BLOCK_ROWS):
+        given = elevation_m[first : first + _BLOCK_ROWS]
+        here = z[first + 1 : first + 1 + len(given), 1:-1]
+        with np.errstate(over="ignore"):
+            here[...] = given
+        here[~np.isfinite(here)] = -np.inf
+        if given.dtype != np.float32:
+            rounding = np.abs(here - given.astype(np.float64))
+            largest_rounding = max(largest_rounding, float(np.max(rounding, initial=0.0, where=np.isfinite(here))))
+    return z.reshape(-1), largest_rounding
+
+
+def _filling(elevation_m: np.ndarray, filled: np.ndarray, row_area_m2: np.ndarray) -> tuple[int, float, float]:
+    """Cells raised by filling, their volume [m3] and the deepest fill [m]."""
+    nrows, ncols = elevation_m.shape
+    grid = filled.reshape(nrows + 2, ncols + 2)[1:-1, 1:-1]
+    cells = 0
+    volume = 0.0
+    deepest = 0.0
+    for first in range(0, nrows, _BLOCK_ROWS):
+        block = slice(first, first + _BLOCK_ROWS)
+        given = elevation_m[block].astype(np.float32)
+        depth = np.where(np.isfinite(grid[block]), grid[block] - given, 0).astype(np.float64)
+        cells += int(np.count_nonzero(depth))
+        deepest = max(deepest, float(depth.max(initial=0.0)))
+        volume += float(depth.sum(axis=1) @ row_area_m2[block])
+    return cells, volume, deepest
