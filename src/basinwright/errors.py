@@ -35,7 +35,7 @@ class Problem:
         return ": ".join(" ".join(part.split()) for part in (self.file, self.field, self.what, self.fix))
 
 
-class InputRejected(BasinwrightError):
+class InputRejected(BasinwrightError):  # noqa: N818 - the event, as the user meets it
     """The input cannot be computed: every problem that could be known beforehand, all at once (exit 2)."""
 
     def __init__(self, problems: Iterable[Problem]) -> None:

@@ -105,9 +105,7 @@ class Table:
     key: tuple[str, ...]
     columns: tuple[Column, ...]
 
-    def fields(
-        self, system: System = "si", periods: Sequence[str] = (), optional: Iterable[str] = ()
-    ) -> list[Field]:
+    def fields(self, system: System = "si", periods: Sequence[str] = (), optional: Iterable[str] = ()) -> list[Field]:
         """List the columns as they stand in a file.
 
         Parameters

@@ -49,8 +49,25 @@ UNITS: dict[str, tuple[str, float]] = {
     "%": ("share", 0.01),
 }
 
-INSIDE = {"length": "m", "area": "km2", "depth": "mm", "time": "h", "speed": "m/s", "flow": "m3/s", "share": "1"}
+INSIDE = {
+    "length": "m",
+    "area": "km2",
+    "depth": "mm",
+    "time": "h",
+    "speed": "m/s",
+    "flow": "m3/s",
+    "share": "1",
+}
 """The unit used inside, by dimension."""
+
+
+class QuantityError(ValueError):
+    """A quantity that cannot be read: what is wrong with it, and how to mend it."""
+
+    def __init__(self, what: str, fix: str) -> None:
+        self.what, self.fix = what, fix
+        super().__init__(f"{what}: {fix}")
+
 
 _QUANTITY = re.compile(r"\s*([+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?)\s*([^\s\d].*?)?\s*")
 
@@ -77,32 +94,31 @@ def parse_quantity(text: object, dimension: str) -> float:
 
     Raises
     ------
-    ValueError
-        With the mend in its text: no unit, an unknown one, one of another kind, or not a finite number.
+    QuantityError
+        No unit, an unknown one, one of another kind, or not a finite number.
 
     Examples
     --------
     >>> parse_quantity("100 ft", "length")
     30.48
     """
-    choice = ", ".join(units_of(dimension))
+    known = units_of(dimension)
+    choice = f"use one of {', '.join(known)}"
     if not isinstance(text, str):
-        raise ValueError(f"{text!r} has no unit: write a string such as \"{text} {units_of(dimension)[0]}\" ({choice})")
+        raise QuantityError(f"{text!r} has no unit", f'write it as text, such as "{text} {known[0]}"; {choice}')
     match = _QUANTITY.fullmatch(text)
-    if match is None:
-        raise ValueError(f"{text!r} is not a finite number with a unit: write a number and one of {choice}")
+    if match is None or not math.isfinite(float(match.group(1))):
+        raise QuantityError(f"{text!r} is not a finite number with a unit", choice)
     number, unit = float(match.group(1)), match.group(2)
-    if not math.isfinite(number):
-        raise ValueError(f"{text!r} is not finite: write a number and one of {choice}")
     if unit is None:
-        raise ValueError(f"{text!r} has no unit: add one of {choice}")
+        raise QuantityError(f"{text!r} has no unit", choice)
     if unit not in UNITS:
         near = difflib.get_close_matches(unit, UNITS, n=1)
         hint = f" (nearest: {near[0]})" if near else ""
-        raise ValueError(f"{text!r} has the unknown unit {unit!r}{hint}: use one of {choice}")
+        raise QuantityError(f"{text!r} has the unknown unit {unit!r}{hint}", choice)
     kind, factor = UNITS[unit]
     if kind != dimension:
-        raise ValueError(f"{text!r} is of the kind {kind}, not {dimension}: use one of {choice}")
+        raise QuantityError(f"{text!r} is of the kind {kind}, not {dimension}", choice)
     return number * factor
 
 

@@ -1,0 +1,525 @@
+"""The project file: what the user wrote, validated, with every problem listed at once.
+
+The model below is the one list of options: defaults, kinds and limits are read off it by the messages, the
+manifest and the documentation. Quantities are kept in the units used inside and written back with them.
+"""
+
+from __future__ import annotations
+
+import difflib
+import itertools
+import math
+import tomllib
+import types
+import typing
+from collections.abc import Iterator
+from pathlib import Path
+from typing import Annotated, Any, Literal, Union
+
+from pydantic import (
+    AfterValidator,
+    BaseModel,
+    BeforeValidator,
+    ConfigDict,
+    Field,
+    PlainSerializer,
+    ValidationError,
+    model_validator,
+)
+from pydantic_core import ErrorDetails, PydanticCustomError
+
+from basinwright.errors import InputRejected, Problem
+from basinwright.units import INSIDE, QuantityError, parse_quantity, unit_of_suffix
+
+
+def _reject(what: str, fix: str) -> PydanticCustomError:
+    return PydanticCustomError("rejected", "{what}: {fix}", {"what": what, "fix": fix})
+
+
+def _parse(value: object, dimension: str) -> float:
+    try:
+        return parse_quantity(value, dimension)
+    except QuantityError as error:
+        raise _reject(error.what, error.fix) from None
+
+
+def _read(dimension: str, *words: str) -> BeforeValidator:
+    """Return the reader of a quantity with a unit, or of one of some words such as ``auto``."""
+
+    def read(value: object) -> float | str:
+        return value if isinstance(value, str) and value in words else _parse(value, dimension)
+
+    return BeforeValidator(read)
+
+
+def _write(dimension: str) -> PlainSerializer:
+    """Return the writer that gives a quantity its unit back."""
+
+    def write(value: float | str) -> str:
+        if isinstance(value, str):
+            return value
+        return f"{value * 100!r} %" if dimension == "share" else f"{value!r} {INSIDE[dimension]}"
+
+    return PlainSerializer(write)
+
+
+def _check_positive(value: Any) -> Any:
+    if not isinstance(value, str) and not value > 0:
+        raise _reject("is not over zero", "give a positive quantity")
+    return value
+
+
+_positive = AfterValidator(_check_positive)
+Length = Annotated[float, _read("length"), _positive, _write("length")]
+LengthOrNone = Annotated[float, _read("length"), Field(ge=0), _write("length")]
+LengthOrAuto = Annotated[float | str, _read("length", "auto"), _positive, _write("length")]
+AreaOrAuto = Annotated[float | str, _read("area", "auto"), _positive, _write("area")]
+Depth = Annotated[float, _read("depth"), _positive, _write("depth")]
+Time = Annotated[float, _read("time"), _positive, _write("time")]
+TimeOrNone = Annotated[float, _read("time"), Field(ge=0), _write("time")]
+TimeOrAuto = Annotated[float | str, _read("time", "auto"), _positive, _write("time")]
+Share = Annotated[float, _read("share"), Field(ge=0, le=1), _write("share")]
+Plain = Annotated[float, Field(allow_inf_nan=False, strict=True)]
+
+
+def _one_of(*values: float) -> AfterValidator:
+    def check(value: float) -> float:
+        if value not in values:
+            raise _reject(f"{value!r} is not one of its values", f"use {' or '.join(map(str, values))}")
+        return value
+
+    return AfterValidator(check)
+
+
+def _default(text: str) -> Any:
+    """Give an option its default as a person would write it."""
+    return Field(default=text, validate_default=True)
+
+
+class Section(BaseModel):
+    """One table of the project file: unknown keys are errors."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True)
+
+
+class ProjectSection(Section):
+    """[project]."""
+
+    name: str = "untitled"
+    units: Literal["us", "si"] = "us"
+    allow_remote: bool = False
+
+
+class Terrain(Section):
+    """[terrain]."""
+
+    dem: list[str] = Field(min_length=1)
+    vertical_unit: Literal["m", "ft", "us-ft"] | None = None
+    crs: str = "auto"
+    conditioning: Literal["fill", "breach"] = "fill"
+    breach_depth: Length = _default("5 m")
+    breach_length: Length = _default("100 m")
+    stream_lines: str | None = None
+    barriers: str | None = None
+    sinks: str | None = None
+    flow_direction: str | None = None
+    flow_direction_codes: dict[str, int | str] | None = None
+    stream_area: AreaOrAuto = _default("0.25 km2")
+    length_correction: str = "none"
+
+    @model_validator(mode="before")
+    @classmethod
+    def _one_or_many(cls, data: Any) -> Any:
+        if isinstance(data, dict) and isinstance(data.get("dem"), str):
+            return {**data, "dem": [data["dem"]]}
+        return data
+
+
+class Outlets(Section):
+    """[outlets]."""
+
+    source: str
+    layer: str | None = None
+    crs: str | None = None
+    id: str | None = None
+    name: str | None = None
+    snap_within: LengthOrAuto = "auto"
+    expected_area: str | None = None
+    capacity: str | None = None
+    capacity_basis: str | None = None
+
+
+class Cover(Section):
+    """[cover]."""
+
+    raster: str | None = None
+    vector: str | None = None
+    field: str | None = None
+    scheme: str
+    impervious: str | None = None
+    connected_fraction: Annotated[Plain, Field(ge=0, le=1)] = 1.0
+    gap_limit: Share = _default("2 %")
+
+
+Group = Literal["A", "B", "C", "D"]
+SoilCode = Literal["A", "B", "C", "D", "A/D", "B/D", "C/D"]
+
+
+class Soils(Section):
+    """[soils]."""
+
+    raster: str | None = None
+    vector: str | None = None
+    field: str | None = None
+    group: Group | None = None
+    groups: dict[str, SoilCode] = Field(
+        default={str(code): group for code, group in enumerate(typing.get_args(SoilCode), start=1)}
+    )
+    dual_groups: Literal["undrained", "drained"] = "undrained"
+    missing: Group | None = None
+
+
+class FlowPath(Section):
+    """[flow_path]."""
+
+    farthest: Literal["length", "time"] = "length"
+    sheet_limit: Length = _default("100 ft")
+    min_segment: LengthOrNone = _default("50 ft")
+    slope_floor: Annotated[Plain, Field(gt=0, lt=1)] = 0.0005
+
+
+class PowerLaw(Section):
+    """A relation of drainage area in km2 to a dimension in m."""
+
+    coefficient: Annotated[Plain, Field(gt=0)]
+    exponent: Annotated[Plain, Field(ge=0)]
+
+
+class Channel(Section):
+    """[channel]."""
+
+    roughness: Annotated[Plain, Field(gt=0)] | str = 0.045
+    bankfull_region: str = "usa"
+    bankfull_width: PowerLaw | None = None
+    bankfull_depth: PowerLaw | None = None
+    stage: Literal["bankfull", "half"] = "bankfull"
+    open_water_depth: Length = _default("2 m")
+
+
+class StormSection(Section):
+    """[storm]."""
+
+    duration: Time = _default("24 h")
+    distribution: str
+    table: str | None = None
+    ddf: str | None = None
+    depths: dict[str, Depth] = Field(default_factory=dict)
+    depth_rasters: dict[str, str] = Field(default_factory=dict)
+    depth_raster_unit: Literal["in", "mm", "cm"] = "in"
+    two_year_depth: Depth | None = None
+    areal_reduction: Literal["none", "leclerc_schaake"] = "none"
+    critical_duration: bool = False
+
+    def _two_year(self) -> float | None:
+        return next((depth for text, depth in self.depths.items() if float(text) == 2.0), None)
+
+    @property
+    def periods(self) -> list[str]:
+        """Return periods as written, in rising order."""
+        return sorted(self.depths or self.depth_rasters, key=float)
+
+    @property
+    def two_year_depth_mm(self) -> float:
+        """The 2-year 24-hour depth [mm]."""
+        depth = self.two_year_depth if self.two_year_depth is not None else self._two_year()
+        if depth is None:
+            raise ValueError("no 2-year depth: the model guarantees one")
+        return depth
+
+
+class Runoff(Section):
+    """[runoff]."""
+
+    initial_abstraction_ratio: Annotated[Plain, _one_of(0.2, 0.05)] = 0.2
+    moisture: Literal["I", "II", "III"] = "II"
+    weighting: Literal["runoff", "curve_number"] = "runoff"
+
+
+class Timing(Section):
+    """[timing]."""
+
+    adopt: str = "velocity"
+    minimum: TimeOrNone = _default("6 min")
+
+
+class UnitHydrograph(Section):
+    """[unit_hydrograph]."""
+
+    shape: str = "curvilinear"
+    peak_rate_factor: Annotated[Plain, Field(ge=100, le=600)] = 484
+    time_step: TimeOrAuto = "auto"
+    ct: Annotated[Plain, Field(gt=0)] = 2.0
+    cp: Annotated[Plain, Field(gt=0)] = 0.6
+    storage_ratio: Annotated[Plain, Field(gt=0, lt=1)] = 0.5
+
+
+class Audit(Section):
+    """[audit]."""
+
+    second_opinion: Literal["all", "sample", "none"] = "none"
+
+
+class Compute(Section):
+    """[compute]."""
+
+    jobs: Annotated[int, Field(ge=1, strict=True)] = 2
+    scheduler: str = ""
+    memory: str = "auto"
+
+
+class Project(Section):
+    """A whole project file."""
+
+    project: ProjectSection = ProjectSection()
+    terrain: Terrain
+    outlets: Outlets
+    cover: Cover
+    soils: Soils
+    flow_path: FlowPath = FlowPath()
+    channel: Channel = Channel()
+    storm: StormSection
+    runoff: Runoff = Runoff()
+    timing: Timing = Timing()
+    unit_hydrograph: UnitHydrograph = UnitHydrograph()
+    uncertainty: dict[str, Any] | None = None
+    check: dict[str, Any] | None = None
+    scenario: list[dict[str, Any]] = Field(default_factory=list)
+    audit: Audit = Audit()
+    compute: Compute = Compute()
+
+    def resolved(self) -> dict[str, Any]:
+        """Return every option with its value, quantities with units: itself the content of a project file."""
+        return self.model_dump(mode="json", exclude_none=True)
+
+
+def later(project: Project) -> Iterator[tuple[str, str]]:
+    """Yield the options that are set but not yet served by this version, with what to do instead."""
+    set_but_later = {
+        "terrain.conditioning": (project.terrain.conditioning != "fill", 'use "fill"'),
+        "terrain.stream_lines": (project.terrain.stream_lines is not None, "leave it out"),
+        "terrain.barriers": (project.terrain.barriers is not None, "leave it out"),
+        "terrain.sinks": (project.terrain.sinks is not None, "leave it out"),
+        "terrain.flow_direction": (project.terrain.flow_direction is not None, "leave it out"),
+        "terrain.stream_area": (project.terrain.stream_area == "auto", 'give an area such as "0.25 km2"'),
+        "terrain.length_correction": (project.terrain.length_correction != "none", 'use "none"'),
+        "cover.impervious": (project.cover.impervious is not None, "leave it out"),
+        "cover.connected_fraction": (project.cover.connected_fraction != 1.0, "leave it at 1.0"),
+        "cover.scheme": (project.cover.scheme == "worldcover", "give a CSV of your own"),
+        "flow_path.farthest": (project.flow_path.farthest != "length", 'use "length"'),
+        "channel.roughness": (isinstance(project.channel.roughness, str), "give Manning's n as a number"),
+        "storm.distribution": (
+            project.storm.distribution in ("balanced", "nested"),
+            'use one of the 24-hour types or "table"',
+        ),
+        "storm.ddf": (project.storm.ddf is not None, "give storm.depths"),
+        "storm.depth_rasters": (bool(project.storm.depth_rasters), "give storm.depths"),
+        "storm.areal_reduction": (project.storm.areal_reduction != "none", 'use "none"'),
+        "storm.critical_duration": (project.storm.critical_duration, "leave it false"),
+        "runoff.initial_abstraction_ratio": (project.runoff.initial_abstraction_ratio != 0.2, "use 0.2"),
+        "runoff.moisture": (project.runoff.moisture != "II", 'use "II"'),
+        "uncertainty": (project.uncertainty is not None, "leave the section out"),
+        "check": (project.check is not None, "leave the section out"),
+        "scenario": (bool(project.scenario), "leave the section out"),
+        "compute.scheduler": (project.compute.scheduler != "", "leave it empty"),
+        "compute.memory": (project.compute.memory != "auto", 'use "auto"'),
+    }
+    return ((key, fix) for key, (is_set, fix) in set_but_later.items() if is_set)
+
+
+def read_project(path: Path) -> Project:
+    """Read and validate a project file.
+
+    Parameters
+    ----------
+    path : Path
+        The TOML file.
+
+    Returns
+    -------
+    Project
+
+    Raises
+    ------
+    InputRejected
+        With every problem found in the file itself; files it names are not opened.
+    """
+    try:
+        text = path.read_text(encoding="utf-8")
+    except FileNotFoundError:
+        raise InputRejected.one(
+            str(path), "file", "does not exist", "check the path, or make one with: basinwright start DIR"
+        ) from None
+    except (OSError, UnicodeDecodeError) as error:
+        raise InputRejected.one(
+            str(path), "file", f"cannot be read ({error})", "give a readable UTF-8 TOML file"
+        ) from None
+    try:
+        data = tomllib.loads(text)
+    except tomllib.TOMLDecodeError as error:
+        raise InputRejected.one(str(path), "file", f"is not valid TOML ({error})", "mend the line it names") from None
+    return parse_project(data, path.name)
+
+
+def parse_project(data: dict[str, Any], file: str = "project") -> Project:
+    """Validate the content of a project file (see `read_project`)."""
+    problems: dict[str, Problem] = {}
+    project: Project | None = None
+    try:
+        project = Project.model_validate(data)
+    except ValidationError as error:
+        for entry in error.errors():
+            problem = _problem(entry, file)
+            problems.setdefault(problem.field, problem)
+    for field, what, fix in _conflicts(data):
+        problems.setdefault(field, Problem(file, field, what, fix))
+    if project is not None:
+        for field, fix in later(project):
+            problems.setdefault(field, Problem(file, field, "not yet in this version", fix))
+    if problems or project is None:
+        raise InputRejected(problems.values())
+    return project
+
+
+def _conflicts(data: dict[str, Any]) -> Iterator[tuple[str, str, str]]:
+    """Yield what is wrong between keys, read off the raw file so that no other problem hides it."""
+
+    def section(name: str) -> dict[str, Any]:
+        found = data.get(name)
+        return found if isinstance(found, dict) else {}
+
+    for key, dimension, example in (
+        ("expected_area", "area", "_mi2 or _km2"),
+        ("capacity", "flow", "_cfs or _m3s"),
+    ):
+        column = section("outlets").get(key)
+        if isinstance(column, str) and unit_of_suffix(column, dimension) is None:
+            yield (
+                f"outlets.{key}",
+                f"the column name {column!r} does not end in its unit",
+                f"rename it to end in {example}",
+            )
+    for name, sources in (("cover", ("raster", "vector")), ("soils", ("raster", "vector", "group"))):
+        entry = section(name)
+        given = [source for source in sources if source in entry]
+        if len(given) != 1 and name in data:
+            yield (
+                f"{name}.raster",
+                f"{' and '.join(given) or 'no source'} given",
+                f"give one of {', '.join(sources)}",
+            )
+        if "vector" in entry and "field" not in entry:
+            yield f"{name}.field", "missing", "name the column of the vector layer that holds the class"
+    channel = section("channel")
+    if channel.get("bankfull_region") == "own":
+        for key in ("bankfull_width", "bankfull_depth"):
+            if key not in channel:
+                yield (
+                    f"channel.{key}",
+                    'missing, and bankfull_region is "own"',
+                    "give { coefficient = ..., exponent = ... }",
+                )
+    shape = section("unit_hydrograph")
+    if shape.get("peak_rate_factor", 484) != 484 and shape.get("shape", "curvilinear") != "gamma":
+        yield (
+            "unit_hydrograph.peak_rate_factor",
+            "values other than 484 need another shape",
+            'set shape = "gamma"',
+        )
+    yield from _storm_conflicts(section("storm"))
+
+
+def _storm_conflicts(storm: dict[str, Any]) -> Iterator[tuple[str, str, str]]:
+    depths: dict[str, Any] = storm["depths"] if isinstance(storm.get("depths"), dict) else {}
+    if not depths and not storm.get("depth_rasters") and "ddf" not in storm:
+        yield (
+            "storm.depths",
+            "missing or empty",
+            'give the depth of each return period, such as { "10" = "4.6 in" }',
+        )
+    if storm.get("distribution") == "table" and "table" not in storm:
+        yield "storm.table", 'missing, and distribution is "table"', "name the CSV of hour and fraction"
+    years: dict[str, float] = {}
+    for text in [*depths, *(storm.get("depth_rasters") or {})]:
+        try:
+            years[text] = float(text)
+        except ValueError:
+            years[text] = math.nan
+        if not (math.isfinite(years[text]) and years[text] > 0):
+            yield f'storm.depths."{text}"', "not a return period", "write a positive number of years"
+    rising: list[tuple[float, float, str]] = []
+    for text, quantity in depths.items():
+        try:
+            rising.append((years[text], parse_quantity(quantity, "depth"), text))
+        except QuantityError:
+            continue  # the model names it
+    rising.sort()
+    for (before, shallow, a), (after, deep, b) in itertools.pairwise(rising):
+        if before == after:
+            yield f'storm.depths."{b}"', f'the same return period as "{a}"', "keep one of them"
+        elif not deep > shallow:
+            yield (
+                f'storm.depths."{b}"',
+                f"not over the depth of the {a}-year storm",
+                "depths must rise with the return period",
+            )
+    try:
+        day_long = parse_quantity(storm.get("duration", "24 h"), "time") == 24.0
+    except QuantityError:
+        day_long = True  # the model names it
+    if "two_year_depth" not in storm and not (day_long and 2.0 in years.values()):
+        yield "storm.two_year_depth", "missing", "sheet flow needs the 2-year 24-hour depth: give it"
+
+
+_TYPE_PARTS = {"float", "str", "int", "constrained-str", "constrained-float"}
+
+
+def _problem(entry: ErrorDetails, file: str) -> Problem:
+    """Turn one validation error into a line that says which key, what is wrong and how to mend it."""
+    place = [part for part in entry["loc"] if part not in _TYPE_PARTS and not str(part).startswith("function-")]
+    field = ".".join(str(part) for part in place) or "project"
+    kind, context = entry["type"], entry.get("ctx", {})
+    if kind == "extra_forbidden":
+        known = _keys_at(place[:-1])
+        near = difflib.get_close_matches(str(place[-1]), known, n=1, cutoff=0.5)
+        return Problem(
+            file,
+            field,
+            "unknown key",
+            f"did you mean {near[0]!r}?" if near else f"known here: {', '.join(known)}",
+        )
+    if kind == "missing":
+        return Problem(file, field, "missing", "add it: it has no default")
+    if kind == "literal_error":
+        return Problem(file, field, f"{entry['input']!r} is not one of its values", f"use {context['expected']}")
+    if kind == "rejected":
+        return Problem(file, field, context["what"], context["fix"])
+    return Problem(file, field, f"{entry['input']!r} is not valid", entry["msg"].replace("Input should", "it should"))
+
+
+def _keys_at(place: list[Any]) -> list[str]:
+    """List the known keys of the table at a place in the file."""
+    model: type[BaseModel] = Project
+    for part in place:
+        if part not in model.model_fields:
+            return []
+        inner = _section_of(model.model_fields[part].annotation)
+        if inner is None:
+            return []
+        model = inner
+    return list(model.model_fields)
+
+
+def _section_of(annotation: Any) -> type[BaseModel] | None:
+    if typing.get_origin(annotation) in (Union, types.UnionType):
+        return next((found for arg in typing.get_args(annotation) if (found := _section_of(arg))), None)
+    return annotation if isinstance(annotation, type) and issubclass(annotation, BaseModel) else None

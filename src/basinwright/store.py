@@ -1,0 +1,352 @@
+"""The store of a run, and how a run is published: whole or not at all.
+
+**Stages.** A stage is a named pure step. Its key is the hash of its name, the code and everything it depends on
+(file hashes, options, keys of earlier stages); its outputs lie under that key in the run's store. A stage whose
+key is already there is not run again: ``--resume`` and repeated runs follow from that, and nothing else caches.
+
+**Publishing.** A run is built in ``.NAME.partial`` beside its final folder ``NAME``. When all of it stands, ``run.json``
+last, the folder is renamed into place; a folder that it replaces steps aside as ``.NAME.previous`` until the new
+one stands. `RunFolder.recover` puts right whatever a crash left.
+"""
+
+from __future__ import annotations
+
+import fcntl
+import hashlib
+import json
+import os
+import shutil
+import time
+from collections.abc import Callable, Iterator, Mapping
+from contextlib import contextmanager, suppress
+from dataclasses import dataclass, field
+from functools import cache
+from pathlib import Path
+from typing import IO, TYPE_CHECKING, Any
+
+from basinwright.errors import InputRejected, PublishError
+
+if TYPE_CHECKING:
+    import numpy as np
+    from numpy.typing import NDArray
+
+STORE = ".store"
+MANIFEST = "run.json"
+
+
+def canonical(value: Any) -> bytes:
+    """Return plain values as bytes that are the same wherever the values are."""
+    return json.dumps(value, sort_keys=True, separators=(",", ":"), ensure_ascii=False).encode()
+
+
+def file_sha256(path: Path) -> str:
+    """Return the SHA-256 of a file's bytes."""
+    with path.open("rb") as stream:
+        return hashlib.file_digest(stream, "sha256").hexdigest()
+
+
+@cache
+def code_version() -> str:
+    """Return the hash of this package's source: any change of code makes new keys."""
+    package = Path(__file__).parent
+    digest = hashlib.sha256()
+    for path in sorted(package.rglob("*")):
+        if path.suffix in (".py", ".csv", ".toml"):
+            digest.update(path.relative_to(package).as_posix().encode())
+            digest.update(path.read_bytes())
+    return digest.hexdigest()
+
+
+@dataclass(frozen=True)
+class Entry:
+    """The outputs of one stage: files in a folder that is never changed once it stands."""
+
+    name: str
+    key: str
+    folder: Path
+
+    def array(self, name: str) -> NDArray[Any]:
+        """Open an array without reading it into memory."""
+        import numpy as np
+
+        return np.load(self.folder / f"{name}.npy", mmap_mode="r", allow_pickle=False)
+
+    def values(self, name: str) -> Any:
+        """Read plain values."""
+        return json.loads((self.folder / f"{name}.json").read_text(encoding="utf-8"))
+
+
+class Draft:
+    """What a stage writes into while it runs."""
+
+    def __init__(self, folder: Path) -> None:
+        self.folder = folder
+
+    def array(self, name: str, array: np.ndarray) -> None:
+        """Keep an array."""
+        import numpy as np
+
+        np.save(self.folder / f"{name}.npy", array, allow_pickle=False)
+
+    def values(self, name: str, values: Any) -> None:
+        """Keep plain values."""
+        (self.folder / f"{name}.json").write_bytes(canonical(values))
+
+
+@dataclass
+class StageRecord:
+    """What the manifest says of a stage."""
+
+    name: str
+    key: str
+    reused: bool
+    seconds: float
+    peak_memory_mb: float | None
+
+    def describe(self) -> dict[str, Any]:
+        """Return it as plain values."""
+        return {
+            "stage": self.name,
+            "key": self.key,
+            "runs": 0 if self.reused else 1,
+            "seconds": round(self.seconds, 3),
+            "peak_memory_mb": self.peak_memory_mb,
+        }
+
+
+@dataclass
+class Store:
+    """The stages of one run.
+
+    Parameters
+    ----------
+    folder : Path
+        Where outputs lie.
+    earlier : Path or None
+        The store of the run that this one continues: its stages are taken over by link
+        where their key is the same.
+    on_stage : callable
+        Called with the stage's title when it starts to compute.
+    """
+
+    folder: Path
+    earlier: Path | None = None
+    on_stage: Callable[[str], None] = lambda title: None
+    records: list[StageRecord] = field(default_factory=list)
+
+    def stage(self, name: str, title: str, depends_on: Mapping[str, Any], make: Callable[[Draft], None]) -> Entry:
+        """Return the outputs of a stage, computing them only where they are not there yet.
+
+        Parameters
+        ----------
+        name, title : str
+            Name in the store, and words for the screen.
+        depends_on : mapping
+            Plain values: everything the outputs depend on.
+        make : callable
+            Computes and writes the outputs into the draft that it is handed.
+        """
+        key = hashlib.sha256(canonical([name, code_version(), depends_on])).hexdigest()[:20]
+        final = self.folder / f"{name}-{key}"
+        started = time.perf_counter()
+        reused = final.is_dir() or self._take_over(final)
+        peak: float | None = None
+        if not reused:
+            self.on_stage(title)
+            self.folder.mkdir(parents=True, exist_ok=True)
+            draft = self.folder / f"{name}-{key}.draft"
+            shutil.rmtree(draft, ignore_errors=True)
+            draft.mkdir()
+            _reset_peak_memory()
+            make(Draft(draft))
+            peak = _peak_memory_mb()
+            draft.rename(final)
+        self.records.append(StageRecord(name, key, reused, time.perf_counter() - started, peak))
+        return Entry(name, key, final)
+
+    def _take_over(self, final: Path) -> bool:
+        source = self.earlier / final.name if self.earlier else None
+        if source is None or not source.is_dir():
+            return False
+        link_tree(source, final)
+        return True
+
+    def prune(self) -> None:
+        """Drop whatever this run did not use."""
+        used = {f"{record.name}-{record.key}" for record in self.records}
+        for entry in self.folder.iterdir() if self.folder.is_dir() else ():
+            if entry.name not in used:
+                shutil.rmtree(entry)
+
+
+def _reset_peak_memory() -> None:
+    with suppress(OSError):  # Linux: forget the high-water mark, so that each stage has its own
+        Path("/proc/self/clear_refs").write_text("5")
+
+
+def _peak_memory_mb() -> float | None:
+    try:
+        status = Path("/proc/self/status").read_text()
+    except OSError:
+        return None
+    line = next((line for line in status.splitlines() if line.startswith("VmHWM:")), None)
+    return round(int(line.split()[1]) / 1024, 1) if line else None
+
+
+def link_tree(source: Path, target: Path) -> None:
+    """Copy a folder by hard links where the file system has them: cheap, and the files are never changed in place."""
+
+    def link(a: str, b: str) -> None:
+        try:
+            os.link(a, b)
+        except OSError:
+            shutil.copy2(a, b)
+
+    draft = target.with_name(f"{target.name}.draft")
+    shutil.rmtree(draft, ignore_errors=True)
+    draft.parent.mkdir(parents=True, exist_ok=True)
+    shutil.copytree(source, draft, copy_function=link)
+    draft.rename(target)
+
+
+class RunFolder:
+    """The folder of a run: built aside, put in place by renaming.
+
+    Parameters
+    ----------
+    final : Path
+        Where the run shall stand.
+    """
+
+    def __init__(self, final: Path) -> None:
+        self.final = Path(os.path.abspath(final))
+        self.partial = self.final.with_name(f".{self.final.name}.partial")
+        self.previous = self.final.with_name(f".{self.final.name}.previous")
+        self._lock = self.final.with_name(f".{self.final.name}.lock")
+
+    @contextmanager
+    def locked(self) -> Iterator[None]:
+        """Hold the folder against a second run; the lock dies with the process.
+
+        Raises
+        ------
+        InputRejected
+            Where another run holds it, or the place cannot be written.
+        """
+        with self._hold():
+            try:
+                self.recover()
+                yield
+            finally:
+                self._lock.unlink(missing_ok=True)
+
+    def _hold(self) -> IO[str]:
+        while True:
+            try:
+                self.final.parent.mkdir(parents=True, exist_ok=True)
+                stream = self._lock.open("w")
+            except OSError as error:
+                raise self._no_place(error) from None
+            try:
+                fcntl.flock(stream, fcntl.LOCK_EX | fcntl.LOCK_NB)
+            except OSError:
+                stream.close()
+                place, what = str(self.final), "another run is writing this folder"
+                raise InputRejected.one(place, "--out", what, "wait for it, or choose another folder") from None
+            try:
+                if os.path.samestat(os.fstat(stream.fileno()), self._lock.stat()):
+                    return stream
+            except FileNotFoundError:
+                pass  # its last holder took it away while we waited: take a new one
+            stream.close()
+
+    def _no_place(self, error: OSError) -> InputRejected:
+        reason = error.strerror or str(error)
+        return InputRejected.one(
+            str(self.final), "--out", f"cannot be written ({reason})", "choose another folder with --out"
+        )
+
+    def recover(self) -> None:
+        """Put right what a crash left: the new run if it was complete, else the one before it."""
+        if self.previous.is_dir() and not self.final.exists():
+            complete = (self.partial / MANIFEST).is_file()
+            (self.partial if complete else self.previous).rename(self.final)
+        self._drop_previous()
+
+    def refuse_occupied(self, *, resume: bool, overwrite: bool) -> None:
+        """Refuse a folder that holds something that this run may not replace.
+
+        Raises
+        ------
+        InputRejected
+            Saying what to do.
+        """
+        final = str(self.final)
+        if not self.final.exists():
+            return
+        if not self.final.is_dir():
+            raise InputRejected.one(final, "--out", "is a file", "choose another folder")
+        if (self.final / MANIFEST).is_file():
+            if not (resume or overwrite):
+                raise InputRejected.one(
+                    final,
+                    "--out",
+                    "holds a run",
+                    "add --resume to continue it, --overwrite to replace it, or choose another folder",
+                )
+        elif any(self.final.iterdir()):
+            raise InputRejected.one(final, "--out", "holds files that are no run", "choose an empty or a new folder")
+
+    def begin(self, *, keep: bool) -> Path:
+        """Return the folder to build in, emptied of all but the store (and of that too unless ``keep``)."""
+        try:
+            for entry in self.partial.iterdir() if self.partial.is_dir() else ():
+                if not (keep and entry.name == STORE):
+                    shutil.rmtree(entry) if entry.is_dir() else entry.unlink()
+            self.partial.mkdir(parents=True, exist_ok=True)
+        except OSError as error:
+            raise self._no_place(error) from None
+        return self.partial
+
+    def publish(self) -> None:
+        """Put what was built in place.
+
+        Raises
+        ------
+        PublishError
+            Where it could not: the folder is then as it was.
+        """
+        if not (self.partial / MANIFEST).is_file():
+            raise PublishError(f"{self.partial}: incomplete: {MANIFEST} is written last")
+        try:
+            _flush(self.partial)
+            if self.final.exists():
+                self.final.rename(self.previous)
+            self.partial.rename(self.final)
+        except OSError as error:
+            self.recover()
+            raise PublishError(f"{self.final}: could not be put in place ({error})") from None
+        self._drop_previous()
+
+    def _drop_previous(self) -> None:
+        """Drop the run that was replaced, but hand on what other people had put into its folder."""
+        if not (self.previous.is_dir() and self.final.is_dir()):
+            return
+        try:
+            ours = set(json.loads((self.previous / MANIFEST).read_text(encoding="utf-8"))["files"])
+        except (OSError, ValueError, KeyError):
+            ours = {entry.name for entry in self.previous.iterdir()}
+        for entry in self.previous.iterdir():
+            if entry.name not in ours and not (self.final / entry.name).exists():
+                entry.rename(self.final / entry.name)
+        shutil.rmtree(self.previous)
+
+
+def _flush(folder: Path) -> None:
+    """Have the manifest and the folder on the disk before anything is renamed."""
+    for path in (folder / MANIFEST, folder):
+        handle = os.open(path, os.O_RDONLY)
+        try:
+            os.fsync(handle)
+        finally:
+            os.close(handle)
