@@ -194,8 +194,9 @@ class TestRemote:
 def test_globs_are_sorted_and_kept_once(tmp_path):
     for name in ("b.tif", "a.tif", "[1].tif"):
         (tmp_path / name).touch()
-    paths, problems = expand_paths(["b.tif", "?.tif", "[1].tif", "tiles/*.tif", "missing.tif"], tmp_path)
-    assert [path.name for path in paths] == ["b.tif", "a.tif", "[1].tif", "missing.tif"]
+    url = "https://host/x?.tif"
+    paths, problems = expand_paths(["b.tif", "?.tif", "[1].tif", url, "tiles/*.tif", "missing.tif"], tmp_path)
+    assert paths == [tmp_path / "b.tif", tmp_path / "a.tif", tmp_path / "[1].tif", url, tmp_path / "missing.tif"]
     assert [str(problem) for problem in problems] == [
         f"tiles/*.tif: file: matches no file: check the pattern; it starts at {tmp_path}"
     ]

@@ -9,7 +9,6 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
@@ -17,7 +16,16 @@ from affine import Affine
 
 from basinwright.errors import InputRejected, Problem
 from basinwright.grid import Grid
-from basinwright.io.rasters import BLOCK_CELLS, WARP_TOLERANCE, Header, crs_label, on_lattice, read_header
+from basinwright.io.rasters import (
+    BLOCK_CELLS,
+    WARP_TOLERANCE,
+    Header,
+    Location,
+    crs_label,
+    on_lattice,
+    read_header,
+    short_name,
+)
 from basinwright.units import M_PER_FT
 
 if TYPE_CHECKING:
@@ -105,13 +113,13 @@ class TerrainInput:
 
 
 def plan_terrain(
-    paths: Sequence[Path], crs: str = "auto", vertical_unit: VerticalUnit | None = None
+    paths: Sequence[Location], crs: str = "auto", vertical_unit: VerticalUnit | None = None
 ) -> tuple[TerrainPlan | None, list[Problem]]:
     """Read the headers of the terrain and settle grid and unit; no cell is read.
 
     Parameters
     ----------
-    paths : sequence of Path
+    paths : sequence of Path or str
         One raster, or the tiles of one mosaic.
     crs : str
         ``auto``, or a CRS to work in.
@@ -143,7 +151,9 @@ def plan_terrain(
     return (None, problems) if problems else (TerrainPlan(tuple(headers), native, grid, unit, assumed, reason), [])
 
 
-def open_terrain(paths: Sequence[Path], crs: str = "auto", vertical_unit: VerticalUnit | None = None) -> TerrainInput:
+def open_terrain(
+    paths: Sequence[Location], crs: str = "auto", vertical_unit: VerticalUnit | None = None
+) -> TerrainInput:
     """Read the terrain (parameters as in `plan_terrain`).
 
     Where tiles overlap, the first listed wins wherever it has data.
@@ -190,10 +200,10 @@ def _mosaic_problems(headers: Sequence[Header]) -> list[Problem]:
     for header in headers[1:]:
         first, file = headers[0], str(header.path)
         if not header.crs.equals(first.crs, ignore_axis_order=True):
-            what = f"its CRS ({crs_label(header.crs)}) is not that of {first.path.name} ({crs_label(first.crs)})"
+            what = f"its CRS ({crs_label(header.crs)}) is not that of {short_name(first.path)} ({crs_label(first.crs)})"
             problems.append(Problem(file, "crs", what, "warp all tiles of the mosaic to one CRS"))
         elif not on_lattice(header.transform, first.transform):
-            what = f"its cells are not those of {first.path.name}: another size, or not whole cells apart"
+            what = f"its cells are not those of {short_name(first.path)}: another size, or not whole cells apart"
             problems.append(Problem(file, "georeference", what, "resample all tiles of the mosaic to one lattice"))
     return problems
 
@@ -212,7 +222,7 @@ def _vertical_unit(headers: Sequence[Header], given: VerticalUnit | None) -> tup
         else:
             declared.setdefault(_SPELLINGS[text.lower()] if text else "none", header)
     if len(declared) > 1:
-        listed = ", ".join(f"{header.path.name}: {unit}" for unit, header in declared.items())
+        listed = ", ".join(f"{short_name(header.path)}: {unit}" for unit, header in declared.items())
         what = f"the tiles declare different vertical units ({listed})"
         problems.append(
             Problem(str(headers[0].path), "vertical unit", what, "set terrain.vertical_unit or convert them")

@@ -28,6 +28,9 @@ BLOCK_CELLS = 2**22
 WARP_TOLERANCE = 0.01
 """Error allowed to the approximated map transformation, in source cells (the library's default is 0.125)."""
 
+Location = Path | str
+"""A local file as Path; a remote source (see `is_remote`) as the text the user wrote, which Path would mangle."""
+
 _DRIVER_PREFIX = re.compile(r"[A-Za-z][A-Za-z0-9_+.\-]+:")  # two characters at least: "C:" is a drive
 
 
@@ -59,10 +62,10 @@ def is_remote(text: str) -> bool:
     )
 
 
-def refers_to_remote(path: Path) -> bool:
+def refers_to_remote(path: Location) -> bool:
     """Say whether a local XML file (a virtual raster, a web service description) leads to something remote."""
     try:
-        with path.open("rb") as stream:
+        with open(path, "rb") as stream:
             if not stream.read(64).lstrip(b"\xef\xbb\xbf \t\r\n").startswith(b"<"):
                 return False
             stream.seek(0)
@@ -72,7 +75,7 @@ def refers_to_remote(path: Path) -> bool:
     return b"/vsi" in text or b"://" in text
 
 
-def expand_paths(patterns: Sequence[str], folder: Path) -> tuple[list[Path], list[Problem]]:
+def expand_paths(patterns: Sequence[str], folder: Path) -> tuple[list[Location], list[Problem]]:
     """Resolve paths and globs relative to a folder, in the order written, matches of a glob by name.
 
     Parameters
@@ -84,14 +87,17 @@ def expand_paths(patterns: Sequence[str], folder: Path) -> tuple[list[Path], lis
 
     Returns
     -------
-    paths : list of Path
-        Without repetitions.
+    paths : list of Path or str
+        Without repetitions; remote sources stay as written.
     problems : list of Problem
         One for each glob that matches nothing.
     """
-    paths: dict[Path, None] = {}
+    paths: dict[Location, None] = {}
     problems = []
     for pattern in patterns:
+        if is_remote(pattern):
+            paths[pattern] = None
+            continue
         whole = str(folder / pattern)
         if glob.has_magic(pattern) and not Path(whole).exists():
             matches = sorted(glob.glob(whole, recursive=True))
@@ -123,7 +129,7 @@ class Header:
 
     Parameters
     ----------
-    path : Path
+    path : Path or str
         The file.
     transform : Affine
         From (column, row) to map coordinates; always north-up, see `south_up`.
@@ -139,7 +145,7 @@ class Header:
         The declared unit of band 1, or empty.
     """
 
-    path: Path
+    path: Location
     transform: Affine
     south_up: bool
     nrows: int
@@ -162,7 +168,7 @@ class Header:
     def record(self, method: str) -> dict[str, Any]:
         """Return how this raster was brought onto the grid, as plain values for the manifest."""
         return {
-            "path": self.path.name,
+            "path": short_name(self.path),
             "crs": crs_label(self.crs),
             "shape": [self.nrows, self.ncols],
             "resolution": [self.transform.a, -self.transform.e],
@@ -171,18 +177,23 @@ class Header:
         }
 
 
+def short_name(path: Location) -> str:
+    """Return the name of a file without its folders, or a remote source as it is."""
+    return path if isinstance(path, str) and is_remote(path) else Path(path).name
+
+
 def crs_label(crs: CRS) -> str:
     """Return the short name of a coordinate reference system: its code, else its name."""
     authority = crs.to_authority()
     return ":".join(authority) if authority else crs.name
 
 
-def read_header(path: Path) -> tuple[Header | None, list[Problem]]:
+def read_header(path: Location) -> tuple[Header | None, list[Problem]]:
     """Read what a raster says about itself.
 
     Parameters
     ----------
-    path : Path
+    path : Path or str
         Any raster that GDAL reads.
 
     Returns
@@ -196,8 +207,8 @@ def read_header(path: Path) -> tuple[Header | None, list[Problem]]:
     from rasterio.errors import NotGeoreferencedWarning, RasterioIOError
 
     file = str(path)
-    if not is_remote(file) and not path.is_file():
-        what = "is a folder" if path.is_dir() else "does not exist"
+    if not is_remote(file) and not Path(path).is_file():
+        what = "is a folder" if Path(path).is_dir() else "does not exist"
         return None, [Problem(file, "file", what, "check the path")]
     problems = []
     try:
@@ -232,12 +243,12 @@ def read_header(path: Path) -> tuple[Header | None, list[Problem]]:
     return Header(path, transform, south_up, shape[0], shape[1], bands, dtype, crs_wkt, unit), []
 
 
-def check_raster(path: Path, grid: Grid | None = None) -> list[Problem]:
+def check_raster(path: Location, grid: Grid | None = None) -> list[Problem]:
     """List what is wrong with a raster that is to be read onto a grid (see `read_header`).
 
     Parameters
     ----------
-    path : Path
+    path : Path or str
         The raster.
     grid : Grid, optional
         The grid it must overlap.
@@ -260,13 +271,13 @@ def _overlap(one: Grid, other: Grid) -> bool:
 
 
 def read_blocks_onto(
-    path: Path, grid: Grid, resampling: Resampling = "nearest"
+    path: Location, grid: Grid, resampling: Resampling = "nearest"
 ) -> Iterator[tuple[int, np.ma.MaskedArray[Any, Any]]]:
     """Read a raster of any CRS and resolution onto a grid, in blocks of whole rows.
 
     Parameters
     ----------
-    path : Path
+    path : Path or str
         The raster; its band 1 is read.
     grid : Grid
         The grid to read onto.
@@ -306,7 +317,9 @@ def read_blocks_onto(
                 yield first, np.ma.masked_invalid(block, copy=False) if block.dtype.kind == "f" else block
 
 
-def read_onto(path: Path, grid: Grid, resampling: Resampling = "nearest", missing: float | None = None) -> NDArray[Any]:
+def read_onto(
+    path: Location, grid: Grid, resampling: Resampling = "nearest", missing: float | None = None
+) -> NDArray[Any]:
     """Read a raster of any CRS and resolution onto a grid, as one array.
 
     Parameters
@@ -333,7 +346,7 @@ def read_onto(path: Path, grid: Grid, resampling: Resampling = "nearest", missin
     return out
 
 
-def align_record(path: Path, grid: Grid, resampling: Resampling = "nearest") -> dict[str, Any]:
+def align_record(path: Location, grid: Grid, resampling: Resampling = "nearest") -> dict[str, Any]:
     """Return how a raster is brought onto a grid, as plain values for the manifest."""
     header, problems = read_header(path)
     if header is None:
