@@ -1,0 +1,120 @@
+"""Measures of whole basins, by one pass over the raster and one up the forest of outlets."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from basinwright.basins.delineation import Basins
+from basinwright.grid import Grid
+from basinwright.terrain import Terrain
+from basinwright.terrain.land_slope import horn_slope_blocks
+from basinwright.terrain.summable import quantum
+
+_SUMS = ("area", "cells", "contact", "elevation", "slope", "row", "col", "depth")
+
+
+def measure(grid: Grid, terrain: Terrain, elevation_m: np.ndarray, basins: Basins) -> dict[str, np.ndarray]:
+    """Size, relief, land slope, centroid, filling and contact of every outlet's whole basin.
+
+    Parameters
+    ----------
+    grid : Grid
+    terrain : Terrain
+    elevation_m : float array, shape (nrows, ncols) [m]
+        Unconditioned; NaN in voids.
+    basins : Basins
+
+    Returns
+    -------
+    dict of arrays, shape (n,)
+        ``downstream_outlet`` (index, -1 for none), ``area_km2``, ``cells``, ``relief_m`` (highest minus lowest
+        unconditioned elevation), ``mean_elevation_m``, ``basin_slope_pct`` (mean land slope, Horn 1981,
+        weighted by area), ``centroid_x``, ``centroid_y`` (centre of area, map coordinates),
+        ``path_length_m`` (longest flow path), ``filled_volume_m3``, ``contact_cells`` (cells at the raster's
+        edge or beside a void, the outlet's own included). Outlets that failed have NaN; 0 cells.
+    """
+    sums, lowest, highest = _by_label(grid, terrain, elevation_m, basins)
+    whole = dict(zip(_SUMS, basins.whole_sums(sums).T, strict=True))
+    area = whole["area"]
+    centroid_x, centroid_y = grid.xy(whole["row"] / area, whole["col"] / area)
+    by_label = {
+        "area_km2": area * 1e-6,
+        "relief_m": highest - lowest,
+        "mean_elevation_m": whole["elevation"] / area,
+        "basin_slope_pct": whole["slope"] / area,
+        "centroid_x": centroid_x,
+        "centroid_y": centroid_y,
+        "path_length_m": basins.farthest_um * 1e-6,
+        "filled_volume_m3": whole["depth"],
+    }
+    columns = {"downstream_outlet": basins.downstream_outlet}
+    columns |= {name: basins.by_outlet(values) for name, values in by_label.items()}
+    for name, counts in (("cells", whole["cells"]), ("contact_cells", whole["contact"])):
+        columns[name] = basins.by_outlet(counts.astype(np.int64), failed=0)
+    return columns
+
+
+def _by_label(
+    grid: Grid, terrain: Terrain, elevation_m: np.ndarray, basins: Basins
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Sums over sub-basins, shape (labels, sums), and the extremes of whole basins."""
+    from basinwright.kernels import forest, reduce
+
+    n, ncols, label = basins.n_labels, terrain.ncols, basins.label
+    by_area, by_count = terrain.row_area_m2, np.ones(terrain.nrows)
+    sums = {name: np.zeros(n) for name in _SUMS}
+    cells = np.zeros(n, np.int64)
+    reduce.add_area(label, ncols, by_area, 0, terrain.nrows, sums["area"], cells)
+    sums["cells"][:] = cells
+
+    lowest, highest, highest_cell = np.full(n, np.inf), np.full(n, -np.inf), np.full(n, -1, np.int32)
+    quanta = _quanta(grid, terrain, elevation_m)
+    weight = np.empty(n)
+    for first, slope in horn_slope_blocks(elevation_m, grid.dx_m, grid.dy_m):
+        rows = slice(first, first + len(slope))
+        elevation = np.ascontiguousarray(elevation_m[rows], np.float64)
+        reduce.keep_extremes(label, ncols, first, elevation, lowest, highest, highest_cell)
+        filled = terrain.filled_grid[rows]
+        with np.errstate(invalid="ignore"):
+            depth = np.where(np.isfinite(filled), filled - elevation.astype(np.float32), 0).astype(np.float64)
+        values = {
+            "elevation": elevation,
+            "slope": slope,
+            "row": np.broadcast_to(np.arange(first, first + len(slope), dtype=float)[:, None], slope.shape),
+            "col": np.broadcast_to(np.arange(ncols, dtype=float), slope.shape),
+            "depth": depth,
+            "contact": _contact(terrain, rows),
+        }
+        for name, block in values.items():
+            weights = by_count if name == "contact" else by_area
+            reduce.add_values(
+                label, ncols, weights, first, np.ascontiguousarray(block), quanta[name], sums[name], weight
+            )
+    forest.combine_extremes(basins.parent, basins.upstream_first, lowest, highest, highest_cell)
+    return np.column_stack([sums[name] for name in _SUMS]), lowest, highest
+
+
+def _quanta(grid: Grid, terrain: Terrain, elevation_m: np.ndarray) -> dict[str, float]:
+    """Steps of the fixed-point sums: from bounds that hold for the raster, whatever the outlets are."""
+    total_m2 = float(terrain.row_area_m2.sum()) * terrain.ncols
+    finite = np.isfinite(elevation_m)
+    low = float(np.min(elevation_m, initial=np.inf, where=finite))
+    high = float(np.max(elevation_m, initial=-np.inf, where=finite))
+    # A gradient spans at most twice the relief over a cell in both directions: under 200 % of relief / size.
+    steepest_pct = 200.0 * (high - low) / min(grid.dx_m.min(), grid.dy_m.min())
+    return {
+        "elevation": quantum(max(abs(low), abs(high)) * total_m2),
+        "slope": quantum(steepest_pct * total_m2),
+        "row": quantum(grid.nrows * total_m2),
+        "col": quantum(grid.ncols * total_m2),
+        "depth": quantum(terrain.deepest_fill_m * total_m2),
+        "contact": 1.0,
+    }
+
+
+def _contact(terrain: Terrain, rows: slice) -> np.ndarray:
+    """1.0 for every cell of some rows with the raster's edge or a void among its eight neighbours, else 0.0."""
+    padded = terrain.filled_m.reshape(terrain.nrows + 2, terrain.ncols + 2)
+    missing = np.isinf(padded[rows.start : rows.stop + 2])
+    beside = missing[:, :-2] | missing[:, 1:-1] | missing[:, 2:]
+    return (beside[:-2] | beside[1:-1] | beside[2:]).astype(np.float64)

@@ -1,0 +1,155 @@
+"""The longest flow path of every outlet, and the measures of its profile."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from basinwright.basins import Basins
+from basinwright.grid import Grid
+from basinwright.kernels import NO_CELL
+from basinwright.terrain import Terrain
+
+DEEP_FILL_M = 2.0
+"""Conditioning that moved the terrain by more than this under the path is a doubt (DEEP_FILL)."""
+
+
+@dataclass(frozen=True, eq=False)
+class Paths:
+    """Longest flow paths, from the divide to the outlet, one per outlet.
+
+    Path i lies in ``[bounds[i], bounds[i + 1])`` of every other array; it is empty where the outlet failed.
+
+    Attributes
+    ----------
+    bounds : int64 array, shape (n + 1,)
+    cells : int32 array, shape (path cells,)
+        Padded indices.
+    distance_m : float64 array, shape (path cells,) [m]
+        From the divide, along the path.
+    elevation_m : float64 array, shape (path cells,) [m]
+        Conditioned terrain.
+    area_km2 : float64 array, shape (path cells,) [km2]
+        Contributing area.
+    """
+
+    bounds: np.ndarray
+    cells: np.ndarray
+    distance_m: np.ndarray
+    elevation_m: np.ndarray
+    area_km2: np.ndarray
+
+    @property
+    def n(self) -> int:
+        """Number of paths."""
+        return int(self.bounds.size - 1)
+
+    @property
+    def length_m(self) -> np.ndarray:
+        """Length of every path, float64, shape (n,) [m]; NaN where it is empty."""
+        return self.at_ends(self.distance_m)[1]
+
+    def at_ends(self, values: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Values at the divide and at the outlet of every path, each of shape (n,); NaN where it is empty."""
+        first, last = np.full(self.n, np.nan), np.full(self.n, np.nan)
+        some = np.diff(self.bounds) > 0
+        first[some] = values[self.bounds[:-1][some]]
+        last[some] = values[self.bounds[1:][some] - 1]
+        return first, last
+
+    def per_cell(self, by_path: np.ndarray) -> np.ndarray:
+        """Repeat a value per path for each of its cells."""
+        return np.repeat(by_path, np.diff(self.bounds))
+
+
+def trace(terrain: Terrain, basins: Basins) -> Paths:
+    """Trace the longest flow path of every outlet.
+
+    Parameters
+    ----------
+    terrain : Terrain
+    basins : Basins
+
+    Returns
+    -------
+    Paths
+    """
+    from basinwright.kernels import paths as kernel
+    from basinwright.kernels.trace import trace_paths
+
+    starts = basins.by_outlet(basins.farthest_cell, failed=NO_CELL)
+    ends = basins.by_outlet(basins.label_cell, failed=NO_CELL)
+    bounds, cells = trace_paths(terrain.directions, terrain.ncols, starts, ends)
+    away_um = kernel.distances_um(bounds, cells, terrain.directions, terrain.ncols, terrain.step_um)
+    return Paths(
+        bounds=bounds,
+        cells=cells,
+        distance_m=away_um * 1e-6,
+        elevation_m=terrain.filled_m[cells].astype(np.float64),
+        area_km2=terrain.area_m2[cells] * 1e-6,
+    )
+
+
+def profile_measures(
+    grid: Grid,
+    terrain: Terrain,
+    elevation_m: np.ndarray,
+    paths: Paths,
+    centroid_x: np.ndarray,
+    centroid_y: np.ndarray,
+) -> dict[str, np.ndarray]:
+    """Slopes of the longest flow paths, the length to the point opposite the centroid, and the fill under them.
+
+    Parameters
+    ----------
+    grid : Grid
+    terrain : Terrain
+    elevation_m : float array, shape (nrows, ncols) [m]
+        Unconditioned.
+    paths : Paths
+    centroid_x, centroid_y : float64 arrays, shape (n,)
+        Centroids of the whole basins in map coordinates.
+
+    Returns
+    -------
+    dict of arrays, shape (n,)
+        ``path_length_m``; ``centroid_length_m``, along the path from the outlet to the point of the path that
+        is nearest to the centroid; ``path_slope_pct``, fall over length; ``path_slope_1085_pct``, between 10 and
+        85 % of the length from the outlet, on the profile interpolated between cell centres;
+        ``deepest_fill_m``, by which conditioning raised the terrain under the path, outlet included. NaN where
+        the path is empty, slopes also where it is a single cell.
+    """
+    from basinwright.kernels import paths as kernel
+
+    bounds, distance = paths.bounds, paths.distance_m
+    length = paths.length_m
+    top, bottom = paths.at_ends(paths.elevation_m)
+    upper = kernel.interpolate(bounds, distance, paths.elevation_m, 0.15 * length)
+    lower = kernel.interpolate(bounds, distance, paths.elevation_m, 0.90 * length)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        slope_pct = 100.0 * (top - bottom) / length
+        slope_1085_pct = 100.0 * (upper - lower) / (0.75 * length)
+
+    # A plane with the cell size at the centroid's parallel is true enough to say which point is nearest.
+    rows, cols = terrain.rows_cols(paths.cells)
+    y = (centroid_y - grid.transform.f) / grid.transform.e - 0.5
+    x = (centroid_x - grid.transform.c) / grid.transform.a - 0.5
+    row = np.clip(np.nan_to_num(y).astype(np.int64), 0, grid.nrows - 1)
+    dx, dy = grid.dx_m[row], grid.dy_m[row]
+    nearest = kernel.nearest_on_path(
+        bounds, cols * paths.per_cell(dx), rows * paths.per_cell(dy), distance, x * dx, y * dy
+    )
+
+    raised = paths.elevation_m - elevation_m[rows, cols]
+    deepest = np.full(paths.n, np.nan)
+    some = np.diff(bounds) > 0
+    if some.any():
+        deepest[some] = np.maximum.reduceat(raised, bounds[:-1][some])
+    return {
+        "path_length_m": length,
+        "centroid_length_m": length - nearest,
+        "path_slope_pct": slope_pct,
+        "path_slope_1085_pct": slope_1085_pct,
+        "deepest_fill_m": deepest,
+    }
