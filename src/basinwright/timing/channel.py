@@ -196,8 +196,8 @@ def jarrett_roughness_n(slope: ArrayLike, hydraulic_radius_m: ArrayLike) -> Floa
     Notes
     -----
     ``n = 0.39 S^0.38 R^-0.16``: ft. R. D. Jarrett, Hydraulics of High-Gradient Streams, J. Hydraul. Eng. 110(11),
-    1984, from 75 measurements on 21 reaches in Colorado; from memory of the paper. The paper's companion equation
-    for velocity, ``V = 3.17 R^0.83 S^0.12``, is Manning's equation with this n.
+    1984, from 75 measurements on 21 reaches in Colorado; from memory of the paper. Its companion for velocity,
+    ``V = 3.81 R^0.83 S^0.12`` (ft/s, ft), is Manning's equation with this n.
 
     Fitted on slopes of 0.002 to 0.04 and hydraulic radii of 0.5 to 7 ft (`JARRETT_SLOPE`,
     `JARRETT_HYDRAULIC_RADIUS_M`), stable beds of cobbles and boulders, no backwater.
