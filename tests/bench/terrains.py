@@ -73,9 +73,7 @@ def whole_metres(n: int, seed: int = 1) -> np.ndarray:
     return np.rint(rough(n, seed))
 
 
-def _rebuild(
-    directions: np.ndarray, order: np.ndarray, ncols: int, slope: np.ndarray, cell_m: float
-) -> np.ndarray:
+def _rebuild(directions: np.ndarray, order: np.ndarray, ncols: int, slope: np.ndarray, cell_m: float) -> np.ndarray:
     """Elevations from the exits upstream: that of the next cell down plus slope times distance."""
     from numba import njit
 

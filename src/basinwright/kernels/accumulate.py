@@ -5,44 +5,35 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from basinwright.kernels import EXIT, VOID
-from basinwright.kernels.geometry import neighbour_offsets
+from basinwright.kernels import EXIT, FLAT, VOID
+from basinwright.kernels.geometry import steps
 
-_DONE = np.uint8(255)
+# During the walk the high half of a direction byte counts the donors that are still to come; 15 marks a cell
+# that is done.
+_ONE_DONOR = 16
+_DONE = 240
+_CODE = 15
 
 
 @njit(cache=True, nogil=True)
-def count_donors(directions: np.ndarray, nrows: int, ncols: int, donors: np.ndarray) -> None:
-    """Number of neighbours that drain into each cell; 255 in voids and halo.
-
-    Parameters
-    ----------
-    directions : uint8 array, shape (cells,)
-    nrows, ncols : int
-    donors : uint8 array, shape (cells,)
-        Result.
-    """
+def _count_donors(directions: np.ndarray, nrows: int, ncols: int) -> None:
+    """Add the number of neighbours that drain into each cell to the high half of its direction."""
     stride = ncols + 2
-    donors[:stride] = _DONE
-    donors[(nrows + 1) * stride :] = _DONE
     for row in range(1, nrows + 1):
         start = row * stride
         above = directions[start - stride : start]
         here = directions[start : start + stride]
         below = directions[start + stride : start + 2 * stride]
-        out = donors[start : start + stride]
-        out[0] = _DONE
-        out[ncols + 1] = _DONE
         for i in range(1, ncols + 1):
-            count = np.uint8(above[i - 1] == 3)
-            count += np.uint8(above[i] == 4)
-            count += np.uint8(above[i + 1] == 5)
-            count += np.uint8(here[i - 1] == 2)
-            count += np.uint8(here[i + 1] == 6)
-            count += np.uint8(below[i - 1] == 1)
-            count += np.uint8(below[i] == 0)
-            count += np.uint8(below[i + 1] == 7)
-            out[i] = _DONE if here[i] == VOID else count
+            count = np.uint8((above[i - 1] & _CODE) == 3)
+            count += np.uint8((above[i] & _CODE) == 4)
+            count += np.uint8((above[i + 1] & _CODE) == 5)
+            count += np.uint8((here[i - 1] & _CODE) == 2)
+            count += np.uint8((here[i + 1] & _CODE) == 6)
+            count += np.uint8((below[i - 1] & _CODE) == 1)
+            count += np.uint8((below[i] & _CODE) == 0)
+            count += np.uint8((below[i + 1] & _CODE) == 7)
+            here[i] |= np.uint8(count << np.uint8(4))
 
 
 @njit(cache=True, nogil=True)
@@ -51,22 +42,22 @@ def contributing_area(
     nrows: int,
     ncols: int,
     row_area_m2: np.ndarray,
-    donors: np.ndarray,
     area_m2: np.ndarray,
     order: np.ndarray,
 ) -> int:
     """Area that drains through each cell, its own included, by walking down from every cell without donors.
 
+    A walk ends where other donors are still to come; the last of them goes on.
+
     Parameters
     ----------
     directions : uint8 array, shape (cells,)
+        Finished directions; changed during the walk and restored.
     nrows, ncols : int
     row_area_m2 : float64 array, shape (nrows,) [m2]
         Area of a cell of each row, rounded so that sums are exact (`terrain.summable`).
-    donors : uint8 array, shape (cells,)
-        From `count_donors`; used up.
     area_m2 : float64 array, shape (cells,) [m2]
-        Result; zero on entry.
+        Result; 0 in voids and halo.
     order : int32 array, shape (cells,) or more
         Result: cell indices, every cell after all cells that drain into it.
 
@@ -76,31 +67,39 @@ def contributing_area(
         Cells visited. Fewer than the cells with elevation mean a cycle.
     """
     stride = ncols + 2
-    o = neighbour_offsets(stride)
-    rows_down = (-1, -1, 0, 1, 1, 1, 0, -1)
+    o = steps(stride)
+    _count_donors(directions, nrows, ncols)
+    area_m2[:stride] = 0.0
+    area_m2[(nrows + 1) * stride :] = 0.0
+    for row in range(1, nrows + 1):
+        own = row_area_m2[row - 1]
+        for c in range(row * stride, (row + 1) * stride):
+            area_m2[c] = 0.0 if directions[c] == VOID else own
+
     visited = 0
-    for start_row in range(nrows):
-        first = (start_row + 1) * stride + 1
-        for start in range(first, first + ncols):
-            if donors[start] != 0:
+    for row in range(1, nrows + 1):
+        first = row * stride + 1
+        for start in range(np.uint64(first), np.uint64(first + ncols)):
+            here = directions[start]
+            if here > EXIT:
                 continue
             c = start
-            row = start_row
+            area = area_m2[c]
             while True:
-                donors[c] = _DONE
+                directions[c] = here | _DONE
                 order[visited] = c
                 visited += 1
-                area = area_m2[c] + row_area_m2[row]
+                if here == EXIT:
+                    break
+                c += o[here]
+                area += area_m2[c]
                 area_m2[c] = area
-                code = directions[c]
-                if code >= EXIT:
+                here = directions[c] - np.uint8(_ONE_DONOR)
+                if here > EXIT:
+                    directions[c] = here
                     break
-                c += o[code]
-                row += rows_down[code]
-                area_m2[c] += area
-                donors[c] -= np.uint8(1)
-                if donors[c] != 0:
-                    break
+    for c in range(directions.size):
+        directions[c] &= _CODE
     return visited
 
 
@@ -111,5 +110,5 @@ def count_cells(directions: np.ndarray) -> tuple[int, int]:
     undrained = 0
     for c in range(directions.size):
         cells += directions[c] != VOID
-        undrained += directions[c] > VOID
+        undrained += directions[c] == FLAT
     return cells, undrained

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from basinwright.kernels import E, EXIT, FLAT, N, NE, NW, S, SE, SW, VOID, W
+from basinwright.kernels import EXIT, FLAT, NE, NW, SE, SW, VOID, E, N, S, W
 
 
 @njit(cache=True, nogil=True)
@@ -81,8 +81,9 @@ def steepest_descent(
             if drop > best:
                 best = drop
                 code = np.int32(NW)
-            highest = max(max(max(above[i - 1], above[i]), max(above[i + 1], here[i - 1])),
-                          max(max(here[i + 1], below[i - 1]), max(below[i], below[i + 1])))  # fmt: skip
+            highest = max(
+                above[i - 1], above[i], above[i + 1], here[i - 1], here[i + 1], below[i - 1], below[i], below[i + 1]
+            )
             if code == FLAT and highest == np.inf:
                 code = np.int32(EXIT)
             if c == np.inf:

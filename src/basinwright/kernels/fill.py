@@ -1,10 +1,17 @@
 """Depression filling: the lowest surface above the terrain from which every cell drains to the outside.
 
-The filled surface is unique, so any correct method gives the same bits. This one grows upslope from the
-rim and the voids with a plain stack: a neighbour that is not lower than a finished cell is finished at its
-own elevation, in whatever order it is met, and never enters the queue. What remains are depressions. The
-cells around them wait as spill candidates in linear buckets on elevation; the lowest candidate floods its
-depression, and growth goes on from there. Only the open bucket is kept in order, in a small heap.
+The filled surface is unique, so any correct method gives the same bits. Here:
+
+1. Every cell is followed down the raw terrain, never climbing, to where the descent ends: at a pit or a part of
+   a plateau, or outside, beyond the rim or in a void. That cuts the terrain into catchments without a queue.
+2. Between two catchments that touch only the lowest pass matters.
+3. Water leaves a catchment over its lowest pass, the catchments joined by that leave together over the lowest
+   pass of the union, and so on until the outside is reached. The highest pass on that way is the level to
+   which a catchment fills.
+4. A cell is raised to the level of its catchment, if it lies lower: from any cell the bottom of its catchment is
+   reached without climbing.
+
+Only maxima and minima of given elevations are taken, so nothing is rounded.
 """
 
 from __future__ import annotations
@@ -12,220 +19,336 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from basinwright.kernels.geometry import neighbour_offsets
+from basinwright.kernels import FLAT, NE, NW, SE, SW, E, N, S, W
+from basinwright.kernels.geometry import steps
 
-_UNSEEN = np.uint8(0)
-_SEEN = np.uint8(1)
+_OUTSIDE = 0
+_UNLABELLED = -1
 
 
 @njit(cache=True, nogil=True)
-def raise_single_pits(z: np.ndarray, nrows: int, ncols: int) -> None:
-    """Raise every cell that is lower than all its neighbours to the lowest of them, in place.
+def ways_down(z: np.ndarray, nrows: int, ncols: int, ways: np.ndarray) -> None:
+    """A neighbour of each cell that is not higher, chosen so that most labels can be copied in memory order.
 
-    The filled surface stays the same, and most of the small pits of a rough terrain are gone at the price of
-    one pass in memory order. Voids and halo must be -inf, so that the cells beside them stay.
+    The lowest of the four neighbours that precede the cell in memory, if that is not higher than the cell;
+    else the lowest of the four that follow, if lower; else none (FLAT). Following these ways never climbs
+    and never turns in a ring: among equal cells it only goes back in memory.
 
     Parameters
     ----------
     z : float32 array, shape (cells,) [m]
+        Elevations, -inf in voids and halo.
     nrows, ncols : int
+    ways : uint8 array, shape (cells,)
+        Result, as direction codes; the halo is left alone.
     """
     stride = ncols + 2
-    lowest = np.empty(stride, np.float32)
     for row in range(1, nrows + 1):
-        above = z[(row - 1) * stride : row * stride]
-        here = z[row * stride : (row + 1) * stride]
-        below = z[(row + 1) * stride : (row + 2) * stride]
-        for i in range(stride):
-            lowest[i] = min(above[i], below[i])
+        start = row * stride
+        above = z[start - stride : start]
+        here = z[start : start + stride]
+        below = z[start + stride : start + 2 * stride]
+        out = ways[start : start + stride]
         for i in range(1, ncols + 1):
-            around = min(min(lowest[i - 1], lowest[i]), lowest[i + 1])
-            here[i] = max(here[i], min(around, min(here[i - 1], here[i + 1])))
+            c = here[i]
+            lowest = here[i - 1]
+            before = np.int32(W)
+            if above[i - 1] < lowest:
+                lowest = above[i - 1]
+                before = np.int32(NW)
+            if above[i] < lowest:
+                lowest = above[i]
+                before = np.int32(N)
+            if above[i + 1] < lowest:
+                lowest = above[i + 1]
+                before = np.int32(NE)
+            low_after = c
+            after = np.int32(FLAT)
+            if here[i + 1] < low_after:
+                low_after = here[i + 1]
+                after = np.int32(E)
+            if below[i - 1] < low_after:
+                low_after = below[i - 1]
+                after = np.int32(SW)
+            if below[i] < low_after:
+                low_after = below[i]
+                after = np.int32(S)
+            if below[i + 1] < low_after:
+                after = np.int32(SE)
+            out[i] = np.uint8(before if lowest <= c else after)
 
 
 @njit(cache=True, nogil=True)
-def _mark_and_seed(z: np.ndarray, state: np.ndarray, nrows: int, ncols: int, stack: np.ndarray) -> int:
-    """Mark voids and halo as seen, put every cell beside them on the stack; returns the stack's height."""
-    stride = ncols + 2
-    o = neighbour_offsets(stride)
-    for c in range(z.size):
-        state[c] = _SEEN if z[c] == -np.inf else _UNSEEN
-    height = 0
-    for row in range(1, nrows + 1):
-        for c in range(row * stride + 1, row * stride + ncols + 1):
-            if z[c] == -np.inf:
-                continue
-            for k in range(8):
-                if z[c + o[k]] == -np.inf:
-                    stack[height] = c
-                    height += 1
-                    break
-    for i in range(height):
-        state[stack[i]] = _SEEN
-    return height
-
-
-@njit(cache=True, nogil=True)
-def _finite_range(z: np.ndarray) -> tuple[float, float]:
-    low = np.float32(np.inf)
-    high = np.float32(-np.inf)
-    for c in range(z.size):
-        if z[c] != -np.inf:
-            low = min(low, z[c])
-            high = max(high, z[c])
-    return low, high
-
-
-@njit(cache=True, nogil=True)
-def _heap_push(heap: np.ndarray, size: int, cell: int, z: np.ndarray) -> None:
-    """Add a cell to the binary heap on elevation; the caller has made room."""
-    key = z[cell]
-    i = size
-    while i > 0:
-        parent = (i - 1) >> 1
-        if z[heap[parent]] <= key:
-            break
-        heap[i] = heap[parent]
-        i = parent
-    heap[i] = cell
-
-
-@njit(cache=True, nogil=True)
-def _heap_pop(heap: np.ndarray, size: int, z: np.ndarray) -> int:
-    """Take the lowest cell; the heap then holds ``size - 1``."""
-    top = heap[0]
-    last = heap[size - 1]
-    key = z[last]
-    n = size - 1
-    i = 0
-    while True:
-        child = 2 * i + 1
-        if child >= n:
-            break
-        if child + 1 < n and z[heap[child + 1]] < z[heap[child]]:
-            child += 1
-        if z[heap[child]] >= key:
-            break
-        heap[i] = heap[child]
-        i = child
-    heap[i] = last
-    return top
-
-
-@njit(cache=True, nogil=True)
-def fill_depressions(
-    z: np.ndarray, state: np.ndarray, nrows: int, ncols: int, stack: np.ndarray, link: np.ndarray
-) -> None:
-    """Fill every depression in place, exactly; voids and halo turn from -inf to +inf.
+def label_catchments(
+    z: np.ndarray, ways: np.ndarray, nrows: int, ncols: int, label: np.ndarray, stack: np.ndarray
+) -> int:
+    """Number the catchments; 0 is the outside.
 
     Parameters
     ----------
     z : float32 array, shape (cells,) [m]
-        Padded elevations with -inf in voids and halo; filled on return, with +inf there.
-    state : uint8 array, shape (cells,)
-        Work space.
+        Elevations, -inf in voids and halo.
+    ways : uint8 array, shape (cells,)
+        From `ways_down`.
     nrows, ncols : int
-    stack, link : int32 arrays, shape (cells,)
+    label : int32 array, shape (cells,)
+        Result.
+    stack : int32 array, shape (cells,)
         Work space.
+
+    Returns
+    -------
+    int
+        Number of labels, the outside included.
+    """
+    stride = ncols + 2
+    o = steps(stride)
+    for cell in range(z.size):
+        label[cell] = _OUTSIDE if z[cell] == -np.inf else _UNLABELLED
+    labels = 1
+    for row in range(1, nrows + 1):
+        for start in range(row * stride + 1, row * stride + ncols + 1):
+            if label[start] != _UNLABELLED:
+                continue
+            c = np.uint64(start)
+            height = 0
+            own = _UNLABELLED
+            while own == _UNLABELLED:
+                stack[height] = c
+                height += 1
+                way = ways[c]
+                if way == FLAT:
+                    own = labels
+                    labels += 1
+                else:
+                    c += o[way]
+                    own = label[c]
+            for i in range(height):
+                label[np.uint64(stack[i])] = own
+    return labels
+
+
+# Passes met are kept in a small table by pair of catchments until another pair needs the place: along the rows
+# of a raster a pair's cells follow each other soon, so that few pairs are written out more than once.
+_TABLE_SIZE = 1 << 14
+_EMPTY = -1
+_LOW_HALF = (1 << 32) - 1
+
+
+@njit(cache=True, nogil=True)
+def _scan_row(
+    z: np.ndarray, label: np.ndarray, start: int, stride: int, held_pair: np.ndarray, held_level: np.ndarray,
+    pair: np.ndarray, level: np.ndarray, count: int,
+) -> int:  # fmt: skip
+    """Passes between the cells of one row and the neighbours that follow them in memory."""
+    forward = (np.uint64(1), np.uint64(stride - 1), np.uint64(stride), np.uint64(stride + 1))
+    for c in range(np.uint64(start), np.uint64(start + stride - 2)):
+        a = label[c]
+        for k in range(4):
+            n = c + forward[k]
+            b = label[n]
+            if a == b:
+                continue
+            height = max(z[c], z[n])
+            low = np.int64(min(a, b))
+            high = np.int64(max(a, b))
+            key = low << 32 | high
+            slot = np.uint64((low * 40503 + high * 30011) & (_TABLE_SIZE - 1))
+            if held_pair[slot] == key:
+                if height < held_level[slot]:
+                    held_level[slot] = height
+                continue
+            pair[count] = held_pair[slot]
+            level[count] = held_level[slot]
+            count += held_pair[slot] != _EMPTY
+            held_pair[slot] = key
+            held_level[slot] = height
+    return count
+
+
+@njit(cache=True, nogil=True)
+def find_passes(z: np.ndarray, label: np.ndarray, nrows: int, ncols: int) -> tuple[np.ndarray, np.ndarray]:
+    """Passes between neighbouring catchments, the lowest of each pair among them.
+
+    Parameters
+    ----------
+    z : float32 array, shape (cells,) [m]
+    label : int32 array, shape (cells,)
+    nrows, ncols : int
+
+    Returns
+    -------
+    pair : int64 array, shape (passes,)
+        The two catchments: the smaller number times 2**32, plus the larger.
+    level : float32 array, shape (passes,) [m]
+        The higher of the two cells of the pass.
+    """
+    stride = ncols + 2
+    held_pair = np.full(_TABLE_SIZE, _EMPTY, np.int64)
+    held_level = np.empty(_TABLE_SIZE, np.float32)
+    most_per_row = 4 * ncols + _TABLE_SIZE
+    pair = np.empty(2 * most_per_row, np.int64)
+    level = np.empty(2 * most_per_row, np.float32)
+    count = 0
+    for row in range(nrows + 1):  # from the halo above: its neighbours are the first row
+        if count + most_per_row > pair.size:
+            more_pair = np.empty(2 * pair.size, np.int64)
+            more_level = np.empty(2 * pair.size, np.float32)
+            more_pair[:count] = pair[:count]
+            more_level[:count] = level[:count]
+            pair = more_pair
+            level = more_level
+        count = _scan_row(z, label, row * stride + 1, stride, held_pair, held_level, pair, level, count)
+    for slot in range(_TABLE_SIZE):
+        if held_pair[slot] != _EMPTY:
+            pair[count] = held_pair[slot]
+            level[count] = held_level[slot]
+            count += 1
+    return pair[:count], level[:count]
+
+
+@njit(cache=True, nogil=True)
+def spill_levels(labels: int, pair: np.ndarray, level: np.ndarray) -> np.ndarray:
+    """Level at which each catchment spills on its way to the outside.
+
+    Parameters
+    ----------
+    labels : int
+        Catchments; 0 is the outside.
+    pair : int64 array, shape (passes,)
+        From `find_passes`; used up.
+    level : float32 array, shape (passes,) [m]
+        Used up.
+
+    Returns
+    -------
+    float32 array, shape (labels,) [m]
+        The lowest over all ways to the outside of the highest pass on the way; -inf for the outside.
 
     Notes
     -----
-    Seeds, which keep their elevation, are the cells at the rim and beside voids. The idea of a queue that
-    releases cells by elevation is that of Barnes, Lehman & Mulla (2014), "Priority-flood", Computers &
-    Geosciences 62.
+    Rounds in the manner of Boruvka: each union of catchments looks across its lowest pass (of equal ones the
+    first in the list, so that no rings arise but pairs that look at each other) and joins what lies there. Along
+    such a chain the passes never rise, so a catchment that joins the outside in this round leaves over its own
+    pass. Otherwise it leaves over the higher of its own pass and that of its union in later rounds.
     """
-    stride = ncols + 2
-    o = neighbour_offsets(stride)
-    low, high = _finite_range(z)
-    height = _mark_and_seed(z, state, nrows, ncols, stack)
+    passes = pair.size
+    spill = np.full(labels, -np.inf, np.float32)  # by union of this round, all rounds one after the other
+    union = np.empty(labels, np.int32)  # the union each becomes part of, as an index into `spill`
+    begins = 0
+    unions = labels
+    while unions > 1:
+        lowest = spill[begins : begins + unions]
+        towards = union[begins : begins + unions]
+        lowest[:] = np.inf
+        for i in range(unions):
+            towards[i] = i
+        for e in range(passes):
+            a = pair[e] >> 32
+            b = pair[e] & _LOW_HALF
+            if level[e] < lowest[a]:
+                lowest[a] = level[e]
+                towards[a] = b
+            if level[e] < lowest[b]:
+                lowest[b] = level[e]
+                towards[b] = a
+        lowest[0] = -np.inf
+        towards[0] = 0
 
-    buckets = max(1, min(1 << 20, z.size // 8))
-    scale = 0.0
-    if high > low:
-        scale = (buckets - 1) / (np.float64(high) - np.float64(low))
-    head = np.full(buckets, -1, np.int32)
-    heap = np.empty(1024, np.int32)
-    heaped = 0
-    opened = -1
-    level = np.float32(-np.inf)
+        # One union of the next round for each pair that look at each other; the outside is its own.
+        joined = np.full(unions, -1, np.int32)
+        joined[0] = 0
+        next_unions = 1
+        for i in range(1, unions):
+            if towards[towards[i]] == i and i <= towards[i]:
+                joined[i] = next_unions
+                next_unions += 1
+        for i in range(unions):
+            root = i
+            while joined[root] < 0:
+                root = towards[root]
+            found = joined[root]
+            root = i
+            while joined[root] < 0:
+                joined[root] = found
+                root = towards[root]
 
-    while True:
-        # Growth. Stack from the bottom of its array, spill candidates from the top: a cell is in one of them.
-        candidates = 0
-        while height > 0:
-            height -= 1
-            c = stack[height]
-            zc = z[c]
-            spills = False
-            for k in range(8):
-                n = c + o[k]
-                if state[n] == _UNSEEN:
-                    zn = z[n]
-                    if zn < zc:
-                        if zc > level:
-                            spills = True
-                            continue
-                        z[n] = zc
-                    state[n] = _SEEN
-                    stack[height] = n
-                    height += 1
-            if spills:
-                candidates += 1
-                stack[stack.size - candidates] = c
+        kept = 0
+        for e in range(passes):
+            a = np.int64(joined[pair[e] >> 32])
+            b = np.int64(joined[pair[e] & _LOW_HALF])
+            if a != b:
+                pair[kept] = a << 32 | b
+                level[kept] = level[e]
+                kept += 1
+        passes = kept
+        ends = begins + unions
+        for i in range(unions):
+            towards[i] = ends + joined[i]
+        if spill.size < ends + next_unions:
+            more_spill = np.full(ends + next_unions, -np.inf, np.float32)
+            more_spill[:ends] = spill[:ends]
+            more_union = np.empty(ends + next_unions, np.int32)
+            more_union[:ends] = union[:ends]
+            spill = more_spill
+            union = more_union
+        begins = ends
+        unions = next_unions
+    if begins > 0:
+        spill[begins] = -np.inf
+    for i in range(begins - 1, -1, -1):
+        spill[i] = max(spill[i], spill[union[i]])
+    return spill[:labels]
 
-        # Queue the candidates that still have an unseen neighbour now that growth has ended.
-        for i in range(candidates):
-            c = stack[stack.size - 1 - i]
-            waits = False
-            for k in range(8):
-                if state[c + o[k]] == _UNSEEN:
-                    waits = True
-                    break
-            if not waits:
-                continue
-            b = int((np.float64(z[c]) - low) * scale)
-            if b > opened:
-                link[c] = head[b]
-                head[b] = c
-            else:
-                if heaped == heap.size:
-                    grown = np.empty(2 * heap.size, np.int32)
-                    grown[: heap.size] = heap
-                    heap = grown
-                _heap_push(heap, heaped, c, z)
-                heaped += 1
 
-        # Flood from the lowest candidate that still has something to flood.
-        while height == 0:
-            while heaped == 0 and opened < buckets - 1:
-                opened += 1
-                c = head[opened]
-                while c >= 0:
-                    for k in range(8):
-                        if state[c + o[k]] == _UNSEEN:
-                            if heaped == heap.size:
-                                grown = np.empty(2 * heap.size, np.int32)
-                                grown[: heap.size] = heap
-                                heap = grown
-                            _heap_push(heap, heaped, c, z)
-                            heaped += 1
-                            break
-                    c = link[c]
-            if heaped == 0:
-                break
-            c = _heap_pop(heap, heaped, z)
-            heaped -= 1
-            level = z[c]
-            for k in range(8):
-                n = c + o[k]
-                if state[n] == _UNSEEN:
-                    z[n] = level
-                    state[n] = _SEEN
-                    stack[height] = n
-                    height += 1
-        if height == 0:
-            break
+@njit(cache=True, nogil=True)
+def raise_to_levels(z: np.ndarray, label: np.ndarray, spill: np.ndarray) -> None:
+    """Raise every cell to the level of its catchment, in place; voids and halo turn from -inf to +inf.
 
+    Parameters
+    ----------
+    z : float32 array, shape (cells,) [m]
+    label : int32 array, shape (cells,)
+    spill : float32 array, shape (labels,) [m]
+    """
     for c in range(z.size):
-        if z[c] == -np.inf:
-            z[c] = np.inf
+        filled = max(z[c], spill[label[c]])
+        z[c] = np.inf if filled == -np.inf else filled
+
+
+@njit(cache=True, nogil=True)
+def measure_fill(
+    filled: np.ndarray, ncols: int, first_row: int, given: np.ndarray, row_depth_m: np.ndarray
+) -> tuple[int, float]:
+    """How far filling raised a block of rows.
+
+    Parameters
+    ----------
+    filled : float32 array, shape (cells,) [m]
+        +inf in voids.
+    ncols, first_row : int
+    given : float32 array, shape (rows, ncols) [m]
+        The terrain before filling.
+    row_depth_m : float64 array, shape (nrows,) [m]
+        Result for the rows of the block: sum of depths of fill.
+
+    Returns
+    -------
+    cells : int
+        Cells raised.
+    deepest_m : float
+    """
+    cells = 0
+    deepest = 0.0
+    for r in range(given.shape[0]):
+        start = (first_row + r + 1) * (ncols + 2) + 1
+        total = 0.0
+        for col in range(ncols):
+            level = filled[start + col]
+            if level > given[r, col] and level < np.inf:
+                depth = np.float64(level) - np.float64(given[r, col])
+                cells += 1
+                total += depth
+                deepest = max(deepest, depth)
+        row_depth_m[first_row + r] = total
+    return cells, deepest

@@ -6,7 +6,7 @@ import numpy as np
 from numba import njit
 
 from basinwright.kernels import EXIT, NO_CELL
-from basinwright.kernels.geometry import neighbour_offsets, row_of
+from basinwright.kernels.geometry import row_of, steps
 
 
 @njit(cache=True, nogil=True)
@@ -44,14 +44,14 @@ def label_cells(
     """
     stride = ncols + 2
     per_stride = 1.0 / stride
-    o = neighbour_offsets(stride)
+    o = steps(stride)
     label[:] = NO_CELL
     distance_um[:] = 0
     for i in range(outlets.size):
         label[outlets[i]] = i
     for j in range(order.size - 1, -1, -1):
-        c = order[j]
-        code = directions[c]
+        c = np.uint64(order[j])
+        code = int(directions[c])
         below = NO_CELL
         way = np.int64(0)
         if code < EXIT:

@@ -190,15 +190,8 @@ def mark_contact(
             i = label[c]
             if i < 0 or contact[i] == 1:
                 continue
-            highest = max(
-                max(
-                    max(filled[c - stride - 1], filled[c - stride]),
-                    max(filled[c - stride + 1], filled[c - 1]),
-                ),
-                max(
-                    max(filled[c + 1], filled[c + stride - 1]),
-                    max(filled[c + stride], filled[c + stride + 1]),
-                ),
-            )
+            above = max(filled[c - stride - 1], filled[c - stride], filled[c - stride + 1])
+            below = max(filled[c + stride - 1], filled[c + stride], filled[c + stride + 1])
+            highest = max(above, filled[c - 1], filled[c + 1], below)
             if highest == np.inf:
                 contact[i] = 1

@@ -6,7 +6,7 @@ import numpy as np
 from numba import njit
 
 from basinwright.kernels import EXIT, NO_CELL
-from basinwright.kernels.geometry import neighbour_offsets, row_of
+from basinwright.kernels.geometry import row_of, steps
 
 
 @njit(cache=True, nogil=True)
@@ -29,7 +29,7 @@ def trace_paths(
         Path i is ``cells[bounds[i]:bounds[i + 1]]``.
     cells : int32 array
     """
-    o = neighbour_offsets(ncols + 2)
+    o = steps(ncols + 2)
     n = starts.size
     bounds = np.zeros(n + 1, np.int64)
     for i in range(n):
@@ -38,7 +38,7 @@ def trace_paths(
         if c >= 0:
             count = 1
             while c != ends[i] and directions[c] < EXIT:
-                c += o[directions[c]]
+                c += np.int64(o[directions[c]])
                 count += 1
         bounds[i + 1] = bounds[i] + count
     cells = np.empty(bounds[n], np.int32)
@@ -47,7 +47,7 @@ def trace_paths(
         for j in range(bounds[i], bounds[i + 1]):
             cells[j] = c
             if directions[c] < EXIT:
-                c += o[directions[c]]
+                c += np.int64(o[directions[c]])
     return bounds, cells
 
 
@@ -82,7 +82,7 @@ def walk_to_area(
         Walked along the flow line; 0 where there is no cell.
     """
     stride = ncols + 2
-    o = neighbour_offsets(stride)
+    o = steps(stride)
     found = np.full(starts.size, NO_CELL, np.int32)
     distance_um = np.zeros(starts.size, np.int64)
     for i in range(starts.size):
@@ -90,7 +90,7 @@ def walk_to_area(
         way = np.int64(0)
         while area_m2[c] < least_area_m2 and directions[c] < EXIT and way <= limit_um[i]:
             way += step_um[row_of(c, 1.0 / stride), directions[c]]
-            c += o[directions[c]]
+            c += np.int64(o[directions[c]])
         if area_m2[c] >= least_area_m2 and way <= limit_um[i]:
             found[i] = c
             distance_um[i] = way

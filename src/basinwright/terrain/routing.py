@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -162,8 +163,9 @@ def condition_and_route(
     code = np.empty(cells, np.uint8)
     work = np.empty(cells, np.int32)
     link = np.empty(cells, np.int32)
-    fill.raise_single_pits(z, nrows, ncols)
-    fill.fill_depressions(z, code, nrows, ncols, work, link)
+    fill.ways_down(z, nrows, ncols, code)
+    labels = fill.label_catchments(z, code, nrows, ncols, link, work)
+    fill.raise_to_levels(z, link, fill.spill_levels(labels, *fill.find_passes(z, link, nrows, ncols)))
     directions.steepest_descent(z, nrows, ncols, dx, dy, code)
     flat_cells = flats.resolve_flats(z, code, nrows, ncols, work, link)
     del link
@@ -174,10 +176,8 @@ def condition_and_route(
         raise TerrainError(f"{undrained} of {data_cells} cells do not drain after filling")
 
     row_area = summable_areas_m2(cell_area, ncols)
-    donors = np.empty(cells, np.uint8)
-    area = np.zeros(cells, np.float64)
-    accumulate.count_donors(code, nrows, ncols, donors)
-    visited = accumulate.contributing_area(code, nrows, ncols, row_area, donors, area, work)
+    area = np.empty(cells, np.float64)
+    visited = accumulate.contributing_area(code, nrows, ncols, row_area, area, work)
     if visited != data_cells:
         raise TerrainError(f"{data_cells - visited} of {data_cells} cells lie on or below a cycle of directions")
 
@@ -219,16 +219,15 @@ def _pad(elevation_m: np.ndarray) -> tuple[np.ndarray, float]:
 
 def _filling(elevation_m: np.ndarray, filled: np.ndarray, row_area_m2: np.ndarray) -> tuple[int, float, float]:
     """Cells raised by filling, their volume [m3] and the deepest fill [m]."""
+    from basinwright.kernels.fill import measure_fill
+
     nrows, ncols = elevation_m.shape
-    grid = filled.reshape(nrows + 2, ncols + 2)[1:-1, 1:-1]
+    row_depth = np.empty(nrows)
     cells = 0
-    volume = 0.0
     deepest = 0.0
     for first in range(0, nrows, _BLOCK_ROWS):
-        block = slice(first, first + _BLOCK_ROWS)
-        given = elevation_m[block].astype(np.float32)
-        depth = np.where(np.isfinite(grid[block]), grid[block] - given, 0).astype(np.float64)
-        cells += int(np.count_nonzero(depth))
-        deepest = max(deepest, float(depth.max(initial=0.0)))
-        volume += float(depth.sum(axis=1) @ row_area_m2[block])
-    return cells, volume, deepest
+        given = np.ascontiguousarray(elevation_m[first : first + _BLOCK_ROWS], np.float32)
+        block_cells, block_deepest = measure_fill(filled, ncols, first, given, row_depth)
+        cells += block_cells
+        deepest = max(deepest, block_deepest)
+    return cells, math.fsum(row_depth * row_area_m2), deepest
