@@ -21,6 +21,9 @@ from basinwright.errors import InputRejected, Problem
 GROUPS = ("A", "B", "C", "D")
 """Hydrologic soil groups, from the least runoff to the most."""
 
+ANY_GROUP = "any"
+"""Soil group of a patch whose class has one curve number on every group (open water, wetlands)."""
+
 SHIPPED = ("nlcd", "nlcd_arid")
 """Schemes for the legend of the National Land Cover Database, for humid and for arid regions."""
 
@@ -77,6 +80,16 @@ class CoverClass:
     def needs_soil(self) -> bool:
         """Whether the curve number depends on the soil group."""
         return len(set(self.curve_number.values())) > 1
+
+    def curve_number_on(self, group: str) -> float:
+        """Return the curve number on a soil group, or on `ANY_GROUP` where it does not depend on soil.
+
+        Raises
+        ------
+        KeyError
+            Where it does depend on soil, or the group is none.
+        """
+        return self.curve_number["D" if group == ANY_GROUP and not self.needs_soil else group]
 
 
 @dataclass(frozen=True)
