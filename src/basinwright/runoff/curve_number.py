@@ -25,7 +25,7 @@ UNCONNECTED_LIMIT_PCT = 30.0
 """Impervious share up to which unconnected area counts (Technical Release 55, 1986, ch. 2) [%]."""
 
 
-def _curve_number(name: str, values: ArrayLike) -> Floats:
+def checked_curve_number(name: str, values: ArrayLike) -> Floats:
     """Return curve numbers as float64; refuse what is not above 0 and up to 100."""
     return within(name, positive(name, values), 0.0, 100.0)
 
@@ -59,7 +59,7 @@ def retention_in(curve_number: ArrayLike) -> Floats:
     >>> round(0.2 * float(retention_in(75)), 3)
     0.667
     """
-    return 1000.0 / _curve_number("curve_number", curve_number) - 10.0
+    return 1000.0 / checked_curve_number("curve_number", curve_number) - 10.0
 
 
 def retention_mm(curve_number: ArrayLike, initial_abstraction_ratio: float = 0.2) -> Floats:
@@ -95,7 +95,7 @@ def retention_mm(curve_number: ArrayLike, initial_abstraction_ratio: float = 0.2
     """
     ratio = check_ratio(initial_abstraction_ratio)
     if ratio == 0.2:
-        return 25400.0 / _curve_number("curve_number", curve_number) - 254.0
+        return 25400.0 / checked_curve_number("curve_number", curve_number) - 254.0
     return _retention_005_in(retention_in(curve_number)) * MM_PER_IN
 
 
@@ -231,7 +231,7 @@ def composite_curve_number(
     >>> composite_curve_number([61, 74], 35).round(1).tolist()
     [74.0, 82.4]
     """
-    pervious = _curve_number("pervious_curve_number", pervious_curve_number)
+    pervious = checked_curve_number("pervious_curve_number", pervious_curve_number)
     impervious = within("impervious_pct", impervious_pct, 0.0, 100.0)
     unconnected = 1.0 - within("connected_fraction", connected_fraction, 0.0, 1.0)
     unconnected = np.where(impervious <= UNCONNECTED_LIMIT_PCT, unconnected, 0.0)
@@ -268,7 +268,7 @@ def moisture_curve_number(curve_number: ArrayLike, moisture: MoistureClass) -> F
     >>> moisture_curve_number([80, 47.5], "I").tolist(), float(moisture_curve_number(80, "III"))
     ([63.0, 28.5], 91.0)
     """
-    curve = _curve_number("curve_number", curve_number)
+    curve = checked_curve_number("curve_number", curve_number)
     if moisture == "II":
         return curve
     if moisture not in ("I", "III"):

@@ -12,8 +12,8 @@ from basinwright.errors import RangeError
 from basinwright.numbers import Floats, Integers, check_offsets, not_negative, positive
 from basinwright.runoff.curve_number import (
     MoistureClass,
-    _curve_number,
     check_ratio,
+    checked_curve_number,
     moisture_curve_number,
     retention_mm,
     runoff_depth,
@@ -47,7 +47,7 @@ class Patches:
 
     def __post_init__(self) -> None:
         area = not_negative("area_km2", self.area_km2)
-        curve = _curve_number("curve_number", self.curve_number)
+        curve = checked_curve_number("curve_number", self.curve_number)
         if area.ndim != 1 or area.shape != curve.shape:
             raise RangeError("area_km2 and curve_number must have one value for each patch")
         for name, value in (
@@ -71,7 +71,7 @@ class Patches:
     def sums(self, values: Floats) -> Floats:
         """Sum a value of each patch by outlet, in the order of the patches, shape (n,)."""
         # bincount adds one by one: the bits of an outlet do not depend on its neighbours.
-        return np.bincount(self.outlet, weights=values, minlength=self.outlets)
+        return np.bincount(self.outlet, weights=values, minlength=self.outlets).astype(np.float64)
 
     def weights(self) -> Floats:
         """Share of each patch in its outlet's area, shape (m,) [-]."""

@@ -227,7 +227,7 @@ def balanced(duration_h: float, step_h: float, durations_h: ArrayLike, depths_mm
     return _from_blocks("balanced", hours, arranged)
 
 
-def _from_blocks(name: str, hours: Floats, blocks: Floats) -> Storm:
+def _from_blocks(name: str, hours: Floats, blocks: np.ndarray) -> Storm:
     fractions = np.concatenate(([0.0], np.cumsum(blocks)))
     fractions /= fractions[-1]
     return Storm(name, hours, fractions)
