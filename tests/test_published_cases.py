@@ -4,7 +4,9 @@ import math
 
 import numpy as np
 import pytest
-from published.case_files import Case, evaluate, load, load_all, parse_quantity
+from published.case_files import Case, evaluate, load, load_all, methods_checked, parse_quantity
+
+from basinwright.registry import Kind, methods
 
 CASES = load_all()
 
@@ -86,3 +88,8 @@ def test_every_printed_number_can_fail() -> None:
         assert (
             case.tolerances() <= 0.1 * np.maximum(np.abs(case.printed.values), case.printed.half_last_digits * 20)
         ).all(), case.key
+
+
+@pytest.mark.parametrize("kind", ["timing"])
+def test_every_registered_method_has_a_case(kind: Kind) -> None:
+    assert [key for key in methods(kind) if f"{kind}/{key}" not in methods_checked()] == []

@@ -14,8 +14,8 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from basinwright.errors import RangeError
+from basinwright.numbers import Floats, positive
 from basinwright.published import table
-from basinwright.timing._numbers import Floats, positive
 
 _TABLE = "bankfull_bieger_2015"
 

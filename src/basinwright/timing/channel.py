@@ -10,7 +10,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import ArrayLike
 
-from basinwright.timing._numbers import Floats, not_negative, positive
+from basinwright.numbers import Floats, not_negative, positive
 from basinwright.units import M_PER_FT
 
 GRAVITY_MPS2 = 9.80665

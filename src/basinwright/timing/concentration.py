@@ -9,8 +9,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from basinwright.numbers import Floats
 from basinwright.registry import Method, methods
-from basinwright.timing._numbers import Floats
 
 Input = ArrayLike | Callable[[Floats], Floats]
 """A column of the outlets, or a function such as an intensity by duration."""
@@ -113,7 +113,8 @@ def _evaluate(
             lacks.add(np.ones(size, dtype=bool), name)
             continue
         numbers.append(name)
-        lacks.add(~(np.isfinite(arrays[name]) & (arrays[name] > 0)), name)
+        lacks.add(~np.isfinite(arrays[name]), name)
+        lacks.add(arrays[name] <= 0, f"{name} above zero")
     ready = ~lacks.any
     tc_h = np.full(size, np.nan)
     if ready.any():

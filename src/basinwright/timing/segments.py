@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from basinwright.errors import RangeError
-from basinwright.timing._numbers import Floats, positive
+from basinwright.numbers import Floats, positive
 from basinwright.timing.bankfull import BankfullRelation, bankfull_depth_m, bankfull_width_m
 from basinwright.timing.channel import (
     JARRETT_HYDRAULIC_RADIUS_M,
@@ -367,12 +367,18 @@ def _time_sheet(
     reach = _sheet_reaches(rows)
     length_m = reach.sum(rows.length_m)
     depth_mm = np.asarray(two_year_depth_mm, dtype=np.float64)
+    depth_mm = depth_mm[reach.outlet] if depth_mm.ndim else np.full(reach.outlet.size, depth_mm)
+    if (bad := ~(np.isfinite(depth_mm) & (depth_mm > 0))).any():
+        first = int(np.flatnonzero(bad)[0])
+        raise RangeError(
+            f"outlet {reach.outlet[first]}: two_year_depth_mm is {depth_mm[first]:g}: it must be above zero"
+        )
     slope_of_reach = np.empty(reach.outlet.size)
     slope_of_reach[reach.of_row] = slope[sheet]
     time_h = sheet_flow_time_h(
         length_m,
         reach.sum(n * rows.length_m) / length_m,
-        depth_mm[reach.outlet] if depth_mm.ndim else depth_mm,
+        depth_mm,
         slope_of_reach,
     )
     out["roughness"][sheet] = n[sheet]
@@ -420,23 +426,26 @@ def _time_channel(
     width, depth = bankfull_width_m(area[channel], relation), bankfull_depth_m(area[channel], relation)
     radius, radius_half, depth_full, depth_half, radius_given = _sections(rows, channel, width, depth)
 
-    s = slope[channel]
-    n_given = out["roughness"][channel]
+    s, n_given = slope[channel], out["roughness"][channel]
     rows.needed("roughness", channel & ~np.isnan(out["roughness"]), out["roughness"], "give a Manning n above zero")
     n_is_given = ~np.isnan(n_given)
+    by_jarrett = np.zeros(n_given.size, dtype=bool)
+    plain_text = "n of the project"
     if isinstance(channel_roughness, str):
         if channel_roughness != "jarrett":
             raise RangeError(f'channel_roughness is {channel_roughness!r}: it must be a Manning n or "jarrett"')
         by_jarrett = ~n_is_given & (s >= JARRETT_SLOPE[0])
-        n = np.where(n_is_given, n_given, np.where(by_jarrett, jarrett_roughness_n(s, radius), PLAIN_ROUGHNESS_N))
-        n_half = np.where(by_jarrett, jarrett_roughness_n(s, radius_half), n)
+        plain, plain_text = np.full(rows.count, PLAIN_ROUGHNESS_N), f"n {PLAIN_ROUGHNESS_N:g} below Jarrett's slopes"
         low, high = JARRETT_HYDRAULIC_RADIUS_M
         outside = ~by_jarrett | (s > JARRETT_SLOPE[1]) | (radius_half < low) | (radius > high)
         marks["jarrett"][channel] = ~n_is_given & outside
     else:
-        by_jarrett = np.zeros(n_given.size, dtype=bool)
-        default = positive("channel_roughness", channel_roughness)
-        n = n_half = np.where(n_is_given, n_given, default[channel] if default.ndim else default)
+        plain = np.broadcast_to(np.asarray(channel_roughness, dtype=np.float64), (rows.count,))
+        rows.needed("channel_roughness", channel & np.isnan(out["roughness"]), plain, "give a Manning n above zero")
+    n = n_half = np.where(n_is_given, n_given, plain[channel])
+    if by_jarrett.any():
+        n = np.where(by_jarrett, jarrett_roughness_n(s, radius), n)
+        n_half = np.where(by_jarrett, jarrett_roughness_n(s, radius_half), n_half)
 
     velocity, velocity_half = manning_velocity_mps(radius, s, n), manning_velocity_mps(radius_half, s, n_half)
     too_fast = (velocity > critical_velocity_mps(depth_full)) | (velocity_half > critical_velocity_mps(depth_half))
@@ -456,7 +465,7 @@ def _time_channel(
         for which, roughness in (
             (n_is_given, "n given"),
             (by_jarrett, "n by Jarrett (1984)"),
-            (~n_is_given & ~by_jarrett, "n of the project"),
+            (~n_is_given & ~by_jarrett, plain_text),
         ):
             mask = channel.copy()
             mask[channel] = by_relation & which

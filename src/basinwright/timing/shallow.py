@@ -12,8 +12,8 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from basinwright.errors import RangeError
+from basinwright.numbers import Floats, positive
 from basinwright.published import table
-from basinwright.timing._numbers import Floats, positive
 from basinwright.units import M_PER_FT
 
 SHALLOW_FLOW_SOURCE = "NEH 630 ch. 15 (2010) table 15-3"

@@ -9,7 +9,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import ArrayLike
 
-from basinwright.timing._numbers import Floats, positive
+from basinwright.numbers import Floats, positive
 from basinwright.units import M_PER_FT, MM_PER_IN
 
 SHEET_FLOW_SOURCE = "NEH 630 ch. 15 (2010) eq. 15-8"

@@ -4,8 +4,8 @@ from __future__ import annotations
 
 from numpy.typing import ArrayLike
 
+from basinwright.numbers import Floats, positive
 from basinwright.registry import Source, method
-from basinwright.timing._numbers import Floats, positive
 from basinwright.timing.methods.kirpich import KIRPICH_AREA, KIRPICH_SLOPE
 from basinwright.units import M_PER_FT, M_PER_MI
 

@@ -4,8 +4,8 @@ from __future__ import annotations
 
 from numpy.typing import ArrayLike
 
+from basinwright.numbers import Floats, positive
 from basinwright.registry import Range, Source, method
-from basinwright.timing._numbers import Floats, positive
 from basinwright.units import KM2_PER_AC, M_PER_FT
 
 OVERLAND_LENGTH = Range(0.0, 1200.0 * M_PER_FT, "up to 1200 ft")

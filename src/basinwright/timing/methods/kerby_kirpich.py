@@ -5,8 +5,8 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import ArrayLike
 
+from basinwright.numbers import Floats, positive
 from basinwright.registry import Range, Source, method
-from basinwright.timing._numbers import Floats, positive
 from basinwright.timing.methods.kerby import OVERLAND_LENGTH, kerby_min
 from basinwright.timing.methods.kirpich import kirpich_min
 from basinwright.units import KM2_PER_MI2, M_PER_FT, M_PER_MI

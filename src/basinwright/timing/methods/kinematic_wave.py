@@ -8,8 +8,8 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from basinwright.errors import RangeError
+from basinwright.numbers import Floats, positive
 from basinwright.registry import Range, Source, method
-from basinwright.timing._numbers import Floats, positive
 from basinwright.units import M_PER_FT, MM_PER_IN
 
 _TOLERANCE = 1e-10
@@ -106,13 +106,13 @@ def kinematic_wave_tc_h(
     Raises
     ------
     RangeError
-        Where an argument is not finite and above zero, or the rain's depth falls with duration so that no time
-        satisfies both.
+        Where an argument is not finite and above zero, or no time satisfies both because the rain's intensity rises
+        or its depth falls with duration.
 
     Notes
     -----
-    The time is inserted into the intensity until it stands still. As long as depth does not fall with duration, each
-    round shrinks the error at least to 0.4 of it.
+    The time is inserted into the intensity until it stands still. As long as intensity does not rise and depth does
+    not fall with duration, each round shrinks the error at least to 0.4 of it.
 
     Examples
     --------
@@ -128,4 +128,4 @@ def kinematic_wave_tc_h(
         time_h = kinematic_wave_at_intensity_h(path_length_m, path_slope_pct, sheet_n, intensity_mm_per_h(before))
         if np.all(np.abs(time_h - before) <= _TOLERANCE * time_h):
             return time_h
-    raise RangeError("intensity_mm_per_h finds no time: the depth of rain must not fall as its duration grows")
+    raise RangeError("intensity_mm_per_h finds no time: with duration, intensity must not rise and depth must not fall")

@@ -4,8 +4,8 @@ from __future__ import annotations
 
 from numpy.typing import ArrayLike
 
+from basinwright.numbers import Floats, positive
 from basinwright.registry import Range, Source, method
-from basinwright.timing._numbers import Floats, positive
 from basinwright.units import KM2_PER_AC, M_PER_FT
 
 KIRPICH_AREA = Range(1.0 * KM2_PER_AC, 112.0 * KM2_PER_AC, "1 to 112 ac")
