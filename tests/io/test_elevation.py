@@ -138,6 +138,13 @@ class TestCells:
         assert "which no land does" in line
         assert "declare its nodata value" in line
 
+    def test_a_damaged_file(self, write_raster, lattice):
+        path = write_raster("dem.tif", RNG.random((300, 300)), lattice)
+        path.write_bytes(path.read_bytes()[:300_000])
+        (line,) = rejected([path])
+        assert "dem.tif: cells: its cells cannot be read (" in line
+        assert line.endswith("): the file is damaged: get it again")
+
 
 class TestMosaic:
     def test_split_tiles_equal_the_whole(self, write_raster, lattice, hills):
@@ -217,6 +224,10 @@ class TestHeaders:
         assert problems == []
         assert plan.grid.shape == (40, 50)
         assert plan.alignment[0]["resolution"] == [10.0, 10.0]
+
+    def test_rounding_in_the_georeference_is_no_rotation(self, write_raster, lattice, hills):
+        noisy = Affine(lattice.a, 1e-14, lattice.c, -1e-14, lattice.e, lattice.f)
+        assert plan_terrain([write_raster("dem.tif", hills, noisy)])[0].grid.transform == lattice
 
 
 class TestCoordinateSystems:

@@ -6,6 +6,7 @@ import rasterio
 from affine import Affine
 from pyproj import Transformer
 
+from basinwright.errors import InputRejected
 from basinwright.grid import Grid
 from basinwright.io import rasters
 from basinwright.io.rasters import (
@@ -109,6 +110,12 @@ class TestReadOnto:
         values = np.arange(1200, dtype=np.int16).reshape(30, 40)
         flipped = lattice @ Affine.translation(0, 30) @ Affine.scale(1, -1)
         np.testing.assert_array_equal(read_onto(write_raster("s.tif", values[::-1], flipped), grid, missing=-1), values)
+
+    def test_a_damaged_file(self, write_raster, lattice, grid):
+        path = write_raster("c.tif", np.random.default_rng(6).random((300, 300)), lattice @ Affine.scale(0.1))
+        path.write_bytes(path.read_bytes()[:300_000])
+        with pytest.raises(InputRejected, match=r"c\.tif: cells: its cells cannot be read"):
+            read_onto(path, grid)
 
 
 class TestCheck:

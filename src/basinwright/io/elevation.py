@@ -21,7 +21,9 @@ from basinwright.io.rasters import (
     WARP_TOLERANCE,
     Header,
     Location,
+    cells_of,
     crs_label,
+    horizontal_crs,
     on_lattice,
     read_header,
     short_name,
@@ -161,7 +163,7 @@ def open_terrain(
     Raises
     ------
     InputRejected
-        With every problem of the headers, or of the cells: all void, impossible elevations.
+        With every problem of the headers, or of the cells: damaged, all void, impossible elevations.
     """
     plan, problems = plan_terrain(paths, crs, vertical_unit)
     if plan is None:
@@ -191,7 +193,7 @@ def _read_crs(text: str) -> tuple[CRS | None, list[Problem]]:
     if not (crs.is_geographic or crs.is_projected):
         what = f"{text!r} is neither geographic nor projected"
         return None, [Problem("project", "terrain.crs", what, 'write a code such as "EPSG:32614", or "auto"')]
-    return crs.to_2d(), []
+    return horizontal_crs(crs.to_wkt()), []
 
 
 def _mosaic_problems(headers: Sequence[Header]) -> list[Problem]:
@@ -341,14 +343,13 @@ def _float_type(headers: Sequence[Header]) -> type[np.floating[Any]]:
 
 def _read_tile(header: Header, plan: TerrainPlan, elevation: NDArray[np.floating[Any]]) -> list[Problem]:
     """Read one tile into the mosaic wherever that is still void, in metres."""
-    import rasterio
     from rasterio.windows import Window
 
     top, left = _offset(header, plan.native.transform)
     factor = METRES[plan.vertical_unit]
     rows = max(1, BLOCK_CELLS // header.ncols)
     lowest, highest, undeclared = np.inf, -np.inf, False
-    with rasterio.open(header.path) as source:
+    with cells_of(header.path) as source:
         scale, offset = source.scales[0], source.offsets[0]
         for first in range(0, header.nrows, rows):
             height = min(rows, header.nrows - first)

@@ -6,6 +6,7 @@ import glob
 import re
 import warnings
 from collections.abc import Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
@@ -13,12 +14,13 @@ from typing import TYPE_CHECKING, Any, Literal
 import numpy as np
 from affine import Affine
 
-from basinwright.errors import Problem
+from basinwright.errors import InputRejected, Problem
 from basinwright.grid import Grid
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
     from pyproj import CRS
+    from rasterio.io import DatasetReader
 
 Resampling = Literal["nearest", "bilinear", "average"]
 
@@ -232,15 +234,34 @@ def read_header(path: Location) -> tuple[Header | None, list[Problem]]:
         problems.append(Problem(file, "crs", what, "warp it to a geographic or projected one"))
     if transform.is_identity:
         problems.append(Problem(file, "georeference", "has none", "give a georeferenced raster"))
-    elif transform.b or transform.d or transform.a <= 0:
+    elif max(abs(transform.b), abs(transform.d)) > 1e-9 * abs(transform.a) or transform.a <= 0:  # less is rounding
         problems.append(Problem(file, "georeference", "is rotated or mirrored", "warp it to a north-up grid"))
     if problems:
         return None, problems
     south_up = transform.e > 0
-    if south_up:
-        top = transform.f + shape[0] * transform.e
-        transform = Affine(transform.a, 0.0, transform.c, 0.0, -transform.e, top)
+    top = transform.f + shape[0] * transform.e if south_up else transform.f
+    transform = Affine(transform.a, 0.0, transform.c, 0.0, -abs(transform.e), top)
     return Header(path, transform, south_up, shape[0], shape[1], bands, dtype, crs_wkt, unit), []
+
+
+@contextmanager
+def cells_of(path: Location) -> Iterator[DatasetReader]:
+    """Open a raster to read its cells; a damaged file is rejected when that shows.
+
+    Raises
+    ------
+    InputRejected
+        Where the file cannot be opened or its cells cannot be read.
+    """
+    import rasterio
+    from rasterio.errors import RasterioError, RasterioIOError
+
+    try:
+        with rasterio.open(path) as source:
+            yield source
+    except (RasterioError, RasterioIOError) as error:
+        what, fix = f"its cells cannot be read ({error})", "the file is damaged: get it again"
+        raise InputRejected.one(str(path), "cells", what, fix) from error
 
 
 def check_raster(path: Location, grid: Grid | None = None) -> list[Problem]:
@@ -290,14 +311,18 @@ def read_blocks_onto(
         Row of the grid at which the block begins.
     block : masked array, shape (rows, ncols)
         Values in the raster's own type, masked where the raster has none.
+
+    Raises
+    ------
+    InputRejected
+        Where the file is damaged.
     """
-    import rasterio
     from rasterio.enums import Resampling as Methods
     from rasterio.vrt import WarpedVRT
     from rasterio.windows import Window
 
     rows = max(1, BLOCK_CELLS // grid.ncols)
-    with rasterio.open(path) as source:
+    with cells_of(path) as source:
         # A raster without a nodata value has no number to spare for "none": an alpha band says it instead.
         empty = {"add_alpha": True} if source.nodata is None else {"nodata": source.nodata}
         with WarpedVRT(
@@ -421,9 +446,10 @@ def write_cog(
             out.set_band_description(1, meaning)
             out.units = (unit,)
             out.update_tags(meaning=meaning, unit=unit, **(tags or {}))
+        # Deflate is read everywhere; its first level is half as slow as the sixth for 2 to 8 % more bytes.
         copy(
-            draft, path, driver="COG", COMPRESS="DEFLATE", LEVEL="6", PREDICTOR="YES", BLOCKSIZE="512",
-            OVERVIEW_RESAMPLING=overview_resampling.upper(), BIGTIFF="IF_SAFER", NUM_THREADS="2",
+            draft, path, driver="COG", COMPRESS="DEFLATE", LEVEL="1", PREDICTOR="YES", BLOCKSIZE="512",
+            OVERVIEW_RESAMPLING=overview_resampling.upper(), BIGTIFF="IF_SAFER",
         )  # fmt: skip
     finally:
         draft.unlink(missing_ok=True)

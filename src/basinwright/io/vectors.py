@@ -195,6 +195,7 @@ def _read_csv(path: Path) -> tuple[_Features | None, list[Problem]]:
     except (OSError, UnicodeDecodeError, csv.Error) as error:
         return None, [Problem(file, "file", f"is not a readable CSV ({error})", "save it as CSV in UTF-8")]
     problems = []
+    header = [name.strip() for name in header]
     for name, count in Counter(header).items():
         if count > 1:
             problems.append(Problem(file, f"column {name}", f"appears {count} times", "rename all but one"))
@@ -202,14 +203,14 @@ def _read_csv(path: Path) -> tuple[_Features | None, list[Problem]]:
     if ragged:
         what = f"another number of cells than the header in {_rows(ragged)}"
         problems.append(Problem(file, "rows", what, "quote cells that hold a comma"))
-    place = {name.strip().lower(): column for column, name in enumerate(header)}
+    place = {name.lower(): column for column, name in enumerate(header)}
     for axis in ("x", "y"):
         if axis not in place:
             fix = f"name the coordinate columns x and y; it has: {', '.join(header) or 'none'}"
             problems.append(Problem(file, f"column {axis}", "does not exist", fix))
     if problems:
         return None, problems
-    columns = {name.strip(): tuple(row[column] for row in rows) for column, name in enumerate(header)}
+    columns = {name: tuple(row[column] for row in rows) for column, name in enumerate(header)}
     points = [_csv_point(row[place["x"]], row[place["y"]]) for row in rows]
     return _Features(points, columns, ""), []
 
