@@ -101,6 +101,16 @@ class TestEveryMethod:
                 assert (np.diff(times) < 0).all(), name
 
 
+def test_upper_bounds_of_numbers() -> None:
+    nrcs_lag, faa = METHODS["nrcs_lag"].function, METHODS["faa"].function
+    assert nrcs_lag(1000.0, 100.0, 5.0) > 0
+    assert faa(50.0, 2.0, 1.0) > 0
+    with pytest.raises(RangeError, match=r"curve_number is 100\.5: it must be between 0 and 100"):
+        nrcs_lag(1000.0, 100.5, 5.0)
+    with pytest.raises(RangeError, match=r"runoff_coefficient is 1\.005: it must be between 0 and 1"):
+        faa(50.0, 2.0, 1.005)
+
+
 def test_what_is_shipped() -> None:
     assert set(METHODS) == {
         "velocity", "nrcs_lag", "kirpich", "kerby", "kerby_kirpich", "california_culverts", "faa", "kinematic_wave",
