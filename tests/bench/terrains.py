@@ -62,7 +62,7 @@ def river_like(n: int, seed: int = 1, cell_m: float = 10.0, noise_m: float = 0.1
     tilted = rough(n, seed) + np.linspace(2000.0, 0.0, n, dtype=np.float32)[:, None]
     size = np.full(n, cell_m)
     terrain = condition_and_route(tilted, size, size, size * size)
-    slope = 0.3 * (terrain.area_m2 / cell_m**2).clip(1) ** -0.45
+    slope = 1.5 * (terrain.area_m2 / cell_m**2).clip(1) ** -0.45
     z = _rebuild(terrain.directions, terrain.order, terrain.ncols, slope, cell_m)
     noise = np.random.default_rng(seed + 1).standard_normal((n, n), np.float32)
     return (terrain.grid(z) + noise_m * noise).astype(np.float32)

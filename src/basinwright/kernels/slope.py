@@ -6,15 +6,12 @@ import numpy as np
 from numba import njit
 
 
-@njit(cache=True, nogil=True, inline="always")
-def _complete(a: float, centre: float, b: float) -> tuple[float, float]:
-    """Two opposite neighbours, what is missing put in."""
-    if a != a:
-        b = b if b == b else centre
-        a = centre + (centre - b)
-    elif b != b:
-        b = centre + (centre - a)
-    return a, b
+@njit(cache=True, nogil=True)
+def _or_else(value: float, second: float, third: float) -> float:
+    """The first that is a number."""
+    if value == value:
+        return value
+    return second if second == second else third
 
 
 @njit(cache=True, nogil=True)
@@ -34,8 +31,10 @@ def horn_slope_pct(z: np.ndarray, dx_m: np.ndarray, dy_m: np.ndarray, slope_pct:
     -----
     Horn, B. K. P. (1981), "Hill shading and the reflectance map", Proceedings of the IEEE 69(1), 14-47: the
     weights 1, 2, 1 on the differences between the outer rows and columns, over 8 cell sizes. A missing
-    neighbour lies on the straight line through the opposite neighbour and the centre, so that a plane keeps its
-    slope up to its rim; where the opposite one is missing too, it takes the elevation of the centre.
+    neighbour is put on the straight line through the opposite neighbour and the centre, so that a plane keeps
+    its slope up to its rim. Where the opposite one is missing too, a neighbour along the row or the column
+    takes the elevation of the centre, and a diagonal one is put on the plane through the centre and the two
+    between which it lies.
     """
     rows, ncols = slope_pct.shape
     for r in range(rows):
@@ -43,13 +42,17 @@ def horn_slope_pct(z: np.ndarray, dx_m: np.ndarray, dy_m: np.ndarray, slope_pct:
         per_y = 1.0 / (8.0 * dy_m[r])
         for i in range(ncols):
             centre = z[r + 1, i + 1]
+            if np.isnan(centre):
+                slope_pct[r, i] = np.nan
+                continue
             nw, n, ne = z[r, i], z[r, i + 1], z[r, i + 2]
             w, e = z[r + 1, i], z[r + 1, i + 2]
             sw, s, se = z[r + 2, i], z[r + 2, i + 1], z[r + 2, i + 2]
-            nw, se = _complete(nw, centre, se)
-            n, s = _complete(n, centre, s)
-            ne, sw = _complete(ne, centre, sw)
-            w, e = _complete(w, centre, e)
+            twice = centre + centre
+            n, s = _or_else(n, twice - s, centre), _or_else(s, twice - n, centre)
+            w, e = _or_else(w, twice - e, centre), _or_else(e, twice - w, centre)
+            nw, se = _or_else(nw, twice - se, n + w - centre), _or_else(se, twice - nw, s + e - centre)
+            ne, sw = _or_else(ne, twice - sw, n + e - centre), _or_else(sw, twice - ne, s + w - centre)
             east = ((ne - nw) + 2.0 * (e - w) + (se - sw)) * per_x
             south = ((sw - nw) + 2.0 * (s - n) + (se - ne)) * per_y
             slope_pct[r, i] = 100.0 * np.sqrt(east * east + south * south)

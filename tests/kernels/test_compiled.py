@@ -1,0 +1,119 @@
+"""Each kernel gives the same bits compiled and as plain Python."""
+
+import numpy as np
+import pytest
+
+from basinwright.kernels import (
+    accumulate,
+    directions,
+    fill,
+    flats,
+    forest,
+    geometry,
+    labels,
+    reduce,
+    slope,
+    trace,
+)
+from basinwright.terrain.routing import step_lengths_um
+
+NROWS, NCOLS = 13, 17
+DX = np.linspace(20.0, 24.0, NROWS)
+DY = np.full(NROWS, 30.0)
+AREA = np.round(DX * DY, 3)
+
+
+def padded(seed):
+    """A small terrain with flats and voids, -inf in voids and halo."""
+    rng = np.random.default_rng(seed)
+    z = rng.integers(0, 6, (NROWS, NCOLS)) if seed % 2 else rng.normal(100.0, 5.0, (NROWS, NCOLS))
+    z = z.astype(np.float32)
+    z[rng.random(z.shape) < 0.08] = -np.inf
+    return np.pad(z, 1, constant_values=-np.inf).ravel()
+
+
+def everything(seed, pick):
+    """Run all kernels one after the other; `pick` chooses the compiled function or the plain one."""
+    out = {}
+    z = padded(seed)
+    n = z.size
+    code = np.zeros(n, np.uint8)
+    work, link = np.zeros(n, np.int32), np.zeros(n, np.int32)
+    pick(fill.ways_down)(z, NROWS, NCOLS, code)
+    out["ways"] = code.reshape(NROWS + 2, -1)[1:-1, 1:-1].copy()
+    count = pick(fill.label_catchments)(z, code, NROWS, NCOLS, link, work)
+    out["catchments"] = link.copy()
+    pair, level = pick(fill.find_passes)(z, link, NROWS, NCOLS)
+    out["pair"], out["level"] = pair.copy(), level.copy()
+    out["spill"] = pick(fill.spill_levels)(count, pair, level)
+    given = np.ascontiguousarray(z.reshape(NROWS + 2, -1)[1:-1, 1:-1])
+    pick(fill.raise_to_levels)(z, link, out["spill"])
+    row_depth = np.zeros(NROWS)
+    out["measured"] = np.array(pick(fill.measure_fill)(z, NCOLS, 0, given, row_depth))
+    out["row_depth"] = row_depth
+    pick(directions.steepest_descent)(z, NROWS, NCOLS, DX, DY, code)
+    out["steepest"] = code.copy()
+    out["flats"] = np.array([pick(flats.resolve_flats)(z, code, NROWS, NCOLS, work, link)])
+    out["directions"] = code.copy()
+    out["count"] = np.array(pick(accumulate.count_cells)(code))
+    area = np.zeros(n)
+    visited = pick(accumulate.contributing_area)(code, NROWS, NCOLS, AREA, area, work)
+    out["area"], out["order"], out["codes after"] = area, work[:visited].copy(), code.copy()
+
+    outlets = out["order"][:: max(1, visited // 7)][:6].astype(np.int32)
+    k = outlets.size
+    label, distance = np.zeros(n, np.int32), np.zeros(n, np.int64)
+    parent, parent_distance = np.zeros(k, np.int32), np.zeros(k, np.int64)
+    step_um = step_lengths_um(DX, DY)
+    pick(labels.label_cells)(code, out["order"], NCOLS, step_um, outlets, label, distance, parent, parent_distance)
+    out |= {"label": label, "distance": distance, "parent": parent, "parent distance": parent_distance}
+
+    values = np.random.default_rng(seed).random((NROWS, NCOLS))
+    values[0, :3] = np.nan
+    classes = np.random.default_rng(seed).integers(-1, 4, (NROWS, NCOLS)).astype(np.int32)
+    sums, weight, cells, contact = np.zeros(k), np.zeros(k), np.zeros(k, np.int64), np.zeros(k, np.uint8)
+    by_class, total = np.zeros((k, 4)), np.zeros(k)
+    lowest, highest, highest_cell = np.full(k, np.inf), np.full(k, -np.inf), np.full(k, -1, np.int32)
+    farthest, farthest_cell = np.full(k, -1, np.int64), np.full(k, -1, np.int32)
+    pick(reduce.add_area)(label, NCOLS, AREA, 0, NROWS, total, cells)
+    pick(reduce.add_values)(label, NCOLS, AREA, 0, values, 2.0**-30, sums, weight)
+    pick(reduce.add_classes)(label, NCOLS, AREA, 0, classes, by_class)
+    pick(reduce.keep_extremes)(label, NCOLS, 0, values, lowest, highest, highest_cell)
+    pick(reduce.keep_farthest)(label, NCOLS, distance, 0, NROWS, farthest, farthest_cell)
+    pick(reduce.mark_contact)(label, NCOLS, z, 0, NROWS, contact)
+    order = pick(forest.upstream_first)(parent)
+    pick(forest.combine_sums)(parent, order, by_class)
+    pick(forest.combine_contact)(parent, order, contact)
+    pick(forest.combine_extremes)(parent, order, lowest, highest, highest_cell)
+    pick(forest.combine_farthest)(parent, order, parent_distance, farthest, farthest_cell)
+    out |= {"sums": sums, "weight": weight, "cells": cells, "contact": contact, "classes": by_class}
+    out |= {"total": total, "lowest": lowest, "highest": highest, "highest cell": highest_cell}
+    out |= {"farthest": farthest, "farthest cell": farthest_cell, "forest order": order}
+
+    bounds, path = pick(trace.trace_paths)(code, NCOLS, farthest_cell, outlets)
+    out["bounds"], out["path"] = bounds, path
+    out["path distances"] = pick(trace.path_distances)(path[: bounds[1]], code, NCOLS, step_um)
+    limit = np.full(k, 200_000_000, np.int64)
+    out["snapped"], out["snap"] = pick(trace.walk_to_area)(code, NCOLS, step_um, area, outlets, 3000.0, limit)
+    steep = np.zeros((NROWS, NCOLS))
+    ground = np.pad(np.where(np.isfinite(given), given, np.nan), 1, constant_values=np.nan).astype(np.float64)
+    pick(slope.horn_slope_pct)(ground, DX, DY, steep)
+    out["slope"] = steep
+    return out
+
+
+@pytest.mark.parametrize("seed", range(4))
+def test_compiled_kernels_equal_plain_python(seed):
+    compiled = everything(seed, lambda kernel: kernel)
+    with np.errstate(over="ignore", invalid="ignore"):  # offsets that wrap round, inf - inf in voids
+        plain = everything(seed, lambda kernel: kernel.py_func)
+    for name, expected in plain.items():
+        np.testing.assert_array_equal(compiled[name], expected, err_msg=name)
+
+
+@pytest.mark.parametrize("stride", [3, 1000, 40_002, 1_999_999])
+def test_row_of_is_exact_at_both_ends_of_every_kind_of_row(stride):
+    last_row = (2**31 - 1) // stride - 1
+    for row in {0, 1, last_row // 2, last_row - 1, last_row}:
+        for cell in (row * stride, row * stride + stride - 1):
+            assert geometry.row_of(cell, 1.0 / stride) == row - 1
