@@ -40,6 +40,7 @@ class Screen:
         self.started = time.monotonic()
 
     def __call__(self, text: str) -> None:
+        """Print a line with the time since the start."""
         print(f"[{time.monotonic() - self.started:6.1f} s] {text}", file=sys.stderr, flush=True)
 
 

@@ -275,9 +275,14 @@ def _edit_outlet(
         reader.wrong(line, "outlet_id", f"outlet {outlet_id!r} {what}", "keep one row for each outlet")
         return [dict(old[0])]
     line, row = rows[0]
-    for stem in ("area", "path_length", "basin_slope_pct"):
+    terrain = ("area", "path_length", "basin_slope_pct")
+    for stem in terrain:
         row[reader.name[stem]] = row[reader.name[stem]] or base[0][reader.name[stem]]  # emptied: as the terrain gave it
-    return [_settle(reader, "outlets", "", line, row, old[0], held)]
+    settled = _settle(reader, "outlets", "", line, row, old[0], held)
+    for stem in terrain:
+        cell = ("outlets", outlet_id, "", stem)
+        held.discard(cell) if same(settled[reader.name[stem]], base[0][reader.name[stem]]) else held.add(cell)
+    return [settled]
 
 
 def _edit_shares(

@@ -53,7 +53,7 @@ FLAGS: dict[str, FlagKind] = {
     for kind in (
         FlagKind("EDGE_TOUCH", "serious",
                  "the basin reaches the raster's edge or a void",
-                 "extend the terrain or fill the void: the area is a lower bound, time and peak are not bounded either way"),
+                 "extend the terrain or fill the void: the area is a lower bound, time and peak are not bounded"),
         FlagKind("SNAP_FAR", "warning",
                  "the outlet was moved over half of outlets.snap_within",
                  "check the point against a map; move it onto its channel or give expected_area"),

@@ -1,8 +1,8 @@
 """The store of a run, and how a run is published: whole or not at all.
 
 **Stages.** A stage is a named pure step. Its key is the hash of its name, the code and everything it depends on
-(file hashes, options, keys of earlier stages); its outputs lie under that key in the run's store. A stage whose
-key is already there is not run again: ``--resume`` and repeated runs follow from that, and nothing else caches.
+(file hashes, options, keys of earlier stages); its outputs lie under that key in the run's store. A stage whose key
+is there already is not run again: ``--resume`` and repeated runs follow from that, and nothing else caches.
 
 **Publishing.** A run is built in ``.NAME.partial`` beside its final folder ``NAME``. When all of it stands, ``run.json``
 last, the folder is renamed into place; a folder that it replaces steps aside as ``.NAME.previous`` until the new
@@ -19,16 +19,18 @@ import shutil
 import time
 from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager, suppress
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, fields
 from functools import cache
 from pathlib import Path
-from typing import IO, TYPE_CHECKING, Any
+from typing import IO, TYPE_CHECKING, Any, TypeVar
 
 from basinwright.errors import InputRejected, PublishError
 
 if TYPE_CHECKING:
     import numpy as np
     from numpy.typing import NDArray
+
+T = TypeVar("T")
 
 STORE = ".store"
 MANIFEST = "run.json"
@@ -66,14 +68,27 @@ class Entry:
     folder: Path
 
     def array(self, name: str) -> NDArray[Any]:
-        """Open an array without reading it into memory."""
+        """Open an array without reading it into memory; what is written to it is not kept."""
         import numpy as np
 
-        return np.load(self.folder / f"{name}.npy", mmap_mode="r", allow_pickle=False)
+        return np.asarray(np.load(self.folder / f"{name}.npy", mmap_mode="c", allow_pickle=False))
 
     def values(self, name: str) -> Any:
         """Read plain values."""
         return json.loads((self.folder / f"{name}.json").read_text(encoding="utf-8"))
+
+    def record(self, kind: type[T], name: str) -> T:
+        """Read a dataclass that `Draft.record` kept."""
+        plain = self.values(name)
+        return kind(**{f.name: self._field(name, f.name, plain) for f in fields(kind)})  # type: ignore[arg-type]
+
+    def _field(self, name: str, part: str, plain: dict[str, Any]) -> Any:
+        import numpy as np
+
+        if part not in plain:
+            return self.array(f"{name}.{part}")
+        value = plain[part]
+        return np.array(value["texts"], dtype=object) if isinstance(value, dict) and "texts" in value else value
 
 
 class Draft:
@@ -91,6 +106,21 @@ class Draft:
     def values(self, name: str, values: Any) -> None:
         """Keep plain values."""
         (self.folder / f"{name}.json").write_bytes(canonical(values))
+
+    def record(self, record: Any, name: str) -> None:
+        """Keep a dataclass of arrays, texts and plain values."""
+        import numpy as np
+
+        plain: dict[str, Any] = {}
+        for part in fields(record):
+            value = getattr(record, part.name)
+            if isinstance(value, np.ndarray) and value.dtype != object:
+                self.array(f"{name}.{part.name}", value)
+            elif isinstance(value, np.ndarray):
+                plain[part.name] = {"texts": value.tolist()}
+            else:
+                plain[part.name] = value.item() if isinstance(value, np.generic) else value
+        self.values(name, plain)
 
 
 @dataclass
@@ -306,6 +336,13 @@ class RunFolder:
             self.partial.mkdir(parents=True, exist_ok=True)
         except OSError as error:
             raise self._no_place(error) from None
+        return self.partial
+
+    def begin_copy(self) -> Path:
+        """Return the folder to build in, filled with links to the files of the run that stands."""
+        self.begin(keep=False).rmdir()
+        link_tree(self.final, self.partial)
+        (self.partial / MANIFEST).unlink()
         return self.partial
 
     def publish(self) -> None:

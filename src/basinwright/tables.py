@@ -8,10 +8,11 @@ suffix and unit; `Table.fields` does the naming.
 from __future__ import annotations
 
 import csv
+import io
 from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, Literal
+from typing import TYPE_CHECKING, Any, Literal, TextIO
 
 from basinwright.units import SHOWN, System
 
@@ -76,10 +77,22 @@ class Column:
 
 @dataclass(frozen=True)
 class Field:
-    """A column as it stands in a file: its name there, its schema, and the return period it is for."""
+    """A column as it stands in a file.
+
+    Parameters
+    ----------
+    name : str
+        Its name there.
+    stem : str
+        Its stem in the schema, the return period put in.
+    column : Column
+        Its schema.
+    factor : float
+        From the number in the file to the unit used inside.
+    """
 
     name: str
-    inside: str
+    stem: str
     column: Column
     factor: float
 
@@ -139,7 +152,9 @@ class Table:
 
 
 def _field(column: Column, system: System, period: str) -> Field:
-    return Field(column.name(system, period), column.name("si", period), column, column.inside_per_shown(system))
+    return Field(
+        column.name(system, period), column.stem.replace("{T}", period), column, column.inside_per_shown(system)
+    )
 
 
 # Short constructors keep the schema below readable as a table.
@@ -174,7 +189,7 @@ OUTLETS = Table(
     (
         _ID,
         _text("name", "name from the outlet layer"),
-        _text("status", "ok: no flag; flagged; failed: not computed", choices=("ok", "flagged", "failed")),
+        _text("status", "ok (no flag), flagged or failed (not computed)", choices=("ok", "flagged", "failed")),
         _text("flags", "flags raised, separated by spaces; flags.csv says why"),
         _number("x", "easting or longitude of the outlet's cell in the working CRS", "CRS unit"),
         _number("y", "northing or latitude of the outlet's cell in the working CRS", "CRS unit"),
@@ -183,7 +198,7 @@ OUTLETS = Table(
         _shown("snap", "length", "how far the point was moved onto its flow line"),
         _text("downstream_outlet_id", "the next outlet downstream in this run"),
         _shown("area", "area", "drainage area", editable=True),
-        _shown("centroid_length", "length", "length along the longest flow path from the outlet to the point nearest the basin's centroid"),
+        _shown("centroid_length", "length", "length along the path from outlet to the point nearest the centroid"),
         _shown("path_length", "length", "length of the longest flow path, divide to outlet", editable=True),
         _shown("path_length_raw", "length", "the same before any correction of the grid's staircase"),
         _shown("sheet_length", "length", "length of the path in sheet flow"),
@@ -209,7 +224,8 @@ OUTLETS = Table(
         _shown("peak_{T}yr", "flow", "peak flow"),
         _number("peak_time_{T}yr_h", "time of the peak from the storm's start", "h"),
         _shown("capacity", "flow", "capacity as supplied", optional=True),
-        _text("exceeded_at_yr", "smallest tested return period whose peak exceeds the capacity; empty: none; unknown: no verdict", optional=True),
+        _text("capacity_basis", "the criterion the capacity rests on, as supplied", optional=True),
+        _text("exceeded_at_yr", "smallest tested period over capacity; empty: none; or unknown", optional=True),
     ),
 )  # fmt: skip
 
@@ -227,7 +243,7 @@ SEGMENTS = Table(
         _shown("top_elevation", "length", "elevation of its top, conditioned terrain", editable=True),
         _shown("bottom_elevation", "length", "elevation of its bottom, conditioned terrain", editable=True),
         _number("slope", "fall over length, not under the floor", "1", editable=True),
-        _number("roughness", "sheet and channel: Manning n; shallow: velocity over root slope, ft/s or m/s", editable=True),
+        _number("roughness", "sheet, channel: n; shallow: velocity over root slope, ft/s or m/s", editable=True),
         _shown("area", "area", "contributing area at its middle"),
         _shown("bankfull_width", "length", "bankfull width"),
         _shown("bankfull_depth", "length", "bankfull depth"),
@@ -277,8 +293,12 @@ UNIT_HYDROGRAPHS = Table(
     "unit_hydrographs",
     "one ordinate of an outlet's unit hydrograph",
     ("outlet_id", "time_h"),
-    (_ID, _number("time_h", "time from the start of the excess rain", "h"), _shown("flow", "unit_flow", "flow per unit of excess")),
-)  # fmt: skip
+    (
+        _ID,
+        _number("time_h", "time from the start of the excess rain", "h"),
+        _shown("flow", "unit_flow", "flow per unit of excess rain"),
+    ),
+)
 
 HYDROGRAPHS = Table(
     "hydrographs",
@@ -310,33 +330,46 @@ ALL: tuple[Table, ...] = (OUTLETS, SEGMENTS, COVER_SHARES, TIMING, UNIT_HYDROGRA
 """Every table a run can write."""
 
 
-def cell_text(value: Any) -> str:
-    """Return a value as its CSV cell: floats read back exactly, ``true``/``false``, empty where missing."""
-    if value is None or value != value:  # NaN and NaT differ from themselves
-        return ""
-    if isinstance(value, bool) or type(value).__name__ == "bool_":
-        return "true" if value else "false"
-    if isinstance(value, float):
-        return repr(float(value))
-    return str(value)
-
-
-def write_csv(path: Path, names: Sequence[str], rows: Iterable[Sequence[Any]]) -> None:
-    """Write a CSV file by RFC 4180 (UTF-8, CRLF, one header row).
+def cells(values: Any) -> list[Any]:
+    """Return a column as the CSV writer wants it: floats read back exactly, ``true``/``false``, empty where missing.
 
     Parameters
     ----------
-    path : Path
-        File to write.
-    names : sequence of str
-        Header.
-    rows : iterable of sequences
-        Values; see `cell_text`.
+    values : array or sequence
+        Numbers, booleans or text; NaN and None are missing.
     """
+    listed = values.tolist() if hasattr(values, "tolist") else list(values)
+    kind = getattr(getattr(values, "dtype", None), "kind", "O")
+    if kind == "b":
+        return ["true" if value else "false" for value in listed]
+    if kind in "iu":
+        return listed
+    return [None if value is None or value != value else value for value in listed]  # NaN differs from itself
+
+
+def csv_text(columns: Mapping[str, Any]) -> str:
+    """Return columns as CSV text by RFC 4180: CRLF, one header row.
+
+    Parameters
+    ----------
+    columns : mapping of str to array
+        Columns by name, in order, of one length; see `cells`.
+    """
+    stream = io.StringIO(newline="")
+    _write(stream, columns)
+    return stream.getvalue()
+
+
+def write_csv(path: Path, columns: Mapping[str, Any]) -> None:
+    """Write columns as a CSV file in UTF-8 (see `csv_text`)."""
     with path.open("w", encoding="utf-8", newline="") as stream:
-        writer = csv.writer(stream, lineterminator="\r\n")
-        writer.writerow(names)
-        writer.writerows([cell_text(value) for value in row] for row in rows)
+        _write(stream, columns)
+
+
+def _write(stream: TextIO, columns: Mapping[str, Any]) -> None:
+    writer = csv.writer(stream, lineterminator="\r\n")
+    writer.writerow(columns)
+    writer.writerows(zip(*(cells(values) for values in columns.values()), strict=True))
 
 
 def read_csv(path: Path) -> pd.DataFrame:
@@ -352,9 +385,18 @@ def read_csv(path: Path) -> pd.DataFrame:
     pandas.DataFrame
         All columns of dtype object, empty cells as ``""``.
     """
+    return _frame(path)
+
+
+def read_csv_text(text: str) -> pd.DataFrame:
+    """Read CSV text with every cell as the text that stands there."""
+    return _frame(io.StringIO(text, newline=""))
+
+
+def _frame(source: Path | io.StringIO) -> pd.DataFrame:
     import pandas as pd
 
-    return pd.read_csv(path, dtype=str, keep_default_na=False, na_filter=False, encoding="utf-8-sig")
+    return pd.read_csv(source, dtype=str, keep_default_na=False, na_filter=False, encoding="utf-8-sig")
 
 
 def frictionless_schema(fields: Sequence[Field], system: System, key: Sequence[str]) -> dict[str, Any]:

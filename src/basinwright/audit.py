@@ -1,0 +1,167 @@
+"""The second opinion: basin areas again with pysheds, an independent library, in a child process.
+
+Each audited basin is clipped with a margin. pysheds delineates it twice: on our flow directions, which checks labels
+and sums, and from the unconditioned elevations with its own filling, flats and directions, which checks the terrain as
+well. It runs apart because importing it compiles for a minute the first time, and its faults shall not be ours.
+
+Run as a program (``python -m basinwright.audit``) this module is the child.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import subprocess
+import sys
+import tempfile
+from collections.abc import Sequence
+from dataclasses import asdict, dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from basinwright.errors import BasinwrightError
+from basinwright.kernels import EXIT
+
+if TYPE_CHECKING:
+    import numpy as np
+
+MARGIN_CELLS = 3
+DIFFERS_OVER = 0.01
+"""Relative difference in area above which an outlet is flagged."""
+
+_PYSHEDS_CODES = (64, 128, 1, 2, 4, 8, 16, 32)
+"""What pysheds writes for north, northeast, ... northwest."""
+
+
+@dataclass(frozen=True)
+class Clip:
+    """One basin to audit.
+
+    Parameters
+    ----------
+    elevation_m : (rows, cols) array
+        Unconditioned elevations [m], NaN in voids.
+    directions : (rows, cols) array of uint8
+        Our direction codes.
+    cell_area_m2 : (rows,) array
+        Area of a cell by row [m2].
+    cell_m : tuple of float
+        Width and height of a cell in the middle row [m].
+    outlet : tuple of int
+        Row and column of the outlet's cell in the clip.
+    """
+
+    elevation_m: np.ndarray
+    directions: np.ndarray
+    cell_area_m2: np.ndarray
+    cell_m: tuple[float, float]
+    outlet: tuple[int, int]
+
+
+@dataclass(frozen=True)
+class Opinion:
+    """What pysheds says of one basin, in km2.
+
+    Parameters
+    ----------
+    same_directions_km2 : float
+        Area upstream of the outlet on our directions.
+    own_conditioning_km2 : float
+        Area by its own filling and directions.
+    undrained_cells : int
+        Cells of the clip that its own flats left without a direction: if there are any, its second area is doubtful.
+    """
+
+    same_directions_km2: float
+    own_conditioning_km2: float
+    undrained_cells: int
+
+
+def second_opinion(clips: Sequence[Clip]) -> list[Opinion]:
+    """Ask pysheds for the areas of clipped basins.
+
+    Raises
+    ------
+    BasinwrightError
+        Where the child process fails, with the last line of what it said.
+    """
+    import numpy as np
+
+    if not clips:
+        return []
+    with tempfile.TemporaryDirectory(prefix="basinwright-audit-") as folder:
+        asked = {f"{name}_{i}": value for i, clip in enumerate(clips) for name, value in vars(clip).items()}
+        np.savez(Path(folder, "clips.npz"), allow_pickle=False, count=len(clips), **asked)
+        # Its compiled code outlives a change of our kernels: give it a cache of its own.
+        ours = os.environ.get("NUMBA_CACHE_DIR", folder)
+        cache = str(Path(ours).with_name("pysheds"))
+        child = subprocess.run(
+            [sys.executable, "-P", "-m", "basinwright.audit", folder],
+            env={**os.environ, "NUMBA_CACHE_DIR": cache},
+            capture_output=True,
+            text=True,
+            check=False,
+        )
+        if child.returncode != 0:
+            said = (child.stderr.strip().splitlines() or ["no message"])[-1]
+            raise BasinwrightError(f"the audit's pysheds process failed: {said}")
+        answers = json.loads(Path(folder, "opinions.json").read_text(encoding="utf-8"))
+    return [Opinion(**answer) for answer in answers]
+
+
+def _answer(folder: Path) -> None:
+    """Do the child's work: read the clips, write the opinions."""
+    import numpy as np
+
+    with np.load(folder / "clips.npz") as asked:
+        clips = [
+            Clip(
+                asked[f"elevation_m_{i}"],
+                asked[f"directions_{i}"],
+                asked[f"cell_area_m2_{i}"],
+                tuple(asked[f"cell_m_{i}"].tolist()),
+                tuple(asked[f"outlet_{i}"].tolist()),
+            )
+            for i in range(int(asked["count"]))
+        ]
+    answers = [asdict(_delineate(clip)) for clip in clips]
+    (folder / "opinions.json").write_text(json.dumps(answers), encoding="utf-8")
+
+
+def _delineate(clip: Clip) -> Opinion:
+    """Delineate one basin with pysheds, on our directions and on its own."""
+    import numpy as np
+    from affine import Affine
+    from pyproj import Proj
+    from pysheds.grid import Grid
+    from pysheds.view import Raster, ViewFinder
+
+    # A ring of void: pysheds treats the outermost cells of a raster differently from the others.
+    elevation = np.pad(clip.elevation_m.astype(np.float64), 1, constant_values=np.nan)
+    codes = np.array([*_PYSHEDS_CODES] + [0] * (256 - EXIT), dtype=np.int64)[clip.directions]
+    codes = np.pad(codes, 1)
+    area_km2 = np.pad(clip.cell_area_m2, 1) / 1e6
+    width, height = clip.cell_m
+
+    def raster(data: np.ndarray, nodata: Any) -> Any:
+        view = ViewFinder(
+            affine=Affine(width, 0, 0, 0, -height, 0), shape=data.shape, crs=Proj("EPSG:32614"), nodata=nodata
+        )  # any metric system: only the cell size counts
+        return Raster(data, viewfinder=view)
+
+    terrain = raster(elevation, np.float64(np.nan))
+    grid = Grid(viewfinder=terrain.viewfinder)
+    row, col = clip.outlet[0] + 1, clip.outlet[1] + 1
+
+    def area_of(directions: Any) -> float:
+        basin = np.asarray(grid.catchment(x=col, y=row, fdir=directions, xytype="index"), dtype=bool)
+        return float((basin.sum(axis=1) * area_km2).sum())
+
+    filled = grid.fill_depressions(grid.fill_pits(terrain))
+    own = grid.flowdir(grid.resolve_flats(filled))
+    undrained = int((np.asarray(own) < 0).sum())
+    return Opinion(area_of(raster(codes, np.int64(0))), area_of(own), undrained)
+
+
+if __name__ == "__main__":
+    _answer(Path(sys.argv[1]))

@@ -1,0 +1,1 @@
+"""What a run leaves behind: tables, their schema, layers, rasters, and a few words on the screen."""

@@ -1,0 +1,105 @@
+"""What the screen says at the end of a run."""
+
+from __future__ import annotations
+
+from collections import Counter
+from dataclasses import dataclass
+from pathlib import Path
+
+from basinwright.flags import FLAGS, SEVERITIES, Flag
+from basinwright.hydrology import Columns
+from basinwright.project import Project
+from basinwright.tables import OUTLETS
+
+_MOST_ROWS = 30
+_STEMS = ("area", "path_length", "curve_number", "tc_h")
+_STYLE = {"serious": "bold red", "warning": "yellow", "note": "dim"}
+
+
+@dataclass(frozen=True)
+class Outcome:
+    """What a finished command tells its caller.
+
+    Parameters
+    ----------
+    folder : Path
+        The run's folder.
+    project : Project
+        The resolved project.
+    outlets : columns
+        outlets.csv as written.
+    flags : list of Flag
+        All flags.
+    """
+
+    folder: Path
+    project: Project
+    outlets: Columns
+    flags: list[Flag]
+
+    @property
+    def failed(self) -> int:
+        """Number of outlets that could not be computed."""
+        return sum(status == "failed" for status in self.outlets["status"])
+
+
+def show(outcome: Outcome) -> None:
+    """Print the outlet table, the flags by kind, and where the outputs lie."""
+    from rich import box
+    from rich.console import Console
+    from rich.markup import escape
+    from rich.table import Table
+
+    console = Console(width=None if Console().is_terminal else 150)
+    system, columns = outcome.project.project.units, outcome.outlets
+    stems = [(OUTLETS.column(stem).name(system), stem) for stem in _STEMS]
+    peak = OUTLETS.column("peak_{T}yr")
+    names = [name for name, _ in stems] + [peak.name(system, period) for period in outcome.project.storm.periods]
+    if "exceeded_at_yr" in columns:
+        names.append("exceeded_at_yr")
+    ids = list(columns["outlet_id"])
+    grid = Table(box=box.SIMPLE_HEAD, title=escape(outcome.project.project.name), title_justify="left")
+    grid.add_column("outlet_id")
+    for name in names:
+        grid.add_column(name.replace("_", " "), justify="right")
+    for i, outlet_id in enumerate(ids[:_MOST_ROWS]):
+        grid.add_row(escape(str(outlet_id)), *(_figure(columns[name][i]) for name in names))
+    console.print(grid)
+    if len(ids) > _MOST_ROWS:
+        console.print(f"... and {len(ids) - _MOST_ROWS} more outlets in outlets.csv")
+    for severity in reversed(SEVERITIES):
+        for key, kind in FLAGS.items():
+            flagged = [flag.outlet_id for flag in outcome.flags if flag.key == key]
+            if kind.severity == severity and flagged:
+                console.print(f"[{_STYLE[severity]}]{severity}[/] {key} ({escape(_some(flagged))}): {kind.trigger}")
+                if severity != "note":
+                    console.print(f"    {kind.remedy}", style="dim", highlight=False)
+    status: Counter[str] = Counter(columns["status"])
+    console.print(
+        f"\n{len(ids)} outlets: {status['ok']} ok, {status['flagged']} flagged, {status['failed']} failed.\n"
+        f"The run is in {escape(str(outcome.folder))}",
+        highlight=False,
+    )
+    console.print(
+        "These results support, and do not replace, the judgement of a licensed engineer and local drainage criteria.",
+        style="dim",
+    )
+
+
+def _some(names: list[str]) -> str:
+    return ", ".join(names[:8]) + (f" and {len(names) - 8} more" if len(names) > 8 else "")
+
+
+def _figure(value: object) -> str:
+    """Return a value as an engineer would sign it: three significant figures."""
+    if value is None or value == "":
+        return ""
+    try:
+        number = float(str(value))
+    except ValueError:
+        return str(value)
+    if number != number:
+        return ""
+    if abs(number) >= 1000:
+        return f"{round(number, 2 - len(str(int(abs(number)))) + 1):,.0f}"
+    return f"{number:.3g}"

@@ -1,0 +1,99 @@
+"""Writes the tables of a run, their schema and the terrain rasters."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Mapping
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from basinwright.hydrology import Columns
+from basinwright.project import Project
+from basinwright.tables import ALL, Table, frictionless_schema, write_csv
+
+if TYPE_CHECKING:
+    from basinwright.grid import Grid
+    from basinwright.terrain import Terrain
+
+
+def write_tables(folder: Path, tables: Mapping[str, Columns], project: Project) -> None:
+    """Write the CSV tables of a run and ``tables.json``, the Frictionless Data Package that describes them.
+
+    Parameters
+    ----------
+    folder : Path
+        Where to write.
+    tables : mapping of str to columns
+        Tables by name.
+    project : Project
+        Gives units and return periods.
+    """
+    system = project.project.units
+    resources = []
+    for table in ALL:
+        if table.name not in tables:
+            continue
+        columns = tables[table.name]
+        (folder / f"{table.name}.csv").unlink(missing_ok=True)  # it may be a link to a file of the run before
+        write_csv(folder / f"{table.name}.csv", columns)
+        optional = [column.stem for column in table.columns if column.optional and column.name(system) in columns]
+        schema = frictionless_schema(table.fields(system, project.storm.periods, optional), system, table.key)
+        resources.append(_resource(table, schema))
+    package = {
+        "profile": "tabular-data-package",
+        "name": "basinwright-run",
+        "title": project.project.name,
+        "resources": resources,
+    }
+    (folder / "tables.json").unlink(missing_ok=True)
+    (folder / "tables.json").write_text(json.dumps(package, indent=1, ensure_ascii=False) + "\n", encoding="utf-8")
+
+
+def _resource(table: Table, schema: Mapping[str, Any]) -> dict[str, Any]:
+    return {
+        "profile": "tabular-data-resource",
+        "name": table.name,
+        "path": f"{table.name}.csv",
+        "description": table.meaning,
+        "format": "csv",
+        "mediatype": "text/csv",
+        "encoding": "utf-8",
+        "dialect": {"delimiter": ",", "lineTerminator": "\r\n", "quoteChar": '"', "doubleQuote": True, "header": True},
+        "schema": schema,
+    }
+
+
+def write_terrain(folder: Path, grid: Grid, terrain: Terrain) -> None:
+    """Write the conditioned terrain, the flow directions and the contributing area as cloud-optimised GeoTIFFs."""
+    from basinwright.io.rasters import write_cog
+
+    folder.mkdir()
+    conditioned = terrain.filled_grid
+    write_cog(
+        folder / "conditioned.tif",
+        np.where(np.isfinite(conditioned), conditioned, np.float32(-9999.0)),
+        grid,
+        meaning="elevation after conditioning: depressions filled",
+        unit="m",
+        nodata=-9999.0,
+    )
+    write_cog(
+        folder / "flow_direction.tif",
+        terrain.azimuths(),
+        grid,
+        meaning="azimuth of the downstream neighbour on the grid, clockwise from grid north; "
+        "65534: water leaves here; 65533: declared sink",
+        unit="degree",
+        nodata=65535,
+    )
+    area = terrain.area_grid
+    write_cog(
+        folder / "contributing_area.tif",
+        np.where(area > 0, area, -1.0),
+        grid,
+        meaning="contributing area, the cell's own included",
+        unit="m2",
+        nodata=-1.0,
+    )

@@ -1,0 +1,156 @@
+"""run.json: what was computed from what, and all that `retime` needs besides the tables."""
+
+from __future__ import annotations
+
+import base64
+import json
+import platform
+import time
+import zlib
+from collections import Counter
+from collections.abc import Mapping
+from importlib.metadata import version
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from basinwright.editing import EDITABLE, Record
+from basinwright.errors import InputRejected
+from basinwright.flags import Flag
+from basinwright.hydrology import Results, Settings
+from basinwright.pipeline.inputs import Inputs, storm_of
+from basinwright.project import Project, parse_project
+from basinwright.schemes import Scheme
+from basinwright.store import MANIFEST, Store
+from basinwright.tables import csv_text, read_csv_text
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+    from basinwright.pipeline.terrain_half import TerrainHalf
+
+FORMAT = 1
+LIBRARIES = ("numpy", "numba", "pandas", "rasterio", "fiona", "pyogrio", "geopandas", "shapely", "pyproj", "pysheds")
+
+
+def describe(
+    inputs: Inputs,
+    half: TerrainHalf,
+    store: Store,
+    record: Record,
+    terrain_flags: list[Flag],
+    results: Results,
+    hydrology_seconds: float,
+    summary_only: bool,
+) -> dict[str, Any]:
+    """Return the manifest of a run as plain values."""
+    project = inputs.project
+    return {
+        "format": FORMAT,
+        "name": project.project.name,
+        "basinwright": version("basinwright"),
+        "python": platform.python_version(),
+        "libraries": {name: version(name) for name in LIBRARIES},
+        "finished": time.strftime("%Y-%m-%dT%H:%M:%SZ", time.gmtime()),
+        "host": {"system": platform.platform(), "machine": platform.machine()},
+        "project_file": inputs.describe(inputs.file),
+        "inputs": [inputs.describe(source) for source in inputs.sources()],
+        "project": project.resolved(),
+        "grid": half.grid.describe(),
+        "alignment": half.alignment,
+        "terrain": half.facts(),
+        "stages": [
+            *(stage.describe() for stage in store.records),
+            {"stage": "hydrology", "runs": 1, "seconds": round(hydrology_seconds, 3)},
+        ],
+        "summary_only": summary_only,
+        **_counts(results),
+        "scheme": {"name": inputs.scheme.name, "classes": inputs.scheme.to_rows()},
+        "storm_table": inputs.storm_table,
+        "terrain_flags": [list(flag) for flag in terrain_flags],
+        "edits": _record(record),
+    }
+
+
+def _counts(results: Results) -> dict[str, Any]:
+    status = Counter(results.status.values())
+    return {
+        "counts": {
+            "outlets": len(results.status),
+            **{name: status[name] for name in ("ok", "flagged", "failed")},
+            "flags": dict(sorted(Counter(flag.key for flag in results.flags).items())),
+        },
+        "exit_status": 1 if status["failed"] else 0,
+    }
+
+
+def retimed(about: Mapping[str, Any], record: Record, results: Results) -> dict[str, Any]:
+    """Return the manifest after `retime`: counts and edits are new, the rest stands."""
+    return {**about, **_counts(results), "edits": _record(record)}
+
+
+def write(folder: Path, about: Mapping[str, Any]) -> None:
+    """Write the manifest: the last file of a run."""
+    names = sorted({entry.name for entry in folder.iterdir()} | {MANIFEST})
+    text = json.dumps({**about, "files": names}, indent=1, ensure_ascii=False)
+    (folder / MANIFEST).unlink(missing_ok=True)
+    (folder / MANIFEST).write_text(text + "\n", encoding="utf-8")
+
+
+def read(folder: Path) -> dict[str, Any]:
+    """Read the manifest of a run.
+
+    Raises
+    ------
+    InputRejected
+        Where the folder holds no run of this version.
+    """
+    path = folder / MANIFEST
+    try:
+        about: dict[str, Any] = json.loads(path.read_text(encoding="utf-8"))
+    except OSError:
+        raise InputRejected.one(str(folder), MANIFEST, "does not exist", "name the folder of a finished run") from None
+    except ValueError as error:
+        raise InputRejected.one(str(path), "file", f"is not valid JSON ({error})", "restore it or run again") from None
+    if about.get("format") != FORMAT:
+        raise InputRejected.one(str(path), "format", "is of another version of basinwright", "run the project again")
+    return about
+
+
+def settings(about: Mapping[str, Any]) -> tuple[Project, Settings]:
+    """Return the project and the settings of the hydrology as the run had them."""
+    project = parse_project(about["project"], MANIFEST)
+    scheme = Scheme.from_rows(about["scheme"]["name"], about["scheme"]["classes"])
+    return project, Settings(project, scheme, storm_of(project, about["storm_table"]))
+
+
+def terrain_flags(about: Mapping[str, Any]) -> list[Flag]:
+    """Return what the terrain half had flagged."""
+    return [Flag(*row) for row in about["terrain_flags"]]
+
+
+def _record(record: Record) -> dict[str, Any]:
+    return {
+        "held": sorted(list(cell) for cell in record.held),
+        "encoding": "CSV, zlib, base64",
+        "base": {name: _packed(frame) for name, frame in record.base.items()},
+        "written": {name: _packed(frame) for name, frame in record.written.items()},
+    }
+
+
+def record(about: Mapping[str, Any]) -> Record:
+    """Return what is needed to tell a person's edits from computed values."""
+    edits = about["edits"]
+
+    def frames(name: str) -> dict[str, pd.DataFrame]:
+        return {table.name: _unpacked(edits[name][table.name]) for table in EDITABLE}
+
+    return Record(frames("base"), frames("written"), {(a, b, c, d) for a, b, c, d in edits["held"]})
+
+
+def _packed(frame: pd.DataFrame) -> str:
+    text = csv_text({str(name): frame[name].to_numpy(dtype=object) for name in frame.columns})
+    return base64.b64encode(zlib.compress(text.encode("utf-8"), 6)).decode("ascii")
+
+
+def _unpacked(packed: str) -> pd.DataFrame:
+    return read_csv_text(zlib.decompress(base64.b64decode(packed)).decode("utf-8"))

@@ -1,0 +1,467 @@
+"""The terrain half, stage by stage: rasters in, the three tables and the geometry out."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from functools import partial
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from basinwright.flags import Flag
+from basinwright.grid import Grid
+from basinwright.hydrology import bankfull_relation_of
+from basinwright.paths.tracing import DEEP_FILL_M
+from basinwright.pipeline.inputs import Inputs
+from basinwright.project import Project
+from basinwright.store import Draft, Entry, Store
+from basinwright.tables import COVER_SHARES, OUTLETS, SEGMENTS, Table, cells, csv_text
+from basinwright.units import M_PER_FT, MM_PER_IN
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from basinwright.basins import Basins, Snapped
+    from basinwright.cover import CoverShares
+    from basinwright.terrain import Terrain
+
+AREA_TOLERANCE = 0.1
+"""Relative difference from the expected area above which AREA_MISMATCH is raised."""
+SMALL_BASIN_CELLS = 200
+STORAGE_FILLED_MM = 2.54
+"""0.1 in over the basin."""
+LAKE_STORAGE_PCT = 1.0
+_BLOCK_ROWS = 256
+QUANTUM = 2.0**-20
+"""Distances along the path are written as whole multiples of this many feet or metres: sums of them are exact."""
+
+
+@dataclass
+class TerrainHalf:
+    """What the terrain half hands over.
+
+    Parameters
+    ----------
+    grid : Grid
+        The working grid.
+    alignment : list of dict
+        How each input came onto the grid.
+    terrain, elevation, basins, tables : Entry
+        Stages in the store; ``tables`` holds the three tables as CSV text and the flags.
+    """
+
+    grid: Grid
+    alignment: list[dict[str, Any]]
+    elevation: Entry
+    terrain: Entry
+    cover: Entry
+    basins: Entry
+    paths: Entry
+    tables: Entry
+
+    def routed(self) -> Terrain:
+        """Return the routed terrain."""
+        from basinwright.terrain import Terrain
+
+        return self.terrain.record(Terrain, "terrain")
+
+    def facts(self) -> dict[str, Any]:
+        """Return what was done to the terrain, as plain values."""
+        terrain = self.routed()
+        names = ("data_cells", "flat_cells", "filled_cells", "filled_volume_m3", "deepest_fill_m", "largest_rounding_m")
+        return {name: getattr(terrain, name) for name in names}
+
+    def flags(self) -> list[Flag]:
+        """Return what the terrain half flagged."""
+        return [Flag(*row) for row in self.tables.values("flags")]
+
+
+def run(inputs: Inputs, store: Store) -> TerrainHalf:
+    """Run every stage of the terrain half that is not in the store yet."""
+    from basinwright.terrain import Terrain
+
+    project = inputs.project
+    elevation = store.stage(
+        "elevation",
+        "Reading the terrain",
+        {
+            "dem": inputs.sha256(*inputs.dem),
+            "crs": project.terrain.crs,
+            "vertical_unit": project.terrain.vertical_unit,
+        },
+        lambda draft: _elevation(inputs, draft),
+    )
+    grid = inputs.plan.grid
+    routing = store.stage(
+        "routing",
+        f"Conditioning and routing {grid.nrows * grid.ncols / 1e6:.2f} million cells{_compiling()}",
+        {"elevation": elevation.key, "conditioning": project.terrain.conditioning},
+        lambda draft: _routing(grid, elevation, draft),
+    )
+    cover = store.stage(
+        "cover",
+        "Aligning land cover and soils",
+        {
+            "elevation": elevation.key,
+            "cover": [*inputs.sha256(inputs.cover), project.cover.field],
+            "soils": [*inputs.sha256(inputs.soils), project.soils.model_dump(mode="json")],
+            "scheme": inputs.scheme.to_rows(),
+        },
+        lambda draft: _cover(inputs, draft),
+    )
+    outlets = {
+        "ids": list(inputs.points.ids),
+        "x": inputs.x.tolist(),
+        "y": inputs.y.tolist(),
+        "expected": _plain(inputs.expected_area_km2),
+        "within": project.outlets.snap_within,
+        "stream_area": project.terrain.stream_area,
+    }
+    basins = store.stage(
+        "basins",
+        f"Snapping {len(inputs.points)} outlets and delineating their basins",
+        {"routing": routing.key, "outlets": outlets},
+        lambda draft: _basins(inputs, grid, elevation, routing.record(Terrain, "terrain"), draft),
+    )
+    paths = store.stage(
+        "paths",
+        "Tracing the longest flow paths",
+        {"basins": basins.key},
+        lambda draft: _paths(grid, elevation, routing.record(Terrain, "terrain"), basins, draft),
+    )
+    tables = store.stage(
+        "tables",
+        "Cutting the paths into segments and adding up land cover",
+        {
+            "paths": paths.key,
+            "cover": cover.key,
+            "scheme": inputs.scheme.to_rows(),
+            "options": project.model_dump(
+                mode="json", include={"project", "terrain", "outlets", "cover", "soils", "flow_path", "channel"}
+            ),
+            "depths": {period: project.storm.depths[period] for period in project.storm.periods},
+            "points": [
+                list(inputs.points.names),
+                _plain(inputs.capacity_m3s),
+                {k: _plain(v) for k, v in inputs.overrides.items()},
+            ],
+        },
+        lambda draft: _tables(inputs, {"routing": routing, "cover": cover, "basins": basins, "paths": paths}, draft),
+    )
+    return TerrainHalf(
+        grid,
+        [*elevation.values("alignment"), *cover.values("alignment")],
+        elevation,
+        routing,
+        cover,
+        basins,
+        paths,
+        tables,
+    )
+
+
+def _plain(values: NDArray[np.float64]) -> list[float | None]:
+    return [None if np.isnan(value) else float(value) for value in values]
+
+
+def _compiling() -> str:
+    from basinwright.kernels import cache_is_cold
+
+    return " (first run on this machine: compiling, under a minute)" if cache_is_cold() else ""
+
+
+def _elevation(inputs: Inputs, draft: Draft) -> None:
+    from basinwright.io.elevation import open_terrain
+
+    project = inputs.project
+    terrain = open_terrain(inputs.dem, project.terrain.crs, project.terrain.vertical_unit)
+    draft.array("elevation_m", terrain.elevation_m)
+    draft.values("alignment", terrain.plan.alignment)
+
+
+def _routing(grid: Grid, elevation: Entry, draft: Draft) -> None:
+    from basinwright.terrain import condition_and_route
+
+    draft.record(
+        condition_and_route(elevation.array("elevation_m"), grid.dx_m, grid.dy_m, grid.cell_area_m2), "terrain"
+    )
+
+
+def _basins(inputs: Inputs, grid: Grid, elevation: Entry, terrain: Terrain, draft: Draft) -> None:
+    from basinwright.basins import delineate, measure, snap
+
+    project = inputs.project
+    within = project.outlets.snap_within
+    snapped = snap(
+        grid,
+        terrain,
+        inputs.x,
+        inputs.y,
+        stream_area_km2=float(project.terrain.stream_area),
+        within_m=None if isinstance(within, str) else within,
+        expected_area_km2=inputs.expected_area_km2,
+    )
+    basins = delineate(terrain, snapped.cell)
+    measures = measure(grid, terrain, elevation.array("elevation_m"), basins)
+    draft.record(snapped, "snapped")
+    draft.record(basins, "basins")
+    _keep_columns(draft, "measures", measures)
+
+
+def _paths(grid: Grid, elevation: Entry, terrain: Terrain, basins_entry: Entry, draft: Draft) -> None:
+    from basinwright.basins import Basins
+    from basinwright.paths import profile_measures, trace
+
+    basins = basins_entry.record(Basins, "basins")
+    measures = kept_columns(basins_entry, "measures")
+    paths = trace(terrain, basins)
+    profile = profile_measures(
+        grid, terrain, elevation.array("elevation_m"), paths, measures["centroid_x"], measures["centroid_y"]
+    )
+    draft.record(paths, "paths")
+    _keep_columns(draft, "profile", profile)
+
+
+def _cover(inputs: Inputs, draft: Draft) -> None:
+    from basinwright.cover import align_cover, align_soils
+
+    project, grid = inputs.project, inputs.plan.grid
+    is_raster = project.cover.raster is not None
+    cover = align_cover(
+        grid,
+        inputs.scheme,
+        raster=inputs.cover if is_raster else None,
+        vector=None if is_raster else inputs.cover,
+        field=project.cover.field,
+    )
+    section = project.soils
+    soils = align_soils(
+        grid,
+        raster=inputs.soils if section.raster is not None else None,
+        vector=inputs.soils if section.vector is not None else None,
+        field=section.field,
+        group=section.group,
+        groups=section.groups,
+        dual_groups=section.dual_groups,
+        missing=section.missing,
+    )
+    draft.record(cover, "cover")
+    draft.record(soils, "soils")
+    draft.values("alignment", [cover.record, soils.record])
+
+
+def _tables(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
+    """Make the three tables as text, with the flags of the terrain half and the cells that the user supplied."""
+    from basinwright.basins import Basins, Snapped
+    from basinwright.cover import CoverLayer, SoilLayer, combine, cover_shares
+    from basinwright.paths import CoverOnGrid, CutRules, Paths, cut_segments
+    from basinwright.terrain import Terrain
+    from basinwright.timing import bankfull_width_m, sheet_limit_m
+
+    project, grid = inputs.project, inputs.plan.grid
+    terrain = stages["routing"].record(Terrain, "terrain")
+    basins = stages["basins"].record(Basins, "basins")
+    snapped = stages["basins"].record(Snapped, "snapped")
+    paths = stages["paths"].record(Paths, "paths")
+    measures = kept_columns(stages["basins"], "measures") | kept_columns(stages["paths"], "profile")
+    cover = stages["cover"].record(CoverLayer, "cover")
+    patches = combine(cover, stages["cover"].record(SoilLayer, "soils"))
+    shares = cover_shares(
+        _patch_areas_km2(terrain, basins, patches.cells, len(patches)), patches, inputs.scheme, project.cover.gap_limit
+    )
+    rules = CutRules(
+        stream_area_km2=float(project.terrain.stream_area),
+        sheet_limit_m=project.flow_path.sheet_limit,
+        min_segment_m=project.flow_path.min_segment,
+        slope_floor=project.flow_path.slope_floor,
+        mccuen_spiess_m=sheet_limit_m,
+        bankfull_width_m=partial(bankfull_width_m, relation=bankfull_relation_of(project)),
+    )
+    on_grid = CoverOnGrid(cover.classes, cover.codes, cover.sheet_n(inputs.scheme), cover.open_water(inputs.scheme))
+    cut = cut_segments(grid, terrain, paths, on_grid, rules)
+
+    failed = _failures(snapped, measures, shares.failed)
+    marks = {"sheet_limited": cut.sheet_limited, **vars(snapped), **measures}
+    flags = _flags(inputs, marks, shares, failed)
+    fine = np.array([i not in failed for i in range(len(inputs.points))], dtype=bool)
+    ids = np.array(inputs.points.ids, dtype=object)
+    tables = {
+        OUTLETS: _outlet_rows(inputs, grid, ids, snapped, measures, shares.open_water_pct, fine),
+        SEGMENTS: _of_fine(cut.segments, ids, fine) | {"edited": None},
+        COVER_SHARES: _of_fine(shares.rows, ids, fine),
+    }
+    for table, columns in tables.items():
+        (draft.folder / f"{table.name}.csv").write_text(_as_text(table, columns, project), encoding="utf-8", newline="")
+    draft.values("flags", [list(flag) for flag in flags])
+    draft.values(
+        "held",
+        [
+            ["outlets", ids[i], "", stem]
+            for stem, values in inputs.overrides.items()
+            for i in np.flatnonzero(~np.isnan(values) & fine).tolist()
+        ],
+    )
+
+
+def _patch_areas_km2(terrain: Terrain, basins: Basins, cells: NDArray[np.int32], count: int) -> NDArray[np.float64]:
+    """Add up the area of each patch of cover and soils over each whole basin, shape (outlets, patches)."""
+    from basinwright.kernels import reduce
+
+    area_m2 = np.zeros((basins.n_labels, count))
+    for first in range(0, terrain.nrows, _BLOCK_ROWS):
+        block = np.ascontiguousarray(cells[first : first + _BLOCK_ROWS])
+        reduce.add_classes(basins.label, terrain.ncols, terrain.row_area_m2, first, block, area_m2)
+    return basins.by_outlet(basins.whole_sums(area_m2), failed=0.0) / 1e6
+
+
+def _failures(snapped: Snapped, measures: Mapping[str, NDArray[Any]], uncovered: Mapping[int, str]) -> dict[int, str]:
+    """Say which outlets cannot be computed, and why."""
+    failed = {i: str(why) for i, why in enumerate(snapped.failed.tolist()) if why}
+    for i in np.flatnonzero(~(measures["path_length_m"] > 0)).tolist():
+        failed.setdefault(i, "its basin is a single cell: move it onto its flow line or use finer terrain")
+    for i, why in uncovered.items():
+        failed.setdefault(i, why)
+    return failed
+
+
+def _flags(
+    inputs: Inputs, marks: Mapping[str, NDArray[Any]], shares: CoverShares, failed: Mapping[int, str]
+) -> list[Flag]:
+    """Raise the flags that terrain, snap and cover give, outlet by outlet."""
+    project = inputs.project
+    us = project.project.units == "us"
+    length, foot = ("ft", M_PER_FT) if us else ("m", 1.0)
+    raised: list[tuple[int, str, str]] = [(i, "OUTLET_FAILED", why) for i, why in failed.items()]
+
+    def where(mask: NDArray[np.bool_], key: str, words: Callable[[int], str]) -> None:
+        raised.extend((i, key, words(i)) for i in np.flatnonzero(mask).tolist())
+
+    area, expected = marks["area_km2"], inputs.expected_area_km2
+    deepest, water = marks["deepest_fill_m"], shares.open_water_pct
+    with np.errstate(invalid="ignore", divide="ignore"):
+        filled_mm = marks["filled_volume_m3"] / area / 1000.0
+        off = area / expected - 1.0
+        where(
+            marks["contact_cells"] > 0,
+            "EDGE_TOUCH",
+            lambda i: f"{int(marks['contact_cells'][i])} cells at the edge or beside a void",
+        )
+        where(marks["far"], "SNAP_FAR", lambda i: f"moved {marks['snap_m'][i] / foot:.3g} {length}")
+        where(marks["ambiguous"], "SNAP_AMBIGUOUS", lambda i: "another flow line passes within the search distance")
+        where(np.abs(off) > AREA_TOLERANCE, "AREA_MISMATCH", lambda i: f"{off[i]:+.0%} against the expected area")
+        where(marks["cells"] < SMALL_BASIN_CELLS, "SMALL_BASIN", lambda i: f"{int(marks['cells'][i])} cells")
+        where(marks["sheet_limited"], "SHEET_LIMIT", lambda i: "100 root S / n (ft) is under flow_path.sheet_limit")
+        where(
+            deepest > DEEP_FILL_M,
+            "DEEP_FILL",
+            lambda i: f"raised by up to {deepest[i] / foot:.3g} {length} under the path",
+        )
+        where(
+            filled_mm > STORAGE_FILLED_MM,
+            "STORAGE_FILLED",
+            lambda i: f"{filled_mm[i] / (MM_PER_IN if us else 1):.3g} {'in' if us else 'mm'} over the basin",
+        )
+        where(water > LAKE_STORAGE_PCT, "LAKE_STORAGE", lambda i: f"open water covers {water[i]:.3g} %")
+    raised += shares.flags
+    if inputs.plan.unit_assumed:
+        raised += [(i, "VERTICAL_UNIT_ASSUMED", "metres assumed") for i in range(len(inputs.points))]
+    for stem, values in inputs.overrides.items():
+        if stem.startswith("depth_"):
+            where(~np.isnan(values), "OVERRIDE", lambda i, stem=stem: f"{stem} is a supplied value")  # type: ignore[misc]
+    ids = inputs.points.ids
+    return [Flag(ids[i], key, words) for i, key, words in raised if i not in failed or key == "OUTLET_FAILED"]
+
+
+def _outlet_rows(
+    inputs: Inputs,
+    grid: Grid,
+    ids: NDArray[Any],
+    snapped: Snapped,
+    measures: Mapping[str, NDArray[Any]],
+    open_water_pct: NDArray[np.float64],
+    fine: NDArray[np.bool_],
+) -> dict[str, Any]:
+    """Return the columns of outlets.csv that the terrain half knows, by inside name or stem."""
+    from pyproj import Transformer
+
+    to_degrees = Transformer.from_crs(grid.crs, "EPSG:4326", always_xy=True)
+    longitude, latitude = to_degrees.transform(snapped.x, snapped.y)
+    project, points = inputs.project, inputs.points
+    downstream = measures["downstream_outlet"]
+    columns: dict[str, Any] = {
+        "outlet_id": ids,
+        "name": np.array(points.names, dtype=object),
+        "downstream_outlet_id": np.where(downstream >= 0, ids[downstream], ""),
+        "x": snapped.x,
+        "y": snapped.y,
+        "longitude": longitude,
+        "latitude": latitude,
+        "snap_m": snapped.snap_m,
+        "path_length_raw_m": measures["path_length_m"],
+        "open_water_pct": open_water_pct,
+        **{name: measures[name] for name in _MEASURED},
+    }
+    for stem in ("curve_number", "tc_h"):
+        if stem in inputs.overrides:
+            columns[stem] = inputs.overrides[stem]
+    for period in project.storm.periods:
+        supplied = inputs.overrides.get(f"depth_{period}yr", np.full(len(ids), np.nan))
+        columns[f"depth_{period}yr_mm"] = np.where(np.isnan(supplied), project.storm.depths[period], supplied)
+    if project.outlets.capacity is not None:
+        columns["capacity_m3s"] = inputs.capacity_m3s
+        columns["exceeded_at_yr"] = None
+    if project.outlets.capacity_basis is not None:
+        columns["capacity_basis"] = np.array(points.texts(project.outlets.capacity_basis), dtype=object)
+    known = {"outlet_id", "name", "capacity_m3s", "capacity_basis"}
+    for name, values in columns.items():
+        if values is not None and name not in known:
+            columns[name] = values.astype(object)
+            columns[name][~fine] = None
+    return columns
+
+
+_MEASURED = (
+    "area_km2", "centroid_length_m", "path_length_m", "relief_m", "basin_slope_pct", "path_slope_pct",
+    "path_slope_1085_pct",
+)  # fmt: skip
+
+
+def _of_fine(columns: Mapping[str, NDArray[Any]], ids: NDArray[Any], fine: NDArray[np.bool_]) -> dict[str, Any]:
+    """Return the rows of the outlets that did not fail, with their ids."""
+    outlet = columns["outlet"]
+    rows = fine[outlet]
+    return {"outlet_id": ids[outlet[rows]], **{k: v[rows] for k, v in columns.items() if k != "outlet"}}
+
+
+def _as_text(table: Table, columns: Mapping[str, Any], project: Project) -> str:
+    """Return a table as the CSV text that the hydrology reads, in the units of the project."""
+    system, periods = project.project.units, project.storm.periods
+    optional = [column.stem for column in table.columns if column.optional and column.name("si") in columns]
+    inside = {entry.name: entry for entry in table.fields("si", periods, optional)}
+    count = len(columns["outlet_id"])
+    written: dict[str, list[Any]] = {}
+    for entry, name in zip(table.fields(system, periods, optional), inside, strict=True):
+        values = columns.get(name)
+        if values is None:
+            written[entry.name] = [None] * count
+            continue
+        if entry.column.type == "number":
+            numbers = np.asarray(values, dtype=np.float64) / entry.factor
+            values = np.round(numbers / QUANTUM) * QUANTUM if entry.stem in _ALONG_PATH else numbers
+        written[entry.name] = cells(values)
+    return csv_text(written)
+
+
+_ALONG_PATH = ("from", "to", "path_length", "path_length_raw")
+
+
+def _keep_columns(draft: Draft, name: str, columns: dict[str, NDArray[Any]]) -> None:
+    for stem, values in columns.items():
+        draft.array(f"{name}.{stem}", np.asarray(values))
+    draft.values(name, list(columns))
+
+
+def kept_columns(entry: Entry, name: str) -> dict[str, NDArray[Any]]:
+    """Read columns that a stage kept under a name."""
+    return {stem: entry.array(f"{name}.{stem}") for stem in entry.values(name)}
