@@ -7,11 +7,15 @@ this room needs numpy only; `design_floods` compiles its loops with numba when i
 from basinwright.hydrograph.floods import Floods, Series, design_floods
 from basinwright.hydrograph.nrcs_shapes import (
     curvilinear,
+    curvilinear_ratio,
     delmarva,
+    delmarva_ratio,
     gamma,
     gamma_exponent,
+    gamma_ratio,
     peak_rate_factor,
     triangular,
+    triangular_ratio,
 )
 from basinwright.hydrograph.small_basins import (
     GRAPHICAL_TC_H,
@@ -30,9 +34,11 @@ from basinwright.hydrograph.snyder import (
 )
 from basinwright.hydrograph.time_area import (
     TimeArea,
+    arriving_area_km2,
     clark,
     clark_terrain,
     default_time_area,
+    reservoir_coefficients,
     storage_coefficient_h,
     translation_peak_rate_factor,
     travel_time,
@@ -52,17 +58,22 @@ __all__ = [
     "Series",
     "TimeArea",
     "UnitHydrographs",
+    "arriving_area_km2",
     "clark",
     "clark_terrain",
     "curvilinear",
+    "curvilinear_ratio",
     "default_time_area",
     "delmarva",
+    "delmarva_ratio",
     "design_floods",
     "gamma",
     "gamma_exponent",
+    "gamma_ratio",
     "graphical_peak",
     "peak_rate_factor",
     "rational_peak_m3s",
+    "reservoir_coefficients",
     "snyder",
     "snyder_adjusted_lag_h",
     "snyder_lag_h",
@@ -74,6 +85,7 @@ __all__ = [
     "translation_peak_rate_factor",
     "travel_time",
     "triangular",
+    "triangular_ratio",
     "unit_duration_s",
     "unit_peak_m3s_per_mm",
 ]

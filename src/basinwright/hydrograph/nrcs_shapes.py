@@ -20,7 +20,7 @@ from basinwright.hydrograph.unit_hydrograph import (
     row_offsets,
     step_numbers,
 )
-from basinwright.numbers import Floats, Integers, positive, within
+from basinwright.numbers import Floats, Integers, not_negative, positive, within
 from basinwright.published import table
 from basinwright.registry import Range, Source, method
 
@@ -58,8 +58,10 @@ def _sampled(
     offsets = row_offsets(np.maximum(steps, 1) + 1)
     outlet = np.repeat(np.arange(duration.size), np.diff(offsets))
     time_ratio = step_numbers(offsets) * duration[outlet] / peak_time[outlet]
-    peak_per_h = peak_rate_factor / VOLUME_FACTOR / peak_time
-    return normalised(offsets, ratio_at(time_ratio, outlet), duration, peak_time, peak_per_h)
+    ratio = np.where(
+        time_ratio < np.broadcast_to(base_over_peak_time, duration.shape)[outlet], ratio_at(time_ratio, outlet), 0.0
+    )
+    return normalised(offsets, ratio, duration, peak_time, peak_rate_factor / VOLUME_FACTOR / peak_time)
 
 
 @method(
@@ -96,18 +98,41 @@ def curvilinear(unit_duration_h: ArrayLike, time_to_peak_h: ArrayLike) -> UnitHy
     >>> (unit.share / unit.share.max()).round(3)[[2, 5, 10, 15, 20]].tolist()
     [0.1, 0.47, 1.0, 0.68, 0.28]
     """
-    return _tabulated("dimensionless_uh_neh_16_1", unit_duration_h, time_to_peak_h, PEAK_RATE_FACTOR)
-
-
-def _tabulated(name: str, unit_duration_h: ArrayLike, time_to_peak_h: ArrayLike, factor: float) -> UnitHydrographs:
-    times, ratios = np.array(table(name).floats("time_ratio")), np.array(table(name).floats("flow_ratio"))
     return _sampled(
-        unit_duration_h,
-        time_to_peak_h,
-        times[-1],
-        lambda time_ratio, _: np.interp(time_ratio, times, ratios, right=0.0),
-        factor,
+        unit_duration_h, time_to_peak_h, 5.0, lambda time_ratio, _: curvilinear_ratio(time_ratio), PEAK_RATE_FACTOR
     )
+
+
+def curvilinear_ratio(time_ratio: ArrayLike) -> Floats:
+    """Flow over peak flow of the NRCS curvilinear unit hydrograph.
+
+    Parameters
+    ----------
+    time_ratio : float or array
+        Time over time to peak, t/Tp [-].
+
+    Returns
+    -------
+    float or array
+        q/qp, linear between the rows of NEH 630 ch. 16 table 16-1, 0 from t/Tp 5 on [-].
+
+    Raises
+    ------
+    RangeError
+        Where a ratio is negative or not finite.
+
+    Examples
+    --------
+    >>> curvilinear_ratio([0.5, 1.0, 1.5, 5.0]).tolist()
+    [0.47, 1.0, 0.68, 0.0]
+    """
+    return _tabulated("dimensionless_uh_neh_16_1", time_ratio)
+
+
+def _tabulated(name: str, time_ratio: ArrayLike) -> Floats:
+    published = table(name)
+    times, ratios = published.floats("time_ratio"), published.floats("flow_ratio")
+    return np.interp(not_negative("time_ratio", time_ratio), times, ratios, right=0.0)
 
 
 @method(
@@ -148,11 +173,36 @@ def triangular(unit_duration_h: ArrayLike, time_to_peak_h: ArrayLike) -> UnitHyd
         unit_duration_h,
         time_to_peak_h,
         TRIANGLE_BASE,
-        lambda time_ratio, _: np.maximum(
-            np.minimum(time_ratio, (TRIANGLE_BASE - time_ratio) / (TRIANGLE_BASE - 1.0)), 0.0
-        ),
+        lambda time_ratio, _: triangular_ratio(time_ratio),
         PEAK_RATE_FACTOR,
     )
+
+
+def triangular_ratio(time_ratio: ArrayLike) -> Floats:
+    """Flow over peak flow of the NRCS triangular unit hydrograph.
+
+    Parameters
+    ----------
+    time_ratio : float or array
+        Time over time to peak, t/Tp [-].
+
+    Returns
+    -------
+    float or array
+        q/qp [-].
+
+    Raises
+    ------
+    RangeError
+        Where a ratio is negative or not finite.
+
+    Examples
+    --------
+    >>> triangular_ratio([0.5, 1.0, 11 / 6, 3.0]).round(9).tolist()
+    [0.5, 1.0, 0.5, 0.0]
+    """
+    ratio = not_negative("time_ratio", time_ratio)
+    return np.maximum(np.minimum(ratio, (TRIANGLE_BASE - ratio) / (TRIANGLE_BASE - 1.0)), 0.0)
 
 
 @method(
@@ -202,9 +252,43 @@ def gamma(unit_duration_h: ArrayLike, time_to_peak_h: ArrayLike, peak_rate_facto
         times[0],
         times[1],
         _gamma_base(exponent),
-        lambda time_ratio, outlet: (time_ratio * np.exp(1.0 - time_ratio)) ** exponent[outlet],
+        lambda time_ratio, outlet: _gamma_ratio(time_ratio, exponent[outlet]),
         factors,
     )
+
+
+def gamma_ratio(time_ratio: ArrayLike, peak_rate_factor: ArrayLike) -> Floats:
+    """Flow over peak flow of the gamma unit hydrograph.
+
+    Parameters
+    ----------
+    time_ratio : float or array
+        Time over time to peak, t/Tp [-].
+    peak_rate_factor : float or array
+        Peak rate factor [cfs h / (mi2 in)].
+
+    Returns
+    -------
+    float or array
+        q/qp [-].
+
+    Raises
+    ------
+    RangeError
+        Where a ratio is negative or not finite, or a factor is outside 1 to 2000.
+
+    Examples
+    --------
+    NEH 630 table 16B-5, factor 400: printed .6081 at t/Tp 0.5.
+
+    >>> round(float(gamma_ratio(0.5, 400.0)), 3)
+    0.608
+    """
+    return _gamma_ratio(not_negative("time_ratio", time_ratio), gamma_exponent(peak_rate_factor))
+
+
+def _gamma_ratio(time_ratio: Floats, exponent: Floats) -> Floats:
+    return (time_ratio * np.exp(1.0 - time_ratio)) ** exponent
 
 
 def _gamma_base(exponent: Floats) -> Floats:
@@ -327,4 +411,36 @@ def delmarva(unit_duration_h: ArrayLike, time_to_peak_h: ArrayLike) -> UnitHydro
     >>> (unit.share / unit.share.max()).round(3)[[1, 5, 10]].tolist()
     [0.111, 1.0, 0.584]
     """
-    return _tabulated("dimensionless_uh_delmarva", unit_duration_h, time_to_peak_h, DELMARVA_PEAK_RATE_FACTOR)
+    return _sampled(
+        unit_duration_h,
+        time_to_peak_h,
+        9.8,
+        lambda time_ratio, _: delmarva_ratio(time_ratio),
+        DELMARVA_PEAK_RATE_FACTOR,
+    )
+
+
+def delmarva_ratio(time_ratio: ArrayLike) -> Floats:
+    """Flow over peak flow of the Delmarva unit hydrograph.
+
+    Parameters
+    ----------
+    time_ratio : float or array
+        Time over time to peak, t/Tp [-].
+
+    Returns
+    -------
+    float or array
+        q/qp, linear between the published ordinates, 0 from t/Tp 9.8 on [-].
+
+    Raises
+    ------
+    RangeError
+        Where a ratio is negative or not finite.
+
+    Examples
+    --------
+    >>> delmarva_ratio([0.2, 1.0, 2.0]).tolist()
+    [0.111, 1.0, 0.584]
+    """
+    return _tabulated("dimensionless_uh_delmarva", time_ratio)

@@ -70,13 +70,46 @@ class TimeArea:
         """Travel time from the farthest point, shape (n,) [h]."""
         return self.travel_time_h[self.offsets[1:] - 1]
 
-    def share_by(self, outlet: int, time_h: Floats) -> Floats:
-        """Share of an outlet's area whose water has arrived by given times, linear between rows [-]."""
+    def area_within_km2(self, outlet: int, time_h: ArrayLike) -> Floats:
+        """Area of one outlet whose water has arrived by given times, linear between rows [km2]."""
         rows = slice(self.offsets[outlet], self.offsets[outlet + 1])
-        time, area = self.travel_time_h[rows], self.area_km2[rows]
-        if time[0] > 0.0:
-            time, area = np.concatenate(([0.0], time)), np.concatenate(([0.0], area))
-        return np.interp(time_h, time, area) / area[-1]
+        return _within(self.travel_time_h[rows], self.area_km2[rows], np.asarray(time_h, dtype=np.float64))
+
+
+def _within(travel_time_h: Floats, area_km2: Floats, time_h: Floats) -> Floats:
+    if travel_time_h[0] > 0.0:
+        travel_time_h, area_km2 = np.concatenate(([0.0], travel_time_h)), np.concatenate(([0.0], area_km2))
+    return np.interp(time_h, travel_time_h, area_km2)
+
+
+def arriving_area_km2(travel_time_h: ArrayLike, area_km2: ArrayLike, unit_duration_h: float) -> Floats:
+    """Area whose water arrives in each step: the areas between isochrones one step apart.
+
+    Parameters
+    ----------
+    travel_time_h, area_km2 : arrays, shape (k,)
+        Time-area curve of one outlet, see `TimeArea` [h, km2].
+    unit_duration_h : float
+        Step [h].
+
+    Returns
+    -------
+    array, shape (steps,)
+        Areas; their sum is the basin [km2].
+
+    Raises
+    ------
+    RangeError
+        As `TimeArea`.
+
+    Examples
+    --------
+    >>> arriving_area_km2([1.0, 2.0, 3.0, 4.0], [10.0, 40.0, 60.0, 100.0], 1.0).round(9).tolist()
+    [10.0, 30.0, 20.0, 40.0]
+    """
+    curve = TimeArea([0, np.size(travel_time_h)], travel_time_h, area_km2)  # type: ignore[arg-type]
+    duration = np.atleast_1d(positive("unit_duration_h", unit_duration_h))
+    return _arrivals(duration, curve.longest_h, curve)[1][1:] * curve.area_km2[-1]
 
 
 def default_time_area(time_ratio: ArrayLike) -> Floats:
@@ -145,6 +178,37 @@ def storage_coefficient_h(tc_h: ArrayLike, storage_ratio: ArrayLike) -> Floats:
     return positive("tc_h", tc_h) * ratio / (1.0 - ratio)
 
 
+def reservoir_coefficients(step_h: ArrayLike, storage_h: ArrayLike) -> tuple[Floats, Floats, Floats]:
+    """Coefficients of routing through a linear reservoir, ``O2 = C0 I2 + C1 I1 + C2 O1``.
+
+    Parameters
+    ----------
+    step_h : float or array
+        Time step [h].
+    storage_h : float or array
+        Storage coefficient [h].
+
+    Returns
+    -------
+    c0, c1, c2 : float or array
+        ``C0 = C1 = (D/R) / (2 + D/R)``, ``C2 = (2 - D/R) / (2 + D/R)`` [-]; their sum is 1.
+
+    Raises
+    ------
+    RangeError
+        Where an argument is not finite and above zero.
+
+    Examples
+    --------
+    V. M. Ponce, Engineering Hydrology (1989), ch. 5: K 2 h, step 1 h.
+
+    >>> [round(float(c), 9) for c in reservoir_coefficients(1.0, 2.0)]
+    [0.2, 0.2, 0.6]
+    """
+    ratio = positive("step_h", step_h) / positive("storage_h", storage_h)
+    return ratio / (2.0 + ratio), ratio / (2.0 + ratio), (2.0 - ratio) / (2.0 + ratio)
+
+
 def _arrivals(unit_duration_h: Floats, longest_h: Floats, curve: TimeArea | None) -> tuple[Integers, Floats]:
     """Share of each basin that arrives in each step: offsets and one row a step, the first of 0 at time 0."""
     offsets = row_offsets(np.ceil(longest_h / unit_duration_h - 1e-9).astype(np.int64) + 1)
@@ -153,9 +217,9 @@ def _arrivals(unit_duration_h: Floats, longest_h: Floats, curve: TimeArea | None
     if curve is None:
         arrived = default_time_area(np.minimum(at / longest_h[outlet], 1.0))
     else:
-        arrived = np.concatenate(
-            [curve.share_by(i, at[offsets[i] : offsets[i + 1]]) for i in range(unit_duration_h.size)]
-        )
+        whole = curve.area_km2[curve.offsets[1:] - 1]
+        each = [curve.area_within_km2(i, at[offsets[i] : offsets[i + 1]]) for i in range(unit_duration_h.size)]
+        arrived = np.concatenate(each) / whole[outlet]
     share = np.diff(arrived, prepend=0.0)
     share[offsets[:-1]] = 0.0
     # What lies at the outlet itself (travel time 0) arrives in the first step.
@@ -165,9 +229,7 @@ def _arrivals(unit_duration_h: Floats, longest_h: Floats, curve: TimeArea | None
 
 def _routed(unit_duration_h: Floats, storage_h: Floats, offsets: Integers, share: Floats) -> tuple[Integers, Floats]:
     """Route the arrivals of each step through a linear reservoir, until its recession ends."""
-    # C0 + C1 of the reservoir with the inflow constant over the step; C2 is the rest.
-    inflow_part = 2.0 * (unit_duration_h / storage_h) / (2.0 + unit_duration_h / storage_h)
-    keep = (2.0 - unit_duration_h / storage_h) / (2.0 + unit_duration_h / storage_h)
+    c0, c1, keep = reservoir_coefficients(unit_duration_h, storage_h)
     if (keep < 0.0).any():
         row = int(np.argmax(keep < 0.0))
         raise RangeError(
@@ -182,7 +244,8 @@ def _routed(unit_duration_h: Floats, storage_h: Floats, offsets: Integers, share
     inflow[step_numbers(offsets), np.repeat(np.arange(steps.size), steps)] = share
     outflow = np.zeros_like(inflow)
     for step in range(1, inflow.shape[0]):
-        outflow[step] = inflow_part * inflow[step] + keep * outflow[step - 1]
+        # The inflow is constant over the step: I1 = I2.
+        outflow[step] = (c0 + c1) * inflow[step] + keep * outflow[step - 1]
     longer = row_offsets(lengths + 1)
     within_length = np.arange(inflow.shape[0])[:, None] < lengths
     routed = np.zeros(longer[-1])

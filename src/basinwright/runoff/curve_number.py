@@ -261,7 +261,7 @@ def moisture_curve_number(curve_number: ArrayLike, moisture: MoistureClass) -> F
     Notes
     -----
     NEH 630 ch. 10 table 10-1; between its rows linear, our own choice. The formulas in textbooks differ from the
-    table by up to 1.4: the table is taken.
+    table by up to 2: the table is taken.
 
     Examples
     --------

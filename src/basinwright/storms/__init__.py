@@ -5,6 +5,7 @@ Needs numpy only. A storm of the register is found by its key, ``registry.find("
 
 from basinwright.storms.depth_duration import (
     DepthDurationFrequency,
+    alternating_blocks_mm,
     areal_reduction_leclerc_schaake,
     balanced,
     critical_duration,
@@ -18,6 +19,7 @@ from basinwright.storms.storm import Storm, table_storm
 __all__ = [
     "DepthDurationFrequency",
     "Storm",
+    "alternating_blocks_mm",
     "areal_reduction_leclerc_schaake",
     "balanced",
     "critical_duration",

@@ -112,10 +112,11 @@ def read_depth_duration_frequency(
         if not (np.isfinite(depth) and depth > 0.0):
             problems.append(Problem(file, where, f"is {depth:g}", "give a depth over zero"))
             continue
-        if row and depth < depths[row - 1, column]:
+        shorter = depths[row - 1, column] if row else np.nan
+        if depth < shorter:
             problems.append(Problem(file, where, "is less than for the shorter duration", "depths must not fall"))
         # A print rounded to its last digit may let intensity rise by a hair.
-        elif row and depth / durations[row] > depths[row - 1, column] / durations[row - 1] * 1.005:
+        elif shorter > 0.0 and depth / durations[row] > shorter / durations[row - 1] * 1.005:
             problems.append(
                 Problem(file, where, "has a higher intensity than the shorter duration", "intensities must not rise")
             )
@@ -216,21 +217,42 @@ def balanced(duration_h: float, step_h: float, durations_h: ArrayLike, depths_mm
     [0.0, 0.125, 0.75, 1.0]
     """
     count = _steps(duration_h, step_h)
-    hours = np.arange(count + 1) * (duration_h / count)
+    hours = np.arange(count + 1, dtype=np.float64) * (duration_h / count)
     blocks = np.diff(interpolated_depth_mm(hours[1:], durations_h, depths_mm), prepend=0.0)
-    ranked = np.sort(blocks)[::-1]
-    # Ranks 1, 2, 3, 4 ... stand at the middle, one to its right, one to its left, two to its right ...
-    middle, turn = (count - 1) // 2, np.arange(count)
-    place = middle + np.where(turn % 2 == 1, (turn + 1) // 2, -(turn // 2))
-    arranged = np.empty(count)
+    fallen = np.concatenate(([0.0], np.cumsum(alternating_blocks_mm(blocks))))
+    return Storm("balanced", hours, fallen / fallen[-1])
+
+
+def alternating_blocks_mm(increments_mm: ArrayLike) -> Floats:
+    """Arrange increments of depth with the largest in the middle, then right and left of it by turns.
+
+    Parameters
+    ----------
+    increments_mm : array, shape (k,)
+        Increments of the depth-duration curve over equal steps [mm], in any order.
+
+    Returns
+    -------
+    array, shape (k,)
+        The same, arranged; of an even number the left of the two middle places takes the largest.
+
+    Raises
+    ------
+    RangeError
+        Where an increment is negative or not finite.
+
+    Examples
+    --------
+    >>> alternating_blocks_mm([6.0, 3.0, 2.0, 1.0]).tolist()
+    [2.0, 6.0, 3.0, 1.0]
+    """
+    ranked = np.sort(np.atleast_1d(not_negative("increments_mm", increments_mm)))[::-1]
+    # Ranks 1, 2, 3, 4 ... stand in the middle, one to its right, one to its left, two to its right ...
+    turn = np.arange(ranked.size)
+    place = (ranked.size - 1) // 2 + np.where(turn % 2 == 1, (turn + 1) // 2, -(turn // 2))
+    arranged = np.empty_like(ranked)
     arranged[place] = ranked
-    return _from_blocks("balanced", hours, arranged)
-
-
-def _from_blocks(name: str, hours: Floats, blocks: np.ndarray) -> Storm:
-    fractions = np.concatenate(([0.0], np.cumsum(blocks)))
-    fractions /= fractions[-1]
-    return Storm(name, hours, fractions)
+    return arranged
 
 
 @method(
