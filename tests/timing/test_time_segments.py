@@ -139,6 +139,7 @@ class TestChannel:
             float(manning_velocity_mps(times.hydraulic_radius_half_m[0], 0.02, 0.04))
         )
         assert times.travel_time_h[0] == pytest.approx(100.0 / times.velocity_mps[0] / 3600.0)
+        assert times.travel_time_half_h[0] == pytest.approx(100.0 / times.velocity_half_mps[0] / 3600.0)
         assert times.travel_time_half_h[0] > times.travel_time_h[0]
 
     def test_given_values_stand(self) -> None:
@@ -166,8 +167,13 @@ class TestChannel:
         assert times.hydraulic_radius_half_m[0] == pytest.approx(0.9 * ratio)
 
     def test_roughness_by_row(self) -> None:
-        times = time(rows(regime=["shallow", "channel"], roughness=[2.0, NAN]), channel_roughness=[NAN, 0.06])
-        assert times.roughness.tolist() == [2.0, 0.06]
+        """A roughness is needed of channels only; a cover's sheet and shallow values touch no channel."""
+        columns = {"shallow_category": ["pavement"] * 3, "sheet_n": [0.3] * 3, "roughness": [NAN, NAN, 0.2]}
+        times = time(rows(regime=["shallow", "channel", "sheet"], **columns), channel_roughness=[NAN, 0.06, NAN])
+        assert times.roughness == pytest.approx([20.328 * FT, 0.06, 0.2])
+        assert [text.split(",")[0] for text in times.basis] == [
+            "NEH 630 ch. 15 (2010) table 15-3", "Manning", "sheet flow",
+        ]  # fmt: skip
 
     def test_jarrett_by_stage_and_outside_his_slopes(self) -> None:
         times = time(
@@ -194,6 +200,25 @@ class TestChannel:
             relation=wide,
             channel_roughness=0.03,
         )
+        assert times.supercritical.tolist() == [False, True]
+
+    def test_supercritical_at_half_depth_only(self) -> None:
+        """W 1 m, D 5 m: R hardly falls with the depth, so half full is the faster in terms of critical."""
+        narrow = BankfullRelation("own", (1.0, 0.0), (5.0, 0.0))
+        critical_half = (np.sqrt(9.80665 * 2.5) * 0.03 / (2.5 / 6.0) ** (2 / 3)) ** 2
+        critical_full = (np.sqrt(9.80665 * 5.0) * 0.03 / (5.0 / 11.0) ** (2 / 3)) ** 2
+        assert critical_half < critical_full
+        slope = [0.995 * critical_half, 1.005 * critical_half]
+        times = time(rows(regime=["channel"] * 2, slope=slope), relation=narrow, channel_roughness=0.03)
+        assert times.supercritical.tolist() == [False, True]
+
+    def test_supercritical_at_half_depth_with_a_given_radius(self) -> None:
+        """The given half-depth radius stands for the depth: V = R^(2/3) S^0.5 / n against sqrt(g R)."""
+        critical = (np.sqrt(9.80665 * 0.3) * 0.03 / 0.3 ** (2 / 3)) ** 2
+        narrow = BankfullRelation("own", (1.0, 0.0), (5.0, 0.0))
+        slope = [0.99 * critical, 1.01 * critical]
+        segments = rows(regime=["channel"] * 2, slope=slope, hydraulic_radius_half_m=[0.3] * 2)
+        times = time(segments, relation=narrow, channel_roughness=0.03)
         assert times.supercritical.tolist() == [False, True]
 
     def test_supercritical_with_a_given_radius(self) -> None:
@@ -247,6 +272,7 @@ class TestOtherRegimes:
             top_elevation_m=[10.0, 10.0, 9.0],
             bottom_elevation_m=[10.0, 9.0, 9.5],
         )
+        assert set(time(segments).basis) == {"shallow flow, coefficient given"}
         times = time(segments, slope_floor=0.001)
         assert times.floored.tolist() == [True, False, True]
         assert times.slope == pytest.approx([0.001, 0.01, 0.001])
