@@ -1,0 +1,71 @@
+"""Time-area curves on terrains where travel times are known on paper."""
+
+import numpy as np
+import pytest
+
+from basinwright.basins import delineate
+from basinwright.basins.time_area import BIN_H, time_area_curves
+from basinwright.terrain import condition_and_route
+
+
+def steady(rows, length_m, fall_m, area_km2, source):
+    """Water at 1 m/s everywhere."""
+    return length_m / 3600.0
+
+
+def inclined(nrows, ncols):
+    z = np.arange(nrows, 0, -1.0)[:, None] + np.zeros(ncols)
+    return condition_and_route(z, np.full(nrows, 36.0), np.full(nrows, 36.0), np.full(nrows, 36.0**2))
+
+
+def test_a_strip_of_equal_cells_fills_evenly():
+    terrain = inclined(11, 3)
+    basins = delineate(terrain, terrain.cells_at(np.array([10]), np.array([1])))
+    curve = time_area_curves(terrain, basins, steady)
+    # 36 m at 1 m/s: each cell up the strip is one bin of 0.01 h farther; the outlet's own cell is there at once.
+    assert curve["travel_time_h"] == pytest.approx(BIN_H * np.arange(1, 12))
+    assert curve["area_km2"] == pytest.approx(36.0**2 / 1e6 * np.arange(1, 12), rel=1e-12)
+
+
+def test_nested_outlets_have_the_curves_of_their_whole_basins():
+    terrain = inclined(40, 3)
+    cells = terrain.cells_at(np.array([39, 20]), np.array([1, 1]))
+    both = time_area_curves(terrain, delineate(terrain, cells), steady)
+    for i, cell in enumerate(cells):
+        alone = time_area_curves(terrain, delineate(terrain, np.array([cell], np.int32)), steady)
+        mine = both["outlet"] == i
+        assert np.array_equal(both["travel_time_h"][mine], alone["travel_time_h"])
+        assert np.array_equal(both["area_km2"][mine], alone["area_km2"])
+
+
+def test_last_row_is_the_basin_and_long_curves_are_thinned():
+    rng = np.random.default_rng(3)
+    z = rng.normal(0, 1, (60, 70)).cumsum(0).cumsum(1)
+    n = len(z)
+    terrain = condition_and_route(z, np.full(n, 900.0), np.full(n, 900.0), np.full(n, 810000.0))
+    cell = np.argsort(terrain.area_grid.ravel())[-3:]
+    rows, cols = np.unravel_index(cell, z.shape)
+    basins = delineate(terrain, terrain.cells_at(rows, cols))
+    curve = time_area_curves(terrain, basins, steady)
+    for i in range(3):
+        mine = curve["outlet"] == i
+        assert mine.sum() <= 100
+        assert (np.diff(curve["travel_time_h"][mine]) > 0).all()
+        assert (np.diff(curve["area_km2"][mine]) >= 0).all()
+        assert curve["area_km2"][mine][-1] == pytest.approx(terrain.area_grid[rows[i], cols[i]] / 1e6, rel=1e-12)
+
+
+def test_source_cells_are_those_nothing_drains_into():
+    terrain = inclined(5, 3)
+    seen = {}
+
+    def remember(rows, length_m, fall_m, area_km2, source):
+        seen.update(source=source, length=length_m, fall=fall_m)
+        return length_m * 0
+
+    time_area_curves(terrain, delineate(terrain, terrain.cells_at(np.array([4]), np.array([1]))), remember)
+    assert seen["source"][0].all()
+    assert not seen["source"][1:].any()
+    assert (seen["length"][:4] == 36.0).all()
+    assert (seen["length"][4] == 0.0).all()
+    assert (seen["fall"][:4] == 1.0).all()
