@@ -1,0 +1,43 @@
+"""Terrain on paper, shared by the tests of the terrain half."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+import pytest
+from affine import Affine
+from pyproj import CRS
+
+from basinwright.grid import Grid
+from basinwright.terrain import Terrain, condition_and_route
+
+
+@dataclass(frozen=True)
+class Landscape:
+    """Elevations with their grid and routing."""
+
+    grid: Grid
+    elevation_m: np.ndarray
+    terrain: Terrain
+
+    def cell(self, row: int, col: int) -> int:
+        return int(self.terrain.cells_at(np.array([row]), np.array([col]))[0])
+
+
+def make_landscape(
+    elevation_m: np.ndarray,
+    cell: tuple[float, float] = (10.0, 10.0),
+    corner: tuple[float, float] = (500_000.0, 4_000_000.0),
+    crs: str = "EPSG:32617",
+) -> Landscape:
+    """Route elevations (rows from north to south) on cells of a width and height in units of the CRS."""
+    z = np.asarray(elevation_m, np.float64)
+    grid = Grid(*z.shape, Affine(cell[0], 0, corner[0], 0, -cell[1], corner[1]), CRS.from_user_input(crs).to_wkt())
+    return Landscape(grid, z, condition_and_route(z, grid.dx_m, grid.dy_m, grid.cell_area_m2))
+
+
+@pytest.fixture(scope="session")
+def landscape() -> Callable[..., Landscape]:
+    return make_landscape
