@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 
-def rough(n: int, seed: int = 1, hurst: float = 0.8, relief_m: float = 500.0) -> np.ndarray:
+def rough(n: int, seed: int = 1, hurst: float = 0.8, relief_m: float = 500.0, longest: float = np.inf) -> np.ndarray:
     """Fractal terrain by spectral synthesis: power falling as wavenumber**-(2 hurst + 2).
 
     Parameters
@@ -17,6 +17,8 @@ def rough(n: int, seed: int = 1, hurst: float = 0.8, relief_m: float = 500.0) ->
         Hurst exponent of the surface; smaller is rougher.
     relief_m : float [m]
         Four standard deviations of the elevations.
+    longest : float
+        Wavelengths above so many cells are left out.
 
     Returns
     -------
@@ -26,10 +28,15 @@ def rough(n: int, seed: int = 1, hurst: float = 0.8, relief_m: float = 500.0) ->
     spectrum = np.fft.rfft2(rng.standard_normal((n, n), np.float32))
     wavenumber = np.hypot(np.fft.fftfreq(n)[:, None], np.fft.rfftfreq(n)[None, :])
     wavenumber[0, 0] = np.inf
-    spectrum *= wavenumber ** -(hurst + 1.0)
+    spectrum *= np.where(wavenumber >= 1.0 / longest, wavenumber ** -(hurst + 1.0), 0.0)
     z = np.fft.irfft2(spectrum, s=(n, n)).astype(np.float32)
     z *= relief_m / (4.0 * z.std())
     return z - z.min()
+
+
+def stationary(n: int, seed: int = 1) -> np.ndarray:
+    """`rough` without wavelengths above 500 cells: depressions are alike however large the raster is."""
+    return rough(n, seed, longest=500.0)
 
 
 def smooth(n: int, seed: int = 1) -> np.ndarray:
@@ -92,4 +99,10 @@ def _rebuild(directions: np.ndarray, order: np.ndarray, ncols: int, slope: np.nd
     return climb(directions, order, ncols + 2, slope, cell_m)
 
 
-TERRAINS = {"rough": rough, "smooth": smooth, "river-like": river_like, "whole-metre": whole_metres}
+TERRAINS = {
+    "rough": rough,
+    "smooth": smooth,
+    "river-like": river_like,
+    "whole-metre": whole_metres,
+    "stationary": stationary,
+}

@@ -69,8 +69,9 @@ def contributing_area(
     stride = ncols + 2
     o = steps(stride)
     _count_donors(directions, nrows, ncols)
-    area_m2[:stride] = 0.0
-    area_m2[(nrows + 1) * stride :] = 0.0
+    for i in range(stride):
+        area_m2[i] = 0.0
+        area_m2[(nrows + 1) * stride + i] = 0.0
     for row in range(1, nrows + 1):
         own = row_area_m2[row - 1]
         for c in range(row * stride, (row + 1) * stride):

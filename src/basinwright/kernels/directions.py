@@ -28,8 +28,9 @@ def steepest_descent(
         Result.
     """
     stride = ncols + 2
-    directions[:stride] = VOID
-    directions[(nrows + 1) * stride :] = VOID
+    for i in range(stride):
+        directions[i] = VOID
+        directions[(nrows + 1) * stride + i] = VOID
     zero = np.float32(0.0)
     for row in range(1, nrows + 1):
         # Weights of at least 1, so that the product of a positive drop is never zero.

@@ -167,6 +167,15 @@ def _scan_row(
 
 
 @njit(cache=True, nogil=True)
+def _enlarged(kept: np.ndarray, count: int, size: int) -> np.ndarray:
+    """A longer array with the first `count` values of another; by a loop, as a slice costs seconds to compile."""
+    larger = np.empty(size, kept.dtype)
+    for i in range(count):
+        larger[i] = kept[i]
+    return larger
+
+
+@njit(cache=True, nogil=True)
 def find_passes(z: np.ndarray, label: np.ndarray, nrows: int, ncols: int) -> tuple[np.ndarray, np.ndarray]:
     """Passes between neighbouring catchments, the lowest of each pair among them.
 
@@ -184,20 +193,18 @@ def find_passes(z: np.ndarray, label: np.ndarray, nrows: int, ncols: int) -> tup
         The higher of the two cells of the pass.
     """
     stride = ncols + 2
-    held_pair = np.full(_TABLE_SIZE, _EMPTY, np.int64)
+    held_pair = np.empty(_TABLE_SIZE, np.int64)
     held_level = np.empty(_TABLE_SIZE, np.float32)
+    for slot in range(_TABLE_SIZE):
+        held_pair[slot] = _EMPTY
     most_per_row = 4 * ncols + _TABLE_SIZE
     pair = np.empty(2 * most_per_row, np.int64)
     level = np.empty(2 * most_per_row, np.float32)
     count = 0
     for row in range(nrows + 1):  # from the halo above: its neighbours are the first row
         if count + most_per_row > pair.size:
-            more_pair = np.empty(2 * pair.size, np.int64)
-            more_level = np.empty(2 * pair.size, np.float32)
-            more_pair[:count] = pair[:count]
-            more_level[:count] = level[:count]
-            pair = more_pair
-            level = more_level
+            pair = _enlarged(pair, count, 2 * pair.size)
+            level = _enlarged(level, count, 2 * level.size)
         count = _scan_row(z, label, row * stride + 1, stride, held_pair, held_level, pair, level, count)
     for slot in range(_TABLE_SIZE):
         if held_pair[slot] != _EMPTY:
@@ -227,21 +234,22 @@ def spill_levels(labels: int, pair: np.ndarray, level: np.ndarray) -> np.ndarray
 
     Notes
     -----
-    Rounds in the manner of Boruvka: each union of catchments looks across its lowest pass (of equal ones the
-    first in the list, so that no rings arise but pairs that look at each other) and joins what lies there. Along
-    such a chain the passes never rise, so a catchment that joins the outside in this round leaves over its own
-    pass. Otherwise it leaves over the higher of its own pass and that of its union in later rounds.
+    Rounds in the manner of Boruvka's minimum spanning tree (1926): each union of catchments looks across its
+    lowest pass (of equal ones the first in the list, so that no rings arise but pairs that look at each other)
+    and joins what lies there. Along such a chain the passes never rise, so a catchment that joins the outside
+    in this round leaves over its own pass. Otherwise it leaves over the higher of its own pass and that of its
+    union in later rounds.
     """
     passes = pair.size
-    spill = np.full(labels, -np.inf, np.float32)  # by union of this round, all rounds one after the other
+    spill = np.empty(labels, np.float32)  # by union of this round, all rounds one after the other
     union = np.empty(labels, np.int32)  # the union each becomes part of, as an index into `spill`
     begins = 0
     unions = labels
     while unions > 1:
         lowest = spill[begins : begins + unions]
         towards = union[begins : begins + unions]
-        lowest[:] = np.inf
         for i in range(unions):
+            lowest[i] = np.inf
             towards[i] = i
         for e in range(passes):
             a = pair[e] >> 32
@@ -255,11 +263,13 @@ def spill_levels(labels: int, pair: np.ndarray, level: np.ndarray) -> np.ndarray
         lowest[0] = -np.inf
         towards[0] = 0
 
-        # One union of the next round for each pair that look at each other; the outside is its own.
-        joined = np.full(unions, -1, np.int32)
+        # A union of the next round for each pair that look at each other, and the outside's; then all that look
+        # towards them.
+        joined = np.empty(unions, np.int32)
         joined[0] = 0
         next_unions = 1
         for i in range(1, unions):
+            joined[i] = -1
             if towards[towards[i]] == i and i <= towards[i]:
                 joined[i] = next_unions
                 next_unions += 1
@@ -286,16 +296,11 @@ def spill_levels(labels: int, pair: np.ndarray, level: np.ndarray) -> np.ndarray
         for i in range(unions):
             towards[i] = ends + joined[i]
         if spill.size < ends + next_unions:
-            more_spill = np.full(ends + next_unions, -np.inf, np.float32)
-            more_spill[:ends] = spill[:ends]
-            more_union = np.empty(ends + next_unions, np.int32)
-            more_union[:ends] = union[:ends]
-            spill = more_spill
-            union = more_union
+            spill = _enlarged(spill, ends, ends + next_unions)
+            union = _enlarged(union, ends, ends + next_unions)
         begins = ends
         unions = next_unions
-    if begins > 0:
-        spill[begins] = -np.inf
+    spill[begins] = -np.inf
     for i in range(begins - 1, -1, -1):
         spill[i] = max(spill[i], spill[union[i]])
     return spill[:labels]

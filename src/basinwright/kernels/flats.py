@@ -35,10 +35,13 @@ def _find_contacts(z: np.ndarray, directions: np.ndarray, nrows: int, ncols: int
     `away` becomes 1 beside higher ground, 0 in other FLAT cells, -1 elsewhere.
     """
     stride = ncols + 2
-    away[:stride] = -1
-    away[(nrows + 1) * stride :] = -1
+    for i in range(stride):
+        away[i] = -1
+        away[(nrows + 1) * stride + i] = -1
     # Elevations of the cells that drain, NaN elsewhere, for three rows in turn.
-    drained = np.full((3, stride), np.nan, np.float32)
+    drained = np.empty((3, stride), np.float32)
+    for i in range(stride):
+        drained[0, i] = np.nan
     lower = np.empty(stride, np.bool_)
     higher = np.empty(stride, np.bool_)
     for row in range(nrows + 1):

@@ -125,8 +125,9 @@ def condition_and_route(
     Parameters
     ----------
     elevation_m : float array, shape (nrows, ncols) [m]
-        Rows from north to south. NaN (or infinite) in voids. float64 is rounded to float32, by at most half a
-        millimetre below 8192 m; `Terrain.largest_rounding_m` says how much it was.
+        Rows from north to south. NaN (or infinite) in voids. float64 is rounded to float32, by at most a
+        quarter of a millimetre below 8192 m and half a millimetre above; `Terrain.largest_rounding_m` says how
+        much it was. float32 and whole numbers up to 2**24 stay as they are.
     dx_m, dy_m : arrays, shape (nrows,) [m]
         Cell sizes of each row, positive.
     cell_area_m2 : array, shape (nrows,) [m2]
