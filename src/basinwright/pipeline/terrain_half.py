@@ -386,7 +386,8 @@ def _outlet_rows(
     from pyproj import Transformer
 
     to_degrees = Transformer.from_crs(grid.crs, "EPSG:4326", always_xy=True)
-    longitude, latitude = to_degrees.transform(snapped.x, snapped.y)
+    # As lists: of an array of one, pyproj makes a plain number.
+    longitude, latitude = map(np.array, to_degrees.transform(snapped.x.tolist(), snapped.y.tolist()))
     project, points = inputs.project, inputs.points
     downstream = measures["downstream_outlet"]
     columns: dict[str, Any] = {
