@@ -5,6 +5,8 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from basinwright.errors import RangeError
+from basinwright.hydrograph import convolve_batch
 from basinwright.kernels.convolve import convolve, peaks
 from basinwright.kernels.excess import excess_increments
 from basinwright.storms import type_ii
@@ -20,7 +22,7 @@ def batch(seed: int, n: int, storms: int, longest: int):
         excess[starts[0][i] : starts[0][i] + rng.integers(0, rows[i] + 1)] = 0.0
     unit = rng.random(starts[1][-1])
     unit[starts[1][:-1]] = 0.0
-    return excess, starts[0], unit, starts[1], np.full((starts[2][-1], storms), np.nan), starts[2]
+    return excess, starts[0], unit, starts[1], np.zeros((starts[2][-1], storms)), starts[2]
 
 
 @settings(max_examples=60, deadline=None)
@@ -40,6 +42,26 @@ def test_compiled_and_plain_agree() -> None:
     convolve(excess, rows, unit, ordinates, flow, flow_rows)
     convolve.py_func(excess, rows, unit, ordinates, plain, flow_rows)
     assert flow == pytest.approx(plain, abs=1e-13)  # the compiler may fuse a product and a sum
+
+
+@pytest.mark.parametrize("jobs", [1, 2, 5])
+def test_threads_do_not_change_a_bit(jobs: int) -> None:
+    excess, rows, unit, ordinates, flow, flow_rows = batch(9, 40, 3, 60)
+    convolve(excess, rows, unit, ordinates, flow, flow_rows)
+    threaded, offsets = convolve_batch(excess, rows, unit, ordinates, jobs=jobs)
+    assert (threaded == flow).all()
+    assert (offsets == flow_rows).all()
+
+
+def test_batches_that_do_not_fit_are_refused() -> None:
+    with pytest.raises(RangeError, match="row 1: excess_mm is nan"):
+        convolve_batch([[1.0], [np.nan]], [0, 2], [1.0], [0, 1])
+    with pytest.raises(RangeError, match="excess of 1 outlets, unit hydrographs of 2"):
+        convolve_batch([[1.0]], [0, 1], [1.0, 1.0], [0, 1, 2])
+    with pytest.raises(RangeError, match="ordinate_offsets must run from 0 to the number of rows"):
+        convolve_batch([[1.0]], [0, 1], [1.0, 1.0], [0, 1])
+    with pytest.raises(RangeError, match="a column for each storm"):
+        convolve_batch([1.0], [0, 1], [1.0], [0, 1])
 
 
 def test_peak_is_the_first_of_equals() -> None:

@@ -4,6 +4,7 @@ A shape of the register is found by its key, ``registry.find("unit_hydrograph", 
 this room needs numpy only; `design_floods` compiles its loops with numba when it is first called.
 """
 
+from basinwright.hydrograph.batches import convolve_batch
 from basinwright.hydrograph.floods import Floods, Series, design_floods
 from basinwright.hydrograph.nrcs_shapes import (
     curvilinear,
@@ -61,6 +62,7 @@ __all__ = [
     "arriving_area_km2",
     "clark",
     "clark_terrain",
+    "convolve_batch",
     "curvilinear",
     "curvilinear_ratio",
     "default_time_area",
