@@ -1,4 +1,4 @@
-"""Snapping, case by case, on a valley between two planes whose areas are known: row r of its axis drains 21 (r + 1) cells."""
+"""Snapping, case by case, in a valley between two planes: row r of its axis drains 21 (r + 1) cells."""
 
 import numpy as np
 import pytest
@@ -92,9 +92,7 @@ def test_far_is_over_half_of_the_search_distance(valley):
 
 def test_one_stem_alone_is_not_ambiguous(valley):
     # Within 60 m the axis' own area changes by more than 2 x (row 8: 189 cells, row 2: 63): still one flow line.
-    snapped = snap(
-        valley.grid, valley.terrain, *point(valley, 8, AXIS), stream_area_km2=60 * CELL_KM2, within_m=60.0
-    )
+    snapped = snap(valley.grid, valley.terrain, *point(valley, 8, AXIS), stream_area_km2=60 * CELL_KM2, within_m=60.0)
     assert not snapped.ambiguous.any()
 
 
@@ -128,9 +126,7 @@ def test_a_line_of_similar_area_or_under_the_stream_area_is_no_doubt(landscape, 
 def test_an_expected_area_that_is_met_settles_the_doubt(fork):
     x, y = fork.grid.xy([20], [28])
     area = float(fork.terrain.area_grid[20, 30]) * 1e-6
-    snapped = snap(
-        fork.grid, fork.terrain, x, y, within_m=45.0, stream_area_km2=0.01, expected_area_km2=[area]
-    )
+    snapped = snap(fork.grid, fork.terrain, x, y, within_m=45.0, stream_area_km2=0.01, expected_area_km2=[area])
     assert fork.terrain.rows_cols(snapped.cell)[1] == [30]
     assert not snapped.ambiguous.any()
 

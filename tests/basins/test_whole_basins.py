@@ -84,7 +84,7 @@ def test_v_valley(landscape):
 
 
 def test_cone(landscape):
-    """Each of the eight main rays from the peak of a cone is a basin of its own; the peak itself goes to one of them."""
+    """Each of the eight main rays from the peak of a cone is a basin; the peak goes to one of them."""
     row, col = np.mgrid[:31, :31]
     ground = landscape(100 - 0.2 * D * np.hypot(row - 15, col - 15))
     rays = [(15 + 7 * r, 15 + 7 * c) for r, c in STEPS]
