@@ -7,7 +7,7 @@ from hypothesis import strategies as st
 from scipy import signal
 
 from basinwright.errors import RangeError
-from basinwright.hydrograph import Floods, curvilinear, design_floods, floods, graphical_peak, time_to_peak_h
+from basinwright.hydrograph import Floods, TimeArea, curvilinear, design_floods, floods, graphical_peak, time_to_peak_h
 from basinwright.registry import find
 from basinwright.runoff import Patches, effective_curve_number, runoff_mm, weighted_runoff_mm
 from basinwright.storms import Storm, balanced, type_ii, type_iii
@@ -239,6 +239,17 @@ def test_registered_shape_says_what_it_needs() -> None:
 def test_impossible_numbers_are_refused(change, message: str) -> None:
     with pytest.raises(RangeError, match=message):
         one(**change)
+
+
+@pytest.mark.parametrize("shape", ["curvilinear", "gamma", "clark", "travel_time"])
+def test_no_outlets_are_no_floods(shape: str) -> None:
+    none = np.empty(0)
+    inputs = {"peak_rate_factor": 300.0, "storage_ratio": 0.4, "time_area": TimeArea(np.zeros(1), none, none)}
+    flood = design_floods(
+        none, none, Patches(np.zeros(1), none, none), type_ii(), np.empty((0, 3)), shape=shape, shape_inputs=inputs
+    )
+    assert flood.peak_m3s.shape == (0, 3)
+    assert flood.series.flow_m3s.shape == (0, 3)
 
 
 def test_shapes_of_arrays_must_agree() -> None:

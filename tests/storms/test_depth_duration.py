@@ -104,7 +104,9 @@ def test_every_fault_of_a_depth_table_is_listed() -> None:
 
 def test_rising_intensity_is_refused() -> None:
     with pytest.raises(InputRejected, match="higher intensity"):
-        read_depth_duration_frequency([1.0, 2.0], ["2"], [[20.0], [41.0]])
+        read_depth_duration_frequency([2.0, 4.0], ["2"], [[20.0], [41.0]])
+    assert read_depth_duration_frequency([2.0, 4.0], ["2"], [[20.0], [40.1]]).depths_mm[1, 0] == 40.1  # a rounding
+    assert read_depth_duration_frequency([0.2, 0.4], ["2"], [[20.0], [39.0]]).depths_mm[1, 0] == 39.0
 
 
 @pytest.mark.parametrize(

@@ -219,7 +219,7 @@ def _arrivals(unit_duration_h: Floats, longest_h: Floats, curve: TimeArea | None
     else:
         whole = curve.area_km2[curve.offsets[1:] - 1]
         each = [curve.area_within_km2(i, at[offsets[i] : offsets[i + 1]]) for i in range(unit_duration_h.size)]
-        arrived = np.concatenate(each) / whole[outlet]
+        arrived = np.concatenate([np.empty(0), *each]) / whole[outlet]
     share = np.diff(arrived, prepend=0.0)
     share[offsets[:-1]] = 0.0
     # What lies at the outlet itself (travel time 0) arrives in the first step.
@@ -240,7 +240,7 @@ def _routed(unit_duration_h: Floats, storage_h: Floats, offsets: Integers, share
     with np.errstate(divide="ignore"):
         tail = np.ceil(np.log(_RECESSION_END) / np.log(keep))
     lengths = steps + np.maximum(tail, 0.0).astype(np.int64)
-    inflow = np.zeros((int(lengths.max()), steps.size))
+    inflow = np.zeros((int(lengths.max(initial=1)), steps.size))
     inflow[step_numbers(offsets), np.repeat(np.arange(steps.size), steps)] = share
     outflow = np.zeros_like(inflow)
     for step in range(1, inflow.shape[0]):
