@@ -71,16 +71,17 @@ def _polygons(grid: Grid, terrain: Terrain, number: np.ndarray, low: np.ndarray,
     edge_bounds = np.searchsorted(number[edges], np.arange(low.size + 1))
     region, shell_of, bounds, corners = trace_rings(number, terrain.ncols, low, high, edges, edge_bounds)
     x, y = grid.xy(corners[:, 0] - 0.5, corners[:, 1] - 0.5)
-    rings = shapely.linearrings(np.column_stack([x, y]), indices=np.repeat(np.arange(region.size), np.diff(bounds)))
+    owner = np.repeat(np.arange(region.size), np.diff(bounds))
+    rings = np.asarray(shapely.linearrings(np.column_stack([x, y]), indices=owner))
     is_shell = shell_of == np.arange(region.size)
     part_of_shell = np.cumsum(is_shell) - 1
-    parts = shapely.polygons(rings[is_shell])
+    parts = np.asarray(shapely.polygons(rings[is_shell]))
     holes = np.flatnonzero(~is_shell)
     holes = holes[np.argsort(shell_of[holes], kind="stable")]
     pierced, first = np.unique(shell_of[holes], return_index=True)
     for shell, inside in zip(pierced, np.split(holes, first[1:]), strict=False):
         parts[part_of_shell[shell]] = shapely.polygons(rings[shell], rings[inside])
-    polygons = np.asarray(shapely.multipolygons(parts, indices=region[is_shell]), object)
+    polygons = np.asarray(shapely.multipolygons(parts, indices=region[is_shell]))
     single = shapely.get_num_geometries(polygons) == 1
     polygons[single] = shapely.get_geometry(polygons[single], 0)
-    return np.asarray(shapely.normalize(polygons), object)  # where a ring starts depends on the other outlets
+    return np.asarray(shapely.normalize(polygons))  # where the walk began depends on the other outlets

@@ -125,7 +125,7 @@ def first_channel_below(
     o = steps(stride)
     found = np.full(starts.size, NO_CELL, np.int32)
     for i in range(starts.size):
-        c = np.int64(starts[i])
+        c = int(starts[i])
         while c >= 0:
             row = row_of(c, 1.0 / stride)
             if _away_m(row, c - (row + 1) * stride - 1, y[i], x[i], dx_m, dy_m) > within_m:
@@ -133,7 +133,7 @@ def first_channel_below(
             if area_m2[c] >= stream_area_m2:
                 found[i] = c
                 break
-            c = c + o[directions[c]] if directions[c] < EXIT else np.int64(NO_CELL)
+            c = c + o[directions[c]] if directions[c] < EXIT else NO_CELL
     return found
 
 
@@ -179,7 +179,7 @@ def other_line_near(
         own = np.zeros((4 * rows + 1, 4 * cols + 1), np.bool_)
         top, left = here_row - 2 * rows, here_col - 2 * cols
         for upward in (False, True):
-            c = np.int64(cells[i])
+            c = int(cells[i])
             while c >= 0:
                 row = row_of(c, 1.0 / stride)
                 r, k = row - top, c - (row + 1) * stride - 1 - left
@@ -189,7 +189,7 @@ def other_line_near(
                 if upward:
                     c = _largest_donor(c, o, directions, area_m2)
                 else:
-                    c = c + o[directions[c]] if directions[c] < EXIT else np.int64(NO_CELL)
+                    c = c + o[directions[c]] if directions[c] < EXIT else NO_CELL
         area = area_m2[cells[i]]
         for row in range(max(here_row - rows, 0), min(here_row + rows + 1, dx_m.size)):
             for col in range(max(here_col - cols, 0), min(here_col + cols + 1, ncols)):
@@ -206,7 +206,7 @@ def other_line_near(
 @njit(cache=True, nogil=True)
 def _largest_donor(c: int, o: np.ndarray, directions: np.ndarray, area_m2: np.ndarray) -> int:
     """The neighbour with the largest contributing area of those that drain into a cell; -1 for none."""
-    largest = np.int64(NO_CELL)
+    largest = NO_CELL
     for code in range(8):
         n = c + o[code]
         if directions[n] == (code + 4) % 8 and (largest < 0 or area_m2[n] > area_m2[largest]):
