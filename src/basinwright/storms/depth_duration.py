@@ -334,8 +334,8 @@ def areal_reduction_leclerc_schaake(area_km2: ArrayLike, duration_h: ArrayLike) 
     -----
     ``ARF = 1 - exp(-1.1 t^0.25) + exp(-1.1 t^0.25 - 0.01 A)``, t in h, A in **mi2**: G. Leclerc and J. C. Schaake, MIT
     Report 142, 1972, fitted to the curves of U.S. Weather Bureau Technical Paper 29. From memory. The paper's curves
-    end at 400 mi2 and run from 0.5 to 24 h. Before a balanced or nested storm is built, reduce the depth of each duration
-    by the factor of that duration; of any other storm, reduce its depth.
+    end at 400 mi2 and run from 0.5 to 24 h. Before a balanced or nested storm is built, reduce the depth of each
+    duration by the factor of that duration; of any other storm, reduce its depth.
 
     Examples
     --------
