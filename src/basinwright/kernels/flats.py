@@ -19,8 +19,9 @@ from basinwright.kernels.geometry import neighbours
 
 # While flats are in work the high half of a direction byte says where the cell stands.
 _RING = 16  # 16, 32, 48: steps to lower ground modulo 3, which tells nearer, equal and farther neighbours
-_BESIDE_LOWER = 16  # with _OPEN: a neighbour of equal elevation drains
-_OPEN = 64  # not reached yet
+_BESIDE_LOWER = 16  # with _OPEN and _COLLECTED: a neighbour of equal elevation drains
+_OPEN = 64  # not collected yet
+_COLLECTED = 128  # in the flat that is in work, not reached yet; _BESIDE_LOWER stays with it
 _STATE = 240
 _CODE = 15
 
@@ -80,13 +81,36 @@ def _find_contacts(z: np.ndarray, directions: np.ndarray, nrows: int, ncols: int
 
 
 @njit(cache=True, nogil=True)
-def _step_away(away: np.ndarray, stride: int, queue: np.ndarray) -> None:
-    """Steps from the foot of higher ground across the flats; 0 stays where a flat has no higher ground."""
+def _collect(directions: np.ndarray, stride: int, start: int, queue: np.ndarray) -> int:
+    """Put the cells of one flat into the queue; returns how many. Flat by flat the work stays in the cache."""
+    o = neighbours(stride)
+    directions[start] = directions[start] & ~_OPEN | _COLLECTED
+    queue[0] = start
+    head = 0
+    tail = 1
+    while head < tail:
+        c = np.uint64(queue[head])
+        head += 1
+        for k in range(8):
+            n = c + o[k]
+            d = directions[n]
+            if d & _OPEN:
+                directions[n] = d & ~_OPEN | _COLLECTED
+                queue[tail] = n
+                tail += 1
+    return tail
+
+
+@njit(cache=True, nogil=True)
+def _step_away(away: np.ndarray, stride: int, queue: np.ndarray, size: int) -> None:
+    """Steps from the foot of higher ground across one flat; 0 stays where it has no higher ground."""
     o = neighbours(stride)
     tail = 0
-    for cell in range(away.size):
-        queue[tail] = cell
-        tail += away[cell] == 1
+    for i in range(size):
+        cell = queue[i]
+        if away[cell] == 1:
+            queue[tail] = cell
+            tail += 1
     head = 0
     while head < tail:
         c = np.uint64(queue[head])
@@ -101,13 +125,17 @@ def _step_away(away: np.ndarray, stride: int, queue: np.ndarray) -> None:
 
 
 @njit(cache=True, nogil=True)
-def _drain_rings(z: np.ndarray, directions: np.ndarray, stride: int, away: np.ndarray, queue: np.ndarray) -> int:
+def _drain_rings(
+    z: np.ndarray, directions: np.ndarray, stride: int, away: np.ndarray, queue: np.ndarray, size: int
+) -> int:
     """Point the cells beside lower ground at it, then ring by ring each cell at the ring before."""
     o = neighbours(stride)
     tail = 0
-    for cell in range(directions.size):
-        queue[tail] = cell
-        tail += directions[cell] == _OPEN + _BESIDE_LOWER
+    for i in range(size):
+        cell = queue[i]
+        if directions[cell] == _COLLECTED + _BESIDE_LOWER:
+            queue[tail] = cell
+            tail += 1
     head = 0
     end = tail
     while head < end:
@@ -118,7 +146,7 @@ def _drain_rings(z: np.ndarray, directions: np.ndarray, stride: int, away: np.nd
         for k in _BY_DISTANCE:
             n = c + o[k]
             d = directions[n]
-            if d == _OPEN:
+            if d == _COLLECTED:
                 directions[n] = 2 * _RING
                 queue[tail] = n
                 tail += 1
@@ -139,7 +167,7 @@ def _drain_rings(z: np.ndarray, directions: np.ndarray, stride: int, away: np.nd
             for k in _BY_DISTANCE:
                 n = c + o[k]
                 d = directions[n]
-                if d == _OPEN:
+                if d == _COLLECTED:
                     directions[n] = farther
                     queue[tail] = n
                     tail += 1
@@ -147,6 +175,8 @@ def _drain_rings(z: np.ndarray, directions: np.ndarray, stride: int, away: np.nd
                     best = away[n]
                     code = k
             directions[c] = ring | code
+    for i in range(tail):
+        directions[queue[i]] &= _CODE
     return tail
 
 
@@ -169,9 +199,13 @@ def resolve_flats(
     """
     stride = ncols + 2
     _find_contacts(z, directions, nrows, ncols, away)
-    _step_away(away, stride, queue)
-    drained = _drain_rings(z, directions, stride, away, queue)
+    drained = 0
+    for start in range(directions.size):
+        if directions[start] & _OPEN:
+            size = _collect(directions, stride, start, queue)
+            _step_away(away, stride, queue, size)
+            drained += _drain_rings(z, directions, stride, away, queue, size)
     for c in range(directions.size):
-        d = directions[c]
-        directions[c] = np.uint8(FLAT) if d >= _OPEN else d & np.uint8(_CODE)
+        if directions[c] >= _COLLECTED:
+            directions[c] = FLAT
     return drained
