@@ -457,15 +457,13 @@ def cut(
     main = np.empty(most, np.int32)
     weight = np.zeros(n_classes)
     segment_bounds = np.zeros(n + 1, np.int64)
-    all_to_m = np.empty(0)
-    all_regime = np.empty(0, np.uint8)
-    all_main = np.empty(0, np.int32)
-    for filling in (False, True):  # count first, then fill
-        for i in range(n):
-            a, b = bounds[i], bounds[i + 1]
-            if b - a < 2:
-                segment_bounds[i + 1] = segment_bounds[i]
-                continue
+    all_to_m = np.empty(8 * n)
+    all_regime = np.empty(8 * n, np.uint8)
+    all_main = np.empty(8 * n, np.int32)
+    end = 0
+    for i in range(n):
+        a, b = bounds[i], bounds[i + 1]
+        if b - a >= 2:
             d = distance_m[a:b]
             w = slice(water_bounds[i], water_bounds[i + 1])
             count = _pieces(
@@ -475,18 +473,25 @@ def cut(
             count = _join_short(count, least_length_m, to_m, regime, cause)
             _main_cover(d, cover[a:b], count, to_m, weight, main)
             count = _join_alike(count, to_m, regime, cause, main)
-            if filling:
-                at = segment_bounds[i]
-                all_to_m[at : at + count] = to_m[:count]
-                all_regime[at : at + count] = regime[:count]
-                all_main[at : at + count] = main[:count]
-            else:
-                segment_bounds[i + 1] = segment_bounds[i] + count
-        if not filling:
-            all_to_m = np.empty(segment_bounds[n])
-            all_regime = np.empty(segment_bounds[n], np.uint8)
-            all_main = np.empty(segment_bounds[n], np.int32)
-    return segment_bounds, all_to_m, all_regime, all_main
+            if end + count > all_to_m.size:
+                size = 2 * (end + count)
+                all_to_m = _enlarged(all_to_m, end, size)
+                all_regime = _enlarged(all_regime, end, size)
+                all_main = _enlarged(all_main, end, size)
+            for s in range(count):
+                all_to_m[end + s], all_regime[end + s], all_main[end + s] = to_m[s], regime[s], main[s]
+            end += count
+        segment_bounds[i + 1] = end
+    return segment_bounds, all_to_m[:end].copy(), all_regime[:end].copy(), all_main[:end].copy()
+
+
+@njit(cache=True, nogil=True)
+def _enlarged(values: np.ndarray, used: int, size: int) -> np.ndarray:
+    """Copy of the values in use, with room for more."""
+    larger = np.empty(size, values.dtype)
+    for j in range(used):
+        larger[j] = values[j]
+    return larger
 
 
 @njit(cache=True, nogil=True)

@@ -17,8 +17,8 @@ WIDE_WATER = 3.0
 LEAST_TRIBUTARY = 0.1
 """Share of the stream area that a tributary must bring to cut shallow flow: near the divide every few cells
 of hillside raise the area by half, and none of them is a flow line of its own."""
-_HALVINGS = 60
-"""Enough to bring any length down to the last bit of a float."""
+_HALVINGS = 50
+"""Enough to bring the length of a sheet reach down to the last bits of a float."""
 
 
 @dataclass(frozen=True)
@@ -212,7 +212,7 @@ def _sheet(
     low, high = np.where(limited, 0.0, longest), longest.copy()
     for _ in range(_HALVINGS):
         middle = 0.5 * (low + high)
-        shorter = limited & ~agrees(middle)
+        shorter = limited & ~agrees(np.where(limited, middle, 0.0))
         low, high = np.where(shorter, low, middle), np.where(shorter, middle, high)
     length = np.where(limited, low, longest)
     roughness = kernel.sheet_reach(paths.bounds, paths.distance_m, paths.elevation_m, n_along, length)[1]
