@@ -164,3 +164,11 @@ def read_table(run: Path, name: str) -> list[dict[str, str]]:
 def numbers(rows: list[dict[str, str]], column: str) -> NDArray[np.float64]:
     """Return a column of `read_table` as numbers, NaN where empty."""
     return np.array([float(row[column]) if row[column] else np.nan for row in rows])
+
+
+def walled(elevation: NDArray[np.float64], width: int = 3, fall_m: float = 0.2) -> NDArray[np.float64]:
+    """Put a rim round a terrain that falls gently away from it: water leaves it as before, but touches no edge."""
+    rows, cols = elevation.shape
+    row, col = np.mgrid[-width : rows + width, -width : cols + width]
+    outside = np.maximum.reduce([-row, row - rows + 1, -col, col - cols + 1, np.zeros_like(row)])
+    return np.pad(elevation, width, mode="edge") - fall_m * outside

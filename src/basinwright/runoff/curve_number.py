@@ -313,7 +313,7 @@ def effective_curve_number(runoff_mm: ArrayLike, depth_mm: ArrayLike, initial_ab
     """
     ratio = check_ratio(initial_abstraction_ratio)
     runoff, depth = not_negative("runoff_mm", runoff_mm), not_negative("depth_mm", depth_mm)
-    excess = np.max(np.atleast_1d(runoff - depth))
+    excess = np.max(np.atleast_1d(runoff - depth), initial=0.0)
     if excess > 1e-9:
         raise RangeError(f"runoff_mm exceeds depth_mm by {excess:g}: no curve number gives more runoff than rain")
     spread = np.sqrt(((1.0 - ratio) * runoff) ** 2 + 4.0 * ratio * depth * runoff)
