@@ -103,7 +103,7 @@ def ours(outlets: int, jobs: str) -> float:
 
     given = _input(outlets)
     convolve_batch(*_input(3), jobs=int(jobs))
-    return best_of(lambda: convolve_batch(*given, jobs=int(jobs)), 15)
+    return best_of(lambda: convolve_batch(*given, jobs=int(jobs)), 40)
 
 
 def _loop(
