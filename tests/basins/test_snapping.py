@@ -119,13 +119,13 @@ def test_a_line_of_similar_area_or_under_the_stream_area_is_no_doubt(landscape, 
     x, y = twins.grid.xy([20], [18])
     assert not snap(twins.grid, twins.terrain, x, y, within_m=45.0, stream_area_km2=0.01).ambiguous.any()
     x, y = fork.grid.xy([20], [26])
-    only_left = fork.terrain.area_grid[20, 26] * 1e-6
+    only_left = fork.terrain.area_grid[20, 26] / 1e6
     assert not snap(fork.grid, fork.terrain, x, y, within_m=45.0, stream_area_km2=only_left).ambiguous.any()
 
 
 def test_an_expected_area_that_is_met_settles_the_doubt(fork):
     x, y = fork.grid.xy([20], [28])
-    area = float(fork.terrain.area_grid[20, 30]) * 1e-6
+    area = float(fork.terrain.area_grid[20, 30]) / 1e6
     snapped = snap(fork.grid, fork.terrain, x, y, within_m=45.0, stream_area_km2=0.01, expected_area_km2=[area])
     assert fork.terrain.rows_cols(snapped.cell)[1] == [30]
     assert not snapped.ambiguous.any()
@@ -137,7 +137,7 @@ def test_a_tributary_that_joins_nearby_is_another_line(landscape):
     z[20, 16:] = 98 + 0.05 * np.arange(1, 16)  # a side ditch that falls to the axis at row 20
     side = landscape(z)
     x, y = side.grid.xy([20], [15])
-    channel = side.terrain.area_grid[20, 16] * 1e-6
+    channel = side.terrain.area_grid[20, 16] / 1e6
     assert side.terrain.area_grid[20, 15] > 2 * side.terrain.area_grid[20, 16]
     assert snap(side.grid, side.terrain, x, y, stream_area_km2=channel).ambiguous.all()
 
@@ -163,3 +163,10 @@ def test_true_distances_on_a_geographic_grid(landscape):
     snapped = snap(ground.grid, ground.terrain, x, y, stream_area_km2=0.05, within_m=60.0)
     assert ground.terrain.rows_cols(snapped.cell)[1] == [10]
     assert snapped.snap_m == pytest.approx([2 * 23.73], abs=0.1)  # cos 39.997 x 30.92 m a second, by 2
+
+
+def test_a_cell_with_exactly_the_stream_area_is_a_channel(landscape):
+    ground = landscape(1000.0 - np.mgrid[:701, :3][0])  # row r of a column drains r + 1 cells: 700 are 0.07 km2
+    x, y = ground.grid.xy([698], [1])
+    snapped = snap(ground.grid, ground.terrain, x, y, stream_area_km2=0.07)
+    assert ground.terrain.rows_cols(snapped.cell)[0] == [699]

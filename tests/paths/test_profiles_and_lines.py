@@ -201,3 +201,11 @@ def test_random_terrain(landscape, seed):
     row, _ = terrain.rows_cols(np.flatnonzero(channel))
     steps_um = terrain.step_um[row, terrain.directions[channel]].sum()
     assert streams["length_m"].sum() == pytest.approx(steps_um * 1e-6, rel=1e-12)
+
+
+def test_a_channel_begins_where_the_area_is_exactly_the_stream_area(landscape):
+    ground = landscape(1000.0 - np.mgrid[:720, :3][0])
+    _, _, paths, _ = follow(ground, (715, 1))
+    segments = plain_cut(ground, paths, stream_area_km2=0.07)
+    assert segments["from_m"][segments["regime"] == "channel"][0] == 6990.0
+    assert stream_reaches(ground.grid, ground.terrain, 0.07)["length_m"].tolist() == [200.0] * 3

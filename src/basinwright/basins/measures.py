@@ -38,13 +38,13 @@ def measure(grid: Grid, terrain: Terrain, elevation_m: np.ndarray, basins: Basin
     area = whole["area"]
     centroid_x, centroid_y = grid.xy(whole["row"] / area, whole["col"] / area)
     by_label = {
-        "area_km2": area * 1e-6,
+        "area_km2": area / 1e6,
         "relief_m": highest - lowest,
         "mean_elevation_m": whole["elevation"] / area,
         "basin_slope_pct": whole["slope"] / area,
         "centroid_x": centroid_x,
         "centroid_y": centroid_y,
-        "path_length_m": basins.farthest_um * 1e-6,
+        "path_length_m": basins.farthest_um / 1e6,
         "filled_volume_m3": whole["depth"],
     }
     columns = {"downstream_outlet": basins.downstream_outlet}

@@ -110,7 +110,7 @@ def snap(
     expected_m2 = np.full(n, np.nan)
     if expected_area_km2 is not None:
         expected_m2[:] = np.asarray(expected_area_km2, np.float64) * 1e6
-    stream_m2 = stream_area_km2 * 1e6
+    stream_m2 = round(stream_area_km2 * 1e6, 6)  # 0.07 km2 is 70000 m2, not a hair more
 
     inside = (px >= 0) & (px < grid.ncols) & (py >= 0) & (py < grid.nrows)
     own = np.full(n, NO_CELL, np.int32)

@@ -20,10 +20,11 @@ _BY_REGIME, _BY_COVER, _BY_TRIBUTARY = range(3)
 
 
 @njit(cache=True, nogil=True)
-def distances_um(
-    bounds: np.ndarray, cells: np.ndarray, directions: np.ndarray, ncols: int, step_um: np.ndarray
-) -> np.ndarray:
-    """Distance of every path cell from the first cell of its path.
+def profile(
+    bounds: np.ndarray, cells: np.ndarray, directions: np.ndarray, ncols: int, step_um: np.ndarray,
+    filled_m: np.ndarray, area_m2: np.ndarray,
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:  # fmt: skip
+    """Distance, elevation and contributing area of every path cell.
 
     Parameters
     ----------
@@ -32,18 +33,30 @@ def distances_um(
     directions : uint8 array, shape (cells,)
     ncols : int
     step_um : int64 array, shape (nrows, 8) [micrometres]
+    filled_m : float32 array, shape (cells,) [m]
+    area_m2 : float64 array, shape (cells,) [m2]
 
     Returns
     -------
-    int64 array, shape (path cells,) [micrometres]
+    distance_m, elevation_m, area_km2 : float64 arrays, shape (path cells,)
+        The distance is from the first cell of the path: whole micrometres are added, so that it does not
+        depend on how far the path goes on.
     """
     per_stride = 1.0 / (ncols + 2)
-    away = np.zeros(cells.size, np.int64)
+    distance_m = np.empty(cells.size)
+    elevation_m = np.empty(cells.size)
+    area_km2 = np.empty(cells.size)
     for i in range(bounds.size - 1):
-        for j in range(bounds[i] + 1, bounds[i + 1]):
-            c = cells[j - 1]
-            away[j] = away[j - 1] + step_um[row_of(c, per_stride), directions[c]]
-    return away
+        away_um = np.int64(0)
+        for j in range(bounds[i], bounds[i + 1]):
+            c = cells[j]
+            distance_m[j] = away_um / 1e6
+            elevation_m[j] = filled_m[c]
+            area_km2[j] = area_m2[c] / 1e6
+            code = directions[c]
+            if code < EXIT:
+                away_um += step_um[row_of(c, per_stride), code]
+    return distance_m, elevation_m, area_km2
 
 
 @njit(cache=True, nogil=True)
@@ -104,41 +117,50 @@ def _longest(bounds: np.ndarray) -> int:
 
 @njit(cache=True, nogil=True)
 def nearest_on_path(
-    bounds: np.ndarray, x_m: np.ndarray, y_m: np.ndarray, distance_m: np.ndarray, to_x_m: np.ndarray,
-    to_y_m: np.ndarray,
+    bounds: np.ndarray, cells: np.ndarray, ncols: int, distance_m: np.ndarray, dx_m: np.ndarray, dy_m: np.ndarray,
+    row: np.ndarray, col: np.ndarray,
 ) -> np.ndarray:  # fmt: skip
     """Distance from the divide of the point of each path that is nearest to a given point.
 
     Parameters
     ----------
     bounds : int64 array, shape (n + 1,)
-    x_m, y_m : float64 arrays, shape (path cells,) [m]
-        Cell centres on a plane.
+    cells : int32 array, shape (path cells,)
+    ncols : int
     distance_m : float64 array, shape (path cells,) [m]
-    to_x_m, to_y_m : float64 arrays, shape (n,) [m]
-        One point per path.
+    dx_m, dy_m : float64 arrays, shape (n,) [m]
+        Cell size with which nearness is measured, one per path.
+    row, col : float64 arrays, shape (n,)
+        The point for each path, in cells from the centre of the raster's upper left cell.
 
     Returns
     -------
     float64 array, shape (n,) [m]
         Of equally near points the one farthest upstream; NaN for an empty path.
     """
+    stride = ncols + 2
+    per_stride = 1.0 / stride
     found = np.full(bounds.size - 1, np.nan)
     for i in range(bounds.size - 1):
-        a, b = bounds[i], bounds[i + 1]
-        if b == a:
-            continue
-        px, py = to_x_m[i], to_y_m[i]
-        nearest = (x_m[a] - px) ** 2 + (y_m[a] - py) ** 2
-        found[i] = distance_m[a]
-        for j in range(a, b - 1):
-            ux, uy = x_m[j + 1] - x_m[j], y_m[j + 1] - y_m[j]
-            share = ((px - x_m[j]) * ux + (py - y_m[j]) * uy) / (ux * ux + uy * uy)
-            share = min(max(share, 0.0), 1.0)
-            apart = (x_m[j] + share * ux - px) ** 2 + (y_m[j] + share * uy - py) ** 2
+        nearest = np.inf
+        ax, ay = 0.0, 0.0
+        for j in range(bounds[i], bounds[i + 1]):
+            r = row_of(cells[j], per_stride)
+            bx = (cells[j] - (r + 1) * stride - 1 - col[i]) * dx_m[i]
+            by = (r - row[i]) * dy_m[i]
+            share = 1.0
+            if j == bounds[i]:
+                ax, ay = bx, by
+            else:
+                ux, uy = bx - ax, by - ay
+                share = min(max(-(ax * ux + ay * uy) / (ux * ux + uy * uy), 0.0), 1.0)
+                ax, ay = ax + share * ux, ay + share * uy
+            apart = ax * ax + ay * ay
             if apart < nearest:
                 nearest = apart
-                found[i] = distance_m[j] + share * (distance_m[j + 1] - distance_m[j])
+                above = max(j - 1, bounds[i])
+                found[i] = distance_m[above] + share * (distance_m[j] - distance_m[above])
+            ax, ay = bx, by
     return found
 
 

@@ -126,7 +126,8 @@ def cut_segments(grid: Grid, terrain: Terrain, paths: Paths, cover: CoverOnGrid,
     from basinwright.kernels import paths as kernel
 
     bounds, distance, elevation = paths.bounds, paths.distance_m, paths.elevation_m
-    classes = _along(paths, cover.classes[terrain.rows_cols(paths.cells)])
+    classes = cover.classes[terrain.rows_cols(paths.cells)]
+    classes = _gaps_filled(paths, classes, classes >= 0)
     path, first, last = _open_water(grid, paths, classes, terrain.ncols, cover, rules)
     channel, sheet_end = kernel.regime_starts(bounds, distance, paths.area_km2, rules.stream_area_km2, path, first)
     sheet, roughness, limited = _sheet(paths, classes, cover, sheet_end, rules)
@@ -155,12 +156,14 @@ def cut_segments(grid: Grid, terrain: Terrain, paths: Paths, cover: CoverOnGrid,
     return Cut(segments, limited, ~has_channel & (np.diff(bounds) > 0))
 
 
-def _along(paths: Paths, classes: np.ndarray) -> np.ndarray:
-    """Classes of the path cells, gaps filled from the nearest cell of the path; -1 where it has none."""
+def _gaps_filled(paths: Paths, values: np.ndarray, known: np.ndarray) -> np.ndarray:
+    """Values along the paths, unknown ones taken from the nearest cell of the path that is known, if any is."""
     from basinwright.kernels import paths as kernel
 
-    nearest = kernel.nearest_valid(paths.bounds, paths.distance_m, classes >= 0)
-    return np.where(nearest >= 0, classes[nearest], -1) if classes.size else classes
+    if known.all():
+        return values
+    nearest = kernel.nearest_valid(paths.bounds, paths.distance_m, known)
+    return values[np.where(nearest >= 0, nearest, np.arange(values.size))]
 
 
 def _open_water(
@@ -195,8 +198,7 @@ def _sheet(
     from basinwright.kernels import paths as kernel
 
     n_of_class = np.append(np.asarray(cover.sheet_n, np.float64), np.nan)[classes]
-    nearest = kernel.nearest_valid(paths.bounds, paths.distance_m, ~np.isnan(n_of_class))
-    n_along = np.where(nearest >= 0, n_of_class[nearest], np.nan) if nearest.size else n_of_class
+    n_along = _gaps_filled(paths, n_of_class, ~np.isnan(n_of_class))
     known = ~np.isnan(paths.at_ends(n_along)[0])
 
     def agrees(length_m: np.ndarray) -> np.ndarray:

@@ -74,14 +74,16 @@ def stream_reaches(grid: Grid, terrain: Terrain, stream_area_km2: float) -> dict
     from basinwright.kernels import paths as kernel
 
     bounds, cells, lower_m2 = kernel.trace_reaches(
-        terrain.directions, terrain.area_m2, terrain.nrows, terrain.ncols, stream_area_km2 * 1e6
+        terrain.directions, terrain.area_m2, terrain.nrows, terrain.ncols, round(stream_area_km2 * 1e6, 6)
     )
-    away_um = kernel.distances_um(bounds, cells, terrain.directions, terrain.ncols, terrain.step_um)
+    away_m, _, _ = kernel.profile(
+        bounds, cells, terrain.directions, terrain.ncols, terrain.step_um, terrain.filled_m, terrain.area_m2
+    )
     x, y = grid.xy(*terrain.rows_cols(cells))
     return {
         "geometry": _lines(bounds, np.column_stack([x, y])),
-        "length_m": away_um[bounds[1:] - 1] * 1e-6,
-        "area_km2": lower_m2 * 1e-6,
+        "length_m": away_m[bounds[1:] - 1],
+        "area_km2": lower_m2 / 1e6,
     }
 
 

@@ -58,10 +58,6 @@ class Paths:
         last[some] = values[self.bounds[1:][some] - 1]
         return first, last
 
-    def per_cell(self, by_path: np.ndarray) -> np.ndarray:
-        """Repeat a value per path for each of its cells."""
-        return np.repeat(by_path, np.diff(self.bounds))
-
 
 def trace(terrain: Terrain, basins: Basins) -> Paths:
     """Trace the longest flow path of every outlet.
@@ -81,14 +77,10 @@ def trace(terrain: Terrain, basins: Basins) -> Paths:
     starts = basins.by_outlet(basins.farthest_cell, failed=NO_CELL)
     ends = basins.by_outlet(basins.label_cell, failed=NO_CELL)
     bounds, cells = trace_paths(terrain.directions, terrain.ncols, starts, ends)
-    away_um = kernel.distances_um(bounds, cells, terrain.directions, terrain.ncols, terrain.step_um)
-    return Paths(
-        bounds=bounds,
-        cells=cells,
-        distance_m=away_um * 1e-6,
-        elevation_m=terrain.filled_m[cells].astype(np.float64),
-        area_km2=terrain.area_m2[cells] * 1e-6,
+    distance_m, elevation_m, area_km2 = kernel.profile(
+        bounds, cells, terrain.directions, terrain.ncols, terrain.step_um, terrain.filled_m, terrain.area_m2
     )
+    return Paths(bounds, cells, distance_m, elevation_m, area_km2)
 
 
 def profile_measures(
@@ -132,15 +124,14 @@ def profile_measures(
         slope_1085_pct = 100.0 * (upper - lower) / (0.75 * length)
 
     # A plane with the cell size at the centroid's parallel is true enough to say which point is nearest.
-    rows, cols = terrain.rows_cols(paths.cells)
-    y = (centroid_y - grid.transform.f) / grid.transform.e - 0.5
-    x = (centroid_x - grid.transform.c) / grid.transform.a - 0.5
-    row = np.clip(np.nan_to_num(y).astype(np.int64), 0, grid.nrows - 1)
-    dx, dy = grid.dx_m[row], grid.dy_m[row]
+    row = (centroid_y - grid.transform.f) / grid.transform.e - 0.5
+    col = (centroid_x - grid.transform.c) / grid.transform.a - 0.5
+    parallel = np.clip(np.nan_to_num(row).astype(np.int64), 0, grid.nrows - 1)
     nearest = kernel.nearest_on_path(
-        bounds, cols * paths.per_cell(dx), rows * paths.per_cell(dy), distance, x * dx, y * dy
+        bounds, paths.cells, terrain.ncols, distance, grid.dx_m[parallel], grid.dy_m[parallel], row, col
     )
 
+    rows, cols = terrain.rows_cols(paths.cells)
     raised = paths.elevation_m - elevation_m[rows, cols]
     deepest = np.full(paths.n, np.nan)
     some = np.diff(bounds) > 0
