@@ -57,3 +57,19 @@ def check_offsets(name: str, offsets: ArrayLike, rows: int) -> Integers:
     if array.ndim != 1 or array.size == 0 or array[0] != 0 or array[-1] != rows or (np.diff(array) < 0).any():
         raise RangeError(f"{name} must run from 0 to the number of rows ({rows}) without falling")
     return array
+
+
+def three_figures(value: float) -> str:
+    """Return a number as an engineer signs it: three significant figures, no powers of ten.
+
+    Examples
+    --------
+    >>> [three_figures(value) for value in (1529.2, 999.6, 59.14, 0.8224, 0.0000772, 0.0)]
+    ['1,530', '1,000', '59.1', '0.822', '0.0000772', '0']
+    """
+    if value == 0:
+        return "0"
+    rounded = float(f"{value:.2e}")
+    decimals = 2 - int(f"{rounded:e}".rpartition("e")[2])
+    text = f"{rounded:,.{max(decimals, 0)}f}"
+    return text.rstrip("0").rstrip(".") if decimals > 3 else text

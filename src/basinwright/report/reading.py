@@ -1,0 +1,347 @@
+"""Reads a run: its tables, layers and manifest, taken apart by outlet.
+
+Numbers stay in the units of the tables (feet or metres, as the project asked), under the stems of the schema: what is
+shown is what stands in the CSV files.
+"""
+
+from __future__ import annotations
+
+import itertools
+from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from basinwright.errors import InputRejected
+from basinwright.flags import FLAGS, SEVERITIES
+from basinwright.report import words
+from basinwright.tables import (
+    COVER_SHARES,
+    FLAGS_TABLE,
+    HYDROGRAPHS,
+    OUTLETS,
+    SEGMENTS,
+    TIMING,
+    UNIT_HYDROGRAPHS,
+    Table,
+)
+from basinwright.units import M_PER_FT, System
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+Row = dict[str, Any]
+"""One row of a table by stem: numbers (NaN where missing), texts, booleans."""
+
+SUPPLIED = "supplied_points"
+"""Where the manifest keeps the outlets as supplied, in the working CRS and in the order of outlets.csv."""
+
+
+@dataclass(frozen=True)
+class Doubt:
+    """A flag of one outlet: its kind in `FLAGS` and the words for this case."""
+
+    key: str
+    message: str
+
+    @property
+    def severity(self) -> str:
+        """How much it weighs."""
+        return FLAGS[self.key].severity
+
+    @property
+    def remedy(self) -> str:
+        """What to do about it."""
+        return FLAGS[self.key].remedy
+
+
+@dataclass
+class Outlet:
+    """All that the report says of one outlet.
+
+    Parameters
+    ----------
+    number : int
+        Its place in outlets.csv, from 1.
+    row : Row
+        Its row there.
+    doubts : list of Doubt
+        Its flags, the gravest first.
+    segments, timing, shares : list of Row
+        Its rows of those tables.
+    unit_hydrograph : dict
+        ``time_h`` and ``flow``; empty where the run keeps none.
+    floods : dict
+        By return period as written: ``time_h``, ``rain``, ``excess``, ``flow``.
+    basin, subbasin, path : geometry or None
+        In the working CRS.
+    lines : dict
+        Geometry by segment number.
+    streams : list of (geometry, float)
+        Stream reaches in its neighbourhood, with their contributing area.
+    neighbours : list of (str, float, float)
+        Other outlets in its basin: id and place.
+    supplied : tuple of float, or None
+        The point as supplied, in the working CRS.
+    """
+
+    number: int
+    row: Row
+    doubts: list[Doubt] = field(default_factory=list)
+    segments: list[Row] = field(default_factory=list)
+    timing: list[Row] = field(default_factory=list)
+    shares: list[Row] = field(default_factory=list)
+    unit_hydrograph: dict[str, Any] = field(default_factory=dict)
+    floods: dict[str, dict[str, Any]] = field(default_factory=dict)
+    basin: Any = None
+    subbasin: Any = None
+    path: Any = None
+    lines: dict[int, Any] = field(default_factory=dict)
+    streams: list[tuple[Any, float]] = field(default_factory=list)
+    neighbours: list[tuple[str, float, float]] = field(default_factory=list)
+    supplied: tuple[float, float] | None = None
+
+    @property
+    def id(self) -> str:
+        """Its id as text, exactly."""
+        return str(self.row["outlet_id"])
+
+    @property
+    def failed(self) -> bool:
+        """Whether it could not be computed."""
+        return bool(self.row["status"] == "failed")
+
+    @property
+    def severity(self) -> str:
+        """The gravest of its doubts: ``failed``, ``serious``, ``warning``, ``note`` or ``ok``."""
+        if self.failed:
+            return "failed"
+        return max((doubt.severity for doubt in self.doubts), key=_SEVERITIES.index, default="ok")
+
+    @property
+    def open_ended(self) -> bool:
+        """Whether its basin goes on outside the terrain: its area is a lower bound."""
+        return any(doubt.key == "EDGE_TOUCH" for doubt in self.doubts)
+
+    @property
+    def anchor(self) -> str:
+        """Its name inside a page."""
+        return f"outlet-{self.number}"
+
+    @property
+    def file(self) -> str:
+        """The file of its own page: safe whatever its id holds."""
+        stem = words.file_stem(self.id)
+        return f"{self.number:04d}{'-' if stem else ''}{stem}.html"
+
+    @property
+    def place(self) -> tuple[float, float] | None:
+        """Where it is in the working CRS, None where it has no cell."""
+        x, y = self.row["x"], self.row["y"]
+        return None if x != x else (float(x), float(y))
+
+
+_SEVERITIES = ("ok", *SEVERITIES, "failed")
+
+
+@dataclass
+class Run:
+    """A run as the report sees it.
+
+    Parameters
+    ----------
+    folder : Path
+        The run's folder.
+    about : mapping
+        The manifest.
+    system : {"us", "si"}
+        Unit system of the tables.
+    periods : list of str
+        Return periods as written.
+    outlets : list of Outlet
+        In the order of outlets.csv.
+    columns : set of str
+        Stems of the columns that outlets.csv has.
+    """
+
+    folder: Path
+    about: Mapping[str, Any]
+    system: System
+    periods: list[str]
+    outlets: list[Outlet]
+    columns: set[str]
+
+    @property
+    def terrain(self) -> Path | None:
+        """The conditioned terrain, None where the run keeps none."""
+        path = self.folder / "terrain" / "conditioned.tif"
+        return path if path.is_file() else None
+
+    @property
+    def with_maps(self) -> bool:
+        """Whether there are basins to draw."""
+        return any(outlet.basin is not None for outlet in self.outlets)
+
+    def outlet(self, outlet_id: str) -> Outlet:
+        """Return one outlet.
+
+        Raises
+        ------
+        InputRejected
+            Where there is none of this id.
+        """
+        for outlet in self.outlets:
+            if outlet.id == outlet_id:
+                return outlet
+        from difflib import get_close_matches
+
+        near = get_close_matches(outlet_id, [outlet.id for outlet in self.outlets], n=1)
+        fix = f"did you mean {near[0]!r}?" if near else "outlets.csv lists them"
+        raise InputRejected.one(str(self.folder / "outlets.csv"), "outlet_id", f"has no {outlet_id!r}", fix)
+
+
+def read_run(folder: Path, about: Mapping[str, Any]) -> Run:
+    """Read a run's folder.
+
+    Parameters
+    ----------
+    folder : Path
+        Where the tables lie; layers and terrain are used where they are there.
+    about : mapping
+        The manifest.
+
+    Raises
+    ------
+    InputRejected
+        Where outlets.csv is missing.
+    """
+    project = about["project"]
+    system: System = project["project"]["units"]
+    storm = project["storm"]
+    periods = sorted(storm.get("depths") or storm.get("depth_rasters"), key=float)
+
+    def read(table: Table) -> pd.DataFrame:
+        return _read(folder / f"{table.name}.csv", table, system, periods)
+
+    table = read(OUTLETS)
+    if table.empty:
+        raise InputRejected.one(str(folder / "outlets.csv"), "file", "does not exist or is empty", "run again")
+    rows = _rows(table)
+    outlets = [Outlet(number, row) for number, row in enumerate(rows, start=1)]
+    by_id = {outlet.id: outlet for outlet in outlets}
+    for outlet, point in zip(outlets, about.get(SUPPLIED, [None] * len(outlets)), strict=True):
+        outlet.supplied = (float(point[0]), float(point[1])) if point else None
+
+    for row in _rows(read(FLAGS_TABLE)):
+        by_id[row["outlet_id"]].doubts.append(Doubt(row["flag"], row["message"]))
+    order = list(FLAGS)
+    for outlet in outlets:
+        outlet.doubts.sort(key=lambda doubt: (-_SEVERITIES.index(doubt.severity), order.index(doubt.key)))
+    for source, name in ((SEGMENTS, "segments"), (TIMING, "timing"), (COVER_SHARES, "shares")):
+        for outlet_id, part in _by_outlet(read(source)):
+            setattr(by_id[outlet_id], name, _rows(part))
+    for outlet_id, part in _by_outlet(read(UNIT_HYDROGRAPHS)):
+        by_id[outlet_id].unit_hydrograph = {name: part[name].to_numpy() for name in ("time_h", "flow")}
+    written = {float(period): period for period in periods}
+    for outlet_id, part in _by_outlet(read(HYDROGRAPHS)):
+        for period, flood in part.groupby("return_period_yr", sort=True):
+            columns = {name: flood[name].to_numpy() for name in ("time_h", "rain", "excess", "flow")}
+            by_id[outlet_id].floods[written[float(period)]] = columns  # type: ignore[arg-type]
+    run = Run(folder, about, system, periods, outlets, set(table.columns))
+    if (folder / "basins.gpkg").is_file():
+        _read_layers(run, by_id)
+    return run
+
+
+def _read(path: Path, table: Table, system: System, periods: Sequence[str]) -> pd.DataFrame:
+    """Read a table of the run with its columns under their stems; empty where there is none."""
+    import pandas as pd
+
+    optional = [column.stem for column in table.columns if column.optional]
+    fields = {entry.name: entry for entry in table.fields(system, periods, optional)}
+    if not path.is_file():
+        return pd.DataFrame({entry.stem: [] for entry in fields.values()})
+    numeric = [name for name, entry in fields.items() if entry.column.type in ("number", "integer")]
+    frame = pd.read_csv(
+        path,
+        dtype={name: "float64" if name in numeric else "str" for name in fields},
+        keep_default_na=False,
+        na_values={name: [""] for name in numeric},
+        encoding="utf-8-sig",
+    )
+    frame = frame[[name for name in frame.columns if name in fields]]
+    for name in frame.columns:
+        if fields[name].column.type == "boolean":
+            frame[name] = frame[name] == "true"
+    return frame.rename(columns={name: entry.stem for name, entry in fields.items()})
+
+
+def _rows(frame: pd.DataFrame) -> list[Row]:
+    return [{str(name): value for name, value in row.items()} for row in frame.to_dict("records")]
+
+
+def _by_outlet(frame: pd.DataFrame) -> Iterable[tuple[str, pd.DataFrame]]:
+    return ((str(outlet_id), part) for outlet_id, part in frame.groupby("outlet_id", sort=False))
+
+
+def _read_layers(run: Run, by_id: Mapping[str, Outlet]) -> None:
+    """Give each outlet its geometries, and the streams and outlets in its neighbourhood."""
+    import numpy as np
+    import shapely
+
+    from basinwright.io.pictures import read_layer
+
+    path = run.folder / "basins.gpkg"
+    for layer, name in (("basins", "basin"), ("subbasins", "subbasin"), ("flow_paths", "path")):
+        frame = read_layer(path, layer, ["outlet_id"])
+        for outlet_id, geometry in zip(frame["outlet_id"], frame.geometry, strict=True):
+            setattr(by_id[outlet_id], name, geometry)
+    frame = read_layer(path, "segments", ["outlet_id", "segment"])
+    for outlet_id, segment, geometry in zip(frame["outlet_id"], frame["segment"], frame.geometry, strict=True):
+        by_id[outlet_id].lines[int(segment)] = geometry
+
+    area = OUTLETS.column("area").name(run.system)
+    streams = read_layer(path, "streams", [area])
+    lines, areas = streams.geometry.to_numpy(), streams[area].to_numpy(dtype=float)
+    tree = shapely.STRtree(lines)
+    drawn = [outlet for outlet in run.outlets if outlet.basin is not None and outlet.place is not None]
+    points = shapely.points(np.array([outlet.place for outlet in drawn]).reshape(-1, 2))
+    among = shapely.STRtree(points)
+    for outlet in drawn:
+        window = shapely.box(*outlet.basin.bounds).buffer(0.1 * max(_spans(outlet.basin.bounds)))
+        near = np.sort(tree.query(window))
+        outlet.streams = [(lines[i], float(areas[i])) for i in near.tolist()]
+        inside = np.sort(among.query(outlet.basin, predicate="contains"))
+        others = [drawn[i] for i in inside.tolist() if drawn[i] is not outlet]
+        outlet.neighbours = [
+            (other.id, *other.place) for other in others if other.place and other.place != outlet.place
+        ]
+
+
+def _spans(bounds: tuple[float, float, float, float]) -> tuple[float, float]:
+    return bounds[2] - bounds[0], bounds[3] - bounds[1]
+
+
+def upstream(outlets: Sequence[Outlet]) -> dict[int, list[int]]:
+    """Return, by position, the positions of the outlets next upstream of each."""
+    position = {outlet.id: i for i, outlet in enumerate(outlets)}
+    above: dict[int, list[int]] = {i: [] for i in range(len(outlets))}
+    for i, outlet in enumerate(outlets):
+        below = position.get(outlet.row["downstream_outlet_id"])
+        if below is not None and below != i:
+            above[below].append(i)
+    return above
+
+
+def profile_points(segments: Sequence[Row]) -> list[tuple[float, float]]:
+    """Return distance from the divide and elevation along the path."""
+    if not segments:
+        return []
+    first = segments[0]
+    tail = ((row["to"], row["bottom_elevation"]) for row in segments)
+    return list(itertools.chain([(first["from"], first["top_elevation"])], tail))
+
+
+def feet_or_metres(system: System, metres: float) -> float:
+    """Return metres in the length unit of the tables."""
+    return metres / M_PER_FT if system == "us" else metres
