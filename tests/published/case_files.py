@@ -2,7 +2,9 @@
 
 A case file is YAML, one published document each. It names a public function, its inputs with the units in
 which the document prints them, and the printed answer; the tolerance is half of the last printed digit unless
-the case says why it is wider. The ledger of all cases follows from `load_all`.
+the case says why it is wider. An input may be a mapping of columns, each converted by its own name, or an object: a
+mapping with ``call`` and ``inputs``. ``pick`` walks into what the call returns, by attributes, keys and indices; ``first``
+keeps the first numbers of a longer answer. The ledger of all cases follows from `load_all`.
 """
 
 from __future__ import annotations
@@ -40,6 +42,7 @@ _CASE_UNITS: dict[str, tuple[str, float]] = {
     "mm/h": ("intensity", 1.0),
     "cm/h": ("intensity", 10.0),
     "in/h": ("intensity", MM_PER_IN),
+    "km2*cm/h": ("flow", 1e4 / 3600.0),
     "m3/s/mm": ("unit_flow", 1.0),
     "m3/s/cm": ("unit_flow", 0.1),
     "cfs/in": ("unit_flow", M3S_PER_CFS / MM_PER_IN),
@@ -113,8 +116,20 @@ def parse_quantity(text: str) -> Quantity | None:
     return Quantity(tuple(words), unit)
 
 
+def _called(call: str, inputs: Mapping[str, Any]) -> Any:
+    """Return what a function below ``basinwright`` returns for inputs as printed."""
+    room, _, function = call.rpartition(".")
+    arguments = {name: _argument(name, value) for name, value in inputs.items()}
+    return getattr(importlib.import_module(f"basinwright.{room}"), function)(**arguments)
+
+
 def _argument(name: str, value: Any) -> Any:
-    """Return an input as the function takes it."""
+    """Return an input as the function takes it: columns one by one, an object by the call that makes it."""
+    if isinstance(value, Mapping):
+        if "call" in value:
+            return _called(value["call"], value["inputs"])
+        columns = {column: _argument(column, entry) for column, entry in value.items()}
+        return {column: np.atleast_1d(entry) if type(entry) is float else entry for column, entry in columns.items()}
     if not isinstance(value, str):
         return value
     quantity = parse_quantity(value)
@@ -180,8 +195,10 @@ class Case:
         The answer as printed.
     result : str
         A name whose suffix states the unit of what the function returns.
-    pick : str, int or None
-        What to take from what it returns.
+    pick : tuple of str or int
+        What to take from what it returns: attributes, keys and indices, one after another.
+    first : int or None
+        How many of the numbers are in print, from the first; all where None.
     tolerance : str
         Empty (half of the last printed digit), a number in the printed unit, or a percentage.
     because : str
@@ -202,22 +219,21 @@ class Case:
     inputs: Mapping[str, Any]
     printed: Quantity
     result: str
-    pick: str | int | None
+    pick: tuple[str | int, ...]
+    first: int | None
     tolerance: str
     because: str
     arithmetic: str
 
     def run(self) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
         """Compute the answer; return computed, printed and tolerance [printed unit]."""
-        room, _, function = self.call.rpartition(".")
-        returned = getattr(importlib.import_module(f"basinwright.{room}"), function)(
-            **{name: _argument(name, value) for name, value in self.inputs.items()}
-        )
-        if isinstance(self.pick, str) and not isinstance(returned, Mapping):
-            returned = getattr(returned, self.pick)
-        elif self.pick is not None:
-            returned = returned[self.pick]
-        inside = np.atleast_1d(np.asarray(returned, dtype=np.float64))
+        returned = _called(self.call, self.inputs)
+        for pick in self.pick:
+            if isinstance(pick, str) and not isinstance(returned, Mapping):
+                returned = getattr(returned, pick)
+            else:
+                returned = returned[pick]
+        inside = np.ravel(np.asarray(returned, dtype=np.float64))[: self.first]
         return inside / self.printed.per_printed(self.result), self.printed.values, self.tolerances()
 
     def tolerances(self) -> NDArray[np.float64]:
@@ -229,6 +245,16 @@ class Case:
         return np.full(len(self.printed.texts), float(self.tolerance))
 
 
+def misses(
+    computed: NDArray[np.float64], printed: NDArray[np.float64], tolerance: NDArray[np.float64]
+) -> NDArray[np.bool_]:
+    """Say which numbers are not the printed ones; NaN is not, and numbers that are too many or too few are not."""
+    if computed.shape != printed.shape:
+        return np.ones(printed.shape, dtype=bool)
+    # The rounding of a printed 0.5 is a tie: a hair above half of the last digit still is the printed number.
+    return ~(np.abs(computed - printed) <= tolerance * (1 + 1e-9))
+
+
 _SHARED = ("document", "edition", "page", "transcribed", "kind")
 _OWN = (
     "id",
@@ -238,6 +264,7 @@ _OWN = (
     "inputs",
     "result",
     "pick",
+    "first",
     "printed",
     "tolerance",
     "because",
@@ -264,23 +291,27 @@ def _cases(entry: Mapping[str, Any], shared: Mapping[str, str], prefix: str) -> 
         raise ValueError(f"{where}: tolerance and because belong together")
     if about["kind"] in ("second form", "arithmetic") and "arithmetic" not in entry:
         raise ValueError(f"{where}: show the arithmetic")
-    methods = entry.get("method", [])
+    methods, pick = _listed(entry.get("method", [])), _listed(entry.get("pick", []))
+    names = [part for part in pick if isinstance(part, str)]
     yield Case(
         key=where,
         what=str(entry["what"]),
         **about,
-        methods=(methods,) if isinstance(methods, str) else tuple(methods),
+        methods=methods,
         call=str(entry["call"]),
         inputs=dict(entry.get("inputs", {})),
         printed=printed,
-        result=str(
-            entry.get("result") or (entry["pick"] if isinstance(entry.get("pick"), str) else "") or entry["call"]
-        ),
-        pick=entry.get("pick"),
+        result=str(entry.get("result") or (names[-1] if names else entry["call"])),
+        pick=pick,
+        first=entry.get("first"),
         tolerance=str(entry.get("tolerance", "")),
         because=str(entry.get("because", "")),
         arithmetic=str(entry.get("arithmetic", "")),
     )
+
+
+def _listed(value: Any) -> tuple[Any, ...]:
+    return tuple(value) if isinstance(value, list) else (value,)
 
 
 def load(path: Path) -> list[Case]:
