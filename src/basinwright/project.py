@@ -312,21 +312,12 @@ def later(project: Project) -> Iterator[tuple[str, str]]:
         "terrain.flow_direction": (project.terrain.flow_direction is not None, "leave it out"),
         "terrain.stream_area": (project.terrain.stream_area == "auto", 'give an area such as "0.25 km2"'),
         "terrain.length_correction": (project.terrain.length_correction != "none", 'use "none"'),
-        "cover.impervious": (project.cover.impervious is not None, "leave it out"),
-        "cover.connected_fraction": (project.cover.connected_fraction != 1.0, "leave it at 1.0"),
         "cover.scheme": (project.cover.scheme == "worldcover", "give a CSV of your own"),
         "flow_path.farthest": (project.flow_path.farthest != "length", 'use "length"'),
-        "channel.roughness": (isinstance(project.channel.roughness, str), "give Manning's n as a number"),
-        "storm.distribution": (
-            project.storm.distribution in ("balanced", "nested"),
-            'use one of the 24-hour types or "table"',
+        "channel.roughness": (
+            isinstance(project.channel.roughness, str) and project.channel.roughness != "jarrett",
+            'give Manning\'s n as a number, or "jarrett"',
         ),
-        "storm.ddf": (project.storm.ddf is not None, "give storm.depths"),
-        "storm.depth_rasters": (bool(project.storm.depth_rasters), "give storm.depths"),
-        "storm.areal_reduction": (project.storm.areal_reduction != "none", 'use "none"'),
-        "storm.critical_duration": (project.storm.critical_duration, "leave it false"),
-        "runoff.initial_abstraction_ratio": (project.runoff.initial_abstraction_ratio != 0.2, "use 0.2"),
-        "runoff.moisture": (project.runoff.moisture != "II", 'use "II"'),
         "uncertainty": (project.uncertainty is not None, "leave the section out"),
         "check": (project.check is not None, "leave the section out"),
         "scenario": (bool(project.scenario), "leave the section out"),
@@ -419,6 +410,8 @@ def _conflicts(data: dict[str, Any]) -> Iterator[tuple[str, str, str]]:
             )
         if "vector" in entry and "field" not in entry:
             yield f"{name}.field", "missing", "name the column of the vector layer that holds the class"
+    if section("cover").get("connected_fraction", 1.0) != 1.0 and "impervious" not in section("cover"):
+        yield "cover.connected_fraction", "needs a raster of percent impervious", "give cover.impervious"
     channel = section("channel")
     if channel.get("bankfull_region") == "own":
         for key in ("bankfull_width", "bankfull_depth"):
@@ -472,11 +465,26 @@ def _storm_conflicts(storm: dict[str, Any]) -> Iterator[tuple[str, str, str]]:
                 f"not over the depth of the {a}-year storm",
                 "depths must rise with the return period",
             )
+    if depths and storm.get("depth_rasters"):
+        yield "storm.depth_rasters", "given beside depths", "give one of the two"
+    built = storm.get("distribution") in ("balanced", "nested")
+    if built and "ddf" not in storm:
+        yield (
+            "storm.ddf",
+            f"missing, and distribution is {storm['distribution']!r}",
+            "name the table of depths by duration",
+        )
+    if storm.get("critical_duration") is True and not built:
+        what = "needs a storm that can be built for any duration"
+        yield "storm.critical_duration", what, 'set distribution = "balanced" or "nested"'
+    if storm.get("critical_duration") is True and (depths or storm.get("depth_rasters")):
+        yield "storm.critical_duration", "given beside depths of one duration", "leave depths to storm.ddf"
     try:
         day_long = parse_quantity(storm.get("duration", "24 h"), "time") == 24.0
     except QuantityError:
         day_long = True  # the model names it
-    if "two_year_depth" not in storm and not (day_long and 2.0 in years.values()):
+    from_depths = day_long and bool(depths) and 2.0 in years.values()
+    if "two_year_depth" not in storm and "ddf" not in storm and not from_depths:
         yield "storm.two_year_depth", "missing", "sheet flow needs the 2-year 24-hour depth: give it"
 
 

@@ -33,10 +33,15 @@ _PERVIOUS = tuple(f"pervious_cn_{group.lower()}" for group in GROUPS)
 REQUIRED = ("code", *_CURVE_NUMBERS, "sheet_n", "shallow")
 """Columns that a scheme must have."""
 
-OPTIONAL = ("name", "impervious_pct", *_PERVIOUS, "open_water", "source")
-"""Columns that it may have; without them: the code, 0, the class's own curve numbers, false, the scheme's file."""
+OPTIONAL = (
+    "name", "impervious_pct", *_PERVIOUS, "open_water", "retardance_n", "runoff_coefficient", "source",
+)  # fmt: skip
+"""Columns that it may have; without them: code, 0, own curve numbers, false, none, the file."""
 
-_COLUMNS = ("code", "name", *_CURVE_NUMBERS, "sheet_n", "shallow", "impervious_pct", *_PERVIOUS, "open_water", "source")
+_COLUMNS = (
+    "code", "name", *_CURVE_NUMBERS, "sheet_n", "shallow", "impervious_pct", *_PERVIOUS, "open_water", "retardance_n",
+    "runoff_coefficient", "source",
+)  # fmt: skip
 _BOOLEANS = {"true": True, "yes": True, "1": True, "false": False, "no": False, "0": False, "": False}
 
 
@@ -64,6 +69,10 @@ class CoverClass:
         Whether the class is open water.
     source : str
         Where the curve numbers were published.
+    retardance_n : float
+        Kerby's retardance coefficient of overland flow; NaN where not given.
+    runoff_coefficient : float
+        Runoff coefficient of the rational method; NaN where not given.
     """
 
     code: str
@@ -75,6 +84,8 @@ class CoverClass:
     pervious_curve_number: Mapping[str, float]
     open_water: bool
     source: str
+    retardance_n: float = math.nan
+    runoff_coefficient: float = math.nan
 
     @property
     def needs_soil(self) -> bool:
@@ -127,6 +138,8 @@ class Scheme:
                 "impervious_pct": entry.impervious_pct,
                 **{column: entry.pervious_curve_number[group] for column, group in zip(_PERVIOUS, GROUPS, strict=True)},
                 "open_water": entry.open_water,
+                "retardance_n": None if math.isnan(entry.retardance_n) else entry.retardance_n,
+                "runoff_coefficient": None if math.isnan(entry.runoff_coefficient) else entry.runoff_coefficient,
                 "source": entry.source,
             }
             for entry in self.classes.values()
@@ -141,7 +154,7 @@ class Scheme:
         InputRejected
             Where the rows are no longer a scheme.
         """
-        texts = [{column: str(value) for column, value in row.items()} for row in rows]
+        texts = [{column: "" if value is None else str(value) for column, value in row.items()} for row in rows]
         return _checked(name, _COLUMNS, texts)
 
 
@@ -281,6 +294,8 @@ class _RowReader:
             pervious_curve_number=self._curve_numbers(_PERVIOUS) if own_pervious else curve_numbers,
             open_water=_BOOLEANS.get(water, False),
             source=row.get("source") or Path(self._file).name,
+            retardance_n=self._number_or_none("retardance_n"),
+            runoff_coefficient=self._number_or_none("runoff_coefficient"),
         )
 
     def _curve_numbers(self, columns: Sequence[str]) -> dict[str, float]:
@@ -292,6 +307,9 @@ class _RowReader:
                 what = f"{high:g} is less than {before} ({low:g})"
                 self.reject(after, what, "curve numbers do not fall from group A to D: check their order")
         return dict(zip(GROUPS, values, strict=True))
+
+    def _number_or_none(self, column: str) -> float:
+        return self._number_in(column, 0.0, 1.0, low_included=False) if self._row.get(column) else math.nan
 
     def _number_in(self, column: str, low: float, high: float, low_included: bool = True) -> float:
         text = self._row.get(column, "")

@@ -180,7 +180,8 @@ def _shown(stem: str, quantity: str, meaning: str, **more: Any) -> Column:
 
 _ID = _text("outlet_id", "identifier of the outlet, as text")
 
-REGIMES = ("sheet", "shallow", "channel", "open_water")
+REGIMES = ("sheet", "shallow", "channel", "open_water", "pipe", "lined_channel")
+"""Flow regimes; the last two only a person enters."""
 
 OUTLETS = Table(
     "outlets",
@@ -226,6 +227,10 @@ OUTLETS = Table(
         _shown("capacity", "flow", "capacity as supplied", optional=True),
         _text("capacity_basis", "the criterion the capacity rests on, as supplied", optional=True),
         _text("exceeded_at_yr", "smallest tested period over capacity; empty: none; or unknown", optional=True),
+        _shown("mean_elevation", "length", "mean elevation of the basin, unconditioned terrain"),
+        _number("translation_peak_rate_factor", "peak rate factor of translation alone: an index", "1", optional=True),
+        _number("areal_factor", "factor from point to areal rainfall", "1", optional=True),
+        _number("critical_duration_h", "storm duration that gives the highest peak", "h", optional=True),
     ),
 )  # fmt: skip
 
@@ -314,6 +319,33 @@ HYDROGRAPHS = Table(
     ),
 )
 
+TIME_AREA = Table(
+    "time_area",
+    "one row of an outlet's time-area curve",
+    ("outlet_id", "travel_time_h"),
+    (
+        _ID,
+        _number("travel_time_h", "travel time to the outlet", "h"),
+        _shown("area", "area", "area whose water arrives within that time"),
+    ),
+)
+
+CROSS_CHECKS = Table(
+    "cross_checks",
+    "one peak by another published method, beside the hydrograph's",
+    ("outlet_id", "return_period_yr", "method"),
+    (
+        _ID,
+        _number("return_period_yr", "return period of the storm", "yr"),
+        _text("method", "graphical (Technical Release 55) or rational"),
+        _shown("peak", "flow", "peak flow by that method"),
+        _number("ratio", "that peak over the hydrograph's", "1"),
+        _yes("applicable", "whether the outlet lies inside the method's limits"),
+        _text("reason", "why it is not applicable or not computed"),
+        _text("source", "where the method was published"),
+    ),
+)
+
 FLAGS_TABLE = Table(
     "flags",
     "one doubt about one outlet",
@@ -326,7 +358,17 @@ FLAGS_TABLE = Table(
     ),
 )
 
-ALL: tuple[Table, ...] = (OUTLETS, SEGMENTS, COVER_SHARES, TIMING, UNIT_HYDROGRAPHS, HYDROGRAPHS, FLAGS_TABLE)
+ALL: tuple[Table, ...] = (
+    OUTLETS,
+    SEGMENTS,
+    COVER_SHARES,
+    TIMING,
+    TIME_AREA,
+    CROSS_CHECKS,
+    UNIT_HYDROGRAPHS,
+    HYDROGRAPHS,
+    FLAGS_TABLE,
+)
 """Every table a run can write."""
 
 

@@ -5,11 +5,12 @@
 """
 
 from basinwright.cover.layers import CoverLayer, SoilLayer, align_cover, align_soils
-from basinwright.cover.shares import CoverShares, Patches, combine, cover_shares
+from basinwright.cover.shares import CoverShares, Impervious, Patches, combine, cover_shares
 
 __all__ = [
     "CoverLayer",
     "CoverShares",
+    "Impervious",
     "Patches",
     "SoilLayer",
     "align_cover",

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -118,7 +118,29 @@ class _Kind:
     gap: str
 
 
-def cover_shares(area_km2: NDArray[np.float64], patches: Patches, scheme: Scheme, gap_limit: float) -> CoverShares:
+@dataclass(frozen=True)
+class Impervious:
+    """Mapped impervious area, for the classes whose curve numbers include some.
+
+    Parameters
+    ----------
+    pct : ndarray, shape (outlets, patches)
+        Mean impervious share of each patch in each whole basin [%]; NaN where it is not mapped.
+    composite : callable
+        From pervious curve number and impervious share [%] to the composite curve number.
+    """
+
+    pct: NDArray[np.float64]
+    composite: Callable[[NDArray[np.float64], NDArray[np.float64]], NDArray[np.float64]]
+
+
+def cover_shares(
+    area_km2: NDArray[np.float64],
+    patches: Patches,
+    scheme: Scheme,
+    gap_limit: float,
+    impervious: Impervious | None = None,
+) -> CoverShares:
     """Turn the areas of patches by outlet into the worksheet.
 
     Parameters
@@ -131,6 +153,8 @@ def cover_shares(area_km2: NDArray[np.float64], patches: Patches, scheme: Scheme
         Curve numbers by class.
     gap_limit : float
         Share of a basin without a curve number that is tolerated.
+    impervious : Impervious, optional
+        Composites the classes whose scheme row has an impervious share from their pervious row.
 
     Returns
     -------
@@ -145,13 +169,19 @@ def cover_shares(area_km2: NDArray[np.float64], patches: Patches, scheme: Scheme
     assumed = np.array([kind.assumed for kind in kinds], dtype=bool)
     keys, by_key, rows = _worksheet(area_km2, kinds)
     known = by_key.sum(axis=1)
+    curve_number = np.array([entry.curve_number_on(group) for entry, group in keys], dtype=np.float64) + 0.0 * by_key
+    impervious_pct = np.array([entry.impervious_pct for entry, _ in keys], dtype=np.float64) + 0.0 * by_key
+    if impervious is not None:
+        _composite(curve_number, impervious_pct, keys, kinds, area_km2, impervious)
+        at = np.nonzero(by_key > 0)
+        rows["curve_number"], rows["impervious_pct"] = curve_number[at], impervious_pct[at]
     with np.errstate(invalid="ignore", divide="ignore"):
         gap_share = np.where(basin > 0, area_km2[:, in_gap].sum(axis=1) / basin, np.nan)
         assumed_share = np.where(basin > 0, area_km2[:, assumed].sum(axis=1) / basin, np.nan)
 
-    def mean(values: list[float]) -> NDArray[np.float64]:
+    def mean(values: NDArray[np.float64]) -> NDArray[np.float64]:
         with np.errstate(invalid="ignore", divide="ignore"):
-            return (by_key * np.array(values, dtype=np.float64)).sum(axis=1) / known
+            return (by_key * values).sum(axis=1) / known
 
     failed: dict[int, str] = {}
     flags: list[tuple[int, str, str]] = []
@@ -168,9 +198,9 @@ def cover_shares(area_km2: NDArray[np.float64], patches: Patches, scheme: Scheme
         flags.append((outlet, "SOILS_ASSUMED", message))
     return CoverShares(
         rows,
-        curve_number=mean([entry.curve_number_on(group) for entry, group in keys]),
-        impervious_pct=mean([entry.impervious_pct for entry, _ in keys]),
-        open_water_pct=mean([100.0 * entry.open_water for entry, _ in keys]),
+        curve_number=mean(curve_number),
+        impervious_pct=mean(impervious_pct),
+        open_water_pct=mean(np.array([100.0 * entry.open_water for entry, _ in keys], dtype=np.float64)),
         gap_share=gap_share,
         assumed_share=assumed_share,
         failed=failed,
@@ -220,6 +250,33 @@ def _worksheet(
     texts = ("cover", "soil_group", "source")
     rows = {name: np.array(v, dtype=object if name in texts else float)[which] for name, v in by_column.items()}
     return keys, by_key, {"outlet": outlet, **rows, "area_km2": by_key[outlet, which]}
+
+
+def _composite(
+    curve_number: NDArray[np.float64],
+    impervious_pct: NDArray[np.float64],
+    keys: list[tuple[CoverClass, str]],
+    kinds: list[_Kind],
+    area_km2: NDArray[np.float64],
+    impervious: Impervious,
+) -> None:
+    """Put mapped impervious shares and composite curve numbers in the place of the scheme's, where it has a share."""
+    for place, (entry, group) in enumerate(keys):
+        if entry.impervious_pct <= 0.0:
+            continue
+        mine = [
+            i
+            for i, kind in enumerate(kinds)
+            if kind.entry is not None and (kind.entry.code, kind.group) == (entry.code, group)
+        ]
+        pct, area = impervious.pct[:, mine], area_km2[:, mine]
+        mapped = np.where(np.isnan(pct), 0.0, area)
+        total = mapped.sum(axis=1)
+        fine = total > 0
+        mean_pct = (mapped[fine] * np.nan_to_num(pct[fine])).sum(axis=1) / total[fine]
+        impervious_pct[fine, place] = mean_pct
+        pervious = np.full(mean_pct.size, entry.pervious_curve_number[group])
+        curve_number[fine, place] = impervious.composite(pervious, mean_pct)
 
 
 def _reasons(shares: NDArray[np.float64], kinds: list[_Kind]) -> Iterator[str]:

@@ -104,6 +104,41 @@ def add_classes(
 
 
 @njit(cache=True, nogil=True)
+def add_class_values(
+    label: np.ndarray, ncols: int, row_weight: np.ndarray, first_row: int, classes: np.ndarray, values: np.ndarray,
+    quantum: float, weighted_sum: np.ndarray, weight: np.ndarray,
+) -> None:  # fmt: skip
+    """Weighted sum of values by label and class, and the weight of the cells that have a value.
+
+    Parameters
+    ----------
+    label : int32 array, shape (cells,)
+    ncols : int
+    row_weight : float64 array, shape (nrows,)
+    first_row : int
+    classes : int32 array, shape (rows, ncols)
+        0 to k - 1; negative where a cell has none: it is passed over.
+    values : float64 array, shape (rows, ncols)
+        NaN where a cell has none: it is passed over.
+    quantum : float
+        As in `add_values`.
+    weighted_sum, weight : float64 arrays, shape (n, k)
+        Added to.
+    """
+    per_quantum = 1.0 / quantum
+    for r in range(values.shape[0]):
+        w = row_weight[first_row + r]
+        start = (first_row + r + 1) * (ncols + 2) + 1
+        for col in range(ncols):
+            i = label[start + col]
+            k = classes[r, col]
+            v = values[r, col]
+            if i >= 0 and k >= 0 and not np.isnan(v):
+                weighted_sum[i, k] += np.rint(v * w * per_quantum) * quantum
+                weight[i, k] += w
+
+
+@njit(cache=True, nogil=True)
 def keep_extremes(
     label: np.ndarray, ncols: int, first_row: int, values: np.ndarray, lowest: np.ndarray, highest: np.ndarray,
     highest_cell: np.ndarray,

@@ -2,16 +2,18 @@
 
 from __future__ import annotations
 
-import csv
 import difflib
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
+from functools import partial
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, TypeVar
 
 import numpy as np
 
 from basinwright.errors import InputRejected, Problem
+from basinwright.pipeline import design_storm
+from basinwright.pipeline.design_storm import DesignStorm
 from basinwright.project import Project, read_project
 from basinwright.registry import methods
 from basinwright.schemes import SHIPPED
@@ -24,7 +26,6 @@ if TYPE_CHECKING:
     from basinwright.io.elevation import TerrainPlan
     from basinwright.io.vectors import PointTable
     from basinwright.schemes import Scheme
-    from basinwright.storms import Storm
 
 T = TypeVar("T")
 Source = Path | str
@@ -57,9 +58,11 @@ class Inputs:
     cover, soils : Source or None
         Land-cover and soils layer; None for soils of one group everywhere.
     scheme : Scheme
-    storm : Storm
-    storm_table : dict or None
-        Hours and fractions of the user's own distribution.
+    impervious : Source or None
+        Raster of percent impervious.
+    depth_rasters : dict of str to Source
+        Raster of storm depth by return period.
+    design : DesignStorm
     files : dict
         Path, size and hash of the files described so far.
     """
@@ -78,17 +81,22 @@ class Inputs:
     cover: Source
     soils: Source | None
     scheme: Scheme
-    storm: Storm
-    storm_table: dict[str, list[float]] | None
+    impervious: Source | None
+    depth_rasters: dict[str, Source]
+    design: DesignStorm
     files: dict[str, dict[str, Any]] = field(default_factory=dict)
 
     def sources(self) -> list[Source]:
         """List every file that the project names."""
         project, folder = self.project, self.file.parent
-        own_scheme = [] if self.scheme.name in SHIPPED else [folder / project.cover.scheme]
-        own_storm = [folder / project.storm.table] if self.storm_table and project.storm.table else []
-        layers = [source for source in (self.cover, self.soils) if source is not None]
-        return [*self.dem, self.points_source, *layers, *own_scheme, *own_storm]
+        tables = [None if self.scheme.name in SHIPPED else project.cover.scheme, project.storm.table, project.storm.ddf]
+        layers = [self.cover, self.soils, self.impervious, *self.depth_rasters.values()]
+        return [
+            *self.dem,
+            self.points_source,
+            *(source for source in layers if source is not None),
+            *(folder / name for name in tables if name is not None),
+        ]
 
     def sha256(self, *sources: Source | None) -> list[str]:
         """Return the hashes of files, or the addresses of remote ones."""
@@ -157,7 +165,14 @@ def inspect(file: Path) -> Inputs:
         project, file, "soils", project.soils.raster, project.soils.vector, project.soils.field, plan, problems
     )
     scheme = problems.tried(lambda: _scheme(project, folder))
-    design = problems.tried(lambda: _storm(project, folder))
+    design = problems.tried(lambda: design_storm.read(project, folder))
+    if design is not None and design.ddf is not None:
+        project = problems.tried(partial(design_storm.with_depths, project, design.ddf)) or project
+    rasters = {
+        "cover.impervious": project.cover.impervious,
+        **{f'storm.depth_rasters."{period}"': text for period, text in project.storm.depth_rasters.items()},
+    }
+    percent = {key: _raster(project, file, key, text, plan, problems) for key, text in rasters.items() if text}
     x = y = np.empty(0)
     if points is not None and plan is not None:
         points = points.in_crs(plan.grid.crs_wkt)
@@ -194,8 +209,13 @@ def inspect(file: Path) -> Inputs:
         cover=cover,
         soils=soils,
         scheme=scheme,
-        storm=design[0],
-        storm_table=design[1],
+        impervious=percent.get("cover.impervious"),
+        depth_rasters={
+            period: path
+            for period in project.storm.depth_rasters
+            if (path := percent[f'storm.depth_rasters."{period}"']) is not None
+        },
+        design=design,
     )
 
 
@@ -306,83 +326,23 @@ def _layer(
     return path
 
 
+def _raster(
+    project: Project, file: Path, key: str, text: str, plan: TerrainPlan | None, problems: _Problems
+) -> Source | None:
+    """Find and check a raster of values."""
+    from basinwright.io.rasters import check_raster
+
+    path = _source(project, file, key, text, problems)
+    if path is not None:
+        problems.found += check_raster(path, plan.grid if plan else None)
+    return path
+
+
 def _scheme(project: Project, folder: Path) -> Scheme:
     from basinwright.schemes import load_scheme, read_scheme
 
     name = project.cover.scheme
     return load_scheme(name) if name in SHIPPED else read_scheme(folder / name)
-
-
-def _storm(project: Project, folder: Path) -> tuple[Storm, dict[str, list[float]] | None]:
-    """Build the design storm, from the register or from the user's table, which is returned too."""
-    if project.storm.distribution == "table" and project.storm.table is not None:
-        table = _hyetograph(folder / project.storm.table)
-        return storm_of(project, table), table
-    return storm_of(project, None), None
-
-
-def _hyetograph(path: Path) -> dict[str, list[float]]:
-    """Read a CSV of hour and fraction."""
-    try:
-        with path.open(encoding="utf-8-sig", newline="") as stream:
-            reader = csv.DictReader(stream)
-            names = [name.strip().lower() for name in reader.fieldnames or []]
-            reader.fieldnames = names
-            rows = list(reader)
-    except FileNotFoundError:
-        raise InputRejected.one(path.name, "file", "does not exist", f"looked for {path}; check storm.table") from None
-    except (OSError, UnicodeDecodeError, csv.Error) as error:
-        raise InputRejected.one(
-            path.name, "file", f"is not a readable CSV ({error})", "save it as CSV in UTF-8"
-        ) from None
-    missing = [name for name in ("hour", "fraction") if name not in names]
-    if missing:
-        raise InputRejected.one(
-            path.name, "header", f"lacks {' and '.join(missing)}", "name the columns hour and fraction"
-        )
-    problems, table = [], {"hours": [0.0] * len(rows), "fractions": [0.0] * len(rows)}
-    for number, row in enumerate(rows):
-        for column, key in (("hour", "hours"), ("fraction", "fractions")):
-            try:
-                table[key][number] = float(row[column])
-            except (TypeError, ValueError):
-                place, what = f"row {number + 2}, {column}", f"{row[column]!r} is not a number"
-                problems.append(Problem(path.name, place, what, "write a plain number"))
-    if problems:
-        raise InputRejected(problems)
-    return table
-
-
-def storm_of(project: Project, table: dict[str, list[float]] | None) -> Storm:
-    """Build the design storm of a project; ``table`` is the user's own, where that is what it asks for.
-
-    Raises
-    ------
-    InputRejected
-        Where the distribution cannot serve the storm's duration, or the table is none.
-    """
-    from basinwright.errors import RangeError
-    from basinwright.registry import find
-
-    section = project.storm
-    if section.distribution not in methods("storm"):
-        raise InputRejected([])  # named by the check of methods
-    function = find("storm", section.distribution).function
-    if table is not None:
-        storm: Storm = function(table["hours"], table["fractions"], file=section.table or "hyetograph")
-        if abs(storm.duration_h - section.duration) > 1e-9:
-            raise InputRejected.one(
-                section.table or "hyetograph",
-                "hour",
-                f"runs for {storm.duration_h:g} h, not for storm.duration {section.duration:g} h",
-                "let the table end at the storm's duration",
-            )
-        return storm
-    try:
-        published: Storm = function(section.duration)
-    except RangeError as error:
-        raise InputRejected.one("project", "storm.duration", str(error), 'use "24 h"') from None
-    return published
 
 
 def _attributes(

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import base64
 import json
+import math
 import platform
 import time
 import zlib
@@ -17,7 +18,8 @@ from basinwright.editing import EDITABLE, Record
 from basinwright.errors import InputRejected
 from basinwright.flags import Flag
 from basinwright.hydrology import Results, Settings
-from basinwright.pipeline.inputs import Inputs, storm_of
+from basinwright.pipeline import design_storm
+from basinwright.pipeline.inputs import Inputs
 from basinwright.project import Project, parse_project
 from basinwright.schemes import Scheme
 from basinwright.store import MANIFEST, Store
@@ -58,6 +60,10 @@ def describe(
         "grid": half.grid.describe(),
         "alignment": half.alignment,
         "terrain": half.facts(),
+        "supplied_points": [
+            [x, y] if math.isfinite(x) and math.isfinite(y) else None
+            for x, y in zip(inputs.x.tolist(), inputs.y.tolist(), strict=True)
+        ],  # in the working CRS, in the order of outlets.csv
         "stages": [
             *(stage.describe() for stage in store.records),
             {"stage": "hydrology", "runs": 1, "seconds": round(hydrology_seconds, 3)},
@@ -65,7 +71,7 @@ def describe(
         "summary_only": summary_only,
         **_counts(results),
         "scheme": {"name": inputs.scheme.name, "classes": inputs.scheme.to_rows()},
-        "storm_table": inputs.storm_table,
+        "storm_tables": inputs.design.tables,
         "terrain_flags": [list(flag) for flag in terrain_flags],
         "edits": _record(record),
     }
@@ -120,7 +126,8 @@ def settings(about: Mapping[str, Any]) -> tuple[Project, Settings]:
     """Return the project and the settings of the hydrology as the run had them."""
     project = parse_project(about["project"], MANIFEST)
     scheme = Scheme.from_rows(about["scheme"]["name"], about["scheme"]["classes"])
-    return project, Settings(project, scheme, storm_of(project, about["storm_table"]))
+    design = design_storm.from_tables(project, about["storm_tables"])
+    return project, Settings(project, scheme, design.storm, design.ddf)
 
 
 def terrain_flags(about: Mapping[str, Any]) -> list[Flag]:
@@ -129,22 +136,23 @@ def terrain_flags(about: Mapping[str, Any]) -> list[Flag]:
 
 
 def _record(record: Record) -> dict[str, Any]:
+    changed = {name: frame for name, frame in record.written.items() if not frame.equals(record.first[name])}
     return {
+        "supplied": sorted(list(cell) for cell in record.supplied),
         "held": sorted(list(cell) for cell in record.held),
         "encoding": "CSV, zlib, base64",
-        "base": {name: _packed(frame) for name, frame in record.base.items()},
-        "written": {name: _packed(frame) for name, frame in record.written.items()},
+        "first": {name: _packed(frame) for name, frame in record.first.items()},
+        "written": {name: _packed(frame) for name, frame in changed.items()},  # where it differs from the first
     }
 
 
 def record(about: Mapping[str, Any]) -> Record:
     """Return what is needed to tell a person's edits from computed values."""
     edits = about["edits"]
-
-    def frames(name: str) -> dict[str, pd.DataFrame]:
-        return {table.name: _unpacked(edits[name][table.name]) for table in EDITABLE}
-
-    return Record(frames("base"), frames("written"), {(a, b, c, d) for a, b, c, d in edits["held"]})
+    first = {table.name: _unpacked(edits["first"][table.name]) for table in EDITABLE}
+    written = first | {name: _unpacked(packed) for name, packed in edits["written"].items()}
+    supplied, held = ({(a, b, c, d) for a, b, c, d in edits[name]} for name in ("supplied", "held"))
+    return Record(first, written, supplied, held)
 
 
 def _packed(frame: pd.DataFrame) -> str:

@@ -16,14 +16,14 @@ from basinwright.paths.tracing import DEEP_FILL_M
 from basinwright.pipeline.inputs import Inputs
 from basinwright.project import Project
 from basinwright.store import Draft, Entry, Store
-from basinwright.tables import COVER_SHARES, OUTLETS, SEGMENTS, Table, cells, csv_text
-from basinwright.units import M_PER_FT, MM_PER_IN
+from basinwright.tables import COVER_SHARES, OUTLETS, SEGMENTS, TIME_AREA, Table, cells, csv_text
+from basinwright.units import M_PER_FT, MM_PER_IN, UNITS
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from basinwright.basins import Basins, Snapped
-    from basinwright.cover import CoverShares
+    from basinwright.cover import CoverShares, Impervious
     from basinwright.terrain import Terrain
 
 AREA_TOLERANCE = 0.1
@@ -32,6 +32,8 @@ SMALL_BASIN_CELLS = 200
 STORAGE_FILLED_MM = 2.54
 """0.1 in over the basin."""
 LAKE_STORAGE_PCT = 1.0
+_DEEPEST_MM = 10_000.0
+"""Deeper storms than this are no storms but a missing nodata value."""
 _BLOCK_ROWS = 256
 QUANTUM = 2.0**-20
 """Distances along the path are written as whole multiples of this many feet or metres: sums of them are exact."""
@@ -47,7 +49,7 @@ class TerrainHalf:
         The working grid.
     alignment : list of dict
         How each input came onto the grid.
-    terrain, elevation, basins, tables : Entry
+    terrain, elevation, cover, basins, paths, tables, time_area : Entry
         Stages in the store; ``tables`` holds the three tables as CSV text and the flags.
     """
 
@@ -59,6 +61,7 @@ class TerrainHalf:
     basins: Entry
     paths: Entry
     tables: Entry
+    time_area: Entry
 
     def routed(self) -> Terrain:
         """Return the routed terrain."""
@@ -137,10 +140,12 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
             "paths": paths.key,
             "cover": cover.key,
             "scheme": inputs.scheme.to_rows(),
+            "impervious": inputs.sha256(inputs.impervious),
+            "depth_rasters": inputs.sha256(*inputs.depth_rasters.values()),
             "options": project.model_dump(
                 mode="json", include={"project", "terrain", "outlets", "cover", "soils", "flow_path", "channel"}
             ),
-            "depths": {period: project.storm.depths[period] for period in project.storm.periods},
+            "storm": project.storm.model_dump(mode="json", include={"depths", "depth_rasters", "depth_raster_unit"}),
             "points": [
                 list(inputs.points.names),
                 _plain(inputs.capacity_m3s),
@@ -148,6 +153,17 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
             ],
         },
         lambda draft: _tables(inputs, {"routing": routing, "cover": cover, "basins": basins, "paths": paths}, draft),
+    )
+    time_area = store.stage(
+        "time_area",
+        "Drawing time-area curves",
+        {
+            "basins": basins.key,
+            "cover": cover.key,
+            "options": project.model_dump(mode="json", include={"project", "terrain", "flow_path", "channel"}),
+            "two_year_depth": project.storm.two_year_depth_mm,
+        },
+        lambda draft: _time_area(inputs, {"routing": routing, "cover": cover, "basins": basins}, draft),
     )
     return TerrainHalf(
         grid,
@@ -158,6 +174,7 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
         basins,
         paths,
         tables,
+        time_area,
     )
 
 
@@ -268,8 +285,13 @@ def _tables(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
     cover = stages["cover"].record(CoverLayer, "cover")
     patches = combine(cover, stages["cover"].record(SoilLayer, "soils"))
     shares = cover_shares(
-        _patch_areas_km2(terrain, basins, patches.cells, len(patches)), patches, inputs.scheme, project.cover.gap_limit
+        _patch_areas_km2(terrain, basins, patches.cells, len(patches)),
+        patches,
+        inputs.scheme,
+        project.cover.gap_limit,
+        _impervious(inputs, terrain, basins, patches.cells, len(patches)),
     )
+    depths = _mean_depths_mm(inputs, terrain, basins)
     rules = CutRules(
         stream_area_km2=float(project.terrain.stream_area),
         sheet_limit_m=project.flow_path.sheet_limit,
@@ -281,13 +303,13 @@ def _tables(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
     on_grid = CoverOnGrid(cover.classes, cover.codes, cover.sheet_n(inputs.scheme), cover.open_water(inputs.scheme))
     cut = cut_segments(grid, terrain, paths, on_grid, rules)
 
-    failed = _failures(snapped, measures, shares.failed)
+    failed = _failures(snapped, measures, shares.failed, depths)
     marks = {"sheet_limited": cut.sheet_limited, **vars(snapped), **measures}
     flags = _flags(inputs, marks, shares, failed)
     fine = np.array([i not in failed for i in range(len(inputs.points))], dtype=bool)
     ids = np.array(inputs.points.ids, dtype=object)
     tables = {
-        OUTLETS: _outlet_rows(inputs, grid, ids, snapped, measures, shares.open_water_pct, fine),
+        OUTLETS: _outlet_rows(inputs, grid, ids, snapped, measures, shares.open_water_pct, depths, fine),
         SEGMENTS: _of_fine(cut.segments, ids, fine) | {"edited": None},
         COVER_SHARES: _of_fine(shares.rows, ids, fine),
     }
@@ -316,13 +338,87 @@ def _patch_areas_km2(terrain: Terrain, basins: Basins, cells: NDArray[np.int32],
     return basins.by_outlet(basins.whole_sums(area_m2), failed=0.0) / 1e6
 
 
-def _failures(snapped: Snapped, measures: Mapping[str, NDArray[Any]], uncovered: Mapping[int, str]) -> dict[int, str]:
+def _impervious(
+    inputs: Inputs, terrain: Terrain, basins: Basins, cells: NDArray[np.int32], count: int
+) -> Impervious | None:
+    """Average the raster of percent impervious over each patch of each whole basin; None where there is none."""
+    from basinwright.cover import Impervious
+    from basinwright.io.rasters import read_blocks_onto
+    from basinwright.kernels import reduce
+    from basinwright.runoff import composite_curve_number
+    from basinwright.terrain.summable import quantum
+
+    if inputs.impervious is None:
+        return None
+    sums, weight = np.zeros((basins.n_labels, count)), np.zeros((basins.n_labels, count))
+    step = quantum(100.0 * float(terrain.row_area_m2.sum()) * terrain.ncols)
+    for first, block in read_blocks_onto(inputs.impervious, inputs.plan.grid, "nearest"):
+        percent = np.ma.filled(block.astype(np.float64), np.nan)
+        percent[(percent < 0.0) | (percent > 100.0)] = np.nan  # 127 and the like: none
+        classes = np.ascontiguousarray(cells[first : first + len(block)])
+        reduce.add_class_values(
+            basins.label, terrain.ncols, terrain.row_area_m2, first, classes, percent, step, sums, weight
+        )
+    with np.errstate(invalid="ignore", divide="ignore"):
+        mean = basins.whole_sums(sums) / basins.whole_sums(weight)
+    composite = partial(composite_curve_number, connected_fraction=inputs.project.cover.connected_fraction)
+    return Impervious(basins.by_outlet(mean), composite)
+
+
+def _mean_depths_mm(inputs: Inputs, terrain: Terrain, basins: Basins) -> dict[str, NDArray[np.float64]]:
+    """Average each raster of storm depth over each whole basin [mm]; NaN where it covers nothing of it."""
+    from basinwright.io.rasters import read_blocks_onto
+    from basinwright.kernels import reduce
+    from basinwright.terrain.summable import quantum
+
+    factor = UNITS[inputs.project.storm.depth_raster_unit][1]
+    means = {}
+    for period, path in inputs.depth_rasters.items():
+        sums, weight = np.zeros(basins.n_labels), np.zeros(basins.n_labels)
+        step = quantum(_DEEPEST_MM * float(terrain.row_area_m2.sum()) * terrain.ncols)
+        for first, block in read_blocks_onto(path, inputs.plan.grid, "bilinear"):
+            depth = np.ma.filled(block.astype(np.float64), np.nan) * factor
+            depth[~((depth > 0.0) & (depth <= _DEEPEST_MM))] = np.nan
+            reduce.add_values(basins.label, terrain.ncols, terrain.row_area_m2, first, depth, step, sums, weight)
+        whole = basins.whole_sums(np.column_stack([sums, weight]))
+        with np.errstate(invalid="ignore", divide="ignore"):
+            means[period] = basins.by_outlet(whole[:, 0] / whole[:, 1])
+    return means
+
+
+def _time_area(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
+    """Draw the time-area curves as the CSV text that the hydrology reads."""
+    from basinwright.basins import Basins
+    from basinwright.basins.time_area import time_area_curves
+    from basinwright.cover import CoverLayer
+    from basinwright.pipeline.travel import StepTimes
+    from basinwright.terrain import Terrain
+
+    terrain = stages["routing"].record(Terrain, "terrain")
+    basins = stages["basins"].record(Basins, "basins")
+    step_times = StepTimes(inputs.project, inputs.scheme, stages["cover"].record(CoverLayer, "cover"))
+    curves = time_area_curves(terrain, basins, step_times)
+    ids = np.array(inputs.points.ids, dtype=object)
+    columns = {"outlet_id": ids[curves["outlet"]], **{k: v for k, v in curves.items() if k != "outlet"}}
+    text = _as_text(TIME_AREA, columns, inputs.project)
+    (draft.folder / "time_area.csv").write_text(text, encoding="utf-8", newline="")
+
+
+def _failures(
+    snapped: Snapped,
+    measures: Mapping[str, NDArray[Any]],
+    uncovered: Mapping[int, str],
+    depths: Mapping[str, NDArray[np.float64]],
+) -> dict[int, str]:
     """Say which outlets cannot be computed, and why."""
     failed = {i: str(why) for i, why in enumerate(snapped.failed.tolist()) if why}
     for i in np.flatnonzero(~(measures["path_length_m"] > 0)).tolist():
         failed.setdefault(i, "its basin is a single cell: move it onto its flow line or use finer terrain")
     for i, why in uncovered.items():
         failed.setdefault(i, why)
+    for period, depth in depths.items():
+        for i in np.flatnonzero(np.isnan(depth)).tolist():
+            failed.setdefault(i, f"the {period}-year depth raster covers nothing of its basin")
     return failed
 
 
@@ -381,6 +477,7 @@ def _outlet_rows(
     snapped: Snapped,
     measures: Mapping[str, NDArray[Any]],
     open_water_pct: NDArray[np.float64],
+    depths: Mapping[str, NDArray[np.float64]],
     fine: NDArray[np.bool_],
 ) -> dict[str, Any]:
     """Return the columns of outlets.csv that the terrain half knows, by inside name or stem."""
@@ -409,7 +506,14 @@ def _outlet_rows(
             columns[stem] = inputs.overrides[stem]
     for period in project.storm.periods:
         supplied = inputs.overrides.get(f"depth_{period}yr", np.full(len(ids), np.nan))
-        columns[f"depth_{period}yr_mm"] = np.where(np.isnan(supplied), project.storm.depths[period], supplied)
+        depth = depths[period] if period in depths else np.full(len(ids), project.storm.depths[period])
+        columns[f"depth_{period}yr_mm"] = np.where(np.isnan(supplied), depth, supplied)
+    optional = {
+        "areal_factor": project.storm.areal_reduction != "none",
+        "critical_duration_h": project.storm.critical_duration,
+        "translation_peak_rate_factor": True,
+    }
+    columns |= {name: None for name, wanted in optional.items() if wanted}
     if project.outlets.capacity is not None:
         columns["capacity_m3s"] = inputs.capacity_m3s
         columns["exceeded_at_yr"] = None
@@ -425,7 +529,7 @@ def _outlet_rows(
 
 _MEASURED = (
     "area_km2", "centroid_length_m", "path_length_m", "relief_m", "basin_slope_pct", "path_slope_pct",
-    "path_slope_1085_pct",
+    "path_slope_1085_pct", "mean_elevation_m",
 )  # fmt: skip
 
 

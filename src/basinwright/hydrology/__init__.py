@@ -1,0 +1,12 @@
+"""The hydrology half over the tables: outlets, segments and cover shares in; times, flows and flags out.
+
+`compute` reads the tables as text, exactly as they stand in the files, and never a raster: so a run and a later
+`retime` of the same tables give the same numbers to the last bit. The formulas are in `timing`, `storms`, `runoff` and
+`hydrograph`; here is only which column feeds which.
+"""
+
+from basinwright.hydrology.computing import Results, compute
+from basinwright.hydrology.frames import Columns
+from basinwright.hydrology.settings import Settings, bankfull_relation_of
+
+__all__ = ["Columns", "Results", "Settings", "bankfull_relation_of", "compute"]

@@ -1,0 +1,74 @@
+"""Tables as text, read by the stems of their schema."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from basinwright.project import Project
+from basinwright.tables import Table
+
+if TYPE_CHECKING:
+    import pandas as pd
+    from numpy.typing import NDArray
+
+Columns = dict[str, Any]
+"""A table as it is written: columns by name, in order."""
+
+
+class Frame:
+    """A table as text, read by the stems of its schema in the units used inside."""
+
+    def __init__(self, table: Table, frame: pd.DataFrame, project: Project) -> None:
+        self.table, self.frame, self.project = table, frame, project
+        self.system = project.project.units
+        present = set(frame.columns)
+        optional = [c.stem for c in table.columns if c.optional and c.name(self.system) in present]
+        self.fields = table.fields(self.system, project.storm.periods, optional)
+        self.outlet: NDArray[Any] = np.arange(len(frame), dtype=np.int64)
+
+    def where(self, mask: NDArray[np.bool_]) -> Frame:
+        """Return the rows of a mask."""
+        return Frame(self.table, self.frame[mask], self.project)
+
+    def of_outlets(self, index: Mapping[str, int]) -> Frame:
+        """Return the rows of the outlets of an index, outlet by outlet, each row's outlet in ``outlet``."""
+        at = self.frame["outlet_id"].map(index)
+        rows = at[at.notna()].astype(np.int64).sort_values(kind="stable")
+        chosen = Frame(self.table, self.frame.loc[rows.index], self.project)
+        chosen.outlet = rows.to_numpy(dtype=np.int64)
+        return chosen
+
+    def _column(self, stem: str, period: str) -> tuple[str, float]:
+        column = self.table.column(stem)
+        return column.name(self.system, period), column.inside_per_shown(self.system)
+
+    def has(self, stem: str) -> bool:
+        """Say whether an optional column is there."""
+        return self._column(stem, "")[0] in self.frame.columns
+
+    def text(self, stem: str, period: str = "") -> NDArray[Any]:
+        """Return a column as text."""
+        return self.frame[self._column(stem, period)[0]].to_numpy(dtype=object)
+
+    def shown(self, stem: str, period: str = "") -> NDArray[np.float64]:
+        """Return a column as the numbers that stand there, NaN where empty."""
+        text = self.text(stem, period)
+        return np.array([float(cell) if cell else np.nan for cell in text.tolist()], dtype=np.float64)
+
+    def number(self, stem: str, period: str = "") -> NDArray[np.float64]:
+        """Return a column in the unit used inside, NaN where empty."""
+        return self.shown(stem, period) * self._column(stem, period)[1]
+
+    def shown_of(self, computed: Mapping[str, Any]) -> dict[str, Any]:
+        """Turn computed columns, by stem with the period put in, into the numbers to write."""
+        factors = {entry.stem: entry.factor for entry in self.fields}
+        return {stem: values / factors[stem] if factors[stem] != 1.0 else values for stem, values in computed.items()}
+
+    def columns(self, replaced: Mapping[str, Any]) -> Columns:
+        """Return the table as it is written: its own text, but for the columns replaced by stem."""
+        return {
+            entry.name: replaced.get(entry.stem, self.frame[entry.name].to_numpy(dtype=object)) for entry in self.fields
+        }

@@ -1,0 +1,152 @@
+"""From the tables to travel times, curve-number patches and times of concentration."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from basinwright.hydrology.doubts import IN_CHANNEL
+from basinwright.hydrology.frames import Frame
+from basinwright.hydrology.settings import Settings
+from basinwright.runoff import Patches
+from basinwright.schemes import Scheme
+from basinwright.timing import SegmentTimes, time_segments
+from basinwright.units import M_PER_FT
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from basinwright.editing import Cell
+
+
+def timed(segments: Frame, settings: Settings, held: set[Cell]) -> SegmentTimes:
+    """Time the segments: what a person filled stands, the rest follows from the row."""
+    regime, project = segments.text("regime"), settings.project
+    ids, numbers = segments.text("outlet_id").tolist(), segments.text("segment").tolist()
+
+    def given(stem: str) -> NDArray[np.float64]:
+        mask = np.array([("segments", i, n, stem) in held for i, n in zip(ids, numbers, strict=True)], dtype=bool)
+        return np.where(mask, segments.number(stem), np.nan)
+
+    sheet, shallow = regime == "sheet", regime == "shallow"
+    roughness = given("roughness") * np.where(shallow & (segments.system == "us"), M_PER_FT, 1.0)
+    cover = segments.text("cover").tolist()
+    classes = {code: settings.scheme.find(code) for code in set(cover)}
+    sheet_n = np.array([found.sheet_n if (found := classes[code]) else np.nan for code in cover], dtype=np.float64)
+    weighted = np.where(sheet, segments.number("roughness"), np.nan)  # by length along the path, from the terrain
+    columns = {
+        "outlet": segments.outlet,
+        "regime": regime,
+        **{f"{stem}_m": segments.number(stem) for stem in ("from", "to", "top_elevation", "bottom_elevation")},
+        "area_km2": segments.number("area"),
+        "slope": given("slope"),
+        "roughness": roughness,
+        "hydraulic_radius_m": given("hydraulic_radius"),
+        "hydraulic_radius_half_m": given("hydraulic_radius_half"),
+        "sheet_n": np.where(np.isnan(weighted), sheet_n, weighted),
+        "shallow_category": np.array(
+            [found.shallow if (found := classes[code]) else "" for code in cover], dtype=object
+        ),
+    }
+    return time_segments(
+        columns,
+        two_year_depth_mm=project.storm.two_year_depth_mm,
+        relation=settings.relation,
+        channel_roughness=project.channel.roughness,
+        slope_floor=project.flow_path.slope_floor,
+        open_water_depth_m=project.channel.open_water_depth,
+    )
+
+
+def patches_of(shares: Frame, scheme: Scheme, count: int) -> tuple[Patches, dict[str, Any], dict[str, Any]]:
+    """Return the curve-number patches, the columns that were empty now filled, and means over each basin."""
+    area, curve = shares.number("area"), shares.number("curve_number")
+    impervious, source = shares.number("impervious_pct"), shares.text("source").copy()
+    cover, group = shares.text("cover").tolist(), shares.text("soil_group").tolist()
+    for i in np.flatnonzero(np.isnan(curve) | np.isnan(impervious) | (source == "")):
+        found = scheme.find(cover[i])
+        if found is None:
+            continue
+        if np.isnan(curve[i]):
+            curve[i] = found.curve_number_on(group[i])
+        if np.isnan(impervious[i]):
+            impervious[i] = found.impervious_pct
+        source[i] = source[i] or found.source
+    offsets = np.searchsorted(shares.outlet, np.arange(count + 1))
+    patches = Patches(offsets, area, curve)
+    means = {
+        "impervious_pct": patches.sums(patches.weights() * np.nan_to_num(impervious)),
+        "runoff_coefficient": _mean_coefficient(patches, cover, scheme),
+    }
+    return patches, {"curve_number": curve, "impervious_pct": impervious, "source": source}, means
+
+
+def _mean_coefficient(patches: Patches, cover: list[str], scheme: Scheme) -> NDArray[np.float64]:
+    """Return the mean runoff coefficient of each basin, NaN where the scheme lacks one of its classes'."""
+    of_class = {code: found.runoff_coefficient if (found := scheme.find(code)) else np.nan for code in set(cover)}
+    return patches.sums(patches.weights() * np.array([of_class[code] for code in cover], dtype=np.float64))
+
+
+def replaced(patches: Patches, curve_number: NDArray[np.float64]) -> Patches:
+    """Put one patch in the place of an outlet's patches where a curve number was supplied for it."""
+    supplied = ~np.isnan(curve_number)
+    if not supplied.any():
+        return patches
+    first = np.zeros(patches.area_km2.size, dtype=bool)
+    first[patches.offsets[:-1]] = True
+    keep = ~supplied[patches.outlet] | first
+    kept_outlet = patches.outlet[keep]
+    curve = np.where(supplied[kept_outlet], curve_number[kept_outlet], patches.curve_number[keep])
+    area = np.where(supplied[kept_outlet], 1.0, patches.area_km2[keep])
+    return Patches(np.searchsorted(kept_outlet, np.arange(patches.outlets + 1)), area, curve)
+
+
+def path_inputs(segments: Frame, times: SegmentTimes, scheme: Scheme, count: int) -> dict[str, NDArray[np.float64]]:
+    """Return what timing methods take from the path: its overland part, sheet roughness, retardance, elevation."""
+    regime, outlet = segments.text("regime"), segments.outlet
+    length = segments.number("to") - segments.number("from")
+    fall = segments.number("top_elevation") - segments.number("bottom_elevation")
+    sheet, overland = regime == "sheet", np.isin(regime, ("sheet", "shallow"))
+
+    def summed(values: NDArray[np.float64]) -> NDArray[Any]:
+        return np.bincount(outlet, weights=values, minlength=count)
+
+    overland_m, sheet_m = summed(length * overland), summed(length * sheet)
+    overland_fall_m = summed(fall * overland)
+    weighted_n = summed(np.where(sheet, length * times.roughness, 0.0))
+    lowest = np.full(count, np.inf)
+    np.minimum.at(lowest, outlet, segments.number("bottom_elevation"))
+    with np.errstate(invalid="ignore", divide="ignore"):
+        return {
+            "overland_length_m": np.where(overland_m > 0, overland_m, np.nan),
+            "overland_slope_pct": np.where(overland_fall_m > 0, 100.0 * overland_fall_m / overland_m, np.nan),
+            "sheet_n": np.where(sheet_m > 0, weighted_n / sheet_m, np.nan),
+            "retardance_n": _retardance(segments, length * overland, scheme, count),
+            "outlet_elevation_m": np.where(np.isfinite(lowest), lowest, np.nan),
+        }
+
+
+def _retardance(segments: Frame, overland_m: NDArray[np.float64], scheme: Scheme, count: int) -> NDArray[np.float64]:
+    """Return Kerby's N of the cover on most of each overland reach: the table is not to be interpolated."""
+    cover = segments.text("cover").tolist()
+    of_class = {code: found.retardance_n if (found := scheme.find(code)) else np.nan for code in set(cover)}
+    result, longest = np.full(count, np.nan), np.zeros(count)
+    by_class: dict[tuple[int, str], float] = {}
+    for outlet, code, metres in zip(segments.outlet.tolist(), cover, overland_m.tolist(), strict=True):
+        if metres > 0:
+            total = by_class[outlet, code] = by_class.get((outlet, code), 0.0) + metres
+            if total > longest[outlet]:
+                longest[outlet], result[outlet] = total, of_class[code]
+    return result
+
+
+def lengths(segments: Frame, count: int) -> dict[str, NDArray[Any]]:
+    """Sum the lengths of the path by regime, in the unit of the file: exact, since distances are binary fractions."""
+    length = segments.shown("to") - segments.shown("from")
+    regime = segments.text("regime")
+    kinds = {"sheet_length": ("sheet",), "shallow_length": ("shallow",), "channel_length": IN_CHANNEL}
+    return {
+        stem: np.bincount(segments.outlet, weights=length * np.isin(regime, names), minlength=count)
+        for stem, names in kinds.items()
+    }
