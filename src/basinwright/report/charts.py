@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 from markupsafe import Markup
 
+from basinwright.registry import methods
 from basinwright.report import palette, words
 from basinwright.report.reading import Outlet, Row, Run, profile_points
 from basinwright.report.svg import (
@@ -104,7 +105,7 @@ def _segment_told(run: Run, row: Row, unit: str) -> str:
     )
 
 
-def timing(outlet: Outlet, names: dict[str, str]) -> Markup | None:
+def timing(outlet: Outlet) -> Markup | None:
     """Draw every timing method that gave a time on one axis; None where there is none."""
     rows = timing_rows(outlet)
     if not rows:
@@ -124,7 +125,7 @@ def timing(outlet: Outlet, names: dict[str, str]) -> Markup | None:
     for i, row in enumerate(rows):
         y = top + step * (i + 0.5)
         x = scale(row["tc_h"])
-        name = names.get(row["method"], row["method"])
+        name = usual_name(row["method"])
         parts.append(
             text(
                 left - 10,
@@ -143,10 +144,16 @@ def timing(outlet: Outlet, names: dict[str, str]) -> Markup | None:
             mark = el("circle", told, cx=x, cy=y, r=5.0, fill="#fff", stroke=palette.OTHER, stroke_width=1.6)
         parts += [mark, text(x + 12, y + 4, words.figure(row["tc_h"]))]
     description = "; ".join(
-        f"{names.get(row['method'], row['method'])} {words.figure(row['tc_h'])} h, {standing(row)}" for row in rows
+        f"{usual_name(row['method'])} {words.figure(row['tc_h'])} h, {standing(row)}" for row in rows
     )
     title = "Times of concentration by method"
     return picture(HALF, bottom + 44, title, description, *parts, key=f"{outlet.anchor}-timing")
+
+
+def usual_name(key: str) -> str:
+    """Return the usual name of a timing method."""
+    known = methods("timing")
+    return known[key].name if key in known else key
 
 
 def timing_rows(outlet: Outlet) -> list[Row]:
@@ -174,7 +181,8 @@ def unit_hydrograph(run: Run, outlet: Outlet) -> Markup | None:
     x, y = along(float(hours[peak])), up(float(flow[peak]))
     duration = outlet.row["unit_duration_h"]
     label = f"{words.figure(float(flow[peak]))} {unit} at {words.figure(float(hours[peak]))} h"
-    description = f"Unit hydrograph of {words.figure(duration)} h of excess rain: peak {label}, base {words.figure(float(hours[-1]))} h."
+    base = words.figure(float(hours[-1]))
+    description = f"Unit hydrograph of {words.figure(duration)} h of excess rain: peak {label}, base {base} h."
     return picture(
         HALF, 272.0, "Unit hydrograph", description,
         axis_left(up, _LEFT, f"flow, {unit}", HALF - _RIGHT),
@@ -245,9 +253,7 @@ def floods(run: Run, outlet: Outlet) -> Markup | None:
         return [words.figure(outlet.row[stem.format(period)]) for stem in stems]
 
     description = "; ".join(
-        "{}-year: rain {} {}, runoff {} {}, peak {} {} at {} h".format(
-            period, rain, depth, runoff, depth, peak, unit, at
-        )
+        f"{period}-year: rain {rain} {depth}, runoff {runoff} {depth}, peak {peak} {unit} at {at} h"
         for period in outlet.floods
         for rain, runoff, peak, at in [figures(period)]
     )

@@ -10,7 +10,7 @@ from typing import Any
 
 from basinwright import published
 from basinwright.flags import FLAGS, SEVERITIES
-from basinwright.registry import Source, find, methods
+from basinwright.registry import find
 from basinwright.report import charts, palette, words
 from basinwright.report.reading import Outlet, Run
 from basinwright.report.words import count, elevation, figure, listed, plain, short, station, unit_label, with_unit
@@ -149,7 +149,7 @@ def over_capacity(outlet: Outlet) -> bool:
 
 
 def worries(run: Run) -> list[Outlet]:
-    """Return the outlets to look at first: failed, in serious doubt, over capacity in a frequent storm, with warnings."""
+    """Return the outlets to look at first: failed, in serious doubt, soon over capacity, with warnings."""
 
     def rank(outlet: Outlet) -> tuple[float, ...]:
         at = outlet.row.get("exceeded_at_yr") or ""
@@ -336,16 +336,6 @@ def sources(run: Run) -> list[tuple[str, str, str]]:
     return [(subject, str(source), source.note) for subject, source in used]
 
 
-def method_names() -> dict[str, str]:
-    """Return the usual name of every timing method by key."""
-    return {key: entry.name for key, entry in methods("timing").items()}
-
-
-def method_sources() -> dict[str, Source]:
-    """Return the source of every timing method by key."""
-    return {key: entry.source for key, entry in methods("timing").items()}
-
-
 def outlet_facts(run: Run, outlet: Outlet) -> dict[str, Any]:
     """Return what an outlet's page says in words and tables (its pictures apart)."""
     row, system = outlet.row, run.system
@@ -455,10 +445,9 @@ def _segment_cell(stem: str, value: float, system: System) -> str:
 
 def _timing_table(outlet: Outlet) -> list[dict[str, Any]]:
     """Return the methods that gave a time, the adopted one first."""
-    names = method_names()
     return [
         {
-            "name": names.get(row["method"], row["method"]),
+            "name": charts.usual_name(row["method"]),
             "tc": figure(row["tc_h"]),
             "standing": charts.standing(row),
             "adopted": row["adopted"],
@@ -471,12 +460,11 @@ def _timing_table(outlet: Outlet) -> list[dict[str, Any]]:
 
 def _not_computed(outlet: Outlet) -> list[str]:
     """Return why the other methods gave no time: each reason with its methods."""
-    names = method_names()
     by_reason: dict[str, list[str]] = {}
     for row in outlet.timing:
         if row["tc_h"] != row["tc_h"]:
-            by_reason.setdefault(plain(row["reason"]), []).append(names.get(row["method"], row["method"]))
-    return [f"{', '.join(methods)}: {reason}" for reason, methods in by_reason.items()]
+            by_reason.setdefault(plain(row["reason"]), []).append(charts.usual_name(row["method"]))
+    return [f"{', '.join(names)}: {reason}" for reason, names in by_reason.items()]
 
 
 def _class_names(run: Run) -> Mapping[str, str]:

@@ -323,8 +323,8 @@ def index_map(run: Run, link: Callable[[Outlet], str], over: Callable[[Outlet], 
         el("g", *marks),
     ]
     description = (
-        f"{words.count(len(drawn), 'basin')} with longest flow paths and outlets over the shaded terrain. The table below "
-        "lists the same outlets."
+        f"{words.count(len(drawn), 'basin')} with longest flow paths and outlets over the shaded terrain. "
+        "The table below lists the same outlets."
     )
     return _canvas(run, view, "Map of all outlets", description, content, key="map", kind="index")
 

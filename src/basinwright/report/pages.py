@@ -165,7 +165,7 @@ def _page(run: Run, outlet: Outlet) -> dict[str, Any]:
         "map": maps.outlet_map(run, outlet),
         "close": maps.close_up(run, outlet),
         "profile": charts.profile(run, outlet, floor),
-        "timing_chart": charts.timing(outlet, context.method_names()),
+        "timing_chart": charts.timing(outlet),
         "unit_hydrograph": charts.unit_hydrograph(run, outlet),
         "floods": charts.floods(run, outlet),
         "capacity": charts.capacity(run, outlet),

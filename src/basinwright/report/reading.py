@@ -305,8 +305,7 @@ def _read_layers(run: Run, by_id: Mapping[str, Outlet]) -> None:
     lines, areas = streams.geometry.to_numpy(), streams[area].to_numpy(dtype=float)
     tree = shapely.STRtree(lines)
     drawn = [outlet for outlet in run.outlets if outlet.basin is not None and outlet.place is not None]
-    points = shapely.points(np.array([outlet.place for outlet in drawn]).reshape(-1, 2))
-    among = shapely.STRtree(points)
+    among = shapely.STRtree([shapely.Point(outlet.place) for outlet in drawn if outlet.place])
     for outlet in drawn:
         window = shapely.box(*outlet.basin.bounds).buffer(0.1 * max(_spans(outlet.basin.bounds)))
         near = np.sort(tree.query(window))
