@@ -439,7 +439,7 @@ def cut(
     bounds: np.ndarray, distance_m: np.ndarray, area_km2: np.ndarray, cover: np.ndarray, n_classes: int,
     sheet_m: np.ndarray, channel: np.ndarray, water_bounds: np.ndarray, water_first: np.ndarray,
     water_last: np.ndarray, least_tributary_km2: float, least_length_m: float,
-) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:  # fmt: skip
+) -> tuple[np.ndarray, np.ndarray]:  # fmt: skip
     """Cut paths into segments.
 
     Parameters
@@ -465,11 +465,9 @@ def cut(
     Returns
     -------
     segment_bounds : int64 array, shape (n + 1,)
-    to_m : float64 array, shape (segments,) [m]
-        Where each ends; it begins where the one before it ends, the first of a path at 0.
-    regime : uint8 array, shape (segments,)
-    cover : int32 array, shape (segments,)
-        Class of most length.
+    segments : float64 array, shape (segments, 3)
+        Where each ends [m]; its regime; its class of most length. A segment begins where the one before it
+        ends, the first of a path at 0.
     """
     n = bounds.size - 1
     most = 2 * _longest(bounds) + 2
@@ -479,9 +477,7 @@ def cut(
     main = np.empty(most, np.int32)
     weight = np.zeros(n_classes)
     segment_bounds = np.zeros(n + 1, np.int64)
-    all_to_m = np.empty(8 * n)
-    all_regime = np.empty(8 * n, np.uint8)
-    all_main = np.empty(8 * n, np.int32)
+    segments = np.empty((8 * n + 1, 3))
     end = 0
     for i in range(n):
         a, b = bounds[i], bounds[i + 1]
@@ -495,24 +491,22 @@ def cut(
             count = _join_short(count, least_length_m, to_m, regime, cause)
             _main_cover(d, cover[a:b], count, to_m, weight, main)
             count = _join_alike(count, to_m, regime, cause, main)
-            if end + count > all_to_m.size:
-                size = 2 * (end + count)
-                all_to_m = _enlarged(all_to_m, end, size)
-                all_regime = _enlarged(all_regime, end, size)
-                all_main = _enlarged(all_main, end, size)
+            if end + count > len(segments):
+                segments = _enlarged(segments, end, 2 * (end + count))
             for s in range(count):
-                all_to_m[end + s], all_regime[end + s], all_main[end + s] = to_m[s], regime[s], main[s]
+                segments[end + s, 0], segments[end + s, 1], segments[end + s, 2] = to_m[s], regime[s], main[s]
             end += count
         segment_bounds[i + 1] = end
-    return segment_bounds, all_to_m[:end].copy(), all_regime[:end].copy(), all_main[:end].copy()
+    return segment_bounds, segments[:end]
 
 
 @njit(cache=True, nogil=True)
-def _enlarged(values: np.ndarray, used: int, size: int) -> np.ndarray:
-    """Copy of the values in use, with room for more."""
-    larger = np.empty(size, values.dtype)
+def _enlarged(rows: np.ndarray, used: int, size: int) -> np.ndarray:
+    """Copy of the rows in use, with room for more."""
+    larger = np.empty((size, 3))
     for j in range(used):
-        larger[j] = values[j]
+        for k in range(3):
+            larger[j, k] = rows[j, k]
     return larger
 
 

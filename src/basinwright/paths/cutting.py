@@ -133,11 +133,13 @@ def cut_segments(grid: Grid, terrain: Terrain, paths: Paths, cover: CoverOnGrid,
     sheet, roughness, limited = _sheet(paths, classes, cover, sheet_end, rules)
 
     n_classes = len(cover.codes)
-    segment_bounds, to_m, regime, main = kernel.cut(
+    segment_bounds, pieces = kernel.cut(
         bounds, distance, paths.area_km2, np.where(classes < 0, n_classes, classes).astype(np.int32),
         n_classes + 1, sheet, channel, np.searchsorted(path, np.arange(paths.n + 1)), first, last,
         LEAST_TRIBUTARY * rules.stream_area_km2, rules.min_segment_m,
     )  # fmt: skip
+    to_m = pieces[:, 0].copy()
+    regime, main = pieces[:, 1:].astype(np.int64).T
     from_m, top, bottom, area = kernel.at_segments(bounds, distance, elevation, paths.area_km2, segment_bounds, to_m)
     outlet = np.repeat(np.arange(paths.n), np.diff(segment_bounds))
     segments = {
