@@ -477,8 +477,8 @@ def _storm_conflicts(storm: dict[str, Any]) -> Iterator[tuple[str, str, str]]:
     if storm.get("critical_duration") is True and not built:
         what = "needs a storm that can be built for any duration"
         yield "storm.critical_duration", what, 'set distribution = "balanced" or "nested"'
-    if storm.get("critical_duration") is True and (depths or storm.get("depth_rasters")):
-        yield "storm.critical_duration", "given beside depths of one duration", "leave depths to storm.ddf"
+    if storm.get("critical_duration") is True and storm.get("depth_rasters"):
+        yield "storm.critical_duration", "given beside rasters of one duration", "leave depths to storm.ddf"
     try:
         day_long = parse_quantity(storm.get("duration", "24 h"), "time") == 24.0
     except QuantityError:
