@@ -197,15 +197,18 @@ def test_capacity_verdict_is_the_first_period_that_exceeds_it(tmp_path, capacity
     assert (over or [""])[0] == verdict
 
 
-@pytest.mark.parametrize(("off", "raised"), [(1.005, False), (0.995, False), (1.02, True), (0.98, True)])
-def test_audit(tmp_path, monkeypatch, off, raised):
-    """The second opinion is pretended here; what pysheds really says is asked elsewhere."""
+@pytest.mark.parametrize(
+    ("off", "lost", "raised"),
+    [(0.005, 0, False), (-0.005, 0, False), (0.02, 0, True), (-0.02, 0, True), (-0.9, 0.9, False), (-0.9, 0.8, True),
+     (0.02, 0.5, True)],
+)  # fmt: skip
+def test_audit(tmp_path, monkeypatch, off, lost, raised):
+    """The second opinion is pretended here: it differs by `off` of the basin and says nothing of `lost` of it."""
     asked = []
 
     def opinion(clips):
         asked.extend(clips)
-        km2 = AREA_KM2
-        return [second_opinion.Opinion(km2, km2 * off, 0) for _ in clips]
+        return [second_opinion.Opinion(AREA_KM2, AREA_KM2 * (1 + off), AREA_KM2 * lost) for _ in clips]
 
     monkeypatch.setattr(second_opinion, "second_opinion", opinion)
     flags = flags_of(tmp_path, audit={"second_opinion": "all"})

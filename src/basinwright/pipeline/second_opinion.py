@@ -51,17 +51,17 @@ def _ask(half: TerrainHalf, extent: str, draft: Draft) -> None:
 
 
 def _difference(area_km2: float, opinion: Opinion) -> str:
-    """Say how the second opinion differs; empty where it agrees."""
+    """Say how the second opinion differs; empty where it agrees, or has none on so much of the basin."""
     parts = []
-    for name, other in (
-        ("on our directions", opinion.same_directions_km2),
-        ("by its own conditioning", opinion.own_conditioning_km2),
+    for name, other, lost in (
+        ("on our directions", opinion.same_directions_km2, 0.0),
+        ("by its own conditioning", opinion.own_conditioning_km2, opinion.lost_km2),
     ):
         off = other / area_km2 - 1.0
-        if abs(off) > DIFFERS_OVER:
+        if max(off, -off - lost / area_km2) > DIFFERS_OVER:
             parts.append(f"pysheds {name} {other:.4g} km2, {off:+.1%}")
-    if parts and opinion.undrained_cells:
-        parts.append(f"it left {opinion.undrained_cells} cells undrained there")
+    if parts and opinion.lost_km2 > 0:
+        parts.append(f"its flats left {opinion.lost_km2:.4g} km2 undrained")
     return "; ".join(parts)
 
 
