@@ -123,12 +123,12 @@ def test_a_line_of_similar_area_or_under_the_stream_area_is_no_doubt(landscape, 
     assert not snap(fork.grid, fork.terrain, x, y, within_m=45.0, stream_area_km2=only_left).ambiguous.any()
 
 
-def test_an_expected_area_that_is_met_settles_the_doubt(fork):
+def test_an_expected_area_that_is_met_still_says_that_another_line_is_near(fork):
     x, y = fork.grid.xy([20], [28])
     area = float(fork.terrain.area_grid[20, 30]) / 1e6
     snapped = snap(fork.grid, fork.terrain, x, y, within_m=45.0, stream_area_km2=0.01, expected_area_km2=[area])
     assert fork.terrain.rows_cols(snapped.cell)[1] == [30]
-    assert not snapped.ambiguous.any()
+    assert snapped.ambiguous.all()
 
 
 def test_a_tributary_that_joins_nearby_is_another_line(landscape):

@@ -14,6 +14,7 @@ from basinwright.kernels import (
     reduce,
     slope,
     trace,
+    travel,
 )
 from basinwright.terrain.routing import step_lengths_um
 
@@ -71,7 +72,7 @@ def everything(seed, pick):
     values = np.random.default_rng(seed).random((NROWS, NCOLS))
     values[0, :3] = np.nan
     classes = np.random.default_rng(seed).integers(-1, 4, (NROWS, NCOLS)).astype(np.int32)
-    sums, weight, cells, contact = np.zeros(k), np.zeros(k), np.zeros(k, np.int64), np.zeros(k, np.uint8)
+    sums, weight, cells = np.zeros(k), np.zeros(k), np.zeros(k, np.int64)
     by_class, total = np.zeros((k, 4)), np.zeros(k)
     lowest, highest, highest_cell = np.full(k, np.inf), np.full(k, -np.inf), np.full(k, -1, np.int32)
     farthest, farthest_cell = np.full(k, -1, np.int64), np.full(k, -1, np.int32)
@@ -80,21 +81,36 @@ def everything(seed, pick):
     pick(reduce.add_classes)(label, NCOLS, AREA, 0, classes, by_class)
     pick(reduce.keep_extremes)(label, NCOLS, 0, values, lowest, highest, highest_cell)
     pick(reduce.keep_farthest)(label, NCOLS, distance, 0, NROWS, farthest, farthest_cell)
-    pick(reduce.mark_contact)(label, NCOLS, z, 0, NROWS, contact)
+    class_sums, class_weight = np.zeros((k, 4)), np.zeros((k, 4))
+    pick(reduce.add_class_values)(label, NCOLS, AREA, 0, classes, values, 2.0**-30, class_sums, class_weight)
     order = pick(forest.upstream_first)(parent)
     pick(forest.combine_sums)(parent, order, by_class)
-    pick(forest.combine_contact)(parent, order, contact)
     pick(forest.combine_extremes)(parent, order, lowest, highest, highest_cell)
     pick(forest.combine_farthest)(parent, order, parent_distance, farthest, farthest_cell)
-    out |= {"sums": sums, "weight": weight, "cells": cells, "contact": contact, "classes": by_class}
+    out |= {"sums": sums, "weight": weight, "cells": cells, "classes": by_class}
+    out |= {"class sums": class_sums, "class weight": class_weight}
     out |= {"total": total, "lowest": lowest, "highest": highest, "highest cell": highest_cell}
     out |= {"farthest": farthest, "farthest cell": farthest_cell, "forest order": order}
 
     bounds, path = pick(trace.trace_paths)(code, NCOLS, farthest_cell, outlets)
     out["bounds"], out["path"] = bounds, path
-    out["path distances"] = pick(trace.path_distances)(path[: bounds[1]], code, NCOLS, step_um)
-    limit = np.full(k, 200_000_000, np.int64)
-    out["snapped"], out["snap"] = pick(trace.walk_to_area)(code, NCOLS, step_um, area, outlets, 3000.0, limit)
+    receives, time_us = np.zeros(n, np.uint8), np.zeros(n, np.int64)
+    length, fall, source = np.zeros((NROWS, NCOLS)), np.zeros((NROWS, NCOLS)), np.zeros((NROWS, NCOLS), np.uint8)
+    pick(travel.mark_receivers)(code, out["order"], NCOLS, receives)
+    pick(travel.block_steps)(code, z, receives, NCOLS, step_um, 0, length, fall, source)
+    time_us.reshape(NROWS + 2, NCOLS + 2)[1:-1, 1:-1] = length * 1e6
+    pick(travel.add_down_the_flow)(code, out["order"], NCOLS, time_us)
+    first_bin = time_us[outlets] // 30_000_000
+    last_bin = first_bin.copy()
+    pick(travel.last_bins)(label, time_us, 30_000_000, last_bin)
+    for i in order:
+        if parent[i] >= 0:
+            last_bin[parent[i]] = max(last_bin[parent[i]], last_bin[i])
+    curve_bounds = np.concatenate([[0], np.cumsum(last_bin - first_bin + 1)]).astype(np.int64)
+    curve = np.zeros(curve_bounds[-1])
+    pick(travel.add_areas_by_time)(label, time_us, NCOLS, AREA, 30_000_000, first_bin, curve_bounds, curve)
+    pick(travel.combine_curves)(parent, order, first_bin, curve_bounds, curve)
+    out |= {"receives": receives, "length": length, "fall": fall, "source": source, "time": time_us, "curve": curve}
     steep = np.zeros((NROWS, NCOLS))
     ground = np.pad(np.where(np.isfinite(given), given, np.nan), 1, constant_values=np.nan).astype(np.float64)
     pick(slope.horn_slope_pct)(ground, DX, DY, steep)

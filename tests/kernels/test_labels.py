@@ -59,7 +59,7 @@ def whole_basins(terrain, outlets, values, block_rows):
     label, distance, parent, parent_distance = labelled(terrain, outlets)
     n = outlets.size
     sums, weight, area = np.zeros(n), np.zeros(n), np.zeros(n)
-    cells, contact = np.zeros(n, np.int64), np.zeros(n, np.uint8)
+    cells = np.zeros(n, np.int64)
     classes = np.zeros((n, 3))
     lowest, highest, highest_cell = np.full(n, np.inf), np.full(n, -np.inf), np.full(n, -1, np.int32)
     farthest, farthest_cell = np.full(n, -1, np.int64), np.full(n, -1, np.int32)
@@ -74,14 +74,12 @@ def whole_basins(terrain, outlets, values, block_rows):
         reduce.add_classes(label, terrain.ncols, terrain.row_area_m2, first, kind, classes)
         reduce.keep_extremes(label, terrain.ncols, first, block, lowest, highest, highest_cell)
         reduce.keep_farthest(label, terrain.ncols, distance, first, end, farthest, farthest_cell)
-        reduce.mark_contact(label, terrain.ncols, terrain.filled_m, first, end, contact)
     order = forest.upstream_first(parent)
     table = np.column_stack([area, cells, sums, weight, classes])
     forest.combine_sums(parent, order, table)
-    forest.combine_contact(parent, order, contact)
     forest.combine_extremes(parent, order, lowest, highest, highest_cell)
     forest.combine_farthest(parent, order, parent_distance, farthest, farthest_cell)
-    return [table, contact, lowest, highest, highest_cell, farthest, farthest_cell]
+    return [table, lowest, highest, highest_cell, farthest, farthest_cell]
 
 
 @settings(max_examples=25, deadline=None)
@@ -177,24 +175,3 @@ def test_paths_run_from_start_to_end_and_stop_at_an_exit():
     paths = [cells[a:b].tolist() for a, b in pairwise(bounds)]
     full = [c for c, _ in way]
     assert paths == [full[: len(way) // 2 + 1], [], full, [start], [middle]]
-    distance = trace.path_distances(np.array(paths[2], np.int32), terrain.directions, terrain.ncols, terrain.step_um)
-    assert distance.tolist() == [d for _, d in way]
-
-
-def test_walk_to_area_stops_at_the_first_cell_that_is_large_enough_or_at_the_limit():
-    terrain, _ = make_terrain(5)
-    for start in terrain.order[:40]:
-        way = list(walk(terrain, start))
-        threshold = terrain.area_m2[way[-1][0]]
-        target, length = next((c, d) for c, d in way if terrain.area_m2[c] >= threshold)
-        for limit, expected in ((length, (target, length)), (length - 1, (NO_CELL, 0))):
-            found, distance = trace.walk_to_area(
-                terrain.directions, terrain.ncols, terrain.step_um, terrain.area_m2,
-                np.array([start], np.int32), float(threshold), np.array([limit], np.int64),
-            )  # fmt: skip
-            assert (found[0], distance[0]) == expected
-        found, _ = trace.walk_to_area(
-            terrain.directions, terrain.ncols, terrain.step_um, terrain.area_m2,
-            np.array([start], np.int32), float(threshold) * 2, np.array([10**12], np.int64),
-        )  # fmt: skip
-        assert found[0] == NO_CELL

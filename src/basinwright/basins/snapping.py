@@ -39,7 +39,7 @@ class Snapped:
         The point was moved over half of the search distance (SNAP_FAR).
     ambiguous : bool array, shape (n,)
         Another flow line with an area over 2 times different passes within the search distance
-        (SNAP_AMBIGUOUS); never where the expected area was met, which settles the doubt.
+        (SNAP_AMBIGUOUS), whether or not the expected area was met.
     within_m : float [m]
         The search distance used.
     """
@@ -131,8 +131,7 @@ def snap(
     cell = np.where(expected_met, cell, np.where(channel >= 0, channel, own))
 
     snap_m = snapping.cells_away_m(py, px, cell, *sizes)
-    doubtful = np.where(expected_met, np.int32(NO_CELL), cell)
-    ambiguous = snapping.other_line_near(py, px, doubtful, AMBIGUOUS_RATIO, stream_m2, within, *sizes, *lines)
+    ambiguous = snapping.other_line_near(py, px, cell, AMBIGUOUS_RATIO, stream_m2, within, *sizes, *lines)
     centre_x, centre_y = grid.xy(*terrain.rows_cols(cell))
     return Snapped(
         cell=cell,

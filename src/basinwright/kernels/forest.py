@@ -57,20 +57,6 @@ def combine_sums(parent: np.ndarray, order: np.ndarray, values: np.ndarray) -> N
 
 
 @njit(cache=True, nogil=True)
-def combine_contact(parent: np.ndarray, order: np.ndarray, contact: np.ndarray) -> None:
-    """A basin touches the rim or a void where any basin inside it does; in place.
-
-    Parameters
-    ----------
-    parent, order : int32 arrays, shape (n,)
-    contact : uint8 array, shape (n,)
-    """
-    for i in order:
-        if parent[i] >= 0:
-            contact[parent[i]] |= contact[i]
-
-
-@njit(cache=True, nogil=True)
 def combine_extremes(
     parent: np.ndarray, order: np.ndarray, lowest: np.ndarray, highest: np.ndarray, highest_cell: np.ndarray
 ) -> None:

@@ -200,33 +200,3 @@ def keep_farthest(
             if d > farthest_um[i] or (d == farthest_um[i] and c < farthest_cell[i]):
                 farthest_um[i] = d
                 farthest_cell[i] = c
-
-
-@njit(cache=True, nogil=True)
-def mark_contact(
-    label: np.ndarray, ncols: int, filled: np.ndarray, first_row: int, end_row: int, contact: np.ndarray
-) -> None:
-    """Mark the labels with a cell at the rim or beside a void.
-
-    Parameters
-    ----------
-    label : int32 array, shape (cells,)
-    ncols : int
-    filled : float32 array, shape (cells,) [m]
-        +inf in voids and halo.
-    first_row, end_row : int
-    contact : uint8 array, shape (n,)
-        Set to 1.
-    """
-    stride = ncols + 2
-    for row in range(first_row, end_row):
-        start = (row + 1) * stride + 1
-        for c in range(start, start + ncols):
-            i = label[c]
-            if i < 0 or contact[i] == 1:
-                continue
-            above = max(filled[c - stride - 1], filled[c - stride], filled[c - stride + 1])
-            below = max(filled[c + stride - 1], filled[c + stride], filled[c + stride + 1])
-            highest = max(above, filled[c - 1], filled[c + 1], below)
-            if highest == np.inf:
-                contact[i] = 1
