@@ -129,7 +129,7 @@ def test_whole_basins_equal_sums_over_walks(seed, count):
         value = values[rows, cols]
         assert table[i, 0] == area.sum() == terrain.area_m2[outlet]
         assert table[i, 1] == basin.size
-        assert table[i, 2] == pytest.approx((value * area).sum(), rel=1e-12)
+        assert table[i, 2] == pytest.approx((value * area).sum(), rel=1e-9)  # in fixed point of the whole raster
         assert table[i, 3] == area.sum()
         kinds = (value * 3).astype(int)
         assert table[i, 4:].tolist() == [area[kinds == k].sum() for k in range(3)]
