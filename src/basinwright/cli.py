@@ -139,6 +139,20 @@ def retime(folder: RunDir) -> int:
 
 
 @app.command()
+def report(
+    folder: RunDir,
+    outlet_id: Annotated[
+        str | None, typer.Argument(metavar="[OUTLET_ID]", help="Make the page of this outlet alone.")
+    ] = None,
+) -> int:
+    """Make the HTML report of a finished run again."""
+    from basinwright import pipeline
+
+    print(pipeline.report(folder, outlet_id, say=Screen()))
+    return DONE
+
+
+@app.command()
 def methods() -> int:
     """Print every timing method, unit hydrograph, storm and published table shipped, with source and range."""
     from basinwright import catalogue

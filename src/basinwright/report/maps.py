@@ -220,7 +220,7 @@ def _canvas(
         *content,
         viewBox=f"0 0 {view.width} {view.height}",
         class_="map",
-        role="group" if kind == "index" else "img",
+        role="group" if kind.startswith("index") else "img",
         aria_labelledby=f"{key}-t {key}-d",
         tabindex=0,
         style=f"--k:{_UNITS_PER_PIXEL}",
@@ -326,7 +326,7 @@ def index_map(run: Run, link: Callable[[Outlet], str], over: Callable[[Outlet], 
         f"{words.count(len(drawn), 'basin')} with longest flow paths and outlets over the shaded terrain. "
         "The table below lists the same outlets."
     )
-    return _canvas(run, view, "Map of all outlets", description, content, key="map", kind="index")
+    return _canvas(run, view, "Map of all outlets", description, content, key="map", kind="index many" if many else "index")
 
 
 _SIDES: tuple[dict[str, object], ...] = (

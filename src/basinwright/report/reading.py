@@ -7,7 +7,7 @@ shown is what stands in the CSV files.
 from __future__ import annotations
 
 import itertools
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -25,7 +25,7 @@ from basinwright.tables import (
     UNIT_HYDROGRAPHS,
     Table,
 )
-from basinwright.units import M_PER_FT, System
+from basinwright.units import System
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -238,15 +238,13 @@ def read_run(folder: Path, about: Mapping[str, Any]) -> Run:
     for outlet in outlets:
         outlet.doubts.sort(key=lambda doubt: (-_SEVERITIES.index(doubt.severity), order.index(doubt.key)))
     for source, name in ((SEGMENTS, "segments"), (TIMING, "timing"), (COVER_SHARES, "shares")):
-        for outlet_id, part in _by_outlet(read(source)):
-            setattr(by_id[outlet_id], name, _rows(part))
-    for outlet_id, part in _by_outlet(read(UNIT_HYDROGRAPHS)):
-        by_id[outlet_id].unit_hydrograph = {name: part[name].to_numpy() for name in ("time_h", "flow")}
+        for row in _rows(read(source)):
+            getattr(by_id[row["outlet_id"]], name).append(row)
+    for outlet_id, _, part in _series(read(UNIT_HYDROGRAPHS), ("time_h", "flow")):
+        by_id[outlet_id].unit_hydrograph = part
     written = {float(period): period for period in periods}
-    for outlet_id, part in _by_outlet(read(HYDROGRAPHS)):
-        for period, flood in part.groupby("return_period_yr", sort=True):
-            columns = {name: flood[name].to_numpy() for name in ("time_h", "rain", "excess", "flow")}
-            by_id[outlet_id].floods[written[float(period)]] = columns  # type: ignore[arg-type]
+    for outlet_id, period, part in _series(read(HYDROGRAPHS), ("time_h", "rain", "excess", "flow")):
+        by_id[outlet_id].floods[written[period]] = part
     run = Run(folder, about, system, periods, outlets, set(table.columns))
     if (folder / "basins.gpkg").is_file():
         _read_layers(run, by_id)
@@ -280,8 +278,18 @@ def _rows(frame: pd.DataFrame) -> list[Row]:
     return [{str(name): value for name, value in row.items()} for row in frame.to_dict("records")]
 
 
-def _by_outlet(frame: pd.DataFrame) -> Iterable[tuple[str, pd.DataFrame]]:
-    return ((str(outlet_id), part) for outlet_id, part in frame.groupby("outlet_id", sort=False))
+def _series(frame: pd.DataFrame, columns: Sequence[str]) -> Iterator[tuple[str, float, dict[str, Any]]]:
+    """Yield outlet, return period (0 where there is none) and columns of each series; its rows stand together."""
+    import numpy as np
+
+    if frame.empty:
+        return
+    ids = frame["outlet_id"].to_numpy()
+    periods = frame["return_period_yr"].to_numpy() if "return_period_yr" in frame else np.zeros(len(ids))
+    begins = np.flatnonzero(np.r_[True, (ids[1:] != ids[:-1]) | (periods[1:] != periods[:-1])])
+    arrays = {name: frame[name].to_numpy() for name in columns}
+    for a, b in itertools.pairwise([*begins.tolist(), len(ids)]):
+        yield str(ids[a]), float(periods[a]), {name: values[a:b] for name, values in arrays.items()}
 
 
 def _read_layers(run: Run, by_id: Mapping[str, Outlet]) -> None:
@@ -339,8 +347,3 @@ def profile_points(segments: Sequence[Row]) -> list[tuple[float, float]]:
     first = segments[0]
     tail = ((row["to"], row["bottom_elevation"]) for row in segments)
     return list(itertools.chain([(first["from"], first["top_elevation"])], tail))
-
-
-def feet_or_metres(system: System, metres: float) -> float:
-    """Return metres in the length unit of the tables."""
-    return metres / M_PER_FT if system == "us" else metres
