@@ -78,8 +78,7 @@ def floods_of(basins: Basins, settings: Settings, *, series: bool) -> tuple[Floo
     duration = np.full(count, section.duration)
     at_end = np.zeros(count, dtype=bool)
     if section.critical_duration and settings.ddf is not None:
-        tried = settings.ddf.durations_h
-        tried = tried[(tried <= section.duration) & (tried >= 2.0 * tried[0])]
+        tried = _durations(settings.ddf.durations_h, section.duration)
         peaks = [_floods(basins, settings, float(hours), series=False)[0].peak_m3s[:, -1] for hours in tried]
         duration, at_end = critical_duration(tried, np.array(peaks))
     kept: list[tuple[NDArray[np.int64], Floods, Rain]] = []
@@ -88,6 +87,13 @@ def floods_of(basins: Basins, settings: Settings, *, series: bool) -> tuple[Floo
         kept.append((rows, *_floods(_some(basins, rows), settings, hours, series=series)))
     floods, rain = _merged(kept) if len(kept) != 1 else kept[0][1:]
     return floods, replace(rain, at_end=at_end)
+
+
+def _durations(durations_h: NDArray[np.float64], longest_h: float) -> NDArray[np.float64]:
+    """Return the durations of a table that whole steps of its shortest one make up, up to the project's."""
+    steps = durations_h / durations_h[0]
+    whole = np.abs(steps - np.round(steps)) < 1e-9
+    return durations_h[whole & (steps > 1.5) & (durations_h <= longest_h)]
 
 
 def _floods(basins: Basins, settings: Settings, duration_h: float, *, series: bool) -> tuple[Floods, Rain]:
