@@ -1,19 +1,29 @@
 """A person's edits: what they changed in the tables of a run, checked, and which cells are to be computed again.
 
-Three states of each table meet here, all as text: the *base* that the terrain gave, what was last *written*, and what
-stands in the file *now*. A cell is edited where now differs from written; a dependent cell (a slope, a roughness, a
-hydraulic radius, a curve number, a time of concentration) that a person filled is *held*: it stands until it is
-emptied. Every other dependent cell is emptied before the hydrology runs, and so computed from the rest of its row.
+Three states of each table meet here, all as text: as the run *first* wrote it, as it was last *written*, and as it
+stands *now*. The columns that may be edited are of two kinds:
+
+- What only a person or the terrain can say (a regime, a class, a distance, an elevation, an area) counts as it stands.
+- A *dependent* cell (a slope, a roughness, a curve number, a time of concentration) is *held* where a person filled or
+  changed it: it stands until it is emptied. Every other one is emptied here, and so computed from the rest of its row.
+
+A row that reads again as the run first wrote it is as the run first wrote it: an edit is undone by typing the old
+value.
 """
 
 from __future__ import annotations
 
+import csv
 import math
-from collections.abc import Mapping, Sequence
+from bisect import bisect_left
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
-from typing import TYPE_CHECKING
+from itertools import pairwise
+from pathlib import Path
+from typing import TYPE_CHECKING, ClassVar
 
 from basinwright.errors import InputRejected, Problem
+from basinwright.schemes import ANY_GROUP, GROUPS, Scheme
 from basinwright.tables import COVER_SHARES, OUTLETS, SEGMENTS, Table
 from basinwright.units import System
 
@@ -22,17 +32,28 @@ if TYPE_CHECKING:
 
 Row = dict[str, str]
 Cell = tuple[str, str, str, str]
-"""A cell: table, outlet id, row, column stem."""
+"""A cell: table, outlet id, row within the outlet (number of the segment or patch, empty in outlets), column stem."""
 
 EDITABLE = (OUTLETS, SEGMENTS, COVER_SHARES)
 """The tables that a person may edit."""
 
-DEPENDENT: dict[str, tuple[str, ...]] = {
-    "outlets": ("curve_number", "tc_h"),
-    "segments": ("slope", "roughness", "hydraulic_radius", "hydraulic_radius_half"),
-    "cover_shares": ("curve_number", "impervious_pct", "source"),
+LIMITS: Mapping[str, tuple[float, float]] = {
+    "from": (0.0, 1e9),
+    "to": (0.0, 1e9),
+    "top_elevation": (-1e5, 1e5),
+    "bottom_elevation": (-1e5, 1e5),
+    "slope": (1e-6, 10.0),
+    "roughness": (1e-3, 1e3),
+    "hydraulic_radius": (1e-3, 1e3),
+    "hydraulic_radius_half": (1e-3, 1e3),
+    "area": (1e-9, 1e9),
+    "path_length": (1e-3, 1e9),
+    "basin_slope_pct": (1e-3, 1e3),
+    "curve_number": (1.0, 100.0),
+    "tc_h": (3e-3, 1e3),
+    "impervious_pct": (0.0, 100.0),
 }
-"""Editable cells that are computed where a person did not fill them, by table."""
+"""What an edited number may be, by column stem: wider than any basin, but it catches a slip of the decimal point."""
 
 _SAME = 1e-9
 """Relative difference under which two numbers are the same: spreadsheets keep 15 digits of 17."""
@@ -44,107 +65,65 @@ class Record:
 
     Parameters
     ----------
-    base, written : dict of str to DataFrame
-        The editable tables, as the terrain gave them and as last written.
-    held : set of tuple
-        (table, outlet id, row, column stem) of the dependent cells that a person filled.
+    first, written : dict of str to DataFrame
+        The editable tables as the run first wrote them, and as they were last written.
+    supplied, held : set of Cell
+        The dependent cells that stood as given when the run first wrote them (the outlet layer supplied them), and
+        those that do in ``written``.
     """
 
-    base: dict[str, pd.DataFrame]
+    first: dict[str, pd.DataFrame]
     written: dict[str, pd.DataFrame]
+    supplied: set[Cell] = field(default_factory=set)
     held: set[Cell] = field(default_factory=set)
+
+
+@dataclass(frozen=True)
+class Edited:
+    """The tables of a run with a person's edits in place.
+
+    Parameters
+    ----------
+    tables : dict of str to DataFrame
+        For the hydrology: every dependent cell that is not held is empty.
+    held : set of Cell
+        The dependent cells that stand as given, and the cells of outlets.csv that differ from the terrain's.
+    segments : set of (outlet id, segment)
+        The segments that differ from what the run first wrote.
+    """
+
+    tables: dict[str, pd.DataFrame]
+    held: set[Cell]
+    segments: set[tuple[str, str]]
 
 
 def same(a: str, b: str) -> bool:
     """Say whether two cells hold the same value: the same text, or numbers that a spreadsheet would not tell apart."""
     if a == b:
         return True
-    if a.lower() in ("true", "false"):
-        return a.lower() == b.lower()
     try:
         return math.isclose(float(a), float(b), rel_tol=_SAME, abs_tol=1e-12)
     except ValueError:
-        return False
+        return a.lower() == b.lower() and a.lower() in ("true", "false")
 
 
-class _Reader:
-    """Collects what is wrong in one file."""
-
-    def __init__(self, table: Table, system: System, periods: Sequence[str]) -> None:
-        self.file = f"{table.name}.csv"
-        self.problems: list[Problem] = []
-        self.editable = {column.name(system) for column in table.columns if column.editable}
-        self.name = {column.stem: column.name(system) for column in table.columns}
-        self.stem = {column.name(system): column.stem for column in table.columns}
-        self.numbers = {c.name(system) for c in table.columns if c.type == "number" and not c.per_return_period}
-        self.dependents = [self.name[stem] for stem in DEPENDENT[table.name]]
-
-    def wrong(self, line: int, column: str, what: str, fix: str) -> None:
-        self.problems.append(Problem(self.file, f"row {line}, {column}", what, fix))
-
-    def number(self, row: Row, column: str, line: int, low: float = -math.inf, high: float = math.inf) -> float:
-        """Read a number; NaN with a problem where it is none or out of range."""
-        try:
-            value = float(row[column])
-        except ValueError:
-            value = math.nan
-        if not math.isfinite(value):
-            self.wrong(line, column, f"{row[column]!r} is not a finite number", "write a plain number")
-            return math.nan
-        if not low <= value <= high:
-            self.wrong(line, column, f"{row[column]} is out of range", f"give a number from {low:g} to {high:g}")
-            return math.nan
-        return value
-
-    def check_number(self, row: Row, column: str, line: int) -> None:
-        if not row[column]:
-            return
-        stem = self.stem[column]
-        low, high = _LIMITS.get(stem, (-math.inf, math.inf))
-        self.number(row, column, line, low, high)
-
-
-_LIMITS = {
-    "slope": (1e-9, 10.0),
-    "roughness": (1e-6, 1000.0),
-    "hydraulic_radius": (1e-6, math.inf),
-    "hydraulic_radius_half": (1e-6, math.inf),
-    "from": (0.0, math.inf),
-    "to": (0.0, math.inf),
-    "area": (1e-12, math.inf),
-    "path_length": (1e-9, math.inf),
-    "basin_slope_pct": (1e-9, math.inf),
-    "curve_number": (1.0, 100.0),
-    "tc_h": (1e-6, math.inf),
-    "impervious_pct": (0.0, 100.0),
-}
-"""What an edited number may be, by column stem."""
-
-
-def apply(
-    now: Mapping[str, pd.DataFrame], record: Record, system: System, periods: Sequence[str]
-) -> tuple[dict[str, pd.DataFrame], set[Cell], set[tuple[str, str]]]:
-    """Check a person's edits and prepare the tables for the hydrology.
+def apply(folder: Path, record: Record, system: System, scheme: Scheme) -> Edited:
+    """Read the tables of a run as they stand, check what a person changed, and prepare them for the hydrology.
 
     Parameters
     ----------
-    now : mapping of str to DataFrame
-        The editable tables as they stand, all cells text (`basinwright.tables.read_csv`).
+    folder : Path
+        The run's folder.
     record : Record
         What the run's manifest keeps.
     system : {"us", "si"}
         Unit system of the project.
-    periods : sequence of str
-        Return periods of the project.
+    scheme : Scheme
+        The project's land-cover scheme: what its classes give need not be filled.
 
     Returns
     -------
-    tables : dict of str to DataFrame
-        The tables for the hydrology: edits in place, every dependent cell that is not held emptied.
-    held : set of tuple
-        The dependent cells that now stand as a person filled them.
-    edited : set of (outlet id, segment)
-        The segments that differ from the base.
+    Edited
 
     Raises
     ------
@@ -153,61 +132,443 @@ def apply(
     """
     import pandas as pd
 
-    problems: list[Problem] = []
+    # The outlets come last: whether one is as the run first wrote it depends on its segments and shares too.
+    editors = [kind(record, system, scheme) for kind in (_SegmentEditor, _ShareEditor, _OutletEditor)]
     tables: dict[str, pd.DataFrame] = {}
-    held = set(record.held)
-    edited: set[tuple[str, str]] = set()
-    for table in EDITABLE:
-        reader = _Reader(table, system, periods)
-        frame, written = now[table.name], record.written[table.name]
-        if problem := _header_problem(reader, list(frame.columns), list(written.columns)):
-            problems.append(problem)
+    edited_outlets: set[str] = set()
+    for editor in editors:
+        now = editor.read(folder / editor.file)
+        if now is None:
             continue
-        kept, changed = _by_outlet(frame, written)
-        ids = set(written["outlet_id"])
-        for outlet_id, rows in changed.items():
-            if outlet_id not in ids:
-                reader.wrong(
-                    rows[0][0],
-                    "outlet_id",
-                    f"{outlet_id!r} is no outlet of this run",
-                    "ids are text: keep them as they were",
-                )
-        written_rows, base_rows = _rows(written), _rows(record.base[table.name])
-        result: dict[str, list[Row]] = {}
-        for outlet_id in written_rows:
-            old, base = written_rows[outlet_id], base_rows[outlet_id]
-            if outlet_id in kept:
-                result[outlet_id] = [dict(row) for row in old]
-            else:
-                rows = changed.get(outlet_id, [])
-                edit = {"outlets": _edit_outlet, "segments": _edit_segments, "cover_shares": _edit_shares}[table.name]
-                result[outlet_id] = edit(reader, outlet_id, rows, old, base, held)
-            if table is SEGMENTS:
-                edited |= _edited(reader, outlet_id, result[outlet_id], base, held)
-            _empty_dependents(reader, table, outlet_id, result[outlet_id], base, held)
-        problems += reader.problems
-        tables[table.name] = pd.DataFrame(
-            [row for rows in result.values() for row in rows], columns=list(written.columns), dtype=object
-        )
-    if problems:
+        rows = editor.apply(now, edited_outlets)
+        edited_outlets |= {outlet_id for outlet_id, _ in editor.edited}
+        columns = list(record.written[editor.table.name].columns)
+        tables[editor.table.name] = pd.DataFrame(rows, columns=columns, dtype=object)
+    if problems := [problem for editor in editors for problem in editor.problems]:
         raise InputRejected(problems)
-    return tables, held, edited
+    return Edited(tables, set[Cell]().union(*(editor.held for editor in editors)), editors[0].edited)
 
 
-def _header_problem(reader: _Reader, now: list[str], written: list[str]) -> Problem | None:
-    if sorted(now) == sorted(written):
-        return None
-    missing, extra = sorted(set(written) - set(now)), sorted(set(now) - set(written))
-    what = "; ".join(
-        part
-        for part in (f"missing {', '.join(missing)}" * bool(missing), f"unknown {', '.join(extra)}" * bool(extra))
-        if part
-    )
-    return Problem(reader.file, "header", what or "a column stands twice", "keep the columns as the run wrote them")
+@dataclass
+class _Line:
+    """A row as it stands now, beside the earlier rows that it is compared with.
+
+    Parameters
+    ----------
+    number : int
+        Its line in the file; the header is line 1.
+    row : dict
+        Its cells.
+    key : str
+        What it is called within its outlet from now on.
+    before : dict
+        The row as last written; for an added row the one that it was cut from, or an empty one.
+    before_key : str
+        What that row was called.
+    first : dict or None
+        The row as the run first wrote it; None where there is none.
+    added : bool
+        Whether it did not stand in the table as last written.
+    """
+
+    number: int
+    row: Row
+    key: str
+    before: Row
+    before_key: str
+    first: Row | None
+    added: bool = False
 
 
-def _rows(frame: pd.DataFrame) -> dict[str, list[Row]]:
+class _Editor:
+    """One table while its edits are checked; everything that is wrong is collected."""
+
+    table: ClassVar[Table]
+    dependent_stems: ClassVar[tuple[str, ...]]
+    """Editable cells that are computed where no person filled them."""
+
+    def __init__(self, record: Record, system: System, scheme: Scheme) -> None:
+        self.record, self.scheme = record, scheme
+        self.file = f"{self.table.name}.csv"
+        self.name = {column.stem: column.name(system) for column in self.table.columns}
+        editable = [column for column in self.table.columns if column.editable]
+        self.dependent = {self.name[stem]: stem for stem in self.dependent_stems}
+        self.independent = [self.name[c.stem] for c in editable if c.stem not in self.dependent_stems]
+        chosen = {*self.dependent, *self.independent, "segment"}
+        self.fixed = [str(name) for name in record.written[self.table.name].columns if name not in chosen]
+        self.limits = {self.name[c.stem]: LIMITS[c.stem] for c in editable if c.type == "number"}
+        self.problems: list[Problem] = []
+        self.held: set[Cell] = set()
+        self.edited: set[tuple[str, str]] = set()
+
+    def match(self, outlet_id: str, now: list[tuple[int, Row]], before: list[Row], first: list[Row]) -> list[_Line]:
+        """Say which earlier row each row of an outlet is to be compared with; none where that makes no sense."""
+        raise NotImplementedError
+
+    def adjust(self, line: _Line, row: Row, filled: Row) -> None:
+        """Check a row that differs from what was written, and which of its filled cells still stand."""
+
+    def finish(self, outlet_id: str, rows: list[Row], first: list[Row]) -> None:
+        """Put the settled rows of an outlet in order among themselves."""
+
+    def wrong(self, line: int, column: str, what: str, fix: str) -> None:
+        """Note a problem."""
+        self.problems.append(Problem(self.file, f"row {line}, {column}", what, fix))
+
+    def number(self, line: int, column: str, text: str) -> float:
+        """Read a number; NaN with a problem noted where it is none or out of its limits."""
+        try:
+            value = float(text)
+        except ValueError:
+            value = math.nan
+        low, high = self.limits[column]
+        if not math.isfinite(value):
+            self.wrong(line, column, f"{text!r} is not a finite number", "write a plain number")
+        elif not low <= value <= high:
+            self.wrong(line, column, f"{text} is out of range", f"give a number from {low:g} to {high:g}")
+        else:
+            return value
+        return math.nan
+
+    def read(self, path: Path) -> list[tuple[int, Row]] | None:
+        """Read the rows that stand in the file with their lines; None, with a problem, where it is no such table."""
+        columns = [str(name) for name in self.record.written[self.table.name].columns]
+        try:
+            with path.open(encoding="utf-8-sig", newline="") as stream:
+                header, *rows = list(csv.reader(stream)) or [[]]
+        except FileNotFoundError:
+            self.problems.append(Problem(self.file, "file", "does not exist", f"put it back into {path.parent}"))
+            return None
+        except (OSError, UnicodeDecodeError, csv.Error) as error:
+            self.problems.append(Problem(self.file, "file", f"cannot be read ({error})", "save it as CSV in UTF-8"))
+            return None
+        header = [name.strip() for name in header]
+        if sorted(header) != sorted(columns):
+            lists = {"missing": sorted(set(columns) - set(header)), "unknown": sorted(set(header) - set(columns))}
+            what = "; ".join(f"{kind} {', '.join(map(repr, names))}" for kind, names in lists.items() if names)
+            fix = "keep the columns, and the commas between them, as the run wrote them"
+            self.problems.append(Problem(self.file, "header", what or "a column stands twice", fix))
+            return None
+        lines = []
+        for number, cells in enumerate(rows, start=2):
+            if len(cells) == len(header):
+                if any(cells):  # spreadsheets leave rows of empty cells at the end
+                    lines.append((number, dict(zip(header, cells, strict=True))))
+            elif cells:
+                what = f"{len(cells)} cells where the header has {len(header)}"
+                self.wrong(number, "cells", what, "keep every comma, and quote a cell that holds one")
+        return lines
+
+    def apply(self, now: Iterable[tuple[int, Row]], edited_elsewhere: set[str]) -> list[Row]:
+        """Return the rows for the hydrology, outlet by outlet in the order of the run."""
+        written, first = (_by_outlet(tables[self.table.name]) for tables in (self.record.written, self.record.first))
+        held, supplied = (_by_row(cells, self.table.name) for cells in (self.record.held, self.record.supplied))
+        standing: dict[str, list[tuple[int, Row]]] = {outlet_id: [] for outlet_id in written}
+        for number, row in now:
+            if row["outlet_id"] in standing:
+                standing[row["outlet_id"]].append((number, row))
+            else:
+                what = f"{row['outlet_id']!r} is no outlet with rows in this table"
+                self.wrong(number, "outlet_id", what, "ids are text: keep each as the run wrote it")
+        every: list[Row] = []
+        for outlet_id, lines in standing.items():
+            matched = self.match(outlet_id, lines, written[outlet_id], first[outlet_id])
+            rows = []
+            for line in matched:
+                given = {self.name[stem] for stem in supplied.get((outlet_id, line.key), set())}
+                stood = {self.name[stem] for stem in held.get((outlet_id, line.before_key), set())}
+                if line.first is not None and self.is_of(line.first, line) and not self.is_of(line.before, line):
+                    line.before, stood = line.first, given  # a copy of the file as the run first wrote it
+                row, filled = self.settle(line, stood)
+                if line.first is not None and outlet_id not in edited_elsewhere:
+                    filled = self.as_first(row, filled, line.first, given)
+                if line.first is None or self.differs(row, filled, line.first, given):
+                    self.edited.add((outlet_id, line.key))
+                row |= {column: filled.get(column, "") for column in self.dependent}
+                self.held |= {(self.table.name, outlet_id, line.key, self.dependent[column]) for column in filled}
+                rows.append(row)
+            if len(rows) != len(first[outlet_id]):
+                self.edited.add((outlet_id, ""))
+            self.finish(outlet_id, rows, first[outlet_id])
+            every += rows
+        return every
+
+    def is_of(self, earlier: Row, line: _Line) -> bool:
+        """Say whether a row was read from the file that held the earlier row: its computed cells are the same."""
+        return line.added or all(same(line.row[column], earlier[column]) for column in self.fixed)
+
+    def settle(self, line: _Line, stood: set[str]) -> tuple[Row, Row]:
+        """Return a row with the edits in it, and those of its dependent cells that stand as given.
+
+        ``stood`` names the dependent columns that did in the row that it is compared with.
+        """
+        now, before = line.row, line.before
+        row, changed = dict(before), line.added
+        for column in () if line.added else self.fixed:
+            if not same(now[column], before[column]):
+                what = f"{now[column]!r} instead of {before[column]!r} in a column that is not to be edited"
+                self.wrong(line.number, column, what, "put the old value back; README lists the columns to edit")
+        for column in self.independent:
+            text = now[column].strip()
+            if same(text, before[column]):
+                text = before[column]
+            else:
+                changed = True
+                if column in self.limits:
+                    self.number(line.number, column, text)
+            row[column] = line.first[column] if line.first is not None and same(text, line.first[column]) else text
+        filled: Row = {}
+        for column in self.dependent:
+            text = now[column].strip()
+            if same(text, before[column]):
+                if text and column in stood:
+                    filled[column] = before[column]
+                continue
+            changed = True
+            if text and column in self.limits:
+                self.number(line.number, column, text)
+            if text:
+                filled[column] = text
+        if changed:
+            self.adjust(line, row, filled)
+        return row, filled
+
+    def as_first(self, row: Row, filled: Row, first: Row, given: set[str]) -> Row:
+        """Return the filled cells; only those that were given at first, where the whole row reads as it did then."""
+        is_as_first = (
+            given <= filled.keys()
+            and all(row[column] == first[column] for column in self.independent)
+            and all(same(text, first[column]) for column, text in filled.items())
+        )
+        return {column: first[column] for column in given} if is_as_first else filled
+
+    def differs(self, row: Row, filled: Row, first: Row, given: set[str]) -> bool:
+        """Say whether a row differs from the first one in anything that a person decides."""
+        return (
+            filled.keys() != given
+            or any(filled[column] != first[column] for column in given)
+            or any(row[column] != first[column] for column in self.independent)
+        )
+
+
+class _OutletEditor(_Editor):
+    """Edits of outlets.csv."""
+
+    table = OUTLETS
+    dependent_stems = ("curve_number", "tc_h")
+
+    def match(self, outlet_id: str, now: list[tuple[int, Row]], before: list[Row], first: list[Row]) -> list[_Line]:
+        """Pair the one row of the outlet with itself; an emptied figure of the terrain is the terrain's again."""
+        if len(now) != 1:
+            where, what = (now[-1][0], "stands more than once") if now else (1, "is missing")
+            self.wrong(where, "outlet_id", f"outlet {outlet_id!r} {what}", "keep one row for each outlet")
+            return []
+        number, row = now[0]
+        for column in self.independent:
+            row[column] = row[column].strip() or first[0][column]
+        return [_Line(number, row, "", before[0], "", first[0])]
+
+    def adjust(self, line: _Line, row: Row, filled: Row) -> None:
+        """Refuse to edit an outlet that the terrain could not serve."""
+        if line.first is not None and not line.first[self.name["area"]]:
+            what, fix = "the outlet failed, so that no edit reaches it", "mend what flags.csv names and run again"
+            self.wrong(line.number, "outlet_id", what, fix)
+
+    def finish(self, outlet_id: str, rows: list[Row], first: list[Row]) -> None:
+        """Count a changed figure of the terrain among the supplied ones."""
+        stems = {name: stem for stem, name in self.name.items()}
+        for row in rows:
+            changed = [column for column in self.independent if row[column] != first[0][column]]
+            self.held |= {(self.table.name, outlet_id, "", stems[column]) for column in changed}
+
+
+class _ShareEditor(_Editor):
+    """Edits of cover_shares.csv."""
+
+    table = COVER_SHARES
+    dependent_stems = ("curve_number", "impervious_pct", "source")
+
+    def match(self, outlet_id: str, now: list[tuple[int, Row]], before: list[Row], first: list[Row]) -> list[_Line]:
+        """Pair patches by what identifies them best, one after another: everything, the area, class and group."""
+        if not now and before:
+            self.wrong(1, "outlet_id", f"outlet {outlet_id!r} has no row left", "keep at least one patch")
+        earlier = self._pairs([row for _, row in now], before)
+        order = sorted(range(len(now)), key=lambda place: (earlier[place] is None, earlier[place] or 0, place))
+        original = self._pairs([now[place][1] for place in order], first)
+        blank = {**dict.fromkeys(before[0], ""), "outlet_id": outlet_id}
+        lines = []
+        for key, (place, at_first) in enumerate(zip(order, original, strict=True), start=1):
+            (number, row), at = now[place], earlier[place]
+            line = _Line(number, row, str(key), blank, "", None if at_first is None else first[at_first], added=True)
+            if at is not None:
+                line.before, line.before_key, line.added = before[at], str(at + 1), False
+            lines.append(line)
+        return lines
+
+    def _pairs(self, rows: Sequence[Row], earlier: Sequence[Row]) -> list[int | None]:
+        pairs: list[int | None] = [None] * len(rows)
+        free = dict.fromkeys(range(len(earlier)))
+        area = self.name["area"]
+        for columns in (("cover", "soil_group", area), (area,), ("cover", "soil_group"), ()):
+            for place, row in enumerate(rows):
+                if pairs[place] is None:
+                    fits = (at for at in free if all(same(row[name], earlier[at][name]) for name in columns))
+                    if (at := next(fits, None)) is not None:
+                        pairs[place] = at
+                        del free[at]
+        return pairs
+
+    def adjust(self, line: _Line, row: Row, filled: Row) -> None:
+        """Check class and group; of a class that the scheme has not, what stands beside it is a person's."""
+        cover, group = self.scheme.find(row["cover"]), row["soil_group"]
+        if cover is None:
+            filled |= {column: line.row[column].strip() for column in self.dependent if line.row[column].strip()}
+        if not row["cover"]:
+            self.wrong(line.number, "cover", "empty", "name the class of the patch")
+        elif cover is None and "curve_number" not in filled:
+            what = f"{row['cover']!r} is no class of the scheme"
+            self.wrong(line.number, "cover", what, "name one of its classes, or give the patch its curve_number")
+        if group not in (*GROUPS, ANY_GROUP):
+            self.wrong(line.number, "soil_group", f"{group!r} is no soil group", f"use one of {', '.join(GROUPS)}")
+        elif group == ANY_GROUP and cover is not None and cover.needs_soil and "curve_number" not in filled:
+            what = f"the curve number of {row['cover']!r} depends on the group"
+            self.wrong(line.number, "soil_group", what, f"use one of {', '.join(GROUPS)}")
+
+
+class _SegmentEditor(_Editor):
+    """Edits of segments.csv."""
+
+    table = SEGMENTS
+    dependent_stems = ("slope", "roughness", "hydraulic_radius", "hydraulic_radius_half")
+    section_stems = ("roughness", "hydraulic_radius", "hydraulic_radius_half")
+    """Dependent cells that mean something else in another regime."""
+
+    def match(self, outlet_id: str, now: list[tuple[int, Row]], before: list[Row], first: list[Row]) -> list[_Line]:
+        """Put the rows in downstream order and pair them by number; a row without one of its own is an added one."""
+        start, end = self.name["from"], self.name["to"]
+        if not now:
+            if before:
+                self.wrong(1, "outlet_id", f"outlet {outlet_id!r} has no row left", "keep at least one segment")
+            return []
+        known = len(self.problems)
+        placed = []
+        for number, row in now:
+            low, high = self.number(number, start, row[start]), self.number(number, end, row[end])
+            if high <= low:
+                what = f"{row[end]} is not beyond {start} {row[start]}"
+                self.wrong(number, end, what, "a segment runs downstream: give it a length over zero")
+            placed.append((low, high, number, row))
+        if len(self.problems) > known:
+            return []
+        placed.sort(key=lambda entry: entry[:3])
+        by_number, by_first = ({row["segment"]: row for row in rows} for rows in (before, first))
+        following = max(map(int, [*by_number, *by_first]))
+        lines: list[_Line] = []
+        taken: set[str] = set()
+        for low, high, number, row in placed:
+            key = row["segment"].strip().removesuffix(".0")
+            own = key not in taken
+            if own and key in by_number:
+                line = _Line(number, row, key, by_number[key], key, by_first.get(key))
+            elif own and key in by_first:
+                line = _Line(number, row, key, by_first[key], key, by_first[key], added=True)
+            else:
+                middle = 0.5 * (low + high)
+                around = next((piece for piece in before if float(piece[end]) >= middle), before[-1])
+                cut_from = by_number.get(key, around)
+                following += 1
+                line = _Line(number, row, str(following), cut_from, cut_from["segment"], None, added=True)
+            row["segment"] = line.before["segment"]
+            taken.add(line.key)
+            lines.append(line)
+        deleted = [row for row in before if row["segment"] not in taken]
+        self._join(lines, deleted, float(first[-1][end]))
+        self._fill(lines, first)
+        return lines
+
+    def _join(self, lines: list[_Line], deleted: list[Row], length: float) -> None:
+        """Let each segment begin where the one above ends: give the length of deleted ones to the next downstream."""
+        start, end, top = self.name["from"], self.name["to"], self.name["top_elevation"]
+        fix = "let each segment begin where the one above ends"
+        before = 0.0
+        for line in lines:
+            row, low = line.row, float(line.row[start])
+            if low < before - _tolerance(before):
+                self.wrong(line.number, start, f"overlaps the segment above, which ends at {before:g}", fix)
+            elif low > before + _tolerance(before):
+                gone = [piece for piece in deleted if float(piece[start]) >= before - _tolerance(before)
+                        and float(piece[end]) <= low + _tolerance(low)]  # fmt: skip
+                covered = sum(float(piece[end]) - float(piece[start]) for piece in gone)
+                if math.isclose(covered, low - before, rel_tol=1e-6):
+                    row[start] = gone[0][start]
+                    if same(row[top], line.before[top]):
+                        row[top] = gone[0][top]
+                else:
+                    self.wrong(line.number, start, f"a gap from {before:g} to {low:g}", fix)
+            before = float(row[end])
+        if abs(before - length) > _tolerance(length):
+            what = f"the path ends at {length:g}, not at {before:g}"
+            self.wrong(lines[-1].number, end, what, "let the last segment reach the outlet")
+
+    def _fill(self, lines: list[_Line], first: list[Row]) -> None:
+        """Find the elevations at the cuts of a split segment, and read those that were emptied off the profile."""
+        start, end = self.name["from"], self.name["to"]
+        top, bottom = self.name["top_elevation"], self.name["bottom_elevation"]
+        for above, below in pairwise(lines):
+            if above.before is not below.before or not (above.added or below.added):
+                continue
+            whole = above.before
+            as_copied = [
+                not line.row[column].strip() or same(line.row[column], whole[column])
+                for line, column in ((above, bottom), (below, top))
+            ]
+            if all(as_copied):
+                at = _profile([whole], (start, end, top, bottom), float(above.row[end]))
+                above.row[bottom] = below.row[top] = at
+            elif as_copied[0]:
+                above.row[bottom] = below.row[top]
+            elif as_copied[1]:
+                below.row[top] = above.row[bottom]
+        for line in lines:
+            for column, at in ((top, start), (bottom, end)):
+                if not line.row[column].strip():
+                    line.row[column] = _profile(first, (start, end, top, bottom), float(line.row[at]))
+            if line.added:
+                for column in ("regime", "cover"):
+                    line.row[column] = line.row[column].strip() or line.before[column]
+
+    def adjust(self, line: _Line, row: Row, filled: Row) -> None:
+        """Check the regime; in another regime only what was filled for it stands; a class must give its roughness."""
+        row["segment"] = line.key
+        regimes = SEGMENTS.column("regime").choices
+        if row["regime"] not in regimes:
+            self.wrong(line.number, "regime", f"{row['regime']!r} is unknown", f"use one of {', '.join(regimes)}")
+        if row["regime"] != line.before["regime"]:
+            for stem in self.section_stems:
+                column = self.name[stem]
+                if column in filled and same(filled[column], line.before[column]):
+                    del filled[column]
+        if row["regime"] in ("sheet", "shallow") and self.scheme.find(row["cover"]) is None:
+            if row["regime"] == line.before["regime"] and line.row["roughness"].strip():
+                filled.setdefault("roughness", line.row["roughness"].strip())
+            if "roughness" not in filled:
+                what = f"{row['cover']!r} is no class of the scheme"
+                self.wrong(line.number, "cover", what, "name one of its classes, or give the segment its roughness")
+
+    def finish(self, outlet_id: str, rows: list[Row], first: list[Row]) -> None:
+        """Close the joints to the last digit, and give sheet flow the roughness that the terrain had weighted."""
+        start, end = self.name["from"], self.name["to"]
+        for above, below in pairwise(rows):
+            below[start] = above[end]
+        if rows:
+            rows[-1][end] = first[-1][end]
+        for row in rows:
+            sheet = first[0]["regime"] == row["regime"] == "sheet" and row["cover"] == first[0]["cover"]
+            if sheet and not row["roughness"]:
+                row["roughness"] = first[0]["roughness"]
+
+
+def _by_outlet(frame: pd.DataFrame) -> dict[str, list[Row]]:
     grouped: dict[str, list[Row]] = {}
     names = [str(name) for name in frame.columns]
     for cells in frame.itertuples(index=False, name=None):
@@ -216,241 +577,23 @@ def _rows(frame: pd.DataFrame) -> dict[str, list[Row]]:
     return grouped
 
 
-def _by_outlet(now: pd.DataFrame, written: pd.DataFrame) -> tuple[set[str], dict[str, list[tuple[int, Row]]]]:
-    """Part the outlets into those whose rows are as written and those that changed, with their line numbers."""
-    now = now[list(written.columns)]
-    old: dict[str, list[tuple[str, ...]]] = {}
-    for cells in written.itertuples(index=False, name=None):
-        old.setdefault(cells[0], []).append(cells)
-    new: dict[str, list[tuple[str, ...]]] = {}
-    lines: dict[str, list[int]] = {}
-    for line, cells in enumerate(now.itertuples(index=False, name=None), start=2):
-        new.setdefault(cells[0], []).append(cells)
-        lines.setdefault(cells[0], []).append(line)
-    kept = {outlet_id for outlet_id, rows in new.items() if old.get(outlet_id) == rows}
-    names = list(written.columns)
-    changed = {
-        outlet_id: [
-            (line, {name: str(cell).strip() for name, cell in zip(names, cells, strict=True)})
-            for line, cells in zip(lines[outlet_id], rows, strict=True)
-        ]
-        for outlet_id, rows in new.items()
-        if outlet_id not in kept
-    }
-    return kept, changed
-
-
-def _settle(
-    reader: _Reader, table: str, row_key: str, line: int, row: Row, old: Row, held: set[Cell], free: Sequence[str] = ()
-) -> Row:
-    """Check one row against what was written and note which dependent cells a person filled or emptied."""
-    settled = dict(row)
-    for column, cell in row.items():
-        if same(cell, old[column]):
-            settled[column] = old[column]
-            continue
-        if column not in reader.editable and column not in free:
-            reader.wrong(
-                line,
-                column,
-                f"{cell!r} instead of {old[column]!r}: not a column to edit",
-                "put the old value back; README, editing, lists the columns",
-            )
-            settled[column] = old[column]
-            continue
-        if column in reader.numbers:
-            reader.check_number(row, column, line)
-        if column in reader.dependents:
-            cell_key = (table, row["outlet_id"], row_key, reader.stem[column])
-            held.add(cell_key) if cell else held.discard(cell_key)
-    return settled
-
-
-def _edit_outlet(
-    reader: _Reader, outlet_id: str, rows: list[tuple[int, Row]], old: list[Row], base: list[Row], held: set[Cell]
-) -> list[Row]:
-    if len(rows) != 1:
-        line = rows[-1][0] if rows else 1
-        what = "stands more than once" if rows else "is missing"
-        reader.wrong(line, "outlet_id", f"outlet {outlet_id!r} {what}", "keep one row for each outlet")
-        return [dict(old[0])]
-    line, row = rows[0]
-    terrain = ("area", "path_length", "basin_slope_pct")
-    for stem in terrain:
-        row[reader.name[stem]] = row[reader.name[stem]] or base[0][reader.name[stem]]  # emptied: as the terrain gave it
-    settled = _settle(reader, "outlets", "", line, row, old[0], held)
-    for stem in terrain:
-        cell = ("outlets", outlet_id, "", stem)
-        held.discard(cell) if same(settled[reader.name[stem]], base[0][reader.name[stem]]) else held.add(cell)
-    return [settled]
-
-
-def _edit_shares(
-    reader: _Reader, outlet_id: str, rows: list[tuple[int, Row]], old: list[Row], base: list[Row], held: set[Cell]
-) -> list[Row]:
-    if not rows:
-        reader.wrong(1, "outlet_id", f"outlet {outlet_id!r} has no row left", "keep at least one patch for each outlet")
-        return [dict(row) for row in old]
-    held -= {key for key in held if key[0] == "cover_shares" and key[1] == outlet_id and int(key[2]) > len(rows)}
-    settled = []
-    for number, (line, row) in enumerate(rows, start=1):
-        reference = old[number - 1] if len(rows) == len(old) else _patch(row, old)
-        for column in ("cover", "soil_group"):
-            if not row[column]:
-                reader.wrong(line, column, "empty", "name the class and the group of the patch")
-        if not row[reader.name["area"]]:
-            reader.wrong(line, reader.name["area"], "empty", "give the area of the patch")
-        settled.append(_settle(reader, "cover_shares", str(number), line, row, reference, held))
-    return settled
-
-
-def _patch(row: Row, old: list[Row]) -> Row:
-    """Return the written row of the same patch; a blank one where a person added it."""
-    for candidate in old:
-        if (candidate["cover"], candidate["soil_group"]) == (row["cover"], row["soil_group"]):
-            return candidate
-    return {**dict.fromkeys(row, ""), "outlet_id": row["outlet_id"]}
-
-
-def _edit_segments(
-    reader: _Reader, outlet_id: str, rows: list[tuple[int, Row]], old: list[Row], base: list[Row], held: set[Cell]
-) -> list[Row]:
-    start, end, top, bottom = (reader.name[stem] for stem in ("from", "to", "top_elevation", "bottom_elevation"))
-    if not rows:
-        if old:
-            reader.wrong(
-                1, "outlet_id", f"outlet {outlet_id!r} has no row left", "keep at least one segment for each outlet"
-            )
-        return [dict(row) for row in old]
-    placed: list[tuple[float, float, int, Row]] = []
-    for line, row in rows:
-        low, high = reader.number(row, start, line, 0.0), reader.number(row, end, line, 0.0)
-        if math.isnan(low) or math.isnan(high):
-            return [dict(row) for row in old]
-        if not high > low:
-            reader.wrong(
-                line,
-                end,
-                f"{row[end]} is not beyond {start} {row[start]}",
-                "a segment runs downstream: give it a length over zero",
-            )
-            return [dict(row) for row in old]
-        placed.append((low, high, line, row))
-    placed.sort(key=lambda entry: entry[:3])
-
-    by_number = {row["segment"]: row for row in old}
-    taken: set[str] = set()
-    following = max(int(number) for number in by_number)
-    settled: list[Row] = []
-    for low, high, line, row in placed:
-        number = row["segment"]
-        if number in by_number and number not in taken:
-            reference, free = by_number[number], tuple[str, ...]()
-        else:  # split off or added: everything in it is the person's, compared with the piece it was cut from
-            if number and number not in by_number and not number.isdigit():
-                reader.wrong(line, "segment", f"{number!r} is not a whole number", "leave it empty for an added row")
-            following += 1
-            number = row["segment"] = str(following)
-            middle = 0.5 * (low + high)
-            reference = {**next((piece for piece in old if float(piece[end]) >= middle), old[-1]), "segment": number}
-            free = tuple(row)
-            row["edited"] = reference["edited"] if not row["edited"] else row["edited"]
-        taken.add(number)
-        fresh = _settle(reader, "segments", number, line, row, reference, held, free)
-        if fresh["regime"] not in SEGMENTS.column("regime").choices:
-            reader.wrong(
-                line,
-                "regime",
-                f"{fresh['regime']!r} is unknown",
-                f"use one of {', '.join(SEGMENTS.column('regime').choices)}",
-            )
-        settled.append(fresh)
-
-    deleted = [row for row in old if row["segment"] not in taken]
-    held -= {key for key in held if key[0] == "segments" and key[1] == outlet_id and key[2] not in taken}
-    before, lift = 0.0, ""
-    for (low, high, line, _), row in zip(placed, settled, strict=True):
-        if low - before > _tolerance(before):
-            gone = [piece for piece in deleted if _within(piece, before, low, start, end)]
-            covered = sum(float(piece[end]) - float(piece[start]) for piece in gone)
-            if not math.isclose(covered, low - before, rel_tol=1e-6):
-                reader.wrong(
-                    line, start, f"a gap from {before:g} to {low:g}", "let each segment begin where the one above ends"
-                )
-            row[start] = gone[0][start] if gone else row[start]
-            row[top] = lift or (gone[0][top] if gone else row[top])
-        elif before - low > _tolerance(before):
-            reader.wrong(
-                line,
-                start,
-                f"overlaps the segment above, which ends at {before:g}",
-                "let each segment begin where the one above ends",
-            )
-        before, lift = high, row[bottom]
-    length = float(base[-1][end])
-    if abs(length - before) > _tolerance(length):
-        reader.wrong(
-            placed[-1][2],
-            end,
-            f"the path ends at {length:g}, not at {before:g}",
-            "let the last segment reach the outlet",
-        )
-    _fill_elevations(settled, base, start, end, top, bottom)
-    return settled
+def _by_row(cells: Iterable[Cell], table: str) -> dict[tuple[str, str], set[str]]:
+    grouped: dict[tuple[str, str], set[str]] = {}
+    for name, outlet_id, row, stem in cells:
+        if name == table:
+            grouped.setdefault((outlet_id, row), set()).add(stem)
+    return grouped
 
 
 def _tolerance(distance: float) -> float:
-    return max(1e-6, 1e-9 * distance)
+    return max(1e-6, _SAME * distance)
 
 
-def _within(piece: Row, low: float, high: float, start: str, end: str) -> bool:
-    return float(piece[start]) >= low - _tolerance(low) and float(piece[end]) <= high + _tolerance(high)
-
-
-def _fill_elevations(rows: list[Row], base: list[Row], start: str, end: str, top: str, bottom: str) -> None:
-    """Read an emptied elevation off the profile of the base."""
-    import numpy as np
-
-    distances = [float(base[0][start]), *(float(row[end]) for row in base)]
-    elevations = [float(base[0][top]), *(float(row[bottom]) for row in base)]
-    for row in rows:
-        for column, at in ((top, start), (bottom, end)):
-            if not row[column]:
-                row[column] = repr(float(np.interp(float(row[at]), distances, elevations)))
-
-
-def _edited(reader: _Reader, outlet_id: str, rows: list[Row], base: list[Row], held: set[Cell]) -> set[tuple[str, str]]:
-    """List the segments of an outlet that differ from its base in a cell that a person may change."""
-    by_number = {row["segment"]: row for row in base}
-    columns = [column for column in reader.editable if column not in reader.dependents]
-    filled = {number for table, its_id, number, _ in held if table == "segments" and its_id == outlet_id}
-    return {
-        (outlet_id, row["segment"])
-        for row in rows
-        if row["segment"] not in by_number
-        or row["segment"] in filled
-        or any(not same(row[column], by_number[row["segment"]][column]) for column in columns)
-    }
-
-
-def _empty_dependents(
-    reader: _Reader, table: Table, outlet_id: str, rows: list[Row], base: list[Row], held: set[Cell]
-) -> None:
-    """Empty the dependent cells that no person filled, so that they are computed."""
-    by_number = {row["segment"]: row for row in base} if table is SEGMENTS else {}
-    shares = {(row["cover"], row["soil_group"]): row for row in base} if table is COVER_SHARES else {}
-    for number, row in enumerate(rows, start=1):
-        key = row["segment"] if table is SEGMENTS else str(number) if table is COVER_SHARES else ""
-        for column in reader.dependents:
-            if (table.name, outlet_id, key, reader.stem[column]) in held:
-                continue
-            if table is SEGMENTS and column == "roughness" and row["regime"] == "sheet":
-                # The roughness of a sheet reach is weighted by length along the path: only the terrain knows it.
-                first = by_number.get(row["segment"], base[0])
-                if first["regime"] == "sheet" and same(first["cover"], row["cover"]):
-                    row[column] = first[column]
-                    continue
-            if table is COVER_SHARES and (row["cover"], row["soil_group"]) in shares:
-                row[column] = shares[row["cover"], row["soil_group"]][column]
-                continue
-            row[column] = ""
+def _profile(rows: Sequence[Row], columns: tuple[str, str, str, str], distance: float) -> str:
+    """Read an elevation off the straight lines between the ends of rows: start, end, top and bottom columns."""
+    start, end, top, bottom = columns
+    row = rows[min(bisect_left(rows, distance, key=lambda row: float(row[end])), len(rows) - 1)]
+    low, high, above, below = (float(row[column]) for column in (start, end, top, bottom))
+    if distance in (low, high):
+        return row[top] if distance == low else row[bottom]
+    return repr(above + (below - above) * (distance - low) / (high - low))

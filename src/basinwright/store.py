@@ -4,9 +4,9 @@
 (file hashes, options, keys of earlier stages); its outputs lie under that key in the run's store. A stage whose key
 is there already is not run again: ``--resume`` and repeated runs follow from that, and nothing else caches.
 
-**Publishing.** A run is built in ``.NAME.partial`` beside its final folder ``NAME``. When all of it stands, ``run.json``
-last, the folder is renamed into place; a folder that it replaces steps aside as ``.NAME.previous`` until the new
-one stands. `RunFolder.recover` puts right whatever a crash left.
+**Publishing.** A run is built in ``.NAME.partial`` beside its final folder ``NAME``. When all of it stands, the file
+``run.json`` last, the folder is renamed into place; a folder that it replaces steps aside as ``.NAME.previous`` until
+the new one stands. `RunFolder.recover` puts right whatever a crash left.
 """
 
 from __future__ import annotations
@@ -176,7 +176,7 @@ class Store:
         make : callable
             Computes and writes the outputs into the draft that it is handed.
         """
-        key = hashlib.sha256(canonical([name, code_version(), depends_on])).hexdigest()[:20]
+        key = _key(name, depends_on)
         final = self.folder / f"{name}-{key}"
         started = time.perf_counter()
         reused = final.is_dir() or self._take_over(final)
@@ -184,7 +184,7 @@ class Store:
         if not reused:
             self.on_stage(title)
             self.folder.mkdir(parents=True, exist_ok=True)
-            draft = self.folder / f"{name}-{key}.draft"
+            draft = _draft(final)
             shutil.rmtree(draft, ignore_errors=True)
             draft.mkdir()
             _reset_peak_memory()
@@ -193,6 +193,22 @@ class Store:
             draft.rename(final)
         self.records.append(StageRecord(name, key, reused, time.perf_counter() - started, peak))
         return Entry(name, key, final)
+
+    @contextmanager
+    def watched(self, name: str, title: str, depends_on: Mapping[str, Any]) -> Iterator[None]:
+        """Record a stage whose results are files of the run itself: it runs every time, and the store keeps nothing.
+
+        Parameters
+        ----------
+        name, title, depends_on
+            As in `stage`.
+        """
+        self.on_stage(title)
+        started = time.perf_counter()
+        _reset_peak_memory()
+        yield
+        seconds = time.perf_counter() - started
+        self.records.append(StageRecord(name, _key(name, depends_on), False, seconds, _peak_memory_mb()))
 
     def _take_over(self, final: Path) -> bool:
         source = self.earlier / final.name if self.earlier else None
@@ -207,6 +223,10 @@ class Store:
         for entry in self.folder.iterdir() if self.folder.is_dir() else ():
             if entry.name not in used:
                 shutil.rmtree(entry)
+
+
+def _key(name: str, depends_on: Mapping[str, Any]) -> str:
+    return hashlib.sha256(canonical([name, code_version(), depends_on])).hexdigest()[:20]
 
 
 def _reset_peak_memory() -> None:
@@ -232,11 +252,15 @@ def link_tree(source: Path, target: Path) -> None:
         except OSError:
             shutil.copy2(a, b)
 
-    draft = target.with_name(f"{target.name}.draft")
+    draft = _draft(target)
     shutil.rmtree(draft, ignore_errors=True)
     draft.parent.mkdir(parents=True, exist_ok=True)
     shutil.copytree(source, draft, copy_function=link)
     draft.rename(target)
+
+
+def _draft(target: Path) -> Path:
+    return target.with_name(f"{target.name}.draft")
 
 
 class RunFolder:
@@ -249,10 +273,14 @@ class RunFolder:
     """
 
     def __init__(self, final: Path) -> None:
-        self.final = Path(os.path.abspath(final))
-        self.partial = self.final.with_name(f".{self.final.name}.partial")
-        self.previous = self.final.with_name(f".{self.final.name}.previous")
-        self._lock = self.final.with_name(f".{self.final.name}.lock")
+        self.final = Path(os.path.realpath(final))
+        self.partial = self._beside("partial")
+        self.previous = self._beside("previous")
+        self._lock = self._beside("lock")
+        self._made: list[Path] = []
+
+    def _beside(self, what: str) -> Path:
+        return self.final.with_name(f".{self.final.name}.{what}")
 
     @contextmanager
     def locked(self) -> Iterator[None]:
@@ -273,7 +301,7 @@ class RunFolder:
     def _hold(self) -> IO[str]:
         while True:
             try:
-                self.final.parent.mkdir(parents=True, exist_ok=True)
+                self._make(self.final.parent)
                 stream = self._lock.open("w")
             except OSError as error:
                 raise self._no_place(error) from None
@@ -281,8 +309,8 @@ class RunFolder:
                 fcntl.flock(stream, fcntl.LOCK_EX | fcntl.LOCK_NB)
             except OSError:
                 stream.close()
-                place, what = str(self.final), "another run is writing this folder"
-                raise InputRejected.one(place, "--out", what, "wait for it, or choose another folder") from None
+                what = "another run is writing this folder"
+                raise InputRejected.one(str(self.final), "folder", what, "wait for it, or choose another") from None
             try:
                 if os.path.samestat(os.fstat(stream.fileno()), self._lock.stat()):
                     return stream
@@ -290,11 +318,16 @@ class RunFolder:
                 pass  # its last holder took it away while we waited: take a new one
             stream.close()
 
+    def _make(self, folder: Path) -> None:
+        """Make a folder and those above it, and remember them."""
+        missing = [place for place in (folder, *folder.parents) if not place.exists()]
+        for place in reversed(missing):
+            place.mkdir(exist_ok=True)
+            self._made.append(place)
+
     def _no_place(self, error: OSError) -> InputRejected:
         reason = error.strerror or str(error)
-        return InputRejected.one(
-            str(self.final), "--out", f"cannot be written ({reason})", "choose another folder with --out"
-        )
+        return InputRejected.one(str(self.final), "folder", f"cannot be written ({reason})", "choose another place")
 
     def recover(self) -> None:
         """Put right what a crash left: the new run if it was complete, else the one before it."""
@@ -302,6 +335,16 @@ class RunFolder:
             complete = (self.partial / MANIFEST).is_file()
             (self.partial if complete else self.previous).rename(self.final)
         self._drop_previous()
+
+    def refuse_absent(self) -> None:
+        """Refuse a folder that is not there, nor left aside by a crash.
+
+        Raises
+        ------
+        InputRejected
+        """
+        if not (self.final.is_dir() or self.previous.is_dir()):
+            raise InputRejected.one(str(self.final), MANIFEST, "does not exist", "name the folder of a finished run")
 
     def refuse_occupied(self, *, resume: bool, overwrite: bool) -> None:
         """Refuse a folder that holds something that this run may not replace.
@@ -315,25 +358,22 @@ class RunFolder:
         if not self.final.exists():
             return
         if not self.final.is_dir():
-            raise InputRejected.one(final, "--out", "is a file", "choose another folder")
-        if (self.final / MANIFEST).is_file():
+            raise InputRejected.one(final, "folder", "is a file", "choose another place")
+        if self._files_of(self.final) is not None:
             if not (resume or overwrite):
-                raise InputRejected.one(
-                    final,
-                    "--out",
-                    "holds a run",
-                    "add --resume to continue it, --overwrite to replace it, or choose another folder",
-                )
+                fix = "add --resume to continue it, --overwrite to replace it, or choose another folder"
+                raise InputRejected.one(final, "folder", "holds a run", fix)
         elif any(self.final.iterdir()):
-            raise InputRejected.one(final, "--out", "holds files that are no run", "choose an empty or a new folder")
+            raise InputRejected.one(final, "folder", "holds files that are no run", "choose an empty or a new folder")
 
     def begin(self, *, keep: bool) -> Path:
         """Return the folder to build in, emptied of all but the store (and of that too unless ``keep``)."""
+        shutil.rmtree(_draft(self.partial), ignore_errors=True)
         try:
             for entry in self.partial.iterdir() if self.partial.is_dir() else ():
                 if not (keep and entry.name == STORE):
                     shutil.rmtree(entry) if entry.is_dir() else entry.unlink()
-            self.partial.mkdir(parents=True, exist_ok=True)
+            self.partial.mkdir(exist_ok=True)
         except OSError as error:
             raise self._no_place(error) from None
         return self.partial
@@ -344,6 +384,14 @@ class RunFolder:
         link_tree(self.final, self.partial)
         (self.partial / MANIFEST).unlink()
         return self.partial
+
+    def discard(self) -> None:
+        """Take away what was built, and the folders that were made for it."""
+        shutil.rmtree(self.partial, ignore_errors=True)
+        self._lock.unlink(missing_ok=True)
+        with suppress(OSError):  # somebody else has put something there by now
+            while self._made:
+                self._made.pop().rmdir()
 
     def publish(self) -> None:
         """Put what was built in place.
@@ -361,27 +409,42 @@ class RunFolder:
                 self.final.rename(self.previous)
             self.partial.rename(self.final)
         except OSError as error:
-            self.recover()
+            if self.previous.exists() and not self.final.exists():
+                self.previous.rename(self.final)
             raise PublishError(f"{self.final}: could not be put in place ({error})") from None
         self._drop_previous()
 
     def _drop_previous(self) -> None:
         """Drop the run that was replaced, but hand on what other people had put into its folder."""
-        if not (self.previous.is_dir() and self.final.is_dir()):
-            return
+        dropped = self._beside("dropped")
+        if self.previous.is_dir() and self.final.is_dir():
+            ours = self._files_of(self.previous) or set()
+            for entry in list(self.previous.iterdir()):
+                if entry.name not in ours:
+                    entry.rename(_free_name(self.final / entry.name))
+            self.previous.rename(dropped)
+        shutil.rmtree(dropped, ignore_errors=True)
+
+    @staticmethod
+    def _files_of(folder: Path) -> set[str] | None:
+        """Return what the run in a folder wrote there, by its manifest; None where the folder holds no run."""
         try:
-            ours = set(json.loads((self.previous / MANIFEST).read_text(encoding="utf-8"))["files"])
-        except (OSError, ValueError, KeyError):
-            ours = {entry.name for entry in self.previous.iterdir()}
-        for entry in self.previous.iterdir():
-            if entry.name not in ours and not (self.final / entry.name).exists():
-                entry.rename(self.final / entry.name)
-        shutil.rmtree(self.previous)
+            about = json.loads((folder / MANIFEST).read_text(encoding="utf-8"))
+            return set(about["files"]) | {MANIFEST} if "basinwright" in about else None
+        except (OSError, ValueError, KeyError, TypeError):
+            return None
+
+
+def _free_name(path: Path) -> Path:
+    """Return the path, or one like it that is not taken."""
+    while path.exists():
+        path = path.with_name(f"{path.name}.kept")
+    return path
 
 
 def _flush(folder: Path) -> None:
-    """Have the manifest and the folder on the disk before anything is renamed."""
-    for path in (folder / MANIFEST, folder):
+    """Have the files of a run on the disk before anything is renamed; its store can be computed again."""
+    for path in (*(path for path in folder.rglob("*") if STORE not in path.parts and path.is_file()), folder):
         handle = os.open(path, os.O_RDONLY)
         try:
             os.fsync(handle)

@@ -31,6 +31,18 @@ if TYPE_CHECKING:
     from basinwright.pipeline.terrain_half import TerrainHalf
 
 FORMAT = 1
+_NEEDED = (
+    "project",
+    "scheme",
+    "storm_tables",
+    "terrain_flags",
+    "time_area",
+    "edits",
+    "stages",
+    "summary_only",
+    "files",
+)
+"""What `retime` reads."""
 LIBRARIES = ("numpy", "numba", "pandas", "rasterio", "fiona", "pyogrio", "geopandas", "shapely", "pyproj", "pysheds")
 
 
@@ -39,9 +51,9 @@ def describe(
     half: TerrainHalf,
     store: Store,
     record: Record,
+    time_area: pd.DataFrame,
     terrain_flags: list[Flag],
     results: Results,
-    hydrology_seconds: float,
     summary_only: bool,
 ) -> dict[str, Any]:
     """Return the manifest of a run as plain values."""
@@ -58,21 +70,19 @@ def describe(
         "inputs": [inputs.describe(source) for source in inputs.sources()],
         "project": project.resolved(),
         "grid": half.grid.describe(),
-        "alignment": half.alignment,
+        "alignment": [*half.alignment, *inputs.alignment()],
         "terrain": half.facts(),
         "supplied_points": [
             [x, y] if math.isfinite(x) and math.isfinite(y) else None
             for x, y in zip(inputs.x.tolist(), inputs.y.tolist(), strict=True)
         ],  # in the working CRS, in the order of outlets.csv
-        "stages": [
-            *(stage.describe() for stage in store.records),
-            {"stage": "hydrology", "runs": 1, "seconds": round(hydrology_seconds, 3)},
-        ],
+        "stages": [stage.describe() for stage in store.records],
         "summary_only": summary_only,
         **_counts(results),
         "scheme": {"name": inputs.scheme.name, "classes": inputs.scheme.to_rows()},
         "storm_tables": inputs.design.tables,
         "terrain_flags": [list(flag) for flag in terrain_flags],
+        "time_area": _packed(time_area),
         "edits": _record(record),
     }
 
@@ -117,8 +127,10 @@ def read(folder: Path) -> dict[str, Any]:
         raise InputRejected.one(str(folder), MANIFEST, "does not exist", "name the folder of a finished run") from None
     except ValueError as error:
         raise InputRejected.one(str(path), "file", f"is not valid JSON ({error})", "restore it or run again") from None
-    if about.get("format") != FORMAT:
+    if not isinstance(about, dict) or about.get("format") != FORMAT:
         raise InputRejected.one(str(path), "format", "is of another version of basinwright", "run the project again")
+    if missing := [key for key in _NEEDED if key not in about]:
+        raise InputRejected.one(str(path), "file", f"lacks {', '.join(missing)}", "restore it or run again")
     return about
 
 
@@ -133,6 +145,11 @@ def settings(about: Mapping[str, Any]) -> tuple[Project, Settings]:
 def terrain_flags(about: Mapping[str, Any]) -> list[Flag]:
     """Return what the terrain half had flagged."""
     return [Flag(*row) for row in about["terrain_flags"]]
+
+
+def time_area(about: Mapping[str, Any]) -> pd.DataFrame:
+    """Return the time-area curves, which no person edits."""
+    return _unpacked(about["time_area"])
 
 
 def _record(record: Record) -> dict[str, Any]:

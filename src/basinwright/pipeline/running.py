@@ -2,15 +2,13 @@
 
 from __future__ import annotations
 
-import os
 import shutil
-import time
 from collections.abc import Callable, Mapping
 from importlib.resources import files
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from basinwright.errors import BasinwrightError, InputRejected, Problem, PublishError
+from basinwright.errors import BasinwrightError, InputRejected, PublishError
 from basinwright.hydrology import Columns, Settings, compute
 from basinwright.outputs.summary import Outcome
 from basinwright.store import STORE, RunFolder, Store
@@ -74,13 +72,16 @@ def run(
     folder.refuse_occupied(resume=resume, overwrite=overwrite)
     say(f"Checking {project_file}")
     inputs = inspect(project_file)
+    if jobs is not None:
+        compute_section = inputs.project.compute.model_copy(update={"jobs": jobs})
+        inputs.project = inputs.project.model_copy(update={"compute": compute_section})
     with folder.locked():
         folder.refuse_occupied(resume=resume, overwrite=overwrite)
         partial = folder.begin(keep=resume)
         try:
-            outcome = _build(inputs, folder, partial, jobs, resume, summary_only, say)
+            outcome = _build(inputs, folder, partial, resume, summary_only, say)
         except InputRejected:
-            shutil.rmtree(partial, ignore_errors=True)
+            folder.discard()
             raise
         except OSError as error:
             raise PublishError(_no_room(folder.final, error)) from error
@@ -90,19 +91,17 @@ def run(
 
 def _no_room(place: Path, error: OSError) -> str:
     reason = error.strerror or str(error)
-    return f"{place}: --out: cannot be written ({reason}): make room or choose another folder, then add --resume"
+    return f"{place}: folder: cannot be written ({reason}): make room, then repeat the command (run: with --resume)"
 
 
-def _build(
-    inputs: Inputs, folder: RunFolder, partial: Path, jobs: int | None, resume: bool, summary_only: bool, say: Say
-) -> Outcome:
+def _build(inputs: Inputs, folder: RunFolder, partial: Path, resume: bool, summary_only: bool, say: Say) -> Outcome:
     """Build the run in its partial folder, the manifest last."""
     from basinwright import editing
     from basinwright.outputs import writing
     from basinwright.pipeline import geometry, manifest, second_opinion, terrain_half
+    from basinwright.report import write_report
     from basinwright.tables import read_csv
 
-    os.environ["NUMBA_NUM_THREADS"] = str(jobs if jobs is not None else inputs.project.compute.jobs)
     project = inputs.project
     store = Store(partial / STORE, folder.final / STORE if resume else None, say)
     half = terrain_half.run(inputs, store)
@@ -111,13 +110,21 @@ def _build(
         flags += second_opinion.audit(inputs, half, store)
     shapes = None if summary_only else geometry.shapes(inputs, half, store)
 
-    say("Timing, runoff and hydrographs")
-    started = time.perf_counter()
     base = {table.name: read_csv(half.tables.folder / f"{table.name}.csv") for table in editing.EDITABLE}
     held: set[Cell] = {(table, outlet_id, row, stem) for table, outlet_id, row, stem in half.tables.values("held")}
-    settings = Settings(project, inputs.scheme, inputs.storm)
-    results = compute(base, settings, terrain_flags=flags, held=held, series=not summary_only)
-    seconds = time.perf_counter() - started
+    settings = Settings(project, inputs.scheme, inputs.design.storm, inputs.design.ddf)
+    time_area = read_csv(half.time_area.folder / "time_area.csv")
+    depends_on = {
+        "tables": [half.tables.key, half.time_area.key],
+        "flags": [list(flag) for flag in flags],
+        "options": project.model_dump(mode="json", exclude={"audit", "compute"}),
+        "storm": inputs.design.tables,
+        "series": not summary_only,
+    }
+    with store.watched("hydrology", "Timing, runoff and hydrographs", depends_on):
+        results = compute(
+            {**base, "time_area": time_area}, settings, terrain_flags=flags, held=held, series=not summary_only
+        )
 
     say("Writing tables, layers and rasters")
     writing.write_tables(partial, results.tables, project)
@@ -125,8 +132,12 @@ def _build(
         shapes.write(partial / "basins.gpkg", results.tables, project)
         writing.write_terrain(partial / "terrain", half.grid, half.routed())
     store.prune()
-    record = editing.Record(base, _as_frames(results.tables), held)
-    about = manifest.describe(inputs, half, store, record, flags, results, seconds, summary_only)
+    first = _as_frames(results.tables)
+    record = editing.Record(first, first, supplied=held, held=held)
+    about = manifest.describe(inputs, half, store, record, time_area, flags, results, summary_only)
+    if not summary_only:
+        say("Writing the report")
+        write_report(partial, about, jobs=project.compute.jobs, say=say)
     manifest.write(partial, about)
     return Outcome(folder.final, project, results.tables["outlets"], results.flags)
 
@@ -163,25 +174,27 @@ def retime(run_dir: Path, *, say: Say = _silent) -> Outcome:
     from basinwright import editing
     from basinwright.outputs import writing
     from basinwright.pipeline import geometry, manifest
-    from basinwright.tables import read_csv
+    from basinwright.report import write_report
 
     folder = RunFolder(run_dir)
+    folder.refuse_absent()
     with folder.locked():
         about = manifest.read(folder.final)
         project, settings = manifest.settings(about)
-        missing = [table.name for table in editing.EDITABLE if not (folder.final / f"{table.name}.csv").is_file()]
-        if missing:
-            raise InputRejected(
-                Problem(str(folder.final / f"{name}.csv"), "file", "does not exist", "put it back") for name in missing
-            )
         say("Reading the tables")
         record = manifest.record(about)
-        now = {table.name: read_csv(folder.final / f"{table.name}.csv") for table in editing.EDITABLE}
-        tables, held, edited = editing.apply(now, record, project.project.units, project.storm.periods)
+        edits = editing.apply(folder.final, record, project.project.units, settings.scheme)
         say("Timing, runoff and hydrographs")
         summary_only = bool(about["summary_only"])
         flags = manifest.terrain_flags(about)
-        results = compute(tables, settings, terrain_flags=flags, held=held, edited=edited, series=not summary_only)
+        results = compute(
+            {**edits.tables, "time_area": manifest.time_area(about)},
+            settings,
+            terrain_flags=flags,
+            held=edits.held,
+            edited=edits.segments,
+            series=not summary_only,
+        )
         say("Writing")
         try:
             partial = folder.begin_copy()
@@ -192,12 +205,71 @@ def retime(run_dir: Path, *, say: Say = _silent) -> Outcome:
                 shapes.write(partial / "basins.gpkg", results.tables, project)
             elif (partial / "basins.gpkg").exists():
                 say("basins.gpkg is left as it was: the run's store is not there")
-            updated = manifest.retimed(about, editing.Record(record.base, _as_frames(results.tables), held), results)
-            manifest.write(partial, updated)
+            record = editing.Record(record.first, _as_frames(results.tables), record.supplied, edits.held)
+            about = manifest.retimed(about, record, results)
+            if not summary_only:
+                say("Writing the report")
+                write_report(partial, about, jobs=project.compute.jobs, say=say)
+            manifest.write(partial, about)
         except OSError as error:
             raise PublishError(_no_room(folder.final, error)) from error
         folder.publish()
     return Outcome(folder.final, project, results.tables["outlets"], results.flags)
+
+
+def report(run_dir: Path, outlet_id: str | None = None, *, say: Say = _silent) -> Path:
+    """Make the report of a finished run again, or the page of one of its outlets alone.
+
+    Parameters
+    ----------
+    run_dir : Path
+        The run's folder.
+    outlet_id : str, optional
+        The outlet whose page is wanted; the whole report where not given.
+    say : callable
+        Told what is happening.
+
+    Returns
+    -------
+    Path
+        The page to open.
+
+    Raises
+    ------
+    InputRejected
+        Where the folder holds no run, or no such outlet, or tables that were edited and not computed again.
+    PublishError
+        Where the report could not be put in place; the folder is then as it was.
+    """
+    from basinwright.pipeline import manifest
+    from basinwright.report import write_outlet_page, write_report
+    from basinwright.tables import read_csv
+
+    folder = RunFolder(run_dir)
+    folder.refuse_absent()
+    with folder.locked():
+        about = manifest.read(folder.final)
+        for name, written in manifest.record(about).written.items():
+            path = folder.final / f"{name}.csv"
+            if path.is_file() and not read_csv(path).equals(written):
+                what, fix = "was edited after it was computed", f"run: basinwright retime {run_dir}"
+                raise InputRejected.one(str(path), "file", what, fix)
+        say("Writing the report")
+        try:
+            partial = folder.begin_copy()
+            if outlet_id is None:
+                write_report(partial, about, jobs=int(about["project"]["compute"]["jobs"]), say=say)
+                page = Path("report", "index.html")
+            else:
+                page = write_outlet_page(partial, about, outlet_id).relative_to(partial)
+            manifest.write(partial, about)
+        except InputRejected:
+            folder.discard()
+            raise
+        except OSError as error:
+            raise PublishError(_no_room(folder.final, error)) from error
+        folder.publish()
+    return folder.final / page
 
 
 def check(project_file: Path) -> list[str]:

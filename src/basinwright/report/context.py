@@ -308,6 +308,7 @@ def alignment(run: Run) -> list[tuple[str, str]]:
     return [
         (plain(_base_name(entry["path"])), plain(f"{entry['crs']}: {entry['method']}"))
         for entry in run.about["alignment"]
+        if "path" in entry  # soils of one group everywhere have none
     ]
 
 
@@ -324,7 +325,7 @@ def sources(run: Run) -> list[tuple[str, str, str]]:
         find("unit_hydrograph", project["unit_hydrograph"]["shape"]),
         find("storm", project["storm"]["distribution"]),
     )
-    used = [("Unit hydrograph", uh.source), ("Storm distribution", storm.source)]
+    used = [(uh.name, uh.source), (f"Storm: {storm.name}", storm.source)]
     tables = {"Shallow concentrated flow": "shallow_flow_neh", "Sheet-flow roughness": "sheet_roughness_tr55"}
     if project["channel"]["bankfull_region"] != "own":
         tables["Bankfull width and depth"] = "bankfull_bieger_2015"
