@@ -1,5 +1,10 @@
 """The same ground given in other ways: other CRS, raster or polygons, tiles. The tables are the same."""
 
+import hashlib
+import json
+import shutil
+from pathlib import Path
+
 import geopandas as gpd
 import numpy as np
 import pytest
@@ -149,3 +154,56 @@ def test_a_plane_in_web_mercator_is_brought_to_true_sizes(tmp_path):
     outlet = read_table(folder, "outlets")[0]
     true_km2 = 59 * 41 * cell**2 / 2 / 1e6
     assert float(outlet["area_km2"]) == pytest.approx(true_km2, rel=0.03)
+
+
+def soils_layer(path, groups=("B", "C")):
+    west, east = ORIGIN[0] - 100.0, ORIGIN[0] + COLS * 10.0 + 100.0
+    middle, south, north = ORIGIN[1] - 10.0 * ROWS / 2, ORIGIN[1] - 10.0 * ROWS - 100.0, ORIGIN[1] + 100.0
+    shapes = [box(west, middle, east, north), box(west, south, east, middle)]
+    gpd.GeoDataFrame({"hsg": list(groups)}, geometry=shapes, crs="EPSG:32614").to_file(path)
+
+
+@pytest.mark.parametrize("name", ["soils.shp", "soils.gdb"])
+def test_layers_of_several_files(tmp_path, plain, name):
+    """All files of a layer are hashed: with --resume a change of the attributes alone is seen."""
+    file = project(tmp_path, soils={"group": None, "vector": name, "field": "hsg"})
+    soils_layer(tmp_path / name)
+    assert tables(file) == plain[1]
+    about = json.loads((tmp_path / "out" / "run.json").read_text())
+    listed = next(entry for entry in about["inputs"] if entry["path"].endswith(name))
+    parts = {Path(part["path"]) for part in listed["parts"]} | {Path(listed["path"])}
+    on_disk = (
+        set((tmp_path / name).iterdir())
+        if name.endswith("gdb")
+        else set(tmp_path.glob("soils.*")) - {tmp_path / "soils.tif"}
+    )
+    assert parts - {tmp_path / name} == on_disk - {tmp_path / name}
+    for part in listed["parts"]:
+        assert part["sha256"] == hashlib.sha256(Path(part["path"]).read_bytes()).hexdigest()
+
+    if name.endswith("gdb"):
+        shutil.rmtree(tmp_path / name)
+    soils_layer(tmp_path / name, ("B", "D"))
+    folder = pipeline.run(file, resume=True).folder
+    assert {row["soil_group"] for row in read_table(folder, "cover_shares")} == {"B", "D"}
+
+
+def test_resume_sees_a_new_capacity_basis(tmp_path):
+    file = make_project(
+        tmp_path, valley(), {"A": (58, 20)}, columns={"cap_m3s": {"A": 2.0}, "basis": {"A": "top of road"}},
+        overrides={"outlets": {"capacity": "cap_m3s", "capacity_basis": "basis"}},
+    )  # fmt: skip
+    pipeline.run(file, summary_only=True)
+    points = tmp_path / "outlets.csv"
+    points.write_text(points.read_text().replace("top of road", "HW/D = 1.2"))
+    folder = pipeline.run(file, resume=True, summary_only=True).folder
+    assert read_table(folder, "outlets")[0]["capacity_basis"] == "HW/D = 1.2"
+
+
+def test_manifest_says_how_every_input_was_aligned(tmp_path, plain):
+    folder, _ = plain
+    about = json.loads((folder / "run.json").read_text())
+    methods = {entry["path"]: entry["method"] for entry in about["alignment"]}
+    assert methods == {
+        "dem.tif": "native", "cover.tif": "native", "soils.tif": "native", "outlets.csv": "points, to EPSG:32614",
+    }  # fmt: skip

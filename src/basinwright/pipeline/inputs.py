@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import difflib
+import hashlib
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
 from functools import partial
@@ -23,6 +24,7 @@ from basinwright.units import UNITS, unit_of_suffix
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
+    from basinwright.grid import Grid
     from basinwright.io.elevation import TerrainPlan
     from basinwright.io.vectors import PointTable
     from basinwright.schemes import Scheme
@@ -46,7 +48,9 @@ class Inputs:
     plan : TerrainPlan
         The working grid and how the terrain comes onto it.
     points : PointTable
-        The outlets.
+        The outlets, in the working CRS.
+    points_alignment : dict
+        How they came into it.
     points_source : Source
         The file they come from.
     x, y : (n,) arrays
@@ -72,6 +76,7 @@ class Inputs:
     dem: list[Source]
     plan: TerrainPlan
     points: PointTable
+    points_alignment: dict[str, Any]
     points_source: Source
     x: NDArray[np.float64]
     y: NDArray[np.float64]
@@ -98,20 +103,62 @@ class Inputs:
             *(folder / name for name in tables if name is not None),
         ]
 
+    def alignment(self) -> list[dict[str, Any]]:
+        """Say how the outlets and the rasters that are averaged over basins come onto the grid."""
+        from basinwright.io.rasters import align_record
+
+        grid = self.plan.grid
+        shares = [] if self.impervious is None else [align_record(self.impervious, grid)]
+        depths = [align_record(raster, grid, "bilinear") for raster in self.depth_rasters.values()]
+        return [self.points_alignment, *shares, *depths]
+
     def sha256(self, *sources: Source | None) -> list[str]:
-        """Return the hashes of files, or the addresses of remote ones."""
-        return [self.describe(source)["sha256"] for source in sources if source is not None]
+        """Return the hashes of files and of what belongs to them, or the addresses of remote ones."""
+        described = [self.describe(source) for source in sources if source is not None]
+        return [part["sha256"] for about in described for part in (about, *about.get("parts", ()))]
 
     def describe(self, source: Source) -> dict[str, Any]:
-        """Return path, size and hash of an input, read once."""
+        """Return path, size and hash of an input, read once; where it is of several files, those of each part too."""
         name = str(source)
         if name not in self.files:
             if isinstance(source, Path):
-                about = {"path": name, "bytes": source.stat().st_size, "sha256": file_sha256(source)}
+                about = _described(source)
             else:
                 about = {"path": name, "bytes": None, "sha256": f"remote:{name}"}
             self.files[name] = about
         return self.files[name]
+
+
+def _points_alignment(points: PointTable, grid: Grid) -> dict[str, Any]:
+    from pyproj import CRS
+
+    from basinwright.io.rasters import crs_label
+
+    return {
+        "path": Path(points.file).name,
+        "features": len(points),
+        "crs": crs_label(CRS.from_wkt(points.crs_wkt)),
+        "method": f"points, to {crs_label(grid.crs)}",
+    }
+
+
+BESIDE = (".shx", ".dbf", ".prj", ".cpg", ".qpj", ".hdr", ".tfw", ".wld", ".aux")
+"""Endings of the files that hold part of a layer of the same name: attributes, CRS, georeference."""
+
+
+def _described(source: Path) -> dict[str, Any]:
+    """Return path, size and hash of a file or folder, and of each of its parts."""
+
+    def one(path: Path) -> dict[str, Any]:
+        return {"path": str(path), "bytes": path.stat().st_size, "sha256": file_sha256(path)}
+
+    if source.is_dir():
+        parts = [one(path) for path in sorted(source.rglob("*")) if path.is_file()]
+        digest = hashlib.sha256("".join(part["sha256"] for part in parts).encode()).hexdigest()
+        return {"path": str(source), "bytes": sum(p["bytes"] for p in parts), "sha256": digest, "parts": parts}
+    beside = [source.with_suffix(ending) for ending in BESIDE] + [source.with_name(f"{source.name}.aux.xml")]
+    parts = [one(path) for path in beside if path != source and path.is_file()]
+    return {**one(source), "parts": parts} if parts else one(source)
 
 
 class _Problems:
@@ -174,7 +221,9 @@ def inspect(file: Path) -> Inputs:
     }
     percent = {key: _raster(project, file, key, text, plan, problems) for key, text in rasters.items() if text}
     x = y = np.empty(0)
+    aligned: dict[str, Any] = {}
     if points is not None and plan is not None:
+        aligned = _points_alignment(points, plan.grid)
         points = points.in_crs(plan.grid.crs_wkt)
         x, y = np.asarray(points.x, dtype=np.float64), np.asarray(points.y, dtype=np.float64)
         rows, _ = plan.grid.rowcol(x, y)
@@ -200,6 +249,7 @@ def inspect(file: Path) -> Inputs:
         dem=dem,
         plan=plan,
         points=points,
+        points_alignment=aligned,
         points_source=points_source,
         x=x,
         y=y,
@@ -248,7 +298,7 @@ def _source(project: Project, file: Path, key: str, text: str, problems: _Proble
         problems.add(file.name, key, f"{text!r} is a URL or a virtual path", fix)
         return None
     path = file.absolute().parent / text
-    if not path.is_file():
+    if not path.exists():  # a folder may be a layer: a file geodatabase
         problems.add(file.name, key, f"{text!r} does not exist", f"looked for {path}; check the name")
         return None
     if not allowed and refers_to_remote(path):

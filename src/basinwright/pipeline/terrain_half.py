@@ -148,6 +148,7 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
             "storm": project.storm.model_dump(mode="json", include={"depths", "depth_rasters", "depth_raster_unit"}),
             "points": [
                 list(inputs.points.names),
+                inputs.points.texts(basis) if (basis := project.outlets.capacity_basis) else [],
                 _plain(inputs.capacity_m3s),
                 {k: _plain(v) for k, v in inputs.overrides.items()},
             ],
