@@ -208,6 +208,10 @@ class _Editor:
     def adjust(self, line: _Line, row: Row, filled: Row) -> None:
         """Check a row that differs from what was written, and which of its filled cells still stand."""
 
+    def otherwise(self, column: str, row: Row, line: _Line) -> str:
+        """Return what a dependent cell holds that no person filled: empty where the hydrology computes it."""
+        return ""
+
     def finish(self, outlet_id: str, rows: list[Row], first: list[Row]) -> None:
         """Put the settled rows of an outlet in order among themselves."""
 
@@ -284,7 +288,7 @@ class _Editor:
                     filled = self.as_first(row, filled, line.first, given)
                 if line.first is None or self.differs(row, filled, line.first, given):
                     self.edited.add((outlet_id, line.key))
-                row |= {column: filled.get(column, "") for column in self.dependent}
+                row |= {column: filled.get(column, self.otherwise(column, row, line)) for column in self.dependent}
                 self.held |= {(self.table.name, outlet_id, line.key, self.dependent[column]) for column in filled}
                 rows.append(row)
             if len(rows) != len(first[outlet_id]):
@@ -417,6 +421,12 @@ class _ShareEditor(_Editor):
                         pairs[place] = at
                         del free[at]
         return pairs
+
+    def otherwise(self, column: str, row: Row, line: _Line) -> str:
+        """Return what the run first had on this class and group: it may be composite with mapped impervious area."""
+        first = line.first
+        same_patch = first is not None and all(same(row[name], first[name]) for name in ("cover", "soil_group"))
+        return first[column] if first is not None and same_patch else ""
 
     def adjust(self, line: _Line, row: Row, filled: Row) -> None:
         """Check class and group; of a class that the scheme has not, what stands beside it is a person's."""
