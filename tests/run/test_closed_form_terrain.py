@@ -90,7 +90,8 @@ def test_plane(tmp_path, azimuth):
 def test_v_valley(tmp_path):
     side, fall, rows, cols = 0.1, 0.02, 60, 41
     z = v_valley(rows, cols, side, fall) - 900.0
-    outlet, segments = run(tmp_path, z, {"A": (58, 20)})
+    overrides = {"terrain": {"stream_area": "0.01 km2"}}
+    outlet, segments = run(tmp_path, z, {"A": (58, 20)}, overrides=overrides)
     assert value(outlet, "area_km2") == pytest.approx(59 * 41 * 1e-4, rel=1e-12)
     assert value(outlet, "path_length_m") == 200 + 580
     assert value(outlet, "relief_m") == pytest.approx(20 + 11.6, abs=1e-4)
@@ -104,22 +105,21 @@ def test_v_valley(tmp_path):
     # The centroid lies on the axis in the middle of 59 rows.
     assert value(outlet, "centroid_length_m") == pytest.approx(290, rel=1e-9)
 
-    # Area on the axis: 4,100 m2 a row. Tributaries of half and more end 0, 10 and 20 m below the hillside, and the
-    # two pieces of 10 m join the hillside. The fifth row (20,500 m2, 40 m down) is the first channel cell.
-    assert [row["regime"] for row in segments] == ["sheet", "shallow", "shallow", "channel"]
-    np.testing.assert_allclose(numbers(segments, "to_m"), [30.48, 220, 240, 780], atol=2e-6)
-    slopes = [0.1, (0.1 * (200 - 30.48) + 0.02 * 20) / (220 - 30.48), 0.02, 0.02]
+    # Area on the axis: 4,100 m2 a row. Tributaries that raise it by half end 0 and 10 m down the axis; their two pieces
+    # of 10 m join the hillside. The third row, 20 m down, is the first channel cell.
+    assert [row["regime"] for row in segments] == ["sheet", "shallow", "channel"]
+    np.testing.assert_allclose(numbers(segments, "to_m"), [30.48, 220, 780], atol=2e-6)
+    slopes = [0.1, (0.1 * (200 - 30.48) + 0.02 * 20) / (220 - 30.48), 0.02]
     np.testing.assert_allclose(numbers(segments, "slope"), slopes, rtol=2e-5)
-    # The middle of the channel, 510 m, is the 32nd row of the axis.
+    # The middle of the channel, 500 m, is the 31st row of the axis.
     times = [
         sheet_h(100, 0.1),
         shallow_h((220 - 30.48) / FT, slopes[1]),
-        shallow_h(20 / FT, 0.02),
-        channel_h(540 / FT, 0.02, 32 * 4100e-6),
+        channel_h(560 / FT, 0.02, 31 * 4100e-6),
     ]
     np.testing.assert_allclose(numbers(segments, "travel_time_h"), times, rtol=1e-4)
     assert value(outlet, "tc_h") == pytest.approx(sum(times), rel=1e-4)
-    np.testing.assert_allclose(numbers(segments[-1:], "area_km2"), 32 * 4100e-6)
+    np.testing.assert_allclose(numbers(segments[-1:], "area_km2"), 31 * 4100e-6)
 
 
 def test_half_cone(tmp_path):

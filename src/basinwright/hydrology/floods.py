@@ -82,7 +82,7 @@ def floods_of(basins: Basins, settings: Settings, *, series: bool) -> tuple[Floo
         peaks = [_floods(basins, settings, float(hours), series=False)[0].peak_m3s[:, -1] for hours in tried]
         duration, at_end = critical_duration(tried, np.array(peaks))
     kept: list[tuple[NDArray[np.int64], Floods, Rain]] = []
-    for hours in np.unique(duration).tolist():
+    for hours in np.unique(duration).tolist() or [section.duration]:  # the project's, where every outlet failed
         rows = np.flatnonzero(duration == hours)
         kept.append((rows, *_floods(_some(basins, rows), settings, hours, series=series)))
     floods, rain = _merged(kept) if len(kept) != 1 else kept[0][1:]
