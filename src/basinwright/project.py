@@ -9,10 +9,12 @@ from __future__ import annotations
 import difflib
 import itertools
 import math
+import re
 import tomllib
 import types
 import typing
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Annotated, Any, Literal, Union
 
@@ -69,7 +71,18 @@ def _check_positive(value: Any) -> Any:
     return value
 
 
+_PERIOD = re.compile(r"[0-9]+(\.[0-9]+)?")
+
+
+def _check_period(text: str) -> str:
+    if not (_PERIOD.fullmatch(text) and float(text) > 0):
+        raise _reject("not a return period", "write a number of years, such as 10 or 2.5")
+    return text
+
+
 _positive = AfterValidator(_check_positive)
+Period = Annotated[str, AfterValidator(_check_period)]
+"""A return period in years, as text that can stand in the name of a column."""
 Length = Annotated[float, _read("length"), _positive, _write("length")]
 LengthOrNone = Annotated[float, _read("length"), Field(ge=0), _write("length")]
 LengthOrAuto = Annotated[float | str, _read("length", "auto"), _positive, _write("length")]
@@ -213,8 +226,8 @@ class StormSection(Section):
     distribution: str
     table: str | None = None
     ddf: str | None = None
-    depths: dict[str, Depth] = Field(default_factory=dict)
-    depth_rasters: dict[str, str] = Field(default_factory=dict)
+    depths: dict[Period, Depth] = Field(default_factory=dict)
+    depth_rasters: dict[Period, str] = Field(default_factory=dict)
     depth_raster_unit: Literal["in", "mm", "cm"] = "in"
     two_year_depth: Depth | None = None
     areal_reduction: Literal["none", "leclerc_schaake"] = "none"
@@ -302,32 +315,52 @@ class Project(Section):
         return self.model_dump(mode="json", exclude_none=True)
 
 
-def later(project: Project) -> Iterator[tuple[str, str]]:
-    """Yield the options that are set but not yet served by this version, with what to do instead."""
-    set_but_later = {
-        "terrain.conditioning": (project.terrain.conditioning != "fill", 'use "fill"'),
-        "terrain.stream_lines": (project.terrain.stream_lines is not None, "leave it out"),
-        "terrain.barriers": (project.terrain.barriers is not None, "leave it out"),
-        "terrain.sinks": (project.terrain.sinks is not None, "leave it out"),
-        "terrain.flow_direction": (project.terrain.flow_direction is not None, "leave it out"),
-        "terrain.stream_area": (project.terrain.stream_area == "auto", 'give an area such as "0.25 km2"'),
-        "terrain.length_correction": (project.terrain.length_correction != "none", 'use "none"'),
-        "cover.scheme": (project.cover.scheme == "worldcover", "give a CSV of your own"),
-        "flow_path.farthest": (project.flow_path.farthest != "length", 'use "length"'),
-        "channel.roughness": (
-            isinstance(project.channel.roughness, str) and project.channel.roughness != "jarrett",
-            'give Manning\'s n as a number, or "jarrett"',
-        ),
-        "uncertainty": (project.uncertainty is not None, "leave the section out"),
-        "check": (project.check is not None, "leave the section out"),
-        "scenario": (bool(project.scenario), "leave the section out"),
-        "compute.scheduler": (project.compute.scheduler != "", "leave it empty"),
-        "compute.memory": (project.compute.memory != "auto", 'use "auto"'),
-    }
-    return ((key, fix) for key, (is_set, fix) in set_but_later.items() if is_set)
+LATER: tuple[tuple[str, str, Callable[[Any], bool], str], ...] = (
+    ("terrain", "conditioning", lambda value: value != "fill", 'use "fill"'),
+    ("terrain", "breach_depth", lambda value: value != 5.0, "leave it out"),
+    ("terrain", "breach_length", lambda value: value != 100.0, "leave it out"),
+    ("terrain", "stream_lines", lambda value: value is not None, "leave it out"),
+    ("terrain", "barriers", lambda value: value is not None, "leave it out"),
+    ("terrain", "sinks", lambda value: value is not None, "leave it out"),
+    ("terrain", "flow_direction", lambda value: value is not None, "leave it out"),
+    ("terrain", "flow_direction_codes", lambda value: value is not None, "leave it out"),
+    ("terrain", "stream_area", lambda value: value == "auto", 'give an area such as "0.25 km2"'),
+    ("terrain", "length_correction", lambda value: value != "none", 'use "none"'),
+    ("cover", "scheme", lambda value: value == "worldcover", "give a CSV of your own"),
+    ("flow_path", "farthest", lambda value: value != "length", 'use "length"'),
+    (
+        "channel",
+        "roughness",
+        lambda value: isinstance(value, str) and value != "jarrett",
+        'give Manning\'s n as a number, or "jarrett"',
+    ),
+    ("compute", "scheduler", lambda value: value != "", "leave it empty"),
+    ("compute", "memory", lambda value: value != "auto", 'use "auto"'),
+    ("", "uncertainty", lambda value: value is not None, "leave the section out"),
+    ("", "check", lambda value: value is not None, "leave the section out"),
+    ("", "scenario", bool, "leave the section out"),
+)
+"""Options of later versions: section, key, whether a value asks for what is not served yet, what to do instead."""
 
 
-def read_project(path: Path) -> Project:
+@dataclass(frozen=True)
+class Reading:
+    """What could be read of a project file.
+
+    Parameters
+    ----------
+    project : Project
+        Whole where there are no problems. Else it stands in for looking at the inputs: keys that are wrong have their
+        defaults, and a section that is missing, or wrong in a key without default, is None.
+    problems : list of Problem
+        Everything that is wrong in the file itself; the files it names are not opened.
+    """
+
+    project: Project
+    problems: list[Problem]
+
+
+def read_project(path: Path) -> Reading:
     """Read and validate a project file.
 
     Parameters
@@ -337,48 +370,79 @@ def read_project(path: Path) -> Project:
 
     Returns
     -------
-    Project
+    Reading
 
     Raises
     ------
     InputRejected
-        With every problem found in the file itself; files it names are not opened.
+        Where there is no such file, or it is no TOML.
     """
     try:
-        text = path.read_text(encoding="utf-8")
+        text = path.read_text(encoding="utf-8-sig")
     except FileNotFoundError:
-        raise InputRejected.one(
-            str(path), "file", "does not exist", "check the path, or make one with: basinwright start DIR"
-        ) from None
-    except (OSError, UnicodeDecodeError) as error:
-        raise InputRejected.one(
-            str(path), "file", f"cannot be read ({error})", "give a readable UTF-8 TOML file"
-        ) from None
+        fix = "check the path, or make one with: basinwright start DIR"
+        raise InputRejected.one(str(path), "file", "does not exist", fix) from None
+    except (OSError, ValueError) as error:
+        fix = "give a readable UTF-8 TOML file"
+        raise InputRejected.one(str(path), "file", f"cannot be read ({error})", fix) from None
     try:
         data = tomllib.loads(text)
-    except tomllib.TOMLDecodeError as error:
+    except (tomllib.TOMLDecodeError, RecursionError) as error:
         raise InputRejected.one(str(path), "file", f"is not valid TOML ({error})", "mend the line it names") from None
-    return parse_project(data, path.name)
+    return read_content(data, path.name)
 
 
 def parse_project(data: dict[str, Any], file: str = "project") -> Project:
-    """Validate the content of a project file (see `read_project`)."""
+    """Validate the content of a project file.
+
+    Raises
+    ------
+    InputRejected
+        With every problem found in the content itself.
+    """
+    reading = read_content(data, file)
+    if reading.problems:
+        raise InputRejected(reading.problems)
+    return reading.project
+
+
+def read_content(data: dict[str, Any], file: str) -> Reading:
+    """Validate the content of a project file, keeping what is sound (see `read_project`)."""
     problems: dict[str, Problem] = {}
-    project: Project | None = None
     try:
         project = Project.model_validate(data)
     except ValidationError as error:
-        for entry in error.errors():
+        entries = error.errors()
+        for entry in entries:
             problem = _problem(entry, file)
             problems.setdefault(problem.field, problem)
+        project = _sound_part(data, entries)
     for field, what, fix in _conflicts(data):
         problems.setdefault(field, Problem(file, field, what, fix))
-    if project is not None:
-        for field, fix in later(project):
+    for section, key, asks, fix in LATER:
+        owner = getattr(project, section) if section else project
+        if owner is not None and asks(getattr(owner, key)):
+            field = f"{section}.{key}".lstrip(".")
             problems.setdefault(field, Problem(file, field, "not yet in this version", fix))
-    if problems or project is None:
-        raise InputRejected(problems.values())
-    return project
+    return Reading(project, list(problems.values()))
+
+
+def _sound_part(data: dict[str, Any], entries: list[ErrorDetails]) -> Project:
+    """Return a project without the keys that are wrong; sections that cannot do without them are None."""
+    sections: dict[str, Any] = {}
+    for name, info in Project.model_fields.items():
+        model = _section_of(info.annotation)
+        if model is None:
+            sections[name] = info.get_default(call_default_factory=True)
+            continue
+        raw = data.get(name, {})
+        wrong = {entry["loc"][1] for entry in entries if entry["loc"][0] == name and len(entry["loc"]) > 1}
+        kept = {key: value for key, value in raw.items() if key not in wrong} if isinstance(raw, dict) else {}
+        try:
+            sections[name] = model.model_validate(kept)
+        except ValidationError:
+            sections[name] = None
+    return Project.model_construct(**sections)
 
 
 def _conflicts(data: dict[str, Any]) -> Iterator[tuple[str, str, str]]:
@@ -442,26 +506,23 @@ def _storm_conflicts(storm: dict[str, Any]) -> Iterator[tuple[str, str, str]]:
     if storm.get("distribution") == "table" and "table" not in storm:
         yield "storm.table", 'missing, and distribution is "table"', "name the CSV of hour and fraction"
     years: dict[str, float] = {}
-    for text in [*depths, *(storm.get("depth_rasters") or {})]:
-        try:
-            years[text] = float(text)
-        except ValueError:
-            years[text] = math.nan
-        if not (math.isfinite(years[text]) and years[text] > 0):
-            yield f'storm.depths."{text}"', "not a return period", "write a positive number of years"
+    rasters = storm["depth_rasters"] if isinstance(storm.get("depth_rasters"), dict) else {}
+    for texts in (depths, rasters):
+        for text in texts:
+            years[text] = float(text) if _PERIOD.fullmatch(text) else math.nan  # the model names it
     rising: list[tuple[float, float, str]] = []
     for text, quantity in depths.items():
         try:
             rising.append((years[text], parse_quantity(quantity, "depth"), text))
         except QuantityError:
             continue  # the model names it
-    rising.sort()
+    rising = sorted(entry for entry in rising if not math.isnan(entry[0]))
     for (before, shallow, a), (after, deep, b) in itertools.pairwise(rising):
         if before == after:
-            yield f'storm.depths."{b}"', f'the same return period as "{a}"', "keep one of them"
+            yield f"storm.depths.{b}", f'the same return period as "{a}"', "keep one of them"
         elif not deep > shallow:
             yield (
-                f'storm.depths."{b}"',
+                f"storm.depths.{b}",
                 f"not over the depth of the {a}-year storm",
                 "depths must rise with the return period",
             )
@@ -488,7 +549,7 @@ def _storm_conflicts(storm: dict[str, Any]) -> Iterator[tuple[str, str, str]]:
         yield "storm.two_year_depth", "missing", "sheet flow needs the 2-year 24-hour depth: give it"
 
 
-_TYPE_PARTS = {"float", "str", "int", "constrained-str", "constrained-float"}
+_TYPE_PARTS = {"[key]", "float", "str", "int", "constrained-str", "constrained-float"}
 
 
 def _problem(entry: ErrorDetails, file: str) -> Problem:

@@ -113,13 +113,16 @@ def parse_quantity(text: object, dimension: str) -> float:
     if unit is None:
         raise QuantityError(f"{text!r} has no unit", choice)
     if unit not in UNITS:
-        near = difflib.get_close_matches(unit, UNITS, n=1)
+        near = difflib.get_close_matches(unit.lower(), UNITS, n=1)
         hint = f" (nearest: {near[0]})" if near else ""
         raise QuantityError(f"{text!r} has the unknown unit {unit!r}{hint}", choice)
     kind, factor = UNITS[unit]
     if kind != dimension:
         raise QuantityError(f"{text!r} is of the kind {kind}, not {dimension}", choice)
-    return number * factor
+    value = number * factor
+    if not math.isfinite(value):
+        raise QuantityError(f"{text!r} is too large", choice)
+    return value
 
 
 @dataclass(frozen=True)

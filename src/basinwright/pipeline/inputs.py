@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import difflib
 import hashlib
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from dataclasses import dataclass, field
 from functools import partial
 from pathlib import Path
@@ -12,10 +12,12 @@ from typing import TYPE_CHECKING, Any, TypeVar
 
 import numpy as np
 
-from basinwright.errors import InputRejected, Problem
+from basinwright.editing import LIMITS
+from basinwright.errors import InputRejected, Problem, RangeError
+from basinwright.io.rasters import check_raster, expand_paths, is_remote, refers_to_remote
 from basinwright.pipeline import design_storm
 from basinwright.pipeline.design_storm import DesignStorm
-from basinwright.project import Project, read_project
+from basinwright.project import Cover, Project, Reading, Soils, read_project
 from basinwright.registry import methods
 from basinwright.schemes import SHIPPED
 from basinwright.store import file_sha256
@@ -161,14 +163,34 @@ def _described(source: Path) -> dict[str, Any]:
     return {**one(source), "parts": parts} if parts else one(source)
 
 
-class _Problems:
-    """Collects problems while as much as possible is still looked at."""
+class _Looking:
+    """Looks at the inputs of a project and collects what is wrong, section by section as far as each is sound.
 
-    def __init__(self) -> None:
-        self.found: list[Problem] = []
+    Parameters
+    ----------
+    file : Path
+        The project file.
+    reading : Reading
+        What could be read of it.
+    """
+
+    def __init__(self, file: Path, reading: Reading) -> None:
+        self.file, self.folder = file, file.absolute().parent
+        self.project = reading.project
+        self.found = list(reading.problems)
+        self.allow_remote = self.project.project is not None and self.project.project.allow_remote
 
     def add(self, file: str, key: str, what: str, fix: str) -> None:
+        """Note a problem."""
         self.found.append(Problem(file, key, what, fix))
+
+    def is_sound(self, *keys: str) -> bool:
+        """Say whether nothing was found to be wrong with these options, or with a whole section."""
+        return not any(
+            problem.file == self.file.name and f"{problem.field}.".startswith(f"{key}.")
+            for problem in self.found
+            for key in keys
+        )
 
     def tried(self, step: Callable[[], T]) -> T | None:
         """Return what a step gives, or None with its problems noted."""
@@ -177,6 +199,68 @@ class _Problems:
         except InputRejected as rejected:
             self.found += rejected.problems
             return None
+
+    def source(self, key: str, text: str) -> Source | None:
+        """Return the file that an option names; None where it is remote without leave, or not there."""
+        if not self.may_be_named(key, text):
+            return None
+        if is_remote(text):
+            return text
+        path = self.folder / text
+        if not exists(path):  # a folder may be a layer: a file geodatabase
+            self.add(self.file.name, key, f"{text!r} does not exist", f"looked for {path}; check the name")
+            return None
+        return path if self.may_lead_to(key, path) else None
+
+    def table(self, key: str, text: str) -> Path | None:
+        """Return the CSV that an option names: always a local file."""
+        path = self.source(key, text)
+        if path is None or isinstance(path, Path):
+            return path
+        self.add(self.file.name, key, f"{text!r} is a URL or a virtual path", "tables are read from local files only")
+        return None
+
+    def terrain_files(self) -> list[Source]:
+        """Return the rasters of the terrain; none where something is wrong with one of them."""
+        texts = self.project.terrain.dem
+        nameable = [self.may_be_named("terrain.dem", text) for text in texts]
+        if not all(nameable):
+            return []
+        paths, found = expand_paths(texts, self.folder)
+        self.found += found
+        fine = [not isinstance(path, Path) or self.may_lead_to("terrain.dem", path) for path in paths]
+        return list(paths) if all(fine) and not found else []
+
+    def may_be_named(self, key: str, text: str) -> bool:
+        """Say whether an option may name this; note a problem where it may not."""
+        what = ""
+        if text.startswith("<") and text.endswith(">") and text.count("<") == 1:
+            what, fix = f"{text!r} is a placeholder", "write the name of your file"
+        elif is_remote(text) and not self.allow_remote:
+            what, fix = f"{text!r} is a URL or a virtual path", _LOCAL
+        elif not text.strip() or exists(self.folder / text) is None:
+            what, fix = f"{text[:60]!r} is no name of a file", "write the name of your file"
+        if what:
+            self.add(self.file.name, key, what, fix)
+        return not what
+
+    def may_lead_to(self, key: str, path: Path) -> bool:
+        """Say whether a local file may stand for what it leads to; note a problem where it may not."""
+        if self.allow_remote or not refers_to_remote(path):
+            return True
+        self.add(self.file.name, key, f"{path.name!r} leads to a URL or a virtual path", _LOCAL)
+        return False
+
+
+_LOCAL = "name a local file, or set project.allow_remote = true"
+
+
+def exists(path: Path) -> bool | None:
+    """Say whether a file or folder exists; None where the system cannot take such a name."""
+    try:
+        return "\0" not in str(path) and path.exists()
+    except OSError:
+        return None
 
 
 def inspect(file: Path) -> Inputs:
@@ -196,53 +280,47 @@ def inspect(file: Path) -> Inputs:
     InputRejected
         With every problem of the file and of its inputs that can be known before computing.
     """
-    project = read_project(file)
-    problems = _Problems()
-    problems.found += _unknown_methods(project, file.name)
-    folder = file.absolute().parent
+    from pyproj.exceptions import ProjError
 
-    dem = _terrain_files(project, file, problems)
-    plan = _plan(project, dem, problems) if dem else None
-    points_source = _source(project, file, "outlets.source", project.outlets.source, problems)
-    points = _outlets(project, points_source, problems) if points_source is not None else None
-    cover = _layer(
-        project, file, "cover", project.cover.raster, project.cover.vector, project.cover.field, plan, problems
-    )
-    soils = _layer(
-        project, file, "soils", project.soils.raster, project.soils.vector, project.soils.field, plan, problems
-    )
-    scheme = problems.tried(lambda: _scheme(project, folder))
-    design = problems.tried(lambda: design_storm.read(project, folder))
+    look = _Looking(file, read_project(file))
+    project = look.project
+    _look_at_options(look)
+
+    dem = look.terrain_files() if project.terrain is not None else []
+    plan = _plan(look, dem) if dem else None
+    points_source = look.source("outlets.source", project.outlets.source) if project.outlets is not None else None
+    points = _outlets(look, points_source) if points_source is not None else None
+    cover, soils = (_layer(look, name, getattr(project, name), plan) for name in ("cover", "soils"))
+    scheme = _scheme(look) if project.cover is not None and look.is_sound("cover.scheme") else None
+    design = _design(look) if project.storm is not None and look.is_sound("storm") else None
     if design is not None and design.ddf is not None:
-        project = problems.tried(partial(design_storm.with_depths, project, design.ddf)) or project
+        project = look.tried(partial(design_storm.with_depths, project, design.ddf)) or project
+    impervious = project.cover.impervious if project.cover is not None else None
+    depth_rasters = project.storm.depth_rasters if project.storm is not None else {}
     rasters = {
-        "cover.impervious": project.cover.impervious,
-        **{f'storm.depth_rasters."{period}"': text for period, text in project.storm.depth_rasters.items()},
+        "cover.impervious": impervious,
+        **{f"storm.depth_rasters.{period}": text for period, text in depth_rasters.items()},
     }
-    percent = {key: _raster(project, file, key, text, plan, problems) for key, text in rasters.items() if text}
+    found = {key: _raster(look, key, text, plan) for key, text in rasters.items() if text is not None}
     x = y = np.empty(0)
     aligned: dict[str, Any] = {}
     if points is not None and plan is not None:
         aligned = _points_alignment(points, plan.grid)
-        points = points.in_crs(plan.grid.crs_wkt)
+        try:
+            points = points.in_crs(plan.grid.crs_wkt)
+        except ProjError as error:
+            fix = "give the outlets in a CRS that can be transformed to the terrain's"
+            look.add(Path(points.file).name, "crs", f"no way from it to the terrain's ({error})", fix)
         x, y = np.asarray(points.x, dtype=np.float64), np.asarray(points.y, dtype=np.float64)
         rows, _ = plan.grid.rowcol(x, y)
         if (rows < 0).all():
-            source = Path(points.file).name
-            problems.add(
-                source, "geometry", "every outlet lies outside the terrain", "check the coordinate systems of both"
-            )
-    expected, capacity, overrides = _attributes(project, points, problems)
-    if (
-        problems.found
-        or plan is None
-        or points is None
-        or points_source is None
-        or cover is None
-        or scheme is None
-        or design is None
-    ):
-        raise InputRejected(problems.found)
+            fix = "check the coordinate systems of both"
+            look.add(Path(points.file).name, "geometry", "every outlet lies outside the terrain", fix)
+    expected, capacity, overrides = _attributes(project, points, look)
+    if look.found or plan is None or points is None or points_source is None or cover is None:
+        raise InputRejected(look.found)
+    if scheme is None or design is None:
+        raise InputRejected(look.found)
     return Inputs(
         project=project,
         file=file.absolute(),
@@ -259,86 +337,63 @@ def inspect(file: Path) -> Inputs:
         cover=cover,
         soils=soils,
         scheme=scheme,
-        impervious=percent.get("cover.impervious"),
+        impervious=found.get("cover.impervious"),
         depth_rasters={
             period: path
             for period in project.storm.depth_rasters
-            if (path := percent[f'storm.depth_rasters."{period}"']) is not None
+            if (path := found[f"storm.depth_rasters.{period}"]) is not None
         },
         design=design,
     )
 
 
-def _unknown_methods(project: Project, file: str) -> Iterator[Problem]:
-    """Name what the project asks for that no register knows."""
+def _look_at_options(look: _Looking) -> None:
+    """Name what the project asks for that no register knows, and time steps that cannot be."""
+    from basinwright.hydrograph import unit_duration_s
     from basinwright.timing import bankfull_regions
 
+    project = look.project
     asked = (
-        ("timing.adopt", project.timing.adopt, list(methods("timing"))),
-        ("unit_hydrograph.shape", project.unit_hydrograph.shape, list(methods("unit_hydrograph"))),
-        ("storm.distribution", project.storm.distribution, list(methods("storm"))),
-        ("channel.bankfull_region", project.channel.bankfull_region, [*bankfull_regions(), "own"]),
+        (project.timing, "timing", "adopt", list(methods("timing"))),
+        (project.unit_hydrograph, "unit_hydrograph", "shape", list(methods("unit_hydrograph"))),
+        (project.storm, "storm", "distribution", list(methods("storm"))),
+        (project.channel, "channel", "bankfull_region", [*bankfull_regions(), "own"]),
     )
-    for key, value, known in asked:
-        if value not in known:
+    for section, name, key, known in asked:
+        value = getattr(section, key, None)
+        if value is not None and value not in known and look.is_sound(f"{name}.{key}"):
             near = difflib.get_close_matches(value, known, n=1)
             hint = f"nearest: {near[0]!r}; " if near else ""
-            yield Problem(file, key, f"{value!r} is unknown", f"{hint}use one of {', '.join(known)}")
+            fix = f"{hint}use one of {', '.join(known)}"
+            look.add(look.file.name, f"{name}.{key}", f"{value!r} is unknown", fix)
+    if project.storm is None or project.unit_hydrograph is None:
+        return
+    step = project.unit_hydrograph.time_step
+    try:
+        unit_duration_s(1.0, project.storm.duration)
+    except RangeError as error:
+        look.add(look.file.name, "storm.duration", str(error), "give a duration such as 24 h")
+        return
+    try:
+        unit_duration_s(1.0, project.storm.duration, None if isinstance(step, str) else step)
+    except RangeError as error:
+        look.add(look.file.name, "unit_hydrograph.time_step", str(error), 'give a step that does, or "auto"')
 
 
-def _source(project: Project, file: Path, key: str, text: str, problems: _Problems) -> Source | None:
-    """Return the file that an option names, refusing what is remote without leave and what is not there."""
-    from basinwright.io.rasters import is_remote, refers_to_remote
-
-    allowed = project.project.allow_remote
-    fix = "name a local file, or set project.allow_remote = true"
-    if is_remote(text):
-        if allowed:
-            return text
-        problems.add(file.name, key, f"{text!r} is a URL or a virtual path", fix)
-        return None
-    path = file.absolute().parent / text
-    if not path.exists():  # a folder may be a layer: a file geodatabase
-        problems.add(file.name, key, f"{text!r} does not exist", f"looked for {path}; check the name")
-        return None
-    if not allowed and refers_to_remote(path):
-        problems.add(file.name, key, f"{text!r} points to a URL or a virtual path", fix)
-        return None
-    return path
-
-
-def _terrain_files(project: Project, file: Path, problems: _Problems) -> list[Source]:
-    from basinwright.io.rasters import expand_paths, is_remote, refers_to_remote
-
-    paths, found = expand_paths(project.terrain.dem, file.absolute().parent)
-    problems.found += found
-    if not project.project.allow_remote:
-        for path in paths:
-            if is_remote(str(path)) or (isinstance(path, Path) and refers_to_remote(path)):
-                problems.add(
-                    file.name,
-                    "terrain.dem",
-                    f"{str(path)!r} is a URL or a virtual path",
-                    "name a local file, or set project.allow_remote = true",
-                )
-                return []
-    return [] if found else list(paths)
-
-
-def _plan(project: Project, dem: list[Source], problems: _Problems) -> TerrainPlan | None:
+def _plan(look: _Looking, dem: list[Source]) -> TerrainPlan | None:
     from basinwright.io.elevation import plan_terrain
 
-    plan, found = plan_terrain(dem, project.terrain.crs, project.terrain.vertical_unit)
-    problems.found += found
+    plan, found = plan_terrain(dem, look.project.terrain.crs, look.project.terrain.vertical_unit)
+    look.found += found
     return plan
 
 
-def _outlets(project: Project, path: Source, problems: _Problems) -> PointTable | None:
+def _outlets(look: _Looking, path: Source) -> PointTable | None:
     from basinwright.io.vectors import read_points
 
-    options = project.outlets
+    options = look.project.outlets
     wanted = [name for name in (options.expected_area, options.capacity, options.capacity_basis) if name]
-    return problems.tried(
+    return look.tried(
         lambda: read_points(
             path,
             layer=options.layer,
@@ -350,53 +405,51 @@ def _outlets(project: Project, path: Source, problems: _Problems) -> PointTable 
     )
 
 
-def _layer(
-    project: Project,
-    file: Path,
-    section: str,
-    raster: str | None,
-    vector: str | None,
-    column: str | None,
-    plan: TerrainPlan | None,
-    problems: _Problems,
-) -> Source | None:
-    """Find and check a cover or soils layer."""
-    from basinwright.io.rasters import check_raster
+def _layer(look: _Looking, name: str, section: Cover | Soils | None, plan: TerrainPlan | None) -> Source | None:
+    """Find and check the cover or the soils."""
     from basinwright.io.vectors import check_polygons
 
-    kind, text = ("raster", raster) if raster is not None else ("vector", vector)
-    if text is None:
+    if section is None:
         return None
-    path = _source(project, file, f"{section}.{kind}", text, problems)
-    if path is not None:
-        found = (
-            check_raster(path, plan.grid if plan else None) if kind == "raster" else check_polygons(path, str(column))
-        )
-        problems.found += found
+    if section.raster is not None:
+        return _raster(look, f"{name}.raster", section.raster, plan)
+    if section.vector is None:
+        return None
+    path = look.source(f"{name}.vector", section.vector)
+    if path is not None and section.field is not None:
+        look.found += check_polygons(path, section.field)
     return path
 
 
-def _raster(
-    project: Project, file: Path, key: str, text: str, plan: TerrainPlan | None, problems: _Problems
-) -> Source | None:
-    """Find and check a raster of values."""
-    from basinwright.io.rasters import check_raster
-
-    path = _source(project, file, key, text, problems)
+def _raster(look: _Looking, key: str, text: str, plan: TerrainPlan | None) -> Source | None:
+    """Find and check a raster."""
+    path = look.source(key, text)
     if path is not None:
-        problems.found += check_raster(path, plan.grid if plan else None)
+        look.found += check_raster(path, plan.grid if plan else None)
     return path
 
 
-def _scheme(project: Project, folder: Path) -> Scheme:
+def _scheme(look: _Looking) -> Scheme | None:
+    """Load the land-cover scheme, one of the shipped or a table of the user's."""
     from basinwright.schemes import load_scheme, read_scheme
 
-    name = project.cover.scheme
-    return load_scheme(name) if name in SHIPPED else read_scheme(folder / name)
+    name = look.project.cover.scheme
+    if name in SHIPPED:
+        return load_scheme(name)
+    path = look.table("cover.scheme", name)
+    return None if path is None else look.tried(partial(read_scheme, path))
+
+
+def _design(look: _Looking) -> DesignStorm | None:
+    """Build the design storm from the register and the user's tables."""
+    section = look.project.storm
+    tables = {"storm.table": section.table, "storm.ddf": section.ddf}
+    named = [look.table(key, text) is not None for key, text in tables.items() if text is not None]
+    return look.tried(partial(design_storm.read, look.project, look.folder)) if all(named) else None
 
 
 def _attributes(
-    project: Project, points: PointTable | None, problems: _Problems
+    project: Project, points: PointTable | None, look: _Looking
 ) -> tuple[NDArray[np.float64], NDArray[np.float64], dict[str, NDArray[np.float64]]]:
     """Read the outlets' expected areas, capacities and supplied values, in the units used inside."""
     empty = np.empty(0)
@@ -413,23 +466,23 @@ def _attributes(
 
     def numbers(name: str, factor: float, low: float, high: float) -> NDArray[np.float64]:
         values, found = points.numbers(name)
-        problems.found += found
+        look.found += found
         for i in np.flatnonzero(~np.isnan(values) & ~((values > low) & (values <= high))).tolist():
-            problems.add(
-                source,
-                f"outlet {points.ids[i]}, {name}",
-                f"{values[i]:g} is out of range",
-                f"give a number over {low:g}" + (f", at most {high:g}" if np.isfinite(high) else ""),
-            )
+            fix = f"give a number over {low:g}" + (f", at most {high:g}" if np.isfinite(high) else "")
+            look.add(source, f"outlet {points.ids[i]}, {name}", f"{values[i]:g} is out of range", fix)
         return values * factor
 
     overrides: dict[str, NDArray[np.float64]] = {}
     if "curve_number" in points.attributes:
         overrides["curve_number"] = numbers("curve_number", 1.0, 0.0, 100.0)
     if "tc_h" in points.attributes:
-        overrides["tc_h"] = numbers("tc_h", 1.0, 0.0, np.inf)
-    for period in project.storm.periods:
-        for suffix, factor in (("in", UNITS["in"][1]), ("mm", 1.0)):
-            if (name := f"depth_{period}yr_{suffix}") in points.attributes:
-                overrides[f"depth_{period}yr"] = numbers(name, factor, 0.0, np.inf)
-    return column(project.outlets.expected_area, "area"), column(project.outlets.capacity, "flow"), overrides
+        overrides["tc_h"] = numbers("tc_h", 1.0, *LIMITS["tc_h"])
+    for period in project.storm.periods if project.storm is not None else ():
+        names = {f"depth_{period}yr_{unit}": UNITS[unit][1] for unit in ("in", "mm")}
+        given = [name for name in names if name in points.attributes]
+        if len(given) == 2:
+            look.add(source, " and ".join(given), "both columns are there", "keep one of them")
+        for name in given[:1]:
+            overrides[f"depth_{period}yr"] = numbers(name, names[name], 0.0, 1e5)
+    options = project.outlets
+    return column(options.expected_area, "area"), column(options.capacity, "flow"), overrides

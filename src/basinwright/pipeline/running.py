@@ -8,7 +8,7 @@ from importlib.resources import files
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from basinwright.errors import BasinwrightError, InputRejected, PublishError
+from basinwright.errors import BasinwrightError, InputRejected, PublishError, RangeError
 from basinwright.hydrology import Columns, Settings, compute
 from basinwright.outputs.summary import Outcome
 from basinwright.store import STORE, RunFolder, Store
@@ -83,6 +83,10 @@ def run(
         except InputRejected:
             folder.discard()
             raise
+        except RangeError as error:
+            folder.discard()
+            what, fix = f"cannot be computed: {error}", "change what it names"
+            raise InputRejected.one(project_file.name, "options", what, fix) from error
         except OSError as error:
             raise PublishError(_no_room(folder.final, error)) from error
         folder.publish()
