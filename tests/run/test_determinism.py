@@ -131,7 +131,7 @@ def rows_by_outlet(folder):
     return found
 
 
-@settings(max_examples=8, deadline=None)
+@settings(max_examples=5, deadline=None)
 @given(st.lists(st.sampled_from(sorted(PLACES)), min_size=1, max_size=5, unique=True))
 def test_an_outlet_does_not_depend_on_the_others(tmp_path_factory, whole, chosen):
     folder = tmp_path_factory.mktemp("some")

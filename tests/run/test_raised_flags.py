@@ -275,6 +275,21 @@ def test_one_failed_outlet_leaves_the_others_alone(tmp_path):
     assert rows[1][1] == rows[0][1] | {"downstream_outlet_id": rows[1][1]["downstream_outlet_id"]}
 
 
+def test_a_basin_of_seconds_fails_alone(tmp_path):
+    """Three rows of half-metre cells of pavement: Tc is under 2 s, and no minimum was wanted."""
+    file = make_project(
+        tmp_path, v_valley(60, 41, 0.5, 0.3, 0.5), {"tiny": (2, 2), "whole": (58, 20)}, cell=0.5, cover=24,
+        overrides={"timing": {"minimum": "0 min"}},
+    )  # fmt: skip
+    outcome = pipeline.run(file)
+    tiny, whole = read_table(outcome.folder, "outlets")
+    assert (tiny["status"], whole["status"]) == ("failed", "flagged")
+    assert tiny["tc_h"] == tiny["peak_10yr_m3s"] == ""
+    assert float(whole["peak_10yr_m3s"]) > 0
+    assert {row["outlet_id"] for row in read_table(outcome.folder, "hydrographs")} == {"whole"}
+    assert "timing.minimum" in next(flag.message for flag in outcome.flags if flag.key == "OUTLET_FAILED")
+
+
 def test_a_flag_knows_its_severity_and_remedy():
     serious = {key for key, kind in FLAGS.items() if kind.severity == "serious"}
     notes = {key for key, kind in FLAGS.items() if kind.severity == "note"}

@@ -27,6 +27,8 @@ if TYPE_CHECKING:
 
 LAG_OF_TC = 0.6
 """Lag over time of concentration: NEH 630 ch. 15 eq. 15-3."""
+SHORTEST_TC_H = 8.0 / 3600.0
+"""0.133 of it, the longest step of a unit hydrograph, is one second, the shortest that is computed."""
 
 
 @dataclass
@@ -122,6 +124,8 @@ def compute(
     known = np.isfinite(tc_h) & (tc_h > 0)
     raised = known & np.isnan(own_tc_h) & (tc_h < project.timing.minimum)
     tc_h = np.where(raised, project.timing.minimum, np.where(known, tc_h, np.nan))
+    short = tc_h < SHORTEST_TC_H
+    known, raised, tc_h = known & ~short, raised & ~short, np.where(short, np.nan, tc_h)
 
     area_km2 = outlets.number("area")
     curves = _time_area(tables.get("time_area"), index, settings)
@@ -136,8 +140,10 @@ def compute(
     )
     floods, rain = floods_of(basins, settings, series=series)
 
-    for i in np.flatnonzero(~known):
+    for i in np.flatnonzero(~known & ~short):
         flags.add(i, "OUTLET_FAILED", f"no time of concentration by {project.timing.adopt}: {adopted.reason[i]}")
+    for i in np.flatnonzero(short):
+        flags.add(i, "OUTLET_FAILED", "its time of concentration is under 8 s: set timing.minimum")
     for i in np.flatnonzero(raised):
         flags.add(i, "TC_MINIMUM", f"{adopted.tc_h[i]:.3g} h raised to {project.timing.minimum:g} h")
     doubts.flag_segments(flags, segments, timed, settings)
