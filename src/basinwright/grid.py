@@ -77,7 +77,11 @@ class Grid:
         if not self.is_geographic:
             metres = float(self.crs.axis_info[0].unit_conversion_factor)
             ones = np.ones(self.nrows)
-            return ones * (width * metres), ones * (height * metres), ones * (width * metres * height * metres)
+            return (
+                ones * (width * metres),
+                ones * (height * metres),
+                ones * (width * metres * height * metres),
+            )
         radians = float(self.crs.axis_info[0].unit_conversion_factor)
         edges = np.clip((self.transform.f - height * np.arange(self.nrows + 1)) * radians, -np.pi / 2, np.pi / 2)
         return _ellipsoidal_sizes(edges, width * radians, self.crs.ellipsoid)
