@@ -32,6 +32,8 @@ INDEX_WIDTH, PAGE_WIDTH, CLOSE_WIDTH = 8000, 6400, 3600
 _UNITS_PER_PIXEL = 10
 _SHADE_PIXELS = {INDEX_WIDTH: 1100, PAGE_WIDTH: 560, CLOSE_WIDTH: 200}
 """Rows or columns of the shaded terrain, by width of the map."""
+INDEX_POINTS = 160_000
+"""Most points of divides and paths on the index map, at about six characters each."""
 _TOO_CLOSE = 14 * _UNITS_PER_PIXEL
 """Under this distance the mark of an outlet would cover the point as supplied: the close view shows it."""
 _CLOSE_CELLS = 14
@@ -291,7 +293,7 @@ def index_map(run: Run, link: Callable[[Outlet], str], over: Callable[[Outlet], 
     bounds = (*corners.min(axis=0).tolist(), *corners.max(axis=0).tolist())
     view = frame(run, _padded(bounds, 0.03), INDEX_WIDTH)
     many = len(run.outlets) > 25
-    tolerance = 5.0 if many else 3.0
+    tolerance = _tolerance(drawn, view)
     above = upstream(run.outlets)
     basins, paths, marks = [], [], []
     sides = {} if many else _label_sides(run.outlets, view)
@@ -326,7 +328,21 @@ def index_map(run: Run, link: Callable[[Outlet], str], over: Callable[[Outlet], 
         f"{words.count(len(drawn), 'basin')} with longest flow paths and outlets over the shaded terrain. "
         "The table below lists the same outlets."
     )
-    return _canvas(run, view, "Map of all outlets", description, content, key="map", kind="index many" if many else "index")
+    return _canvas(
+        run, view, "Map of all outlets", description, content, key="map", kind="index many" if many else "index"
+    )
+
+
+def _tolerance(outlets: Sequence[Outlet], view: Frame) -> float:
+    """Return how far lines of the index map may be simplified [its own units]: more where there are many."""
+    import shapely
+
+    lines = np.array([line for outlet in outlets for line in (outlet.subbasin, outlet.path)], dtype=object)
+    tolerance = 3.0
+    while shapely.get_num_coordinates(lines).sum() > INDEX_POINTS and tolerance < view.width:
+        tolerance *= 1.5
+        lines = shapely.simplify(lines, tolerance * view.per_unit)
+    return tolerance
 
 
 _SIDES: tuple[dict[str, object], ...] = (
