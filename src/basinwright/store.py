@@ -245,18 +245,18 @@ def _peak_memory_mb() -> float | None:
 
 def link_tree(source: Path, target: Path) -> None:
     """Copy a folder by hard links where the file system has them: cheap, and the files are never changed in place."""
-
-    def link(a: str, b: str) -> None:
-        try:
-            os.link(a, b)
-        except OSError:
-            shutil.copy2(a, b)
-
     draft = _draft(target)
     shutil.rmtree(draft, ignore_errors=True)
     draft.parent.mkdir(parents=True, exist_ok=True)
-    shutil.copytree(source, draft, copy_function=link)
+    shutil.copytree(source, draft, copy_function=_link)
     draft.rename(target)
+
+
+def _link(source: str | Path, target: str | Path) -> None:
+    try:
+        os.link(source, target)
+    except OSError:
+        shutil.copy2(source, target)
 
 
 def _draft(target: Path) -> Path:
@@ -368,7 +368,6 @@ class RunFolder:
 
     def begin(self, *, keep: bool) -> Path:
         """Return the folder to build in, emptied of all but the store (and of that too unless ``keep``)."""
-        shutil.rmtree(_draft(self.partial), ignore_errors=True)
         try:
             for entry in self.partial.iterdir() if self.partial.is_dir() else ():
                 if not (keep and entry.name == STORE):
@@ -379,10 +378,14 @@ class RunFolder:
         return self.partial
 
     def begin_copy(self) -> Path:
-        """Return the folder to build in, filled with links to the files of the run that stands."""
-        self.begin(keep=False).rmdir()
-        link_tree(self.final, self.partial)
-        (self.partial / MANIFEST).unlink()
+        """Return the folder to build in, filled with links to the run's own files as they stand, but the manifest."""
+        self.begin(keep=False)
+        for name in sorted((self._files_of(self.final) or set()) - {MANIFEST}):
+            source = self.final / name
+            if source.is_dir():
+                link_tree(source, self.partial / name)
+            elif source.exists():
+                _link(source, self.partial / name)
         return self.partial
 
     def discard(self) -> None:
