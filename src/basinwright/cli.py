@@ -179,10 +179,7 @@ def main() -> None:
             raise
         print(error, file=sys.stderr)
         status = REJECTED
-    except KeyboardInterrupt:
-        print("Interrupted. Nothing was replaced; basinwright run ... --resume continues.", file=sys.stderr)
-        status = INTERRUPTED
-    except typer.Abort:
+    except (KeyboardInterrupt, typer.Abort):
         status = INTERRUPTED
     except Exception as error:
         if hasattr(error, "format_message"):  # the user's command line: an unknown option, a missing argument
@@ -194,4 +191,6 @@ def main() -> None:
             print(f"basinwright: unexpected error: {type(error).__name__}: {error}", file=sys.stderr)
             print("This is a fault of basinwright: please report it with the output of --debug.", file=sys.stderr)
             status = BUG
+    if status == INTERRUPTED:
+        print("Interrupted. Nothing was replaced; basinwright run ... --resume continues.", file=sys.stderr)
     sys.exit(status)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import shutil
 from collections.abc import Callable, Mapping
+from filecmp import cmp
 from importlib.resources import files
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -77,6 +78,8 @@ def run(
         inputs.project = inputs.project.model_copy(update={"compute": compute_section})
     with folder.locked():
         folder.refuse_occupied(resume=resume, overwrite=overwrite)
+        if resume and not overwrite:
+            _refuse_edited(folder.final)
         partial = folder.begin(keep=resume)
         try:
             outcome = _build(inputs, folder, partial, resume, summary_only, say)
@@ -91,6 +94,26 @@ def run(
             raise PublishError(_no_room(folder.final, error)) from error
         folder.publish()
     return outcome
+
+
+def _refuse_edited(folder: Path) -> None:
+    """Refuse to continue a run that holds a person's edits: they would be lost.
+
+    Raises
+    ------
+    InputRejected
+        Saying what to do.
+    """
+    from basinwright.pipeline import manifest
+    from basinwright.tables import read_csv
+
+    if not folder.is_dir():
+        return
+    for name, first in manifest.record(manifest.read(folder)).first.items():
+        path = folder / f"{name}.csv"
+        if path.is_file() and not read_csv(path).equals(first):
+            fix = "keep them with: basinwright retime; or drop them by adding --overwrite"
+            raise InputRejected.one(str(folder), "folder", "holds a person's edits, which --resume would drop", fix)
 
 
 def _no_room(place: Path, error: OSError) -> str:
@@ -338,12 +361,20 @@ def copy_sample(folder: Path) -> Path:
     )
     if source is None:
         raise BasinwrightError("the sample data is not installed with this copy of basinwright: install it again")
-    target = folder / "project.toml"
-    if folder.exists() and (not folder.is_dir() or (any(folder.iterdir()) and not target.is_file())):
-        raise InputRejected.one(str(folder), "DIR", "holds something else", "choose a new or empty folder")
+    sample = [path for path in sorted(source.iterdir()) if path.is_file() and path.suffix != ".py"]
     try:
-        ignored = shutil.ignore_patterns("out", "__pycache__", ".*", "*.py")
-        shutil.copytree(source, folder, dirs_exist_ok=True, ignore=ignored)
+        folder.mkdir(parents=True, exist_ok=True)
+        there = {path.name: path for path in folder.iterdir()}
+        changed = [
+            path.name for path in sample if path.name in there and not cmp(path, there[path.name], shallow=False)
+        ]
+        if changed or (there and "project.toml" not in there):
+            what = f"holds another {changed[0]} than the sample's" if changed else "holds something else"
+            raise InputRejected.one(str(folder), "folder", what, "choose a new or empty folder")
+        for path in sample:
+            if path.name not in there:
+                shutil.copyfile(path, folder / path.name)
     except OSError as error:
-        raise InputRejected.one(str(folder), "DIR", f"cannot be written ({error})", "choose another folder") from None
-    return target
+        what = f"cannot be written ({error.strerror})"
+        raise InputRejected.one(str(folder), "folder", what, "choose another folder") from None
+    return folder / "project.toml"
