@@ -166,6 +166,26 @@ def test_segments_and_sources_are_told_in_full(sample: Path) -> None:
     assert "table 16-1" in words
 
 
+def test_the_time_area_curve_and_the_other_peaks_are_shown_where_the_run_has_them(sample: Path, tmp_path: Path) -> None:
+    curve = [row for row in rows_of(sample, "time_area") if row["outlet_id"] == "TC-003"]
+    article = read(sample / "report" / "index.html").split('<article class="outlet"')[3]
+    longest = three_figures(float(curve[-1]["travel_time_h"]))
+    assert f"all of it within {longest} h" in article
+    peaks = [row for row in rows_of(sample, "cross_checks") if row["outlet_id"] == "TC-003" and row["peak_cfs"]]
+    table = article[article.index("Peaks by other methods") :]
+    for row in peaks:
+        assert f"{three_figures(float(row['peak_cfs']))} cfs</td>" in table
+        assert row["source"] in article
+
+    run = tmp_path / "run"
+    shutil.copytree(sample, run)
+    (run / "time_area.csv").unlink()
+    (run / "cross_checks.csv").unlink()
+    without = read(pipeline.report(run))
+    assert "Time–area curve" not in without
+    assert "Peaks by other methods" not in without
+
+
 def test_hostile_text_stays_text_in_pages_tables_and_layer(hostile: Path) -> None:
     rows = rows_of(hostile, "outlets")
     assert [row["outlet_id"] for row in rows] == list(HOSTILE)

@@ -23,7 +23,7 @@ from basinwright.report.svg import (
     spread_labels,
     text,
 )
-from basinwright.tables import HYDROGRAPHS, OUTLETS, SEGMENTS, UNIT_HYDROGRAPHS
+from basinwright.tables import HYDROGRAPHS, OUTLETS, SEGMENTS, TIME_AREA, UNIT_HYDROGRAPHS
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -191,6 +191,35 @@ def unit_hydrograph(run: Run, outlet: Outlet) -> Markup | None:
         el("circle", cx=x, cy=y, r=4.0, fill=palette.ADOPTED),
         text(x + 9, y - 7, label),
         key=f"{outlet.anchor}-unit",
+    )  # fmt: skip
+
+
+def time_area(run: Run, outlet: Outlet) -> Markup | None:
+    """Draw the share of the basin whose water has arrived by each time; None where the run keeps none."""
+    if not outlet.time_area:
+        return None
+    hours, area = outlet.time_area["travel_time_h"], outlet.time_area["area"]
+    unit = words.unit_of(TIME_AREA.column("area"), run.system)
+    tc_h = outlet.row["tc_h"]
+    along = Scale(0.0, max(float(hours[-1]), tc_h) * 1.04, _LEFT, HALF - _RIGHT)
+    up = Scale(0.0, float(area[-1]) * 1.08, 232.0, 30.0)
+    x = along(tc_h)
+    left_side = x > HALF * 0.6
+    half_h = float(hours[(area >= 0.5 * area[-1]).argmax()])
+    half, all_of_it, tc = (words.figure(value) for value in (half_h, float(hours[-1]), tc_h))
+    description = (
+        f"Half of the basin's {words.figure(float(area[-1]))} {unit} arrives within {half} h, all of it within "
+        f"{all_of_it} h; the time of concentration is {tc} h."
+    )
+    line = [(along(0.0), up(0.0)), *_thinned(hours, area, along, up)]
+    return picture(
+        HALF, 272.0, "Time-area curve", description,
+        axis_left(up, _LEFT, f"area, {unit}", HALF - _RIGHT),
+        axis_bottom(along, 232.0, "travel time to the outlet, h", top=30.0),
+        polyline(line, stroke=palette.ADOPTED, stroke_width=2.2),
+        el("path", d=f"M{number(x)} 30V232", class_="limit"),
+        text(x - 6 if left_side else x + 6, 222.0, f"Tc {tc} h", anchor="end" if left_side else "start"),
+        key=f"{outlet.anchor}-arrival",
     )  # fmt: skip
 
 

@@ -14,7 +14,7 @@ from basinwright.registry import find
 from basinwright.report import charts, palette, words
 from basinwright.report.reading import Outlet, Run
 from basinwright.report.words import count, elevation, figure, listed, plain, short, station, unit_label, with_unit
-from basinwright.tables import COVER_SHARES, OUTLETS, SEGMENTS
+from basinwright.tables import COVER_SHARES, CROSS_CHECKS, OUTLETS, SEGMENTS
 from basinwright.units import SHOWN, System, parse_quantity
 
 FIRST_LOOK = 12
@@ -373,6 +373,9 @@ def outlet_facts(run: Run, outlet: Outlet) -> dict[str, Any]:
     facts["regimes"] = [key for key in palette.REGIMES if any(entry["regime"] == key for entry in outlet.segments)]
     facts["timing"] = _timing_table(outlet)
     facts["not_computed"] = _not_computed(outlet)
+    facts["cross_checks"] = _cross_checks(run, outlet)
+    translation = row.get("translation_peak_rate_factor", math.nan)
+    facts["translation"] = "" if translation != translation else figure(translation)
     facts["shares"] = _worksheet(run, outlet)
     return facts
 
@@ -466,6 +469,24 @@ def _not_computed(outlet: Outlet) -> list[str]:
         if row["tc_h"] != row["tc_h"]:
             by_reason.setdefault(plain(row["reason"]), []).append(charts.usual_name(row["method"]))
     return [f"{', '.join(names)}: {reason}" for reason, names in by_reason.items()]
+
+
+def _cross_checks(run: Run, outlet: Outlet) -> list[dict[str, Any]]:
+    """Return the peaks by other methods beside the hydrographs' own."""
+    unit = words.unit_of(CROSS_CHECKS.column("peak"), run.system)
+    periods = {float(period): period for period in run.periods}
+    return [
+        {
+            "period": periods.get(row["return_period_yr"], f"{row['return_period_yr']:g}"),
+            "method": plain(row["method"]),
+            "peak": f"{figure(row['peak'])} {unit}" if row["peak"] == row["peak"] else "–",
+            "ratio": figure(row["ratio"]),
+            "standing": "applicable" if row["applicable"] else plain(row["reason"]),
+            "source": plain(row["source"]),
+        }
+        for row in outlet.cross_checks
+        if row["peak"] == row["peak"]
+    ]
 
 
 def _class_names(run: Run) -> Mapping[str, str]:

@@ -166,6 +166,7 @@ def _page(run: Run, outlet: Outlet) -> dict[str, Any]:
         "close": maps.close_up(run, outlet),
         "profile": charts.profile(run, outlet, floor),
         "timing_chart": charts.timing(outlet),
+        "time_area": charts.time_area(run, outlet),
         "unit_hydrograph": charts.unit_hydrograph(run, outlet),
         "floods": charts.floods(run, outlet),
         "capacity": charts.capacity(run, outlet),

@@ -17,10 +17,12 @@ from basinwright.flags import FLAGS, SEVERITIES
 from basinwright.report import words
 from basinwright.tables import (
     COVER_SHARES,
+    CROSS_CHECKS,
     FLAGS_TABLE,
     HYDROGRAPHS,
     OUTLETS,
     SEGMENTS,
+    TIME_AREA,
     TIMING,
     UNIT_HYDROGRAPHS,
     Table,
@@ -67,8 +69,10 @@ class Outlet:
         Its row there.
     doubts : list of Doubt
         Its flags, the gravest first.
-    segments, timing, shares : list of Row
+    segments, timing, shares, cross_checks : list of Row
         Its rows of those tables.
+    time_area : dict
+        ``travel_time_h`` and ``area``; empty where the run keeps none.
     unit_hydrograph : dict
         ``time_h`` and ``flow``; empty where the run keeps none.
     floods : dict
@@ -91,6 +95,8 @@ class Outlet:
     segments: list[Row] = field(default_factory=list)
     timing: list[Row] = field(default_factory=list)
     shares: list[Row] = field(default_factory=list)
+    cross_checks: list[Row] = field(default_factory=list)
+    time_area: dict[str, Any] = field(default_factory=dict)
     unit_hydrograph: dict[str, Any] = field(default_factory=dict)
     floods: dict[str, dict[str, Any]] = field(default_factory=dict)
     basin: Any = None
@@ -237,9 +243,12 @@ def read_run(folder: Path, about: Mapping[str, Any]) -> Run:
     order = list(FLAGS)
     for outlet in outlets:
         outlet.doubts.sort(key=lambda doubt: (-_SEVERITIES.index(doubt.severity), order.index(doubt.key)))
-    for source, name in ((SEGMENTS, "segments"), (TIMING, "timing"), (COVER_SHARES, "shares")):
+    lists = {"segments": SEGMENTS, "timing": TIMING, "shares": COVER_SHARES, "cross_checks": CROSS_CHECKS}
+    for name, source in lists.items():
         for row in _rows(read(source)):
             getattr(by_id[row["outlet_id"]], name).append(row)
+    for outlet_id, _, part in _series(read(TIME_AREA), ("travel_time_h", "area")):
+        by_id[outlet_id].time_area = part
     for outlet_id, _, part in _series(read(UNIT_HYDROGRAPHS), ("time_h", "flow")):
         by_id[outlet_id].unit_hydrograph = part
     written = {float(period): period for period in periods}
