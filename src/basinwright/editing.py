@@ -208,7 +208,11 @@ class _Editor:
     def adjust(self, line: _Line, row: Row, filled: Row) -> None:
         """Check a row that differs from what was written, and which of its filled cells still stand."""
 
-    def otherwise(self, column: str, row: Row, line: _Line) -> str:
+    def key_of(self, row: Row, place: int) -> str:
+        """Return what a row is called that stands at a place within its outlet, counted from 1."""
+        return ""
+
+    def otherwise(self, column: str, row: Row, first: Row | None) -> str:
         """Return what a dependent cell holds that no person filled: empty where the hydrology computes it."""
         return ""
 
@@ -265,7 +269,9 @@ class _Editor:
 
     def apply(self, now: Iterable[tuple[int, Row]], edited_elsewhere: set[str]) -> list[Row]:
         """Return the rows for the hydrology, outlet by outlet in the order of the run."""
-        written, first = (_by_outlet(tables[self.table.name]) for tables in (self.record.written, self.record.first))
+        frames = self.record.written[self.table.name], self.record.first[self.table.name]
+        written = _by_outlet(frames[0])
+        first = written if frames[0] is frames[1] else _by_outlet(frames[1])
         held, supplied = (_by_row(cells, self.table.name) for cells in (self.record.held, self.record.supplied))
         standing: dict[str, list[tuple[int, Row]]] = {outlet_id: [] for outlet_id in written}
         for number, row in now:
@@ -276,9 +282,18 @@ class _Editor:
                 self.wrong(number, "outlet_id", what, "ids are text: keep each as the run wrote it")
         every: list[Row] = []
         for outlet_id, lines in standing.items():
-            matched = self.match(outlet_id, lines, written[outlet_id], first[outlet_id])
-            rows = []
-            for line in matched:
+            rows: list[Row] = []
+            if [row for _, row in lines] == written[outlet_id] == first[outlet_id]:  # as it is with nearly all
+                for place, row in enumerate(written[outlet_id], start=1):
+                    key = self.key_of(row, place)
+                    given = supplied.get((outlet_id, key), set())
+                    empty = [column for column, stem in self.dependent.items() if stem not in given]
+                    rows.append(row | {column: self.otherwise(column, row, row) for column in empty})
+                    self.held |= {(self.table.name, outlet_id, key, stem) for stem in given}
+                self.finish(outlet_id, rows, first[outlet_id])
+                every += rows
+                continue
+            for line in self.match(outlet_id, lines, written[outlet_id], first[outlet_id]):
                 given = {self.name[stem] for stem in supplied.get((outlet_id, line.key), set())}
                 stood = {self.name[stem] for stem in held.get((outlet_id, line.before_key), set())}
                 if line.first is not None and self.is_of(line.first, line) and not self.is_of(line.before, line):
@@ -288,7 +303,9 @@ class _Editor:
                     filled = self.as_first(row, filled, line.first, given)
                 if line.first is None or self.differs(row, filled, line.first, given):
                     self.edited.add((outlet_id, line.key))
-                row |= {column: filled.get(column, self.otherwise(column, row, line)) for column in self.dependent}
+                row |= {
+                    column: filled.get(column, self.otherwise(column, row, line.first)) for column in self.dependent
+                }
                 self.held |= {(self.table.name, outlet_id, line.key, self.dependent[column]) for column in filled}
                 rows.append(row)
             if len(rows) != len(first[outlet_id]):
@@ -422,9 +439,12 @@ class _ShareEditor(_Editor):
                         del free[at]
         return pairs
 
-    def otherwise(self, column: str, row: Row, line: _Line) -> str:
+    def key_of(self, row: Row, place: int) -> str:
+        """Return the number of the patch."""
+        return str(place)
+
+    def otherwise(self, column: str, row: Row, first: Row | None) -> str:
         """Return what the run first had on this class and group: it may be composite with mapped impervious area."""
-        first = line.first
         same_patch = first is not None and all(same(row[name], first[name]) for name in ("cover", "soil_group"))
         return first[column] if first is not None and same_patch else ""
 
@@ -450,8 +470,12 @@ class _SegmentEditor(_Editor):
 
     table = SEGMENTS
     dependent_stems = ("slope", "roughness", "hydraulic_radius", "hydraulic_radius_half")
-    section_stems = ("roughness", "hydraulic_radius", "hydraulic_radius_half")
+    section_stems: ClassVar[tuple[str, ...]] = ("roughness", "hydraulic_radius", "hydraulic_radius_half")
     """Dependent cells that mean something else in another regime."""
+
+    def key_of(self, row: Row, place: int) -> str:
+        """Return the number of the segment, which it keeps whatever is added or deleted before it."""
+        return row["segment"]
 
     def match(self, outlet_id: str, now: list[tuple[int, Row]], before: list[Row], first: list[Row]) -> list[_Line]:
         """Put the rows in downstream order and pair them by number; a row without one of its own is an added one."""

@@ -67,7 +67,7 @@ def test_the_content_as_it_is_is_sound(content):
     assert looked_at(*content)
 
 
-@settings(max_examples=300, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@settings(max_examples=100, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
 @given(data=st.data())
 def test_one_value_of_any_kind(content, data):
     folder, sound = content
@@ -78,7 +78,7 @@ def test_one_value_of_any_kind(content, data):
     looked_at(folder, changed)
 
 
-@settings(max_examples=100, deadline=None)
+@settings(max_examples=60, deadline=None)
 @given(data=st.data())
 def test_many_values_of_any_kind(content, data):
     folder, sound = content
@@ -93,7 +93,7 @@ def test_many_values_of_any_kind(content, data):
     looked_at(folder, changed)
 
 
-@settings(max_examples=100, deadline=None)
+@settings(max_examples=60, deadline=None)
 @given(st.dictionaries(st.sampled_from([*Project.model_fields, "other"]), value, max_size=8))
 def test_any_content(tmp_path_factory, data):
     assert not looked_at(tmp_path_factory.getbasetemp(), data)

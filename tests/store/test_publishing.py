@@ -170,7 +170,7 @@ class TestCrash:
 
         reset()
         total = count_steps(work)
-        steps = sorted({*range(0, total, max(1, total // 8)), *range(total - 12, total)})
+        steps = sorted({*range(0, total, max(1, total // 5)), *range(total - 8, total)})
         seen = self.check(work, work, final, before, after, reset, steps)
         assert {"old", "new"} <= seen
 
@@ -200,8 +200,8 @@ class TestCrash:
         reset()
         total = count_steps(work)
         reset()
-        steps = sorted({*range(0, total, max(1, total // 6)), *range(total - 6, total)})
-        seen = self.check(work, mend, final, before, after, reset, steps, kills=6, seconds=seconds)
+        steps = sorted({*range(0, total, max(1, total // 4)), *range(total - 6, total)})
+        seen = self.check(work, mend, final, before, after, reset, steps, kills=4, seconds=seconds)
         assert {"old", "new"} <= seen
 
     def test_first_run(self, project):
