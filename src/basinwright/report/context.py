@@ -263,11 +263,12 @@ def settings(run: Run) -> list[tuple[str, str]]:
         ("Soils", f"one group, {soils['group']}" if soils.get("group") else f"dual groups {soils['dual_groups']}"),
         ("Sheet flow up to", length(path["sheet_limit"])),
         ("Slope floor", f"{figure(100 * path['slope_floor'])} %"),
-        ("Channel roughness", f"Manning n {channel['roughness']}"),
+        ("Channel roughness", _roughness(channel["roughness"])),
         ("Channel sections", f"bankfull relation, region {plain(channel['bankfull_region'])}"),
         ("Stage adopted", {"half": "half the bankfull depth"}.get(channel["stage"], channel["stage"])),
         ("Storm", f"{_quantity(storm['duration'], 'time', system)}, {find('storm', storm['distribution']).name}"),
         ("Depths", ", ".join(depths) or "by outlet"),
+        ("Areal reduction", plain(storm["areal_reduction"]).replace("_", " and ").title()),
         ("Initial abstraction", f"{runoff['initial_abstraction_ratio']:g} S"),
         ("Moisture class", runoff["moisture"]),
         ("Runoff of a basin", _WEIGHTING.get(runoff["weighting"], runoff["weighting"])),
@@ -275,6 +276,13 @@ def settings(run: Run) -> list[tuple[str, str]]:
         ("Unit hydrograph", f"{find('unit_hydrograph', uh['shape']).name}{factor}"),
         ("Second opinion on areas", _AUDIT.get(project["audit"]["second_opinion"], "none asked for")),
     ]
+
+
+def _roughness(value: float | str) -> str:
+    """Say where the channels' roughness comes from."""
+    if value == "jarrett":
+        return "Manning n by slope and hydraulic radius, Jarrett (1984)"
+    return f"Manning n of column {plain(value)}" if isinstance(value, str) else f"Manning n {value:g}"
 
 
 _WITH_FACTOR = ("curvilinear", "triangular", "gamma")
