@@ -82,12 +82,18 @@ def whole(finished: Path, tmp_path: Path) -> Run:
     return Run(Path(shutil.copytree(finished, tmp_path / "out")))
 
 
+@pytest.fixture(scope="session")
+def tables(finished: Path) -> Path:
+    """The same run without layers, series and report, which would only take time."""
+    return pipeline.run(finished.parent / "project.toml", out=finished.parent / "tables", summary_only=True).folder
+
+
 @pytest.fixture
-def run(finished: Path, tmp_path: Path) -> Run:
-    """A copy of its tables alone: all that `retime` needs, and quicker, since no layer is written."""
+def run(tables: Path, tmp_path: Path) -> Run:
+    """A copy of its tables alone: all that `retime` needs."""
     folder = tmp_path / "out"
     folder.mkdir()
-    for path in [*finished.glob("*.csv"), *finished.glob("*.json")]:
+    for path in [*tables.glob("*.csv"), *tables.glob("*.json")]:
         shutil.copy(path, folder)
     return Run(folder)
 
@@ -710,10 +716,10 @@ class TestRefused:
         assert list(tmp_path.iterdir()) == []
 
 
-def test_layers_show_the_edited_segments(whole):
+def test_layers_show_the_edited_segments_and_come_back(whole):
     import geopandas as gpd
 
-    rows = whole.read("segments")
+    before, original, rows = whole.files(), whole.read("segments"), whole.read("segments")
     split(rows, "A", "5", 800.0)
     whole.save("segments", rows)
     whole.retime()
@@ -721,3 +727,6 @@ def test_layers_show_the_edited_segments(whole):
     pieces = layer[(layer.outlet_id == "A") & (layer.from_m >= 660)]
     assert pieces.edited.tolist() == [True, True]
     assert pieces.length.tolist() == pytest.approx([800.0 - 665.7106800079346, 1060.7106800079346 - 800.0], rel=1e-3)
+    whole.save("segments", original)
+    whole.retime()
+    assert whole.files() == before
