@@ -183,11 +183,11 @@ class TestOwn:
             "own.csv: column shallow: is missing: rename 'shalow' to it",
             "own.csv: column CN_D: is not a column of a scheme: remove it; known: code, name, cn_a, cn_b, cn_c, cn_d, "
             "sheet_n, shallow, impervious_pct, pervious_cn_a, pervious_cn_b, pervious_cn_c, pervious_cn_d, open_water, "
-            "source",
+            "retardance_n, runoff_coefficient, source",
             "own.csv: column shalow: is not a column of a scheme: did you mean 'shallow'?",
             "own.csv: column colour: is not a column of a scheme: remove it; known: code, name, cn_a, cn_b, cn_c, "
             "cn_d, sheet_n, shallow, impervious_pct, pervious_cn_a, pervious_cn_b, pervious_cn_c, pervious_cn_d, "
-            "open_water, source",
+            "open_water, retardance_n, runoff_coefficient, source",
             "own.csv: column code: stands twice: keep one",
         ]
 
