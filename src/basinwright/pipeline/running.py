@@ -214,14 +214,18 @@ def retime(run_dir: Path, *, say: Say = _silent) -> Outcome:
         say("Timing, runoff and hydrographs")
         summary_only = bool(about["summary_only"])
         flags = manifest.terrain_flags(about)
-        results = compute(
-            {**edits.tables, "time_area": manifest.time_area(about)},
-            settings,
-            terrain_flags=flags,
-            held=edits.held,
-            edited=edits.segments,
-            series=not summary_only,
-        )
+        try:
+            results = compute(
+                {**edits.tables, "time_area": manifest.time_area(about)},
+                settings,
+                terrain_flags=flags,
+                held=edits.held,
+                edited=edits.segments,
+                series=not summary_only,
+            )
+        except RangeError as error:
+            what, fix = f"cannot be computed: {error}", "undo the edit that gave this number"
+            raise InputRejected.one(str(folder.final), "tables", what, fix) from error
         say("Writing")
         try:
             partial = folder.begin_copy()
