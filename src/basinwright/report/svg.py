@@ -30,8 +30,8 @@ def el(tag: str, *children: object, **attributes: object) -> Markup:
     parts = [f"<{tag}"]
     for name, value in attributes.items():
         if value is not None:
-            text = number(value) if isinstance(value, float) else value
-            parts.append(f' {name.rstrip("_").replace("_", "-")}="{escape(text)}"')
+            text = number(value) if isinstance(value, float) else escape(value)
+            parts.append(f' {name.rstrip("_").replace("_", "-")}="{text}"')
     if not children:
         return Markup("".join(parts) + "/>")  # every value above is escaped
     return Markup("".join(parts) + ">") + join(children) + Markup(f"</{tag}>")
@@ -39,7 +39,7 @@ def el(tag: str, *children: object, **attributes: object) -> Markup:
 
 def join(parts: Iterable[object]) -> Markup:
     """Return parts one after the other, escaped where they are no markup."""
-    return Markup("").join(parts)  # type: ignore[arg-type]
+    return Markup("".join(part if isinstance(part, Markup) else escape(part) for part in parts))  # each is escaped
 
 
 def picture(
