@@ -268,7 +268,7 @@ def settings(run: Run) -> list[tuple[str, str]]:
         ("Stage adopted", {"half": "half the bankfull depth"}.get(channel["stage"], channel["stage"])),
         ("Storm", f"{_quantity(storm['duration'], 'time', system)}, {find('storm', storm['distribution']).name}"),
         ("Depths", ", ".join(depths) or "by outlet"),
-        ("Areal reduction", plain(storm["areal_reduction"]).replace("_", " and ").title()),
+        ("Areal reduction", _REDUCTION.get(storm["areal_reduction"], storm["areal_reduction"])),
         ("Initial abstraction", f"{runoff['initial_abstraction_ratio']:g} S"),
         ("Moisture class", runoff["moisture"]),
         ("Runoff of a basin", _WEIGHTING.get(runoff["weighting"], runoff["weighting"])),
@@ -286,6 +286,7 @@ def _roughness(value: float | str) -> str:
 
 
 _WITH_FACTOR = ("curvilinear", "triangular", "gamma")
+_REDUCTION = {"leclerc_schaake": "Leclerc and Schaake"}
 _WEIGHTING = {"runoff": "mean of each patch's runoff", "curve_number": "runoff of the mean curve number"}
 _AUDIT = {"all": "every basin, by an independent program", "sample": "20 basins, by an independent program"}
 
