@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import math
 from collections import Counter
 from dataclasses import dataclass
 from pathlib import Path
 
 from basinwright.flags import FLAGS, SEVERITIES, Flag
 from basinwright.hydrology import Columns
+from basinwright.numbers import three_figures
 from basinwright.project import Project
 from basinwright.tables import OUTLETS
 
@@ -91,15 +93,11 @@ def _some(names: list[str]) -> str:
 
 
 def _figure(value: object) -> str:
-    """Return a value as an engineer would sign it: three significant figures."""
+    """Return a number with three significant figures, anything else as it stands, nothing where it is missing."""
     if value is None or value == "":
         return ""
     try:
         number = float(str(value))
     except ValueError:
         return str(value)
-    if number != number:
-        return ""
-    if abs(number) >= 1000:
-        return f"{round(number, 2 - len(str(int(abs(number)))) + 1):,.0f}"
-    return f"{number:.3g}"
+    return "" if math.isnan(number) else three_figures(number)
