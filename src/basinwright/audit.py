@@ -79,6 +79,11 @@ class Opinion:
     lost_km2: float
 
 
+def pysheds_cache() -> Path:
+    """Return the folder of pysheds' compiled code, beside ours: it outlives a change of our kernels."""
+    return Path(os.environ["NUMBA_CACHE_DIR"]).with_name("pysheds")
+
+
 def second_opinion(clips: Sequence[Clip]) -> list[Opinion]:
     """Ask pysheds for the areas of clipped basins.
 
@@ -94,12 +99,9 @@ def second_opinion(clips: Sequence[Clip]) -> list[Opinion]:
     with tempfile.TemporaryDirectory(prefix="basinwright-audit-") as folder:
         asked = {f"{name}_{i}": value for i, clip in enumerate(clips) for name, value in vars(clip).items()}
         np.savez(Path(folder, "clips.npz"), allow_pickle=False, count=len(clips), **asked)
-        # Its compiled code outlives a change of our kernels: give it a cache of its own.
-        ours = os.environ.get("NUMBA_CACHE_DIR", folder)
-        cache = str(Path(ours).with_name("pysheds"))
         child = subprocess.run(
             [sys.executable, "-P", "-m", "basinwright.audit", folder],
-            env={**os.environ, "NUMBA_CACHE_DIR": cache},
+            env={**os.environ, "NUMBA_CACHE_DIR": str(pysheds_cache())},
             capture_output=True,
             text=True,
             check=False,

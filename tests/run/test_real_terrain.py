@@ -12,7 +12,7 @@ from pyproj import Geod
 
 from basinwright import pipeline
 
-pytestmark = pytest.mark.slow
+pytestmark = [pytest.mark.slow, pytest.mark.xdist_group("pysheds")]
 
 OUTLETS = {
     "river": (147, 203), "valley": (90, 59), "lower": (213, 95), "upper": (209, 100), "east": (231, 203),
