@@ -3,7 +3,7 @@ PYTHON ?= python3
 BIN := .venv/bin
 OUT ?= basinwright-demo
 
-.PHONY: demo test lint format bench lock clean
+.PHONY: demo test lint format bench docs mutants lock clean
 
 demo: .venv/runtime-ready
 	$(BIN)/basinwright demo $(OUT)
@@ -23,6 +23,14 @@ format: .venv/dev-ready
 
 bench: .venv/dev-ready
 	$(BIN)/python tests/bench/bench.py --out bench.json
+
+# The generated pages of docs/.
+docs: .venv/dev-ready
+	PYTHONPATH=tests $(BIN)/python -m docs.pages
+
+# Whether the published cases notice a slip in a formula: about a quarter of an hour, writes docs/mutation.md.
+mutants: .venv/dev-ready
+	PYTHONPATH=tests $(BIN)/python -m mutation.mutate
 
 # The lock files: versions and hashes only. Needs uv (any recent one) on PATH, or UV=/path/to/uv.
 UV ?= uv

@@ -18,7 +18,7 @@ def show() -> None:
         print(f"{heading}\n{'=' * len(heading)}")
         for entry in methods(kind).values():
             print(f"\n{entry.key}: {entry.name}")
-            for name, text in _facts(entry):
+            for name, text in facts(entry):
                 print(f"    {name:<8}{text}")
         print()
     print("Published tables\n================")
@@ -27,7 +27,8 @@ def show() -> None:
         print(f"\n{name}: {table.title}\n    source  {table.source}\n    checked {table.checked}")
 
 
-def _facts(entry: Method) -> list[tuple[str, str]]:
+def facts(entry: Method) -> list[tuple[str, str]]:
+    """Return what is published of a method, each fact with its label: form, inputs, range, limits, source."""
     ranges = "; ".join(
         f"{name}: {bounds.printed or f'{bounds.low:g} to {bounds.high:g}'}"
         for name, bounds in entry.valid_range.items()

@@ -3,8 +3,8 @@
 A case file is YAML, one published document each. It names a public function, its inputs with the units in
 which the document prints them, and the printed answer; the tolerance is half of the last printed digit unless
 the case says why it is wider. An input may be a mapping of columns, each converted by its own name, or an object: a
-mapping with ``call`` and ``inputs``. ``pick`` walks into what the call returns, by attributes, keys and indices; ``first``
-keeps the first numbers of a longer answer. The ledger of all cases follows from `load_all`.
+mapping with ``call`` and ``inputs``. ``pick`` walks into what the call returns, by attributes, keys and indices;
+``first`` keeps the first numbers of a longer answer. The ledger of all cases follows from `load_all`.
 """
 
 from __future__ import annotations
