@@ -2,16 +2,23 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 import pytest
 from affine import Affine
+from hypothesis import settings
 from pyproj import CRS
 
 from basinwright.grid import Grid
 from basinwright.terrain import Terrain, condition_and_route
+
+# In continuous integration the same examples every time; at a desk new ones.
+settings.register_profile("ci", derandomize=True, deadline=None)
+settings.register_profile("desk", deadline=None)
+settings.load_profile("ci" if os.environ.get("CI") else "desk")
 
 
 @dataclass(frozen=True)
