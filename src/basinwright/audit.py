@@ -9,12 +9,15 @@ Run as a program (``python -m basinwright.audit``) this module is the child.
 
 from __future__ import annotations
 
+import fcntl
 import json
 import os
+import shutil
 import subprocess
 import sys
 import tempfile
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
 from dataclasses import asdict, dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -79,6 +82,27 @@ class Opinion:
     lost_km2: float
 
 
+def _ask(folder: str) -> subprocess.CompletedProcess[str]:
+    """Run the child on the clips of a folder."""
+    return subprocess.run(
+        [sys.executable, "-P", "-m", "basinwright.audit", folder],
+        env={**os.environ, "NUMBA_CACHE_DIR": str(pysheds_cache())},
+        capture_output=True,
+        text=True,
+        check=False,
+    )
+
+
+@contextmanager
+def _cache_to_ourselves() -> Iterator[None]:
+    """Hold pysheds' compiled code against a second audit: numba cannot use what another process is still writing."""
+    lock = pysheds_cache().with_name("pysheds.lock")
+    lock.parent.mkdir(parents=True, exist_ok=True)
+    with lock.open("w") as stream:
+        fcntl.flock(stream, fcntl.LOCK_EX)
+        yield
+
+
 def pysheds_cache() -> Path:
     """Return the folder of pysheds' compiled code, beside ours: it outlives a change of our kernels."""
     return Path(os.environ["NUMBA_CACHE_DIR"]).with_name("pysheds")
@@ -99,13 +123,11 @@ def second_opinion(clips: Sequence[Clip]) -> list[Opinion]:
     with tempfile.TemporaryDirectory(prefix="basinwright-audit-") as folder:
         asked = {f"{name}_{i}": value for i, clip in enumerate(clips) for name, value in vars(clip).items()}
         np.savez(Path(folder, "clips.npz"), allow_pickle=False, count=len(clips), **asked)
-        child = subprocess.run(
-            [sys.executable, "-P", "-m", "basinwright.audit", folder],
-            env={**os.environ, "NUMBA_CACHE_DIR": str(pysheds_cache())},
-            capture_output=True,
-            text=True,
-            check=False,
-        )
+        with _cache_to_ourselves():
+            child = _ask(folder)
+            if child.returncode != 0:  # numba can stumble over half a cache: once more, from none
+                shutil.rmtree(pysheds_cache(), ignore_errors=True)
+                child = _ask(folder)
         if child.returncode != 0:
             said = (child.stderr.strip().splitlines() or ["no message"])[-1]
             raise BasinwrightError(f"the audit's pysheds process failed: {said}")

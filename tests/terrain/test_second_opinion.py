@@ -11,10 +11,10 @@ pytestmark = [pytest.mark.slow, pytest.mark.xdist_group("pysheds")]  # compiled 
 
 
 @pytest.fixture(scope="module", autouse=True)
-def _pysheds_in_the_cache_of_the_audit():
+def _pysheds_in_a_cache_of_its_own():
     import numba
 
-    ours, numba.config.CACHE_DIR = numba.config.CACHE_DIR, str(pysheds_cache())
+    ours, numba.config.CACHE_DIR = numba.config.CACHE_DIR, str(pysheds_cache().with_name("pysheds-in-tests"))
     try:
         import pysheds.grid  # noqa: F401 - compiles for a minute where the cache is cold
     finally:
@@ -40,7 +40,6 @@ def test_filled_floats_are_the_same_bits():
     rng = np.random.default_rng(5)
     coarse = np.kron(rng.random((16, 16)), np.ones((10, 10)))
     z = (50 * coarse + rng.random((160, 160))).astype(np.float32)
-    # In 64 bits, as in the audit: numba cannot add a type to what pysheds has in its cache (KeyError: generator).
     grid = pysheds_grid(z.shape, np.float64(-9999))
     theirs = grid.fill_depressions(Raster(z.astype(np.float64), viewfinder=grid.viewfinder))
     ones = np.ones(160)
