@@ -88,6 +88,11 @@ class TestShipped:
             assert row["why"]
 
     @pytest.mark.parametrize("name", SHIPPED)
+    def test_every_retardance_is_one_of_kerby(self, name):
+        kerby = {row["retardance_n"] for row in published.table("kerby_retardance").rows}
+        assert {row["retardance_n"] for row in published.table(f"cover_{name}").rows} <= kerby | {""}
+
+    @pytest.mark.parametrize("name", SHIPPED)
     def test_wetlands_and_water_do_not_ask_for_soil(self, name):
         scheme = load_scheme(name)
         assert [entry.code for entry in scheme.classes.values() if not entry.needs_soil] == ["11", "90", "95"]
