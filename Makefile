@@ -28,7 +28,7 @@ bench: .venv/dev-ready
 docs: .venv/dev-ready
 	PYTHONPATH=tests $(BIN)/python -m docs.pages
 
-# Whether the published cases notice a slip in a formula: about a quarter of an hour, writes docs/mutation.md.
+# Whether the published cases notice a slip in a formula: about half an hour, writes docs/mutation.md.
 mutants: .venv/dev-ready
 	PYTHONPATH=tests $(BIN)/python -m mutation.mutate
 
