@@ -1,4 +1,4 @@
-"""Every flag of the contract: one project that raises it, one that comes close and does not.
+"""Every flag: one project that raises it, one that comes close and does not.
 
 All cases are one quiet valley, 100 x 61 cells of 20 m inside a rim, with one thing changed.
 """
@@ -293,7 +293,7 @@ def test_a_basin_of_seconds_fails_alone(tmp_path):
 def test_a_flag_knows_its_severity_and_remedy():
     serious = {key for key, kind in FLAGS.items() if kind.severity == "serious"}
     notes = {key for key, kind in FLAGS.items() if kind.severity == "note"}
-    assert serious == {  # the contract's
+    assert serious == {
         "EDGE_TOUCH", "AREA_MISMATCH", "VERTICAL_UNIT_ASSUMED", "STORM_COARSE", "AUDIT_DIFFERS", "OUTLET_FAILED",
     }  # fmt: skip
     assert notes >= {"SHEET_LIMIT", "NO_CHANNEL", "TC_MINIMUM", "OVERRIDE", "AREAL_UNREDUCED"}

@@ -47,7 +47,7 @@ def layer(sample, name):
     return gpd.read_file(sample / "basins.gpkg", layer=name)
 
 
-def test_files_of_the_contract(sample):
+def test_files_that_readme_lists(sample):
     expected = {f"{name}.csv" for name in TABLES} | {"run.json", "tables.json", "basins.gpkg", "terrain"}
     assert expected <= {path.name for path in sample.iterdir()}
     assert not list(sample.parent.glob(".out.*")), "nothing is left of the building of the run"
@@ -56,7 +56,7 @@ def test_files_of_the_contract(sample):
 # Tables
 
 
-def test_tables_are_csv_as_the_contract_says(sample):
+def test_tables_are_csv_by_rfc_4180(sample):
     for name in TABLES:
         raw = (sample / f"{name}.csv").read_bytes()
         assert not raw.startswith(b"\xef\xbb\xbf")
@@ -130,9 +130,9 @@ COLUMNS = {
 
 @pytest.mark.parametrize("name", COLUMNS)
 def test_columns(tables, name):
-    """Those of the contract, in its order; others may stand among them."""
-    of_contract = COLUMNS[name].split()
-    assert [column for column in tables[name][0] if column in of_contract] == of_contract
+    """Those that other programs rely on, in order; others may stand among them."""
+    relied_on = COLUMNS[name].split()
+    assert [column for column in tables[name][0] if column in relied_on] == relied_on
 
 
 # Segments
@@ -320,7 +320,7 @@ def test_the_sample_shows_what_it_was_made_to_show(tables):
 # Layers
 
 
-def test_layers_of_the_contract(sample):
+def test_layers_that_readme_lists(sample):
     names = dict(pyogrio.list_layers(sample / "basins.gpkg").tolist())
     assert names == {
         "outlets": "Point", "basins": "MultiPolygon", "subbasins": "MultiPolygon", "flow_paths": "LineString",
