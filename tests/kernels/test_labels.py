@@ -95,7 +95,7 @@ def test_label_and_distance_are_those_of_a_walk_down(seed, count):
     for i, cell in enumerate(outlets):
         below = [(number[c], way) for c, way in walk(terrain, cell) if c in number][1:]
         assert (parent[i], parent_distance[i]) == (below[0] if below else (NO_CELL, 0))
-    assert (terrain.grid(label)[np.isinf(terrain.filled_grid)] == NO_CELL).all()
+    assert (terrain.grid(label)[np.isinf(terrain.conditioned_grid)] == NO_CELL).all()
 
 
 @settings(max_examples=25, deadline=None)

@@ -55,13 +55,13 @@ def flood(z):
 
 def data(terrain, grid):
     """A copy of a grid with NaN where the terrain is void."""
-    return np.where(np.isfinite(terrain.filled_grid), grid, np.nan)
+    return np.where(np.isfinite(terrain.conditioned_grid), grid, np.nan)
 
 
 def check_routing(z, terrain):
     """What holds on any terrain: drained, no cycle, never uphill, areas add up."""
     void = ~np.isfinite(z)
-    codes, area, level = terrain.directions_grid, terrain.area_grid, terrain.filled_grid
+    codes, area, level = terrain.directions_grid, terrain.area_grid, terrain.conditioned_grid
     np.testing.assert_array_equal(codes == VOID, void)
     assert ((codes <= EXIT) | void).all()
     beside_void = ndimage.binary_dilation(np.pad(void, 1, constant_values=True), EIGHT)[1:-1, 1:-1]
@@ -101,7 +101,7 @@ def test_any_terrain_drains_without_cycles_and_fills_exactly(z):
     terrain = route(z, dx, dy)
     check_routing(z, terrain)
     expected = flood(z)
-    np.testing.assert_array_equal(data(terrain, terrain.filled_grid), expected)
+    np.testing.assert_array_equal(data(terrain, terrain.conditioned_grid), expected)
     depth = np.nan_to_num(expected - z.astype(np.float64))
     assert terrain.filled_cells == np.count_nonzero(depth)
     assert terrain.deepest_fill_m == depth.max()
@@ -114,7 +114,7 @@ def test_fill_of_nested_pits_and_wide_lakes_equals_the_textbook_flood(seed):
     z = ndimage.gaussian_filter(rng.normal(size=(120, 90)), 1 + seed).astype(np.float32)
     z[40:44, 30:60] = np.nan
     terrain = route(z)
-    np.testing.assert_array_equal(data(terrain, terrain.filled_grid), flood(z))
+    np.testing.assert_array_equal(data(terrain, terrain.conditioned_grid), flood(z))
     check_routing(z, terrain)
 
 
@@ -125,8 +125,8 @@ def test_a_pit_in_a_pit_fills_to_the_lower_of_the_rims_outside_it():
     z[4, 4] = 1.0  # ... with a pit
     z[0:2, 4] = 5.0  # the way out
     terrain = route(z)
-    assert terrain.filled_grid[4, 4] == 6.0
-    assert (terrain.filled_grid[2:7, 2] == 5.0).all()
+    assert terrain.conditioned_grid[4, 4] == 6.0
+    assert (terrain.conditioned_grid[2:7, 2] == 5.0).all()
     assert terrain.filled_cells == 16 + 1
     assert terrain.deepest_fill_m == 5.0
     assert terrain.filled_volume_m3 == (16 * 1.0 + 5.0) * 100.0
@@ -137,7 +137,7 @@ def test_an_inverted_cone_is_a_lake_at_the_level_of_its_lowest_rim():
     cone = np.hypot(row, col).astype(np.float32)
     terrain = route(cone)
     assert terrain.deepest_fill_m == 20.0
-    np.testing.assert_array_equal(terrain.filled_grid, np.maximum(cone, 20.0))
+    np.testing.assert_array_equal(terrain.conditioned_grid, np.maximum(cone, 20.0))
 
 
 def test_a_cone_sheds_water_alike_on_all_sides():
@@ -256,7 +256,7 @@ def test_flats_flow_towards_lower_and_away_from_higher_ground(seed):
     rng = np.random.default_rng(seed)
     z = np.round(ndimage.gaussian_filter(rng.normal(size=(70, 60)), 4) * 40).astype(np.float32)
     terrain = route(z)
-    level, codes = terrain.filled_grid, terrain.directions_grid
+    level, codes = terrain.conditioned_grid, terrain.directions_grid
     edge = np.zeros(z.shape, bool)
     edge[[0, -1]] = edge[:, [0, -1]] = True
     lowest = ndimage.minimum_filter(level, footprint=EIGHT, mode="constant", cval=np.inf)
@@ -306,7 +306,7 @@ def test_float64_terrain_is_rounded_to_float32_and_says_by_how_much():
     assert route(z.astype(np.float32)).largest_rounding_m == 0
     whole = np.full((3, 3), 2.0**24)
     assert route(whole).largest_rounding_m == 0
-    assert (route(whole).filled_grid == 2.0**24).all()
+    assert (route(whole).conditioned_grid == 2.0**24).all()
 
 
 def test_elevations_with_the_smallest_possible_drops_still_drain():
@@ -321,7 +321,7 @@ def test_the_given_array_is_not_changed_and_may_be_a_view():
     kept = z.copy()
     terrain = route(view)
     np.testing.assert_array_equal(z, kept)
-    np.testing.assert_array_equal(terrain.filled_grid, route(view.copy()).filled_grid)
+    np.testing.assert_array_equal(terrain.conditioned_grid, route(view.copy()).conditioned_grid)
 
 
 @pytest.mark.parametrize(
@@ -372,7 +372,7 @@ def test_cells_and_rows_and_columns_are_inverse():
     terrain = route(np.random.default_rng(1).random((5, 7)))
     rows, cols = np.mgrid[0:5, 0:7]
     cells = terrain.cells_at(rows, cols)
-    np.testing.assert_array_equal(terrain.filled_m[cells], terrain.filled_grid)
+    np.testing.assert_array_equal(terrain.conditioned_m[cells], terrain.conditioned_grid)
     for given_index, found in zip((rows, cols), terrain.rows_cols(cells), strict=True):
         np.testing.assert_array_equal(given_index, found)
 

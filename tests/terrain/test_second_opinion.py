@@ -43,7 +43,7 @@ def test_filled_floats_are_the_same_bits():
     grid = pysheds_grid(z.shape, np.float64(-9999))
     theirs = grid.fill_depressions(Raster(z.astype(np.float64), viewfinder=grid.viewfinder))
     ones = np.ones(160)
-    ours = condition_and_route(z, ones, ones, ones).filled_grid
+    ours = condition_and_route(z, ones, ones, ones).conditioned_grid
     np.testing.assert_array_equal(ours, np.asarray(theirs))
 
 

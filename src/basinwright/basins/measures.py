@@ -74,7 +74,7 @@ def _by_label(
         rows = slice(first, first + len(slope))
         elevation = np.ascontiguousarray(elevation_m[rows], np.float64)
         reduce.keep_extremes(label, ncols, first, elevation, lowest, highest, highest_cell)
-        filled = terrain.filled_grid[rows]
+        filled = terrain.conditioned_grid[rows]
         with np.errstate(invalid="ignore"):
             depth = np.where(np.isfinite(filled), filled - elevation.astype(np.float32), 0).astype(np.float64)
         values = {
@@ -114,7 +114,7 @@ def _quanta(grid: Grid, terrain: Terrain, elevation_m: np.ndarray) -> dict[str, 
 
 def _contact(terrain: Terrain, rows: slice) -> np.ndarray:
     """1.0 for every cell of some rows with the raster's edge or a void among its eight neighbours, else 0.0."""
-    padded = terrain.filled_m.reshape(terrain.nrows + 2, terrain.ncols + 2)
+    padded = terrain.conditioned_m.reshape(terrain.nrows + 2, terrain.ncols + 2)
     missing = np.isinf(padded[rows.start : rows.stop + 2])
     beside = missing[:, :-2] | missing[:, 1:-1] | missing[:, 2:]
     return (beside[:-2] | beside[1:-1] | beside[2:]).astype(np.float64)

@@ -55,7 +55,7 @@ def time_area_curves(terrain: Terrain, basins: Basins, step_time_h: StepTime) ->
         shape = (rows.stop - rows.start, ncols)
         length, fall, source = np.empty(shape), np.empty(shape), np.empty(shape, np.uint8)
         travel.block_steps(
-            terrain.directions, terrain.filled_m, receives, ncols, terrain.step_um, first, length, fall, source
+            terrain.directions, terrain.conditioned_m, receives, ncols, terrain.step_um, first, length, fall, source
         )
         step_h = step_time_h(rows, length, fall, terrain.area_grid[rows] * 1e-6, source.astype(bool))
         terrain.grid(time_us)[rows] = np.rint(np.where(length > 0, step_h, 0.0) * _US_PER_H)

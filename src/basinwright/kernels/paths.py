@@ -22,7 +22,7 @@ _BY_REGIME, _BY_COVER, _BY_TRIBUTARY = range(3)
 @njit(cache=True, nogil=True)
 def profile(
     bounds: np.ndarray, cells: np.ndarray, directions: np.ndarray, ncols: int, step_um: np.ndarray,
-    filled_m: np.ndarray, area_m2: np.ndarray,
+    conditioned_m: np.ndarray, area_m2: np.ndarray,
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:  # fmt: skip
     """Distance, elevation and contributing area of every path cell.
 
@@ -33,7 +33,7 @@ def profile(
     directions : uint8 array, shape (cells,)
     ncols : int
     step_um : int64 array, shape (nrows, 8) [micrometres]
-    filled_m : float32 array, shape (cells,) [m]
+    conditioned_m : float32 array, shape (cells,) [m]
     area_m2 : float64 array, shape (cells,) [m2]
 
     Returns
@@ -51,7 +51,7 @@ def profile(
         for j in range(bounds[i], bounds[i + 1]):
             c = cells[j]
             distance_m[j] = away_um / 1e6
-            elevation_m[j] = filled_m[c]
+            elevation_m[j] = conditioned_m[c]
             area_km2[j] = area_m2[c] / 1e6
             code = directions[c]
             if code < EXIT:

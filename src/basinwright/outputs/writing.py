@@ -70,7 +70,7 @@ def write_terrain(folder: Path, grid: Grid, terrain: Terrain) -> None:
     from basinwright.io.rasters import write_cog
 
     folder.mkdir()
-    conditioned = terrain.filled_grid
+    conditioned = terrain.conditioned_grid
     write_cog(
         folder / "conditioned.tif",
         np.where(np.isfinite(conditioned), conditioned, np.float32(-9999.0)),

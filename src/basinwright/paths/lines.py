@@ -77,7 +77,7 @@ def stream_reaches(grid: Grid, terrain: Terrain, stream_area_km2: float) -> dict
         terrain.directions, terrain.area_m2, terrain.nrows, terrain.ncols, round(stream_area_km2 * 1e6, 6)
     )
     away_m, _, _ = kernel.profile(
-        bounds, cells, terrain.directions, terrain.ncols, terrain.step_um, terrain.filled_m, terrain.area_m2
+        bounds, cells, terrain.directions, terrain.ncols, terrain.step_um, terrain.conditioned_m, terrain.area_m2
     )
     x, y = grid.xy(*terrain.rows_cols(cells))
     return {

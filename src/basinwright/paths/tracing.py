@@ -78,7 +78,7 @@ def trace(terrain: Terrain, basins: Basins) -> Paths:
     ends = basins.by_outlet(basins.label_cell, failed=NO_CELL)
     bounds, cells = trace_paths(terrain.directions, terrain.ncols, starts, ends)
     distance_m, elevation_m, area_km2 = kernel.profile(
-        bounds, cells, terrain.directions, terrain.ncols, terrain.step_um, terrain.filled_m, terrain.area_m2
+        bounds, cells, terrain.directions, terrain.ncols, terrain.step_um, terrain.conditioned_m, terrain.area_m2
     )
     return Paths(bounds, cells, distance_m, elevation_m, area_km2)
 

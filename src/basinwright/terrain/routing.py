@@ -4,10 +4,12 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
 
 from basinwright.errors import TerrainError
+from basinwright.terrain.constraints import Constraints
 from basinwright.terrain.encoding import to_azimuth
 from basinwright.terrain.summable import summable_areas_m2
 
@@ -15,9 +17,28 @@ _BLOCK_ROWS = 256
 _MOST_CELLS = 2**31 - 1
 
 
+@dataclass(frozen=True)
+class Conditioning:
+    """How depressions are made to drain.
+
+    Parameters
+    ----------
+    mode : {"fill", "breach"}
+        Fill them to their lowest rim, or cut a way out of them within the limits and fill only the rest.
+    depth_m : float [m]
+        The deepest cut below the terrain.
+    length_m : float [m]
+        The longest cut, measured along it on the ground.
+    """
+
+    mode: Literal["fill", "breach"] = "fill"
+    depth_m: float = 5.0
+    length_m: float = 100.0
+
+
 @dataclass(frozen=True, eq=False)
 class Terrain:
-    """Filled terrain with flow directions, contributing area and order, as flat padded arrays.
+    """Conditioned terrain with flow directions, contributing area and order, as flat padded arrays.
 
     Cell (row, col) has the index ``(row + 1) * (ncols + 2) + col + 1``; see `basinwright.kernels`. The
     properties that end in ``_grid`` are views of the raster proper, shape (nrows, ncols).
@@ -25,7 +46,7 @@ class Terrain:
     Attributes
     ----------
     nrows, ncols : int
-    filled_m : float32 array, shape (cells,) [m]
+    conditioned_m : float32 array, shape (cells,) [m]
         Elevations without depressions; +inf in voids and in the halo.
     directions : uint8 array, shape (cells,)
         0 to 7 clockwise from north, EXIT or VOID.
@@ -48,7 +69,7 @@ class Terrain:
 
     nrows: int
     ncols: int
-    filled_m: np.ndarray
+    conditioned_m: np.ndarray
     directions: np.ndarray
     area_m2: np.ndarray
     order: np.ndarray
@@ -66,9 +87,9 @@ class Terrain:
         return padded.reshape(self.nrows + 2, self.ncols + 2)[1:-1, 1:-1]
 
     @property
-    def filled_grid(self) -> np.ndarray:
-        """Filled elevations [m], +inf in voids."""
-        return self.grid(self.filled_m)
+    def conditioned_grid(self) -> np.ndarray:
+        """Conditioned elevations [m], +inf in voids."""
+        return self.grid(self.conditioned_m)
 
     @property
     def directions_grid(self) -> np.ndarray:
@@ -115,7 +136,12 @@ def step_lengths_um(dx_m: np.ndarray, dy_m: np.ndarray) -> np.ndarray:
 
 
 def condition_and_route(
-    elevation_m: np.ndarray, dx_m: np.ndarray, dy_m: np.ndarray, cell_area_m2: np.ndarray
+    elevation_m: np.ndarray,
+    dx_m: np.ndarray,
+    dy_m: np.ndarray,
+    cell_area_m2: np.ndarray,
+    conditioning: Conditioning = Conditioning(),
+    constraints: Constraints | None = None,
 ) -> Terrain:
     """Fill depressions, route every cell by D8, resolve flats and sum contributing areas.
 
@@ -132,6 +158,8 @@ def condition_and_route(
         Cell sizes of each row, positive.
     cell_area_m2 : array, shape (nrows,) [m2]
         Area of a cell of each row, positive.
+    conditioning : Conditioning
+    constraints : Constraints, optional
 
     Returns
     -------
@@ -186,7 +214,7 @@ def condition_and_route(
     return Terrain(
         nrows=nrows,
         ncols=ncols,
-        filled_m=z,
+        conditioned_m=z,
         directions=code,
         area_m2=area,
         order=work[:visited],
