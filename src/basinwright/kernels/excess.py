@@ -6,6 +6,37 @@ import numpy as np
 from numba import njit
 
 
+@njit(cache=True, nogil=True, error_model="numpy")
+def _add_runoff(
+    rain_mm: np.ndarray, weight: float, abstraction_mm: float, retention_mm: float, total: np.ndarray
+) -> None:
+    """Add the runoff of one patch to the total of its outlet, by step."""
+    # Without a branch and with numpy's division the loop runs on whole vectors.
+    for k in range(rain_mm.size):
+        effective = rain_mm[k] - abstraction_mm
+        runoff = weight * (effective * effective / (effective + retention_mm))
+        total[k] += runoff if effective > 0.0 else 0.0
+
+
+@njit(cache=True, nogil=True)
+def _cumulative_rain(hours: np.ndarray, fractions: np.ndarray, depth_mm: float, rain_mm: np.ndarray) -> None:
+    """Rain fallen by the end of each of equal steps, the storm's depth by the last."""
+    steps = rain_mm.size
+    duration = hours[-1]
+    at = 0
+    slope = (fractions[1] - fractions[0]) / (hours[1] - hours[0])
+    for step in range(steps):
+        time = duration * (step + 1) / steps
+        moved = False
+        while hours[at + 1] < time and at + 2 < hours.size:
+            at += 1
+            moved = True
+        if moved:
+            slope = (fractions[at + 1] - fractions[at]) / (hours[at + 1] - hours[at])
+        rain_mm[step] = depth_mm * (fractions[at] + slope * (time - hours[at]))
+    rain_mm[steps - 1] = depth_mm
+
+
 @njit(cache=True, nogil=True)
 def excess_increments(
     hours: np.ndarray,
@@ -41,35 +72,31 @@ def excess_increments(
     runoff_mm : float64 array, shape (n, storms)
         Result: the whole excess.
     """
-    duration = hours[storm_offsets[1] - 1]
+    longest = 0
     for i in range(row_offsets.size - 1):
-        steps = row_offsets[i + 1] - row_offsets[i]
-        patches = range(retention_offsets[i], retention_offsets[i + 1])
-        least = np.inf
-        for p in patches:
-            least = min(least, ratio * retention_mm[p])
+        longest = max(longest, row_offsets[i + 1] - row_offsets[i])
+    fallen_mm, runs_off_mm = np.empty(longest), np.empty(longest)
+    for i in range(row_offsets.size - 1):
+        first, steps = row_offsets[i], row_offsets[i + 1] - row_offsets[i]
+        cumulative, total = fallen_mm[:steps], runs_off_mm[:steps]
         for storm in range(depth_mm.shape[1]):
-            at = storm_offsets[storm]
+            table = slice(storm_offsets[storm], storm_offsets[storm + 1])
+            _cumulative_rain(hours[table], fractions[table], depth_mm[i, storm], cumulative)
+            total[:] = 0.0
+            for p in range(retention_offsets[i], retention_offsets[i + 1]):
+                abstraction = ratio * retention_mm[p]
+                dry = 0
+                while dry < steps and cumulative[dry] <= abstraction:
+                    dry += 1
+                _add_runoff(cumulative[dry:], weight[p], abstraction, retention_mm[p], total[dry:])
             fallen = 0.0
             run_off = 0.0
             for step in range(steps):
-                time = duration * (step + 1) / steps
-                while hours[at + 1] < time and at + 2 < storm_offsets[storm + 1]:
-                    at += 1
-                slope = (fractions[at + 1] - fractions[at]) / (hours[at + 1] - hours[at])
-                fraction = fractions[at] + slope * (time - hours[at])
-                rain = depth_mm[i, storm] * (1.0 if step == steps - 1 else fraction)
-                total = 0.0
-                if rain > least:
-                    for p in patches:
-                        effective = rain - ratio * retention_mm[p]
-                        if effective > 0.0:
-                            total += weight[p] * (effective * effective / (effective + retention_mm[p]))
                 # Rounding must not make rain or excess go backwards.
-                rain = max(rain, fallen)
-                total = max(total, run_off)
-                rain_mm[row_offsets[i] + step, storm] = rain - fallen
-                excess_mm[row_offsets[i] + step, storm] = total - run_off
+                rain = max(cumulative[step], fallen)
+                excess = max(total[step], run_off)
+                rain_mm[first + step, storm] = rain - fallen
+                excess_mm[first + step, storm] = excess - run_off
                 fallen = rain
-                run_off = total
+                run_off = excess
             runoff_mm[i, storm] = run_off
