@@ -92,12 +92,26 @@ class TestShipped:
         kerby = {row["retardance_n"] for row in published.table("kerby_retardance").rows}
         assert {row["retardance_n"] for row in published.table(f"cover_{name}").rows} <= kerby | {""}
 
-    @pytest.mark.parametrize("name", SHIPPED)
-    def test_wetlands_and_water_do_not_ask_for_soil(self, name):
+    @pytest.mark.parametrize(
+        ("name", "no_soil", "water"),
+        [("nlcd", "11 90 95", "11"), ("nlcd_arid", "11 90 95", "11"), ("worldcover", "70 80 90 95", "80")],
+    )
+    def test_wetlands_and_water_do_not_ask_for_soil(self, name, no_soil, water):
         scheme = load_scheme(name)
-        assert [entry.code for entry in scheme.classes.values() if not entry.needs_soil] == ["11", "90", "95"]
-        assert [entry.code for entry in scheme.classes.values() if entry.open_water] == ["11"]
-        assert set(scheme.classes["11"].curve_number.values()) == {98.0}
+        assert [entry.code for entry in scheme.classes.values() if not entry.needs_soil] == no_soil.split()
+        assert [entry.code for entry in scheme.classes.values() if entry.open_water] == [water]
+        assert set(scheme.classes[water].curve_number.values()) == {98.0}
+
+    def test_worldcover_has_the_legend_of_the_product(self):
+        # ESA WorldCover 10 m 2021 v200, Product User Manual V2.0 (2022): codes and names of the map layer.
+        legend = {
+            "10": "Tree cover", "20": "Shrubland", "30": "Grassland", "40": "Cropland", "50": "Built-up",
+            "60": "Bare / sparse vegetation", "70": "Snow and ice", "80": "Permanent water bodies",
+            "90": "Herbaceous wetland", "95": "Mangroves", "100": "Moss and lichen",
+        }  # fmt: skip
+        classes = load_scheme("worldcover").classes
+        assert {code: entry.name for code, entry in classes.items()} == legend
+        assert "our judgement" in published.table("cover_worldcover").source.document
 
     def test_look_up_by_code_or_name(self):
         scheme = load_scheme("nlcd")
@@ -109,7 +123,7 @@ class TestShipped:
         assert Scheme.from_rows("nlcd_arid", scheme.to_rows()) == scheme
 
     def test_unknown_name(self):
-        with pytest.raises(KeyError, match="no scheme 'nlcd2' is shipped; shipped: nlcd, nlcd_arid"):
+        with pytest.raises(KeyError, match="no scheme 'nlcd2' is shipped; shipped: nlcd, nlcd_arid, worldcover"):
             load_scheme("nlcd2")
 
 

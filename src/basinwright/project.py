@@ -326,7 +326,6 @@ LATER: tuple[tuple[str, str, Callable[[Any], bool], str], ...] = (
     ("terrain", "flow_direction_codes", lambda value: value is not None, "leave it out"),
     ("terrain", "stream_area", lambda value: value == "auto", 'give an area such as "0.25 km2"'),
     ("terrain", "length_correction", lambda value: value != "none", 'use "none"'),
-    ("cover", "scheme", lambda value: value == "worldcover", "give a CSV of your own"),
     ("flow_path", "farthest", lambda value: value != "length", 'use "length"'),
     (
         "channel",

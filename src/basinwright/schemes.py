@@ -24,8 +24,8 @@ GROUPS = ("A", "B", "C", "D")
 ANY_GROUP = "any"
 """Soil group of a patch whose class has one curve number on every group (open water, wetlands)."""
 
-SHIPPED = ("nlcd", "nlcd_arid")
-"""Schemes for the legend of the National Land Cover Database, for humid and for arid regions."""
+SHIPPED = ("nlcd", "nlcd_arid", "worldcover")
+"""Schemes for the legend of the National Land Cover Database, for humid and for arid regions, and for ESA WorldCover."""
 
 _CURVE_NUMBERS = tuple(f"cn_{group.lower()}" for group in GROUPS)
 _PERVIOUS = tuple(f"pervious_cn_{group.lower()}" for group in GROUPS)
