@@ -25,7 +25,7 @@ ANY_GROUP = "any"
 """Soil group of a patch whose class has one curve number on every group (open water, wetlands)."""
 
 SHIPPED = ("nlcd", "nlcd_arid", "worldcover")
-"""Schemes for the legend of the National Land Cover Database, for humid and for arid regions, and for ESA WorldCover."""
+"""Schemes for the legend of the National Land Cover Database, humid and arid, and for ESA WorldCover."""
 
 _CURVE_NUMBERS = tuple(f"cn_{group.lower()}" for group in GROUPS)
 _PERVIOUS = tuple(f"pervious_cn_{group.lower()}" for group in GROUPS)
