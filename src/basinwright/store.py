@@ -28,6 +28,7 @@ from basinwright.errors import InputRejected, PublishError
 
 if TYPE_CHECKING:
     import numpy as np
+    import pandas as pd
     from numpy.typing import NDArray
 
 T = TypeVar("T")
@@ -82,6 +83,15 @@ class Entry:
         plain = self.values(name)
         return kind(**{f.name: self._field(name, f.name, plain) for f in fields(kind)})  # type: ignore[arg-type]
 
+    def frame(self, name: str) -> pd.DataFrame:
+        """Read a table that `Draft.frame` kept."""
+        import pandas as pd
+
+        columns = self.values(name)
+        return pd.DataFrame(
+            {stem: self.array(f"{name}.{stem}") if listed is None else listed for stem, listed in columns}, copy=True
+        ).astype({stem: object for stem, listed in columns if listed is not None})
+
     def _field(self, name: str, part: str, plain: dict[str, Any]) -> Any:
         import numpy as np
 
@@ -102,6 +112,16 @@ class Draft:
         import numpy as np
 
         np.save(self.folder / f"{name}.npy", array, allow_pickle=False)
+
+    def frame(self, name: str, frame: pd.DataFrame) -> None:
+        """Keep a table: numbers as arrays, everything else as plain values."""
+        columns: list[tuple[str, list[Any] | None]] = []
+        for stem in frame:
+            numeric = frame[stem].dtype != object
+            columns.append((str(stem), None if numeric else frame[stem].tolist()))
+            if numeric:
+                self.array(f"{name}.{stem}", frame[stem].to_numpy())
+        self.values(name, columns)
 
     def values(self, name: str, values: Any) -> None:
         """Keep plain values."""

@@ -7,12 +7,10 @@ suffix and unit; `Table.fields` does the naming.
 
 from __future__ import annotations
 
-import csv
-import io
 from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, Literal, TextIO
+from typing import TYPE_CHECKING, Any, Literal
 
 from basinwright.units import SHOWN, System
 
@@ -372,21 +370,48 @@ ALL: tuple[Table, ...] = (
 """Every table a run can write."""
 
 
-def cells(values: Any) -> list[Any]:
-    """Return a column as the CSV writer wants it: floats read back exactly, ``true``/``false``, empty where missing.
+_ROWS_AT_ONCE = 20_000
+
+
+def texts(values: Any) -> list[str]:
+    """Return a column as the texts that stand in a CSV file, unquoted.
 
     Parameters
     ----------
     values : array or sequence
-        Numbers, booleans or text; NaN and None are missing.
+        Numbers, booleans or text. Floats are written so that they read back exactly, booleans as ``true`` and
+        ``false``; NaN and None are missing and left empty.
     """
-    listed = values.tolist() if hasattr(values, "tolist") else list(values)
-    kind = getattr(getattr(values, "dtype", None), "kind", "O")
-    if kind == "b":
-        return ["true" if value else "false" for value in listed]
-    if kind in "iu":
-        return listed
-    return [None if value is None or value != value else value for value in listed]  # NaN differs from itself
+    array = values if hasattr(values, "dtype") else None
+    if array is not None and array.dtype.kind == "f":
+        return _number_texts(array)
+    listed = array.tolist() if array is not None else list(values)
+    return [value if type(value) is str else _text_of(value) for value in listed]
+
+
+def _number_texts(values: Any) -> list[str]:
+    import numpy as np
+
+    from basinwright.kernels.decimals import LONGEST, write_numbers
+
+    numbers = np.ascontiguousarray(values, dtype=np.float64)
+    text = np.empty(numbers.size * (LONGEST + 1), dtype=np.uint8)
+    return text[: write_numbers(numbers, text)].tobytes().decode("ascii").split("\n")[:-1]
+
+
+def _text_of(value: Any) -> str:
+    if value is None or value != value:  # NaN differs from itself
+        return ""
+    return ("true" if value else "false") if isinstance(value, bool) else str(value)
+
+
+class _Quoted(dict[str, str]):
+    """Texts as RFC 4180 wants them between commas; most stand in a table many times."""
+
+    def __missing__(self, text: str) -> str:
+        special = any(mark in text for mark in ',"\r\n')
+        self[text] = quoted = '"' + text.replace('"', '""') + '"' if special else text
+        return quoted
 
 
 def csv_text(columns: Mapping[str, Any]) -> str:
@@ -395,23 +420,39 @@ def csv_text(columns: Mapping[str, Any]) -> str:
     Parameters
     ----------
     columns : mapping of str to array
-        Columns by name, in order, of one length; see `cells`.
+        Columns by name, in order, of one length; see `texts`.
     """
-    stream = io.StringIO(newline="")
-    _write(stream, columns)
-    return stream.getvalue()
+    return "".join(_lines(columns))
 
 
 def write_csv(path: Path, columns: Mapping[str, Any]) -> None:
     """Write columns as a CSV file in UTF-8 (see `csv_text`)."""
     with path.open("w", encoding="utf-8", newline="") as stream:
-        _write(stream, columns)
+        stream.writelines(_lines(columns))
 
 
-def _write(stream: TextIO, columns: Mapping[str, Any]) -> None:
-    writer = csv.writer(stream, lineterminator="\r\n")
-    writer.writerow(columns)
-    writer.writerows(zip(*(cells(values) for values in columns.values()), strict=True))
+def _lines(columns: Mapping[str, Any]) -> Iterator[str]:
+    """Yield the text of a table, many rows at a time.
+
+    Raises
+    ------
+    ValueError
+        Where the columns differ in length.
+    """
+    quoted = _Quoted()
+    yield ",".join(quoted[name] for name in columns) + "\r\n"
+    lengths = {len(values) for values in columns.values()}
+    if len(lengths) > 1:
+        raise ValueError(f"columns of different lengths: {sorted(lengths)}")
+    for first in range(0, max(lengths, default=0), _ROWS_AT_ONCE):
+        cells = [_quoted_texts(values[first : first + _ROWS_AT_ONCE], quoted) for values in columns.values()]
+        yield "\r\n".join(map(",".join, zip(*cells, strict=True))) + "\r\n"
+
+
+def _quoted_texts(values: Any, quoted: _Quoted) -> list[str]:
+    listed = texts(values)
+    plain = hasattr(values, "dtype") and values.dtype.kind in "fiub"
+    return listed if plain else [quoted[text] for text in listed]
 
 
 def read_csv(path: Path) -> pd.DataFrame:
@@ -427,18 +468,9 @@ def read_csv(path: Path) -> pd.DataFrame:
     pandas.DataFrame
         All columns of dtype object, empty cells as ``""``.
     """
-    return _frame(path)
-
-
-def read_csv_text(text: str) -> pd.DataFrame:
-    """Read CSV text with every cell as the text that stands there."""
-    return _frame(io.StringIO(text, newline=""))
-
-
-def _frame(source: Path | io.StringIO) -> pd.DataFrame:
     import pandas as pd
 
-    return pd.read_csv(source, dtype=str, keep_default_na=False, na_filter=False, encoding="utf-8-sig")
+    return pd.read_csv(path, dtype=str, keep_default_na=False, na_filter=False, encoding="utf-8-sig")
 
 
 def frictionless_schema(fields: Sequence[Field], system: System, key: Sequence[str]) -> dict[str, Any]:

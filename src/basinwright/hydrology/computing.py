@@ -64,8 +64,8 @@ def compute(
     Parameters
     ----------
     tables : mapping of str to DataFrame
-        ``outlets``, ``segments`` and ``cover_shares``, and ``time_area`` where it is known; all cells text, dependent
-        cells empty unless a person filled them.
+        ``outlets``, ``segments`` and ``cover_shares``, and ``time_area`` where it is known; cells as text or as
+        numbers, dependent ones empty unless a person filled them.
     settings : Settings
         Options, scheme and storm.
     terrain_flags : sequence of Flag
@@ -204,7 +204,7 @@ def compute(
         written["unit_hydrographs"] = writing.unit_hydrograph_columns(floods, area_km2, list(index), known, project)
         written["hydrographs"] = writing.hydrograph_columns(floods, list(index), known, project)
     if series and "time_area" in tables:
-        written["time_area"] = {str(name): tables["time_area"][name].to_numpy(object) for name in tables["time_area"]}
+        written["time_area"] = {str(name): tables["time_area"][name].to_numpy() for name in tables["time_area"]}
     return Results(written, [flag for of_outlet in listed.values() for flag in of_outlet], status)
 
 

@@ -1,4 +1,4 @@
-"""Tables as text, read by the stems of their schema."""
+"""Tables read by the stems of their schema."""
 
 from __future__ import annotations
 
@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from basinwright.project import Project
-from basinwright.tables import Table
+from basinwright.tables import Table, texts
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -19,7 +19,11 @@ Columns = dict[str, Any]
 
 
 class Frame:
-    """A table as text, read by the stems of its schema in the units used inside."""
+    """A table read by the stems of its schema in the units used inside.
+
+    Its columns are text as it stands in a file, empty where there is nothing, or numbers as they would be read from
+    one, NaN where there is nothing.
+    """
 
     def __init__(self, table: Table, frame: pd.DataFrame, project: Project) -> None:
         self.table, self.frame, self.project = table, frame, project
@@ -51,16 +55,27 @@ class Frame:
 
     def text(self, stem: str, period: str = "") -> NDArray[Any]:
         """Return a column as text."""
-        return self.frame[self._column(stem, period)[0]].to_numpy(dtype=object)
+        column = self.frame[self._column(stem, period)[0]]
+        return column.to_numpy() if column.dtype == object else np.array(texts(column.to_numpy()), dtype=object)
 
     def shown(self, stem: str, period: str = "") -> NDArray[np.float64]:
         """Return a column as the numbers that stand there, NaN where empty."""
-        text = self.text(stem, period)
+        column = self.frame[self._column(stem, period)[0]]
+        if column.dtype != object:
+            return column.to_numpy(dtype=np.float64, copy=True)
+        text = column.to_numpy()
         return np.array([float(cell) if cell else np.nan for cell in text.tolist()], dtype=np.float64)
 
     def number(self, stem: str, period: str = "") -> NDArray[np.float64]:
         """Return a column in the unit used inside, NaN where empty."""
         return self.shown(stem, period) * self._column(stem, period)[1]
+
+    def completed(self, stem: str, computed: NDArray[Any]) -> NDArray[Any]:
+        """Return a column with what was computed in its empty cells; what stands there stays as it is written."""
+        column = self.frame[self._column(stem, "")[0]]
+        if column.dtype == object:
+            return np.where(column == "", computed.astype(object), column.to_numpy())
+        return np.where(column.isna(), computed, column.to_numpy())
 
     def shown_of(self, computed: Mapping[str, Any]) -> dict[str, Any]:
         """Turn computed columns, by stem with the period put in, into the numbers to write."""
@@ -68,7 +83,5 @@ class Frame:
         return {stem: values / factors[stem] if factors[stem] != 1.0 else values for stem, values in computed.items()}
 
     def columns(self, replaced: Mapping[str, Any]) -> Columns:
-        """Return the table as it is written: its own text, but for the columns replaced by stem."""
-        return {
-            entry.name: replaced.get(entry.stem, self.frame[entry.name].to_numpy(dtype=object)) for entry in self.fields
-        }
+        """Return the table as it is written: its own columns, but for the columns replaced by stem."""
+        return {entry.name: replaced.get(entry.stem, self.frame[entry.name].to_numpy()) for entry in self.fields}

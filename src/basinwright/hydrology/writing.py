@@ -1,4 +1,4 @@
-"""Computed columns put among the text of the tables."""
+"""Computed columns put among those of the tables."""
 
 from __future__ import annotations
 
@@ -26,19 +26,19 @@ def outlet_columns(
     flags: Mapping[str, list[Flag]],
     status: Mapping[str, str],
 ) -> Columns:
-    """Put the computed columns of the live outlets among the text of all."""
+    """Put the computed columns of the live outlets among those of all."""
     rows = np.flatnonzero(live)
 
     def spread_out(values: Any) -> NDArray[Any]:
-        column = np.full(live.size, None, dtype=object)
-        column[rows] = values.tolist() if hasattr(values, "tolist") else values
+        array = values if hasattr(values, "dtype") else np.array(values, dtype=object)
+        column = np.full(live.size, np.nan) if array.dtype.kind == "f" else np.full(live.size, None, dtype=object)
+        column[rows] = array
         return column
 
     ids = every.text("outlet_id").tolist()
     replaced: dict[str, Any] = {stem: spread_out(values) for stem, values in shown.items()}
     for stem in ("curve_number", "tc_h"):  # what a person supplied stays as it was written
-        text = every.text(stem)
-        replaced[stem] = np.where(text == "", replaced[stem], text)
+        replaced[stem] = every.completed(stem, replaced[stem])
     replaced["status"] = [status[outlet_id] for outlet_id in ids]
     replaced["flags"] = [" ".join(flag.key for flag in flags[outlet_id]) for outlet_id in ids]
     return every.columns(replaced)
@@ -52,8 +52,7 @@ def segment_columns(segments: Frame, times: SegmentTimes, edited: set[tuple[str,
     shown = segments.shown_of(computed)
     shown["roughness"] = times.roughness / np.where(shallow & us, M_PER_FT, 1.0)
     for stem in ("slope", "roughness", "hydraulic_radius", "hydraulic_radius_half"):
-        text = segments.text(stem)
-        shown[stem] = np.where(text == "", shown[stem].astype(object), text)
+        shown[stem] = segments.completed(stem, shown[stem])
     keys = zip(segments.text("outlet_id").tolist(), segments.text("segment").tolist(), strict=True)
     shown["edited"] = np.array([key in edited for key in keys], dtype=bool)
     return segments.columns(shown)

@@ -14,7 +14,9 @@ from importlib.metadata import version
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from basinwright.editing import EDITABLE, Record
+import numpy as np
+
+from basinwright.editing import EDITABLE, Cell, Record
 from basinwright.errors import InputRejected
 from basinwright.flags import Flag
 from basinwright.hydrology import Results, Settings
@@ -23,7 +25,7 @@ from basinwright.pipeline.inputs import Inputs
 from basinwright.project import Project, parse_project
 from basinwright.schemes import Scheme
 from basinwright.store import MANIFEST, Store
-from basinwright.tables import csv_text, read_csv_text
+from basinwright.tables import texts
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -50,7 +52,7 @@ def describe(
     inputs: Inputs,
     half: TerrainHalf,
     store: Store,
-    record: Record,
+    held: set[Cell],
     time_area: pd.DataFrame,
     terrain_flags: list[Flag],
     results: Results,
@@ -83,7 +85,13 @@ def describe(
         "storm_tables": inputs.design.tables,
         "terrain_flags": [list(flag) for flag in terrain_flags],
         "time_area": _packed(time_area),
-        "edits": _record(record),
+        "edits": {
+            "supplied": _listed(held),
+            "held": _listed(held),
+            "encoding": "numbers: float64, little endian, base64; texts: JSON, zlib, base64",
+            "first": {table.name: _packed(results.tables[table.name]) for table in EDITABLE},
+            "written": {},  # where it differs from the first
+        },
     }
 
 
@@ -99,15 +107,19 @@ def _counts(results: Results) -> dict[str, Any]:
     }
 
 
-def retimed(about: Mapping[str, Any], record: Record, results: Results) -> dict[str, Any]:
+def retimed(about: Mapping[str, Any], record: Record, held: set[Cell], results: Results) -> dict[str, Any]:
     """Return the manifest after `retime`: counts and edits are new, the rest stands."""
-    return {**about, **_counts(results), "edits": _record(record)}
+    written = {table.name: _as_text(results.tables[table.name]) for table in EDITABLE}
+    changed = {name: _packed(frame) for name, frame in written.items() if not frame.equals(record.first[name])}
+    return {**about, **_counts(results), "edits": {**about["edits"], "held": _listed(held), "written": changed}}
 
 
 def write(folder: Path, about: Mapping[str, Any]) -> None:
     """Write the manifest: the last file of a run."""
     names = sorted({entry.name for entry in folder.iterdir()} | {MANIFEST})
-    text = json.dumps({**about, "files": names}, indent=1, ensure_ascii=False)
+    # One line for each part: with an indent the encoder written in C would not be used.
+    parts = (f"{json.dumps(k)}: {json.dumps(v, ensure_ascii=False)}" for k, v in {**about, "files": names}.items())
+    text = "{\n" + ",\n".join(parts) + "\n}"
     (folder / MANIFEST).unlink(missing_ok=True)
     (folder / MANIFEST).write_text(text + "\n", encoding="utf-8")
 
@@ -152,15 +164,8 @@ def time_area(about: Mapping[str, Any]) -> pd.DataFrame:
     return _unpacked(about["time_area"])
 
 
-def _record(record: Record) -> dict[str, Any]:
-    changed = {name: frame for name, frame in record.written.items() if not frame.equals(record.first[name])}
-    return {
-        "supplied": sorted(list(cell) for cell in record.supplied),
-        "held": sorted(list(cell) for cell in record.held),
-        "encoding": "CSV, zlib, base64",
-        "first": {name: _packed(frame) for name, frame in record.first.items()},
-        "written": {name: _packed(frame) for name, frame in changed.items()},  # where it differs from the first
-    }
+def _listed(cells: set[Cell]) -> list[list[str]]:
+    return sorted(list(cell) for cell in cells)
 
 
 def record(about: Mapping[str, Any]) -> Record:
@@ -172,10 +177,34 @@ def record(about: Mapping[str, Any]) -> Record:
     return Record(first, written, supplied, held)
 
 
-def _packed(frame: pd.DataFrame) -> str:
-    text = csv_text({str(name): frame[name].to_numpy(dtype=object) for name in frame.columns})
-    return base64.b64encode(zlib.compress(text.encode("utf-8"), 6)).decode("ascii")
+def _as_text(columns: Mapping[str, Any]) -> pd.DataFrame:
+    import pandas as pd
+
+    return pd.DataFrame({name: texts(values) for name, values in columns.items()}, dtype=object)
 
 
-def _unpacked(packed: str) -> pd.DataFrame:
-    return read_csv_text(zlib.decompress(base64.b64decode(packed)).decode("utf-8"))
+def _packed(columns: Mapping[Any, Any] | pd.DataFrame) -> dict[str, dict[str, str]]:
+    """Return a table as text that JSON holds, column by column: `_unpacked` gives back the text of its cells."""
+    packed = {}
+    for name in columns:
+        values = np.asarray(columns[name])
+        if values.dtype.kind == "f":
+            packed[str(name)] = {"numbers": _base64(values.astype("<f8").tobytes())}
+        else:
+            listed = json.dumps(texts(values), ensure_ascii=False).encode("utf-8")
+            packed[str(name)] = {"texts": _base64(zlib.compress(listed, 1))}
+    return packed
+
+
+def _base64(data: bytes) -> str:
+    return base64.b64encode(data).decode("ascii")
+
+
+def _unpacked(packed: Mapping[str, Mapping[str, str]]) -> pd.DataFrame:
+    columns: dict[str, Any] = {}
+    for name, column in packed.items():
+        if "numbers" in column:
+            columns[name] = np.frombuffer(base64.b64decode(column["numbers"]), "<f8")
+        else:
+            columns[name] = json.loads(zlib.decompress(base64.b64decode(column["texts"])))
+    return _as_text(columns)

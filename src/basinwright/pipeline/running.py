@@ -3,20 +3,18 @@
 from __future__ import annotations
 
 import shutil
-from collections.abc import Callable, Mapping
+from collections.abc import Callable
 from filecmp import cmp
 from importlib.resources import files
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from basinwright.errors import BasinwrightError, InputRejected, PublishError, RangeError
-from basinwright.hydrology import Columns, Settings, compute
+from basinwright.hydrology import Settings, compute
 from basinwright.outputs.summary import Outcome
 from basinwright.store import STORE, RunFolder, Store
 
 if TYPE_CHECKING:
-    import pandas as pd
-
     from basinwright.editing import Cell
     from basinwright.pipeline.inputs import Inputs
 
@@ -123,11 +121,9 @@ def _no_room(place: Path, error: OSError) -> str:
 
 def _build(inputs: Inputs, folder: RunFolder, partial: Path, resume: bool, summary_only: bool, say: Say) -> Outcome:
     """Build the run in its partial folder, the manifest last."""
-    from basinwright import editing
     from basinwright.outputs import writing
     from basinwright.pipeline import geometry, manifest, second_opinion, terrain_half
     from basinwright.report import write_report
-    from basinwright.tables import read_csv
 
     project = inputs.project
     store = Store(partial / STORE, folder.final / STORE if resume else None, say)
@@ -137,10 +133,9 @@ def _build(inputs: Inputs, folder: RunFolder, partial: Path, resume: bool, summa
         flags += second_opinion.audit(inputs, half, store)
     shapes = None if summary_only else geometry.shapes(inputs, half, store)
 
-    base = {table.name: read_csv(half.tables.folder / f"{table.name}.csv") for table in editing.EDITABLE}
+    tables = half.frames()
     held: set[Cell] = {(table, outlet_id, row, stem) for table, outlet_id, row, stem in half.tables.values("held")}
     settings = Settings(project, inputs.scheme, inputs.design.storm, inputs.design.ddf)
-    time_area = read_csv(half.time_area.folder / "time_area.csv")
     depends_on = {
         "tables": [half.tables.key, half.time_area.key],
         "flags": [list(flag) for flag in flags],
@@ -149,9 +144,7 @@ def _build(inputs: Inputs, folder: RunFolder, partial: Path, resume: bool, summa
         "series": not summary_only,
     }
     with store.watched("hydrology", "Timing, runoff and hydrographs", depends_on):
-        results = compute(
-            {**base, "time_area": time_area}, settings, terrain_flags=flags, held=held, series=not summary_only
-        )
+        results = compute(tables, settings, terrain_flags=flags, held=held, series=not summary_only)
 
     say("Writing tables, layers and rasters")
     writing.write_tables(partial, results.tables, project)
@@ -159,22 +152,12 @@ def _build(inputs: Inputs, folder: RunFolder, partial: Path, resume: bool, summa
         shapes.write(partial / "basins.gpkg", results.tables, project)
         writing.write_terrain(partial / "terrain", half.grid, half.routed())
     store.prune()
-    first = _as_frames(results.tables)
-    record = editing.Record(first, first, supplied=held, held=held)
-    about = manifest.describe(inputs, half, store, record, time_area, flags, results, summary_only)
+    about = manifest.describe(inputs, half, store, held, tables["time_area"], flags, results, summary_only)
     if not summary_only:
         say("Writing the report")
         write_report(partial, about, jobs=project.compute.jobs, say=say)
     manifest.write(partial, about)
     return Outcome(folder.final, project, results.tables["outlets"], results.flags)
-
-
-def _as_frames(tables: Mapping[str, Columns]) -> dict[str, pd.DataFrame]:
-    """Return the editable tables as the text that was written."""
-    from basinwright import editing
-    from basinwright.tables import csv_text, read_csv_text
-
-    return {table.name: read_csv_text(csv_text(tables[table.name])) for table in editing.EDITABLE}
 
 
 def retime(run_dir: Path, *, say: Say = _silent) -> Outcome:
@@ -236,8 +219,7 @@ def retime(run_dir: Path, *, say: Say = _silent) -> Outcome:
                 shapes.write(partial / "basins.gpkg", results.tables, project)
             elif (partial / "basins.gpkg").exists():
                 say("basins.gpkg is left as it was: the run's store is not there")
-            record = editing.Record(record.first, _as_frames(results.tables), record.supplied, edits.held)
-            about = manifest.retimed(about, record, results)
+            about = manifest.retimed(about, record, edits.held, results)
             if not summary_only:
                 say("Writing the report")
                 write_report(partial, about, jobs=project.compute.jobs, say=say)

@@ -16,10 +16,11 @@ from basinwright.paths.tracing import DEEP_FILL_M
 from basinwright.pipeline.inputs import Inputs
 from basinwright.project import Project
 from basinwright.store import Draft, Entry, Store
-from basinwright.tables import COVER_SHARES, OUTLETS, SEGMENTS, TIME_AREA, Table, cells, csv_text
+from basinwright.tables import COVER_SHARES, OUTLETS, SEGMENTS, TIME_AREA, Table, texts
 from basinwright.units import M_PER_FT, MM_PER_IN, UNITS
 
 if TYPE_CHECKING:
+    import pandas as pd
     from numpy.typing import NDArray
 
     from basinwright.basins import Basins, Snapped
@@ -50,7 +51,7 @@ class TerrainHalf:
     alignment : list of dict
         How each input came onto the grid.
     terrain, elevation, cover, basins, paths, tables, time_area : Entry
-        Stages in the store; ``tables`` holds the three tables as CSV text and the flags.
+        Stages in the store; ``tables`` holds the three tables and the flags.
     """
 
     grid: Grid
@@ -74,6 +75,11 @@ class TerrainHalf:
         terrain = self.routed()
         names = ("data_cells", "flat_cells", "filled_cells", "filled_volume_m3", "deepest_fill_m", "largest_rounding_m")
         return {name: getattr(terrain, name) for name in names}
+
+    def frames(self) -> dict[str, pd.DataFrame]:
+        """Return the tables that the hydrology reads, in the units of the project."""
+        frames = {table.name: self.tables.frame(table.name) for table in (OUTLETS, SEGMENTS, COVER_SHARES)}
+        return frames | {TIME_AREA.name: self.time_area.frame(TIME_AREA.name)}
 
     def flags(self) -> list[Flag]:
         """Return what the terrain half flagged."""
@@ -270,7 +276,7 @@ def _cover(inputs: Inputs, draft: Draft) -> None:
 
 
 def _tables(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
-    """Make the three tables as text, with the flags of the terrain half and the cells that the user supplied."""
+    """Make the three tables, with the flags of the terrain half and the cells that the user supplied."""
     from basinwright.basins import Basins, Snapped
     from basinwright.cover import CoverLayer, SoilLayer, combine, cover_shares
     from basinwright.paths import CoverOnGrid, CutRules, Paths, cut_segments
@@ -315,7 +321,7 @@ def _tables(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
         COVER_SHARES: _of_fine(shares.rows, ids, fine),
     }
     for table, columns in tables.items():
-        (draft.folder / f"{table.name}.csv").write_text(_as_text(table, columns, project), encoding="utf-8", newline="")
+        draft.frame(table.name, _as_frame(table, columns, project))
     draft.values("flags", [list(flag) for flag in flags])
     draft.values(
         "held",
@@ -388,7 +394,7 @@ def _mean_depths_mm(inputs: Inputs, terrain: Terrain, basins: Basins) -> dict[st
 
 
 def _time_area(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
-    """Draw the time-area curves as the CSV text that the hydrology reads."""
+    """Draw the time-area curves as the table that the hydrology reads."""
     from basinwright.basins import Basins
     from basinwright.basins.time_area import time_area_curves
     from basinwright.cover import CoverLayer
@@ -401,8 +407,7 @@ def _time_area(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> Non
     curves = time_area_curves(terrain, basins, step_times)
     ids = np.array(inputs.points.ids, dtype=object)
     columns = {"outlet_id": ids[curves["outlet"]], **{k: v for k, v in curves.items() if k != "outlet"}}
-    text = _as_text(TIME_AREA, columns, inputs.project)
-    (draft.folder / "time_area.csv").write_text(text, encoding="utf-8", newline="")
+    draft.frame(TIME_AREA.name, _as_frame(TIME_AREA, columns, inputs.project))
 
 
 def _failures(
@@ -541,23 +546,25 @@ def _of_fine(columns: Mapping[str, NDArray[Any]], ids: NDArray[Any], fine: NDArr
     return {"outlet_id": ids[outlet[rows]], **{k: v[rows] for k, v in columns.items() if k != "outlet"}}
 
 
-def _as_text(table: Table, columns: Mapping[str, Any], project: Project) -> str:
-    """Return a table as the CSV text that the hydrology reads, in the units of the project."""
+def _as_frame(table: Table, columns: Mapping[str, Any], project: Project) -> pd.DataFrame:
+    """Return a table as it would be read from its file, in the units of the project; what is not known is empty."""
+    import pandas as pd
+
     system, periods = project.project.units, project.storm.periods
     optional = [column.stem for column in table.columns if column.optional and column.name("si") in columns]
     inside = {entry.name: entry for entry in table.fields("si", periods, optional)}
     count = len(columns["outlet_id"])
-    written: dict[str, list[Any]] = {}
+    shown: dict[str, Any] = {}
     for entry, name in zip(table.fields(system, periods, optional), inside, strict=True):
         values = columns.get(name)
-        if values is None:
-            written[entry.name] = [None] * count
-            continue
         if entry.column.type == "number":
-            numbers = np.asarray(values, dtype=np.float64) / entry.factor
-            values = np.round(numbers / QUANTUM) * QUANTUM if entry.stem in _ALONG_PATH else numbers
-        written[entry.name] = cells(values)
-    return csv_text(written)
+            numbers = np.full(count, np.nan) if values is None else np.asarray(values, dtype=np.float64) / entry.factor
+            shown[entry.name] = np.round(numbers / QUANTUM) * QUANTUM if entry.stem in _ALONG_PATH else numbers
+        elif entry.column.type == "integer" and values is not None:
+            shown[entry.name] = np.asarray(values, dtype=np.int64)
+        else:
+            shown[entry.name] = np.array([""] * count if values is None else texts(values), dtype=object)
+    return pd.DataFrame(shown)
 
 
 _ALONG_PATH = ("from", "to", "path_length", "path_length_raw")
