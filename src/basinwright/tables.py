@@ -226,6 +226,9 @@ OUTLETS = Table(
         _text("capacity_basis", "the criterion the capacity rests on, as supplied", optional=True),
         _text("exceeded_at_yr", "smallest tested period over capacity; empty: none; or unknown", optional=True),
         _shown("mean_elevation", "length", "mean elevation of the basin, unconditioned terrain"),
+        _shown("reach_length", "length", "length of the flow path from this outlet to the next downstream"),
+        _shown("reach_fall", "length", "fall of that path, conditioned terrain"),
+        _shown("reach_area", "area", "contributing area at its middle"),
         _number("translation_peak_rate_factor", "peak rate factor of translation alone: an index", "1", optional=True),
         _number("areal_factor", "factor from point to areal rainfall", "1", optional=True),
         _number("critical_duration_h", "storm duration that gives the highest peak", "h", optional=True),
@@ -344,6 +347,40 @@ CROSS_CHECKS = Table(
     ),
 )
 
+BASIN_PARAMETERS = Table(
+    "basin_parameters",
+    "one basin with what a rainfall-runoff model asks for, and the reach below its outlet",
+    ("outlet_id",),
+    (
+        _ID,
+        _text("name", "name from the outlet layer"),
+        _text("downstream_outlet_id", "the next outlet downstream in this run"),
+        _number("longitude", "longitude of the outlet's cell, WGS 84", "degree"),
+        _number("latitude", "latitude of the outlet's cell, WGS 84", "degree"),
+        _shown("area", "area", "drainage area of the whole basin"),
+        _shown("incremental_area", "area", "drainage area below the next outlets upstream"),
+        _shown("path_length", "length", "length of the longest flow path, divide to outlet"),
+        _shown("centroid_length", "length", "length along the path from outlet to the point nearest the centroid"),
+        _number("path_slope_pct", "fall of the longest flow path over its length", "%"),
+        _number("path_slope_1085_pct", "slope between 10 and 85 % of the path's length from the outlet", "%"),
+        _number("basin_slope_pct", "mean land slope of the basin", "%"),
+        _shown("relief", "length", "highest minus lowest elevation of the basin"),
+        _shown("mean_elevation", "length", "mean elevation of the basin"),
+        _shown("outlet_elevation", "length", "elevation of the outlet, conditioned terrain"),
+        _number("curve_number", "area-weighted mean curve number, class II, ratio 0.2", "1"),
+        _shown("initial_abstraction", "depth", "initial abstraction of the mean curve number, ratio as in the project"),
+        _number("impervious_pct", "impervious share of the basin", "%"),
+        _number("open_water_pct", "open-water share of the basin", "%"),
+        _number("tc_h", "adopted time of concentration", "h"),
+        _number("lag_h", "basin lag", "h"),
+        _shown("reach_length", "length", "length of the channel from this outlet to the next downstream"),
+        _number("reach_slope", "fall of that reach over its length, not under flow_path.slope_floor", "1"),
+        _shown("reach_area", "area", "contributing area at the middle of the reach"),
+        _shown("reach_bankfull_width", "length", "bankfull width of the reach"),
+        _shown("reach_bankfull_depth", "length", "bankfull depth of the reach"),
+    ),
+)
+
 FLAGS_TABLE = Table(
     "flags",
     "one doubt about one outlet",
@@ -365,6 +402,7 @@ ALL: tuple[Table, ...] = (
     CROSS_CHECKS,
     UNIT_HYDROGRAPHS,
     HYDROGRAPHS,
+    BASIN_PARAMETERS,
     FLAGS_TABLE,
 )
 """Every table a run can write."""

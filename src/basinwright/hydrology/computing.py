@@ -14,6 +14,7 @@ from basinwright.hydrology import doubts, times, writing
 from basinwright.hydrology.cross_checks import cross_checks
 from basinwright.hydrology.floods import Basins, floods_of
 from basinwright.hydrology.frames import Columns, Frame
+from basinwright.hydrology.parameters import basin_parameters
 from basinwright.hydrology.settings import Settings
 from basinwright.runoff import Patches, effective_curve_number, weighted_runoff_mm
 from basinwright.tables import COVER_SHARES, OUTLETS, SEGMENTS, TIME_AREA
@@ -195,6 +196,8 @@ def compute(
         "timing": writing.timing_columns(results, list(index), project.timing.adopt, np.isnan(own_tc_h)),
         "flags": writing.flag_columns(listed),
     }
+    ends = dict(zip(segments.text("outlet_id").tolist(), segments.text("bottom_elevation").tolist(), strict=True))
+    written["basin_parameters"] = basin_parameters(written["outlets"], ends, settings)  # each path's last row stays
     if series:
         curve_number_ii = np.where(known, curve_number, np.nan)
         written["cross_checks"] = cross_checks(

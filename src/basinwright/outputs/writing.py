@@ -10,8 +10,9 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from basinwright.hydrology import Columns
+from basinwright.outputs import hydrographs_nc
 from basinwright.project import Project
-from basinwright.tables import ALL, Table, frictionless_schema, write_csv
+from basinwright.tables import ALL, HYDROGRAPHS, Table, frictionless_schema, write_csv
 
 if TYPE_CHECKING:
     from basinwright.grid import Grid
@@ -19,7 +20,7 @@ if TYPE_CHECKING:
 
 
 def write_tables(folder: Path, tables: Mapping[str, Columns], project: Project) -> None:
-    """Write the CSV tables of a run and ``tables.json``, the Frictionless Data Package that describes them.
+    """Write the tables of a run as CSV, the hydrographs as netCDF too, and ``tables.json``, which describes them.
 
     Parameters
     ----------
@@ -29,11 +30,19 @@ def write_tables(folder: Path, tables: Mapping[str, Columns], project: Project) 
         Tables by name.
     project : Project
         Gives units and return periods.
+
+    Notes
+    -----
+    ``tables.json`` is a Frictionless Data Package with the schema of every CSV that is written: of a run with many
+    outlets the hydrographs stand in the netCDF file only (`hydrograph_files`).
     """
     system = project.project.units
+    series = hydrograph_files(len(tables["outlets"]["outlet_id"]))
+    if "hydrographs" in tables:
+        hydrographs_nc.write_hydrographs(folder / hydrographs_nc.FILE, tables, project)
     resources = []
     for table in ALL:
-        if table.name not in tables:
+        if table.name not in tables or (table is HYDROGRAPHS and f"{table.name}.csv" not in series):
             continue
         columns = tables[table.name]
         (folder / f"{table.name}.csv").unlink(missing_ok=True)  # it may be a link to a file of the run before
@@ -49,6 +58,11 @@ def write_tables(folder: Path, tables: Mapping[str, Columns], project: Project) 
     }
     (folder / "tables.json").unlink(missing_ok=True)
     (folder / "tables.json").write_text(json.dumps(package, indent=1, ensure_ascii=False) + "\n", encoding="utf-8")
+
+
+def hydrograph_files(outlets: int) -> list[str]:
+    """Return the files in which the hydrographs of a run of so many outlets stand."""
+    return [hydrographs_nc.FILE, *(["hydrographs.csv"] if outlets <= hydrographs_nc.MOST_OUTLETS_IN_CSV else [])]
 
 
 def _resource(table: Table, schema: Mapping[str, Any]) -> dict[str, Any]:

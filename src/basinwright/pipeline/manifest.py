@@ -20,6 +20,7 @@ from basinwright.editing import EDITABLE, Cell, Record
 from basinwright.errors import InputRejected
 from basinwright.flags import Flag
 from basinwright.hydrology import Results, Settings
+from basinwright.outputs.writing import hydrograph_files
 from basinwright.pipeline import design_storm
 from basinwright.pipeline.inputs import Inputs
 from basinwright.project import Project, parse_project
@@ -80,6 +81,7 @@ def describe(
         ],  # in the working CRS, in the order of outlets.csv
         "stages": [stage.describe() for stage in store.records],
         "summary_only": summary_only,
+        "hydrographs": [] if summary_only else hydrograph_files(len(results.status)),
         **_counts(results),
         "scheme": {"name": inputs.scheme.name, "classes": inputs.scheme.to_rows()},
         "storm_tables": inputs.design.tables,

@@ -235,7 +235,7 @@ def _basins(inputs: Inputs, grid: Grid, elevation: Entry, terrain: Terrain, draf
 
 def _paths(grid: Grid, elevation: Entry, terrain: Terrain, basins_entry: Entry, draft: Draft) -> None:
     from basinwright.basins import Basins
-    from basinwright.paths import profile_measures, trace
+    from basinwright.paths import profile_measures, reach_measures, trace
 
     basins = basins_entry.record(Basins, "basins")
     measures = kept_columns(basins_entry, "measures")
@@ -245,6 +245,7 @@ def _paths(grid: Grid, elevation: Entry, terrain: Terrain, basins_entry: Entry, 
     )
     draft.record(paths, "paths")
     _keep_columns(draft, "profile", profile)
+    _keep_columns(draft, "reaches", reach_measures(terrain, basins))
 
 
 def _cover(inputs: Inputs, draft: Draft) -> None:
@@ -289,6 +290,7 @@ def _tables(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
     snapped = stages["basins"].record(Snapped, "snapped")
     paths = stages["paths"].record(Paths, "paths")
     measures = kept_columns(stages["basins"], "measures") | kept_columns(stages["paths"], "profile")
+    measures |= kept_columns(stages["paths"], "reaches")
     cover = stages["cover"].record(CoverLayer, "cover")
     patches = combine(cover, stages["cover"].record(SoilLayer, "soils"))
     shares = cover_shares(
@@ -535,7 +537,7 @@ def _outlet_rows(
 
 _MEASURED = (
     "area_km2", "centroid_length_m", "path_length_m", "relief_m", "basin_slope_pct", "path_slope_pct",
-    "path_slope_1085_pct", "mean_elevation_m",
+    "path_slope_1085_pct", "mean_elevation_m", "reach_length_m", "reach_fall_m", "reach_area_km2",
 )  # fmt: skip
 
 

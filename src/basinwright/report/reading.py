@@ -14,6 +14,7 @@ from typing import TYPE_CHECKING, Any
 
 from basinwright.errors import InputRejected
 from basinwright.flags import FLAGS, SEVERITIES
+from basinwright.outputs import hydrographs_nc
 from basinwright.report import words
 from basinwright.tables import (
     COVER_SHARES,
@@ -252,7 +253,10 @@ def read_run(folder: Path, about: Mapping[str, Any]) -> Run:
     for outlet_id, _, part in _series(read(UNIT_HYDROGRAPHS), ("time_h", "flow")):
         by_id[outlet_id].unit_hydrograph = part
     written = {float(period): period for period in periods}
-    for outlet_id, period, part in _series(read(HYDROGRAPHS), ("time_h", "rain", "excess", "flow")):
+    netcdf = folder / hydrographs_nc.FILE
+    only_netcdf = netcdf.is_file() and not (folder / f"{HYDROGRAPHS.name}.csv").is_file()
+    hydrographs = hydrographs_nc.read_hydrographs(netcdf) if only_netcdf else read(HYDROGRAPHS)
+    for outlet_id, period, part in _series(hydrographs, ("time_h", "rain", "excess", "flow")):
         by_id[outlet_id].floods[written[period]] = part
     run = Run(folder, about, system, periods, outlets, set(table.columns))
     if (folder / "basins.gpkg").is_file():
