@@ -122,11 +122,12 @@ def test_retime_keeps_supplied_values(tmp_path):
 
 
 def rows_by_outlet(folder):
-    """Return the rows of every table by outlet, without what names another outlet."""
+    """Return the rows of every table by outlet, without what lies between it and another outlet."""
     found = {}
     for name in TABLES:
         for row in read_table(folder, name):
-            row.pop("downstream_outlet_id", None)
+            between = ("downstream_outlet_id", "reach_", "incremental_area")
+            row = {column: cell for column, cell in row.items() if not column.startswith(between)}
             found.setdefault(row["outlet_id"], []).append((name, row))
     return found
 
