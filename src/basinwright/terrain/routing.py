@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from typing import Literal
+from typing import Any, Literal
 
 import numpy as np
 
@@ -12,6 +12,7 @@ from basinwright.errors import TerrainError
 from basinwright.terrain.constraints import Constraints
 from basinwright.terrain.encoding import to_azimuth
 from basinwright.terrain.summable import summable_areas_m2
+from basinwright.terrain.tiling import Tiling
 
 _BLOCK_ROWS = 256
 _MOST_CELLS = 2**31 - 1
@@ -53,7 +54,8 @@ class Terrain:
     area_m2 : float64 array, shape (cells,) [m2]
         Contributing area, the cell's own included; 0 in voids.
     order : int32 array, shape (data_cells,)
-        Cells from the divides downstream: every cell after all cells that drain into it.
+        Cells from the divides downstream: every cell after all cells that drain into it. Where the terrain was routed
+        by tiles: tile by tile, as padded indices on the tile, every cell after all of its tile that drain into it.
     row_area_m2 : float64 array, shape (nrows,) [m2]
         Area of a cell of each row, rounded so that sums are exact.
     step_um : int64 array, shape (nrows, 8) [micrometres]
@@ -65,6 +67,10 @@ class Terrain:
     largest_rounding_m : float
         Largest change of an elevation by rounding it to float32; 0 for float32 input and for whole numbers
         up to 2**24.
+    row_edges, col_edges : int64 arrays
+        Where the raster was cut into tiles, None where it was not.
+    order_bounds : int64 array, shape (tiles + 1,)
+        Tile i owns ``order[order_bounds[i]:order_bounds[i + 1]]``; None without tiles.
     """
 
     nrows: int
@@ -81,6 +87,16 @@ class Terrain:
     filled_volume_m3: float
     deepest_fill_m: float
     largest_rounding_m: float
+    row_edges: np.ndarray | None = None
+    col_edges: np.ndarray | None = None
+    order_bounds: np.ndarray | None = None
+
+    @property
+    def tiling(self) -> Tiling:
+        """How the raster is cut into tiles; one where it is not."""
+        if self.row_edges is None or self.col_edges is None:
+            return Tiling((0, self.nrows), (0, self.ncols))
+        return Tiling(tuple(self.row_edges.tolist()), tuple(self.col_edges.tolist()))
 
     def grid(self, padded: np.ndarray) -> np.ndarray:
         """View of a flat padded array as the raster proper, shape (nrows, ncols)."""
@@ -176,19 +192,10 @@ def condition_and_route(
     if elevation_m.ndim != 2 or elevation_m.size == 0:
         raise TerrainError(f"elevations must be a raster of rows and columns, not of shape {elevation_m.shape}")
     nrows, ncols = elevation_m.shape
-    sizes = [np.ascontiguousarray(size, np.float64) for size in (dx_m, dy_m, cell_area_m2)]
-    for name, size in zip(("dx_m", "dy_m", "cell_area_m2"), sizes, strict=True):
-        if size.shape != (nrows,) or not (np.isfinite(size) & (size > 0)).all():
-            raise TerrainError(f"{name} must hold a positive number for each of the {nrows} rows")
-    dx, dy, cell_area = sizes
+    dx, dy, cell_area = sizes_by_row(nrows, ncols, dx_m, dy_m, cell_area_m2)
     cells = (nrows + 2) * (ncols + 2)
-    if cells > _MOST_CELLS:
-        raise TerrainError(
-            f"{nrows} x {ncols} cells are more than the {_MOST_CELLS} that can be routed at once: "
-            "cut the terrain or use larger cells"
-        )
 
-    z, largest_rounding = _pad(elevation_m)
+    z, largest_rounding = pad(elevation_m)
     code = np.empty(cells, np.uint8)
     work = np.empty(cells, np.int32)
     link = np.empty(cells, np.int32)
@@ -210,7 +217,6 @@ def condition_and_route(
     if visited != data_cells:
         raise TerrainError(f"{data_cells - visited} of {data_cells} cells lie on or below a cycle of directions")
 
-    filled_cells, volume, deepest = _filling(elevation_m, z, row_area)
     return Terrain(
         nrows=nrows,
         ncols=ncols,
@@ -222,14 +228,34 @@ def condition_and_route(
         step_um=step_lengths_um(dx, dy),
         data_cells=data_cells,
         flat_cells=flat_cells,
-        filled_cells=filled_cells,
-        filled_volume_m3=volume,
-        deepest_fill_m=deepest,
+        **measure_conditioning(elevation_m, z, row_area),
         largest_rounding_m=largest_rounding,
     )
 
 
-def _pad(elevation_m: np.ndarray) -> tuple[np.ndarray, float]:
+def sizes_by_row(
+    nrows: int, ncols: int, dx_m: np.ndarray, dy_m: np.ndarray, cell_area_m2: np.ndarray
+) -> list[np.ndarray]:
+    """Cell sizes as float64 arrays, checked.
+
+    Raises
+    ------
+    TerrainError
+        Sizes that do not fit; more than 2**31 - 1 cells.
+    """
+    sizes = [np.ascontiguousarray(size, np.float64) for size in (dx_m, dy_m, cell_area_m2)]
+    for name, size in zip(("dx_m", "dy_m", "cell_area_m2"), sizes, strict=True):
+        if size.shape != (nrows,) or not (np.isfinite(size) & (size > 0)).all():
+            raise TerrainError(f"{name} must hold a positive number for each of the {nrows} rows")
+    if (nrows + 2) * (ncols + 2) > _MOST_CELLS:
+        raise TerrainError(
+            f"{nrows} x {ncols} cells are more than the {_MOST_CELLS} that can be routed at once: "
+            "cut the terrain or use larger cells"
+        )
+    return sizes
+
+
+def pad(elevation_m: np.ndarray) -> tuple[np.ndarray, float]:
     """Elevations as a flat padded float32 array with -inf in voids and halo, and the largest rounding [m]."""
     nrows, ncols = elevation_m.shape
     z = np.full((nrows + 2, ncols + 2), -np.inf, np.float32)
@@ -246,8 +272,8 @@ def _pad(elevation_m: np.ndarray) -> tuple[np.ndarray, float]:
     return z.reshape(-1), largest_rounding
 
 
-def _filling(elevation_m: np.ndarray, filled: np.ndarray, row_area_m2: np.ndarray) -> tuple[int, float, float]:
-    """Cells raised by filling, their volume [m3] and the deepest fill [m]."""
+def measure_conditioning(elevation_m: np.ndarray, filled: np.ndarray, row_area_m2: np.ndarray) -> dict[str, Any]:
+    """Cells raised by filling, their volume [m3] and the deepest fill [m], by their names in `Terrain`."""
     from basinwright.kernels.fill import measure_fill
 
     nrows, ncols = elevation_m.shape
@@ -259,4 +285,5 @@ def _filling(elevation_m: np.ndarray, filled: np.ndarray, row_area_m2: np.ndarra
         block_cells, block_deepest = measure_fill(filled, ncols, first, given, row_depth)
         cells += block_cells
         deepest = max(deepest, block_deepest)
-    return cells, math.fsum(row_depth * row_area_m2), deepest
+    volume = math.fsum(row_depth * row_area_m2)
+    return {"filled_cells": cells, "filled_volume_m3": volume, "deepest_fill_m": deepest}

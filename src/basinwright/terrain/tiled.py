@@ -1,0 +1,537 @@
+"""Conditioning and routing of a terrain that is larger than memory, tile by tile.
+
+In memory a terrain is one tile with nothing around it: `routing` runs the kernels over it in a straight line. Here the
+same kernels run over each tile of a raster that lies in files, and the results are the same bits. Between the tiles
+passes only what concerns their rims (after Barnes 2016, "Parallel Priority-Flood depression filling for trillion cell
+digital elevation models on desktops or clusters", and 2017, "Parallel non-divergent flow accumulation for trillion cell
+digital elevation models on desktops or clusters", Computers & Geosciences 96 and 92):
+
+1. Each tile cuts its terrain into catchments and reduces the passes between them to a tree between those at its rim.
+   The trees, joined across the rims, say at which level each of these spills; what lies inside follows.
+2. Directions need one more cell around a tile, and are then known everywhere but on flats that cross a rim. The steps
+   to lower and from higher ground of such flats are counted in each tile and exchanged until nothing changes.
+3. Each tile sums its own area, and says where water from each cell of its rim leaves it. Down the forest of these ways
+   the sums are added up; then each tile adds what enters it.
+
+A step may be repeated: it reads only what earlier steps wrote.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any, NamedTuple, Protocol
+
+import numpy as np
+
+from basinwright.errors import TerrainError
+from basinwright.kernels import FLAT, NO_CELL, VOID
+from basinwright.terrain.routing import Conditioning, Terrain, measure_conditioning, pad, sizes_by_row, step_lengths_um
+from basinwright.terrain.summable import summable_areas_m2
+from basinwright.terrain.tiling import (
+    RimLines,
+    Strips,
+    Tile,
+    Tiling,
+    frame,
+    pairs_across,
+    set_around,
+    strips_around,
+    strips_of,
+)
+
+_FILL = Conditioning()
+
+
+class Workers(Protocol):
+    """Whatever calls a function once for each tuple of arguments, here or elsewhere; results in that order."""
+
+    def map(self, function: Callable[..., Any], calls: Sequence[tuple[Any, ...]]) -> list[Any]:
+        """Call the function for each."""
+
+
+class InProcess:
+    """Workers that are this very process."""
+
+    def map(self, function: Callable[..., Any], calls: Sequence[tuple[Any, ...]]) -> list[Any]:
+        """Call the function for each, one after the other."""
+        return [function(*call) for call in calls]
+
+
+Create = Callable[[str, tuple[int, ...], Any], np.memmap]
+"""Makes an array in a file, from name, shape and type."""
+
+
+@dataclass(frozen=True)
+class Files:
+    """Where the arrays of one terrain lie.
+
+    Parameters
+    ----------
+    tiling : Tiling
+    elevation : str
+        File of the elevations, shape (nrows, ncols) [m].
+    conditioned, directions, area : str
+        Files of the arrays of `Terrain`.
+    scratch : str
+        Folder for what only the steps hand each other.
+    """
+
+    tiling: Tiling
+    elevation: str
+    conditioned: str
+    directions: str
+    area: str
+    scratch: str
+
+    def padded(self, file: str, *, write: bool = False) -> np.ndarray:
+        """Map a flat padded array, as a raster."""
+        mapped = np.load(file, mmap_mode="r+" if write else "r")
+        return mapped.reshape(self.tiling.nrows + 2, self.tiling.stride)
+
+    def keep(self, tile: Tile, name: str, **arrays: np.ndarray) -> None:
+        """Keep arrays of a tile for a later step."""
+        for part, array in arrays.items():
+            np.save(self._scratch(tile, name, part), array, allow_pickle=False)
+
+    def kept(self, tile: Tile, name: str, part: str) -> np.ndarray:
+        """Read what was kept."""
+        return np.load(self._scratch(tile, name, part), allow_pickle=False)
+
+    def drop(self, name: str) -> None:
+        """Remove what all tiles kept under a name."""
+        for path in Path(self.scratch).glob(f"{name}-*.npy"):
+            path.unlink()
+
+    def _scratch(self, tile: Tile, name: str, part: str) -> str:
+        return str(Path(self.scratch, f"{name}-{part}-{tile.index}.npy"))
+
+    def sizes(self, tile: Tile) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Widths and heights of the cells [m] and their summable areas [m2], by row of the tile."""
+        dx, dy, area = np.load(Path(self.scratch, "sizes.npy"))[:, tile.rows]
+        return dx, dy, area
+
+
+def condition_and_route_tiles(
+    elevation_file: Path,
+    dx_m: np.ndarray,
+    dy_m: np.ndarray,
+    cell_area_m2: np.ndarray,
+    tiling: Tiling,
+    create: Create,
+    scratch: Path,
+    workers: Workers | None = None,
+    conditioning: Conditioning = _FILL,
+) -> Terrain:
+    """Do the work of `condition_and_route` on tiles: the same result, in files.
+
+    Parameters
+    ----------
+    elevation_file : Path
+        A ``.npy`` file of shape (nrows, ncols) [m], as `condition_and_route` takes it.
+    dx_m, dy_m, cell_area_m2 : arrays, shape (nrows,) [m, m2]
+    tiling : Tiling
+    create : callable
+        Makes the files of the result.
+    scratch : Path
+        An empty folder for files in between; the workers see it, and all other files, under the same path.
+    workers : Workers, optional
+        This process where not given. The result does not depend on it.
+    conditioning : Conditioning
+
+    Returns
+    -------
+    Terrain
+        Its rasters are mapped files; its order runs tile by tile (`Terrain.order`).
+
+    Raises
+    ------
+    TerrainError
+        As `condition_and_route`.
+    """
+    workers = workers or InProcess()
+    nrows, ncols = tiling.nrows, tiling.ncols
+    dx, dy, cell_area = sizes_by_row(nrows, ncols, dx_m, dy_m, cell_area_m2)
+    row_area = summable_areas_m2(cell_area, ncols)
+    cells = (nrows + 2) * (ncols + 2)
+    np.save(scratch / "sizes.npy", np.stack([dx, dy, row_area]))
+    conditioned = create("conditioned_m", (cells,), np.float32)
+    directions = create("directions", (cells,), np.uint8)
+    area = create("area_m2", (cells,), np.float64)
+    for array, outside in ((conditioned, np.inf), (directions, VOID), (area, 0.0)):
+        halo = array.reshape(nrows + 2, ncols + 2)
+        halo[0], halo[-1], halo[:, 0], halo[:, -1] = outside, outside, outside, outside
+
+    files = Files(
+        tiling,
+        str(elevation_file),
+        str(conditioned.filename),
+        str(directions.filename),
+        str(area.filename),
+        str(scratch),
+    )
+    data_cells, largest_rounding = _fill(files, workers)
+    if data_cells.sum() == 0:
+        raise TerrainError("no cell of the terrain has an elevation: is its nodata value right?")
+    order = create("order", (int(data_cells.sum()),), np.int32)
+    bounds = np.concatenate([[0], np.cumsum(data_cells)])
+    flat_cells = _route(files, workers)
+    _collect(files, workers, bounds, str(order.filename))
+
+    elevation = np.load(elevation_file, mmap_mode="r")
+    return Terrain(
+        nrows=nrows,
+        ncols=ncols,
+        conditioned_m=conditioned,
+        directions=directions,
+        area_m2=area,
+        order=order,
+        row_area_m2=row_area,
+        step_um=step_lengths_um(dx, dy),
+        data_cells=int(data_cells.sum()),
+        flat_cells=flat_cells,
+        **measure_conditioning(elevation, conditioned, row_area),
+        largest_rounding_m=largest_rounding,
+        row_edges=np.array(tiling.row_edges),
+        col_edges=np.array(tiling.col_edges),
+        order_bounds=bounds,
+    )
+
+
+# 1. Filling
+
+
+class _Rim(NamedTuple):
+    """What a tile tells of its catchments: elevation and number of those along the rim, and the tree between them."""
+
+    z: Strips
+    terminal: Strips
+    terminals: int
+    edge: np.ndarray
+    edge_level: np.ndarray
+    data_cells: int
+    largest_rounding_m: float
+
+
+def _fill(files: Files, workers: Workers) -> tuple[np.ndarray, float]:
+    """Fill every tile; returns the cells with elevation of each, and the largest rounding."""
+    from basinwright.kernels.fill import spill_levels
+
+    tiling = files.tiling
+    rims: list[_Rim] = workers.map(_cut_into_catchments, [(files, tile) for tile in tiling])
+    # The outside is number 0 of every tile, and of all.
+    first = np.concatenate([[0], np.cumsum([rim.terminals - 1 for rim in rims])])
+    z = RimLines(tiling, np.float32, -np.inf)
+    number = RimLines(tiling, np.int64, 0)
+    pairs, levels = [], []
+    for tile, rim, base in zip(tiling, rims, first.tolist(), strict=False):
+        z.put(tile, rim.z)
+        number.put(tile, Strips(*(np.where(line > 0, line + base, 0) for line in rim.terminal)))
+        a, b = rim.edge >> 32, rim.edge & 0xFFFFFFFF
+        pairs.append(np.where(a > 0, a + base, 0) << 32 | np.where(b > 0, b + base, 0))
+        levels.append(rim.edge_level)
+    for (a, b), (za, zb) in zip(pairs_across(number), pairs_across(z), strict=True):
+        differ = a != b
+        pairs.append(a[differ] << 32 | b[differ])
+        levels.append(np.maximum(za, zb)[differ])
+    spill = spill_levels(int(first[-1]) + 1, np.concatenate(pairs), np.concatenate(levels).astype(np.float32))
+    calls = [
+        (files, tile, np.concatenate([spill[:1], spill[first[i] + 1 : first[i + 1] + 1]]))
+        for i, tile in enumerate(tiling)
+    ]
+    workers.map(_raise, calls)
+    files.drop("catchments")
+    return np.array([rim.data_cells for rim in rims]), max(rim.largest_rounding_m for rim in rims)
+
+
+def _padded_elevation(files: Files, tile: Tile) -> tuple[np.ndarray, float]:
+    """Elevations of a tile, padded: -inf in voids and beyond the raster, +inf where another tile goes on."""
+    elevation = np.load(files.elevation, mmap_mode="r")
+    top, left = max(tile.rows.start - 1, 0), max(tile.cols.start - 1, 0)
+    window = elevation[top : tile.rows.stop + 1, left : tile.cols.stop + 1]
+    padded, rounding = pad(window)
+    z = padded.reshape(window.shape[0] + 2, -1)
+    # Where the tile lies at the raster's edge the padding is the ring around it, else the outermost cells are.
+    z = z[tile.rows.start - top :, tile.cols.start - left :][: tile.shape[0] + 2, : tile.stride].copy()
+    for line in (z[0], z[-1], z[:, 0], z[:, -1]):
+        line[line > -np.inf] = np.inf
+    return z.reshape(-1), rounding
+
+
+def _cut_into_catchments(files: Files, tile: Tile) -> _Rim:
+    from basinwright.kernels import fill, tiles
+
+    nrows, ncols = tile.shape
+    z, rounding = _padded_elevation(files, tile)
+    ways = np.empty(z.size, np.uint8)
+    label = np.empty(z.size, np.int32)
+    stack = np.empty(z.size, np.int32)
+    fill.ways_down(z, nrows, ncols, ways)
+    labels = fill.label_catchments(z, ways, nrows, ncols, label, stack)
+    del ways, stack
+    pair, level = fill.find_passes(z, label, nrows, ncols)
+    inside = level < np.inf
+    pair, level = pair[inside], level[inside]
+    label[label == NO_CELL] = 0  # around the tile
+    core = label.reshape(nrows + 2, ncols + 2)[1:-1, 1:-1]
+    height = z.reshape(nrows + 2, ncols + 2)[1:-1, 1:-1]
+    terminal = np.zeros(labels, bool)
+    terminal[0] = True
+    for strip in strips_of(core):
+        terminal[strip] = True
+    spill, reached, edge, edge_level = tiles.join_catchments(terminal, pair, level, np.argsort(level))
+    number = (np.cumsum(terminal) - 1).astype(np.int32)  # of the terminals alone
+    files.keep(tile, "catchments", label=label, spill=spill, reached=number[reached])
+    a, b = number[edge >> 32].astype(np.int64), number[edge & 0xFFFFFFFF].astype(np.int64)
+    return _Rim(
+        strips_of(height),
+        Strips(*(number[strip].astype(np.int64) for strip in strips_of(core))),
+        int(terminal.sum()),
+        a << 32 | b,
+        edge_level,
+        int(np.count_nonzero(height > -np.inf)),
+        rounding,
+    )
+
+
+def _raise(files: Files, tile: Tile, terminal_spill: np.ndarray) -> None:
+    from basinwright.kernels.fill import raise_to_levels
+
+    z, _ = pad(np.load(files.elevation, mmap_mode="r")[tile.rows, tile.cols])
+    nrows, ncols = tile.shape
+    label = files.kept(tile, "catchments", "label")
+    level = np.maximum(
+        files.kept(tile, "catchments", "spill"), terminal_spill[files.kept(tile, "catchments", "reached")]
+    )
+    raise_to_levels(z, label, level)
+    into = files.padded(files.conditioned, write=True)
+    into[1:-1, 1:-1][tile.rows, tile.cols] = z.reshape(nrows + 2, ncols + 2)[1:-1, 1:-1]
+
+
+# 2. Directions
+
+
+class _Flats(NamedTuple):
+    """Steps to lower and from higher ground along the rim of a tile, of the flats that cross it."""
+
+    nearer: Strips
+    away: Strips
+
+
+def _route(files: Files, workers: Workers) -> int:
+    """Give every cell of every tile its direction; returns the number of cells in flats."""
+    from basinwright.kernels.tiles import NO_FLAT
+
+    tiling = files.tiling
+    tiles = list(tiling)
+    found: list[tuple[int, int, _Flats | None]] = workers.map(_descend, [(files, tile) for tile in tiles])
+    flat_cells = sum(cells for cells, _, _ in found)
+    nearer, away = RimLines(tiling, np.int32, NO_FLAT), RimLines(tiling, np.int32, NO_FLAT)
+    steps: dict[int, _Flats] = {tile.index: flats for tile, (_, _, flats) in zip(tiles, found, strict=True) if flats}
+    told = dict(steps)
+    while told:
+        for i, flats in told.items():
+            nearer.put(tiles[i], flats.nearer)
+            away.put(tiles[i], flats.away)
+        asked = [tiles[i] for i in sorted(steps) if any(_beside(tiling, i, j) for j in told)]
+        answers = workers.map(_spread, [(files, tile, nearer.around(tile), away.around(tile)) for tile in asked])
+        told = {
+            tile.index: flats
+            for tile, flats in zip(asked, answers, strict=True)
+            if _differ(flats.nearer, steps[tile.index].nearer) or _differ(flats.away, steps[tile.index].away)
+        }
+        steps |= told
+    open_tiles = [tiles[i] for i in sorted(steps)]
+    undrained = sum(closed for _, closed, _ in found) + sum(
+        workers.map(_drain, [(files, tile, nearer.around(tile), away.around(tile)) for tile in open_tiles])
+    )
+    if undrained:
+        raise TerrainError(f"{undrained} cells do not drain after conditioning")
+    files.drop("flats")
+    return flat_cells
+
+
+def _beside(tiling: Tiling, i: int, j: int) -> bool:
+    """Whether two tiles touch, or are one."""
+    (row, col), (other_row, other_col) = divmod(i, tiling.tiles_across), divmod(j, tiling.tiles_across)
+    return abs(row - other_row) <= 1 and abs(col - other_col) <= 1
+
+
+def _differ(one: Strips, other: Strips) -> bool:
+    return any((a != b).any() for a, b in zip(one, other, strict=True))
+
+
+def _descend(files: Files, tile: Tile) -> tuple[int, int, _Flats | None]:
+    """Directions of a tile but for open flats; returns flat cells, undrained cells, and the state of open flats."""
+    from basinwright.kernels import directions, flats, tiles
+
+    nrows, ncols = tile.shape
+    stride = ncols + 4
+    # The tile, a ring of cells around it whose directions are wanted too, and a ring that those need.
+    wide = np.full((nrows + 4, stride), np.inf, np.float32)
+    whole = files.padded(files.conditioned)
+    top, left = tile.rows.start - 1, tile.cols.start - 1
+    rows = slice(max(top, 0), min(tile.rows.stop + 3, whole.shape[0]))
+    cols = slice(max(left, 0), min(tile.cols.stop + 3, whole.shape[1]))
+    wide[rows.start - top : rows.stop - top, cols.start - left : cols.stop - left] = whole[rows, cols]
+    z = wide.reshape(-1)
+    ring_rows = np.arange(tile.rows.start - 1, tile.rows.stop + 1).clip(0, files.tiling.nrows - 1)
+    dx, dy, _ = np.load(Path(files.scratch, "sizes.npy"))[:, ring_rows]
+    code = np.empty(z.size, np.uint8)
+    directions.steepest_descent(z, nrows + 2, ncols + 2, dx, dy, code)
+    core = code.reshape(nrows + 4, stride)[2:-2, 2:-2]
+    flat_cells = int(np.count_nonzero(core == FLAT))
+    of_ring, cells = 0, np.empty(0, np.int32)
+    if flat_cells:
+        queue = np.empty(z.size, np.int32)
+        ring = frame(nrows + 4, stride, 1)
+        of_ring, cells, towards, beside_higher = tiles.find_open_flats(z, code, stride, ring, queue)
+        flats.resolve_flats(z, code, nrows + 2, ncols + 2, queue, np.empty(z.size, np.int32))
+    undrained = int(np.count_nonzero(core == FLAT))
+    files.padded(files.directions, write=True)[1:-1, 1:-1][tile.rows, tile.cols] = core
+    if cells.size == of_ring:
+        return flat_cells, undrained, None
+    kept = slice(of_ring, None)
+    files.keep(tile, "flats", cells=cells[kept], towards=towards[kept], beside_higher=beside_higher[kept])
+    unknown = np.full((nrows + 4, ncols + 4), tiles.NO_FLAT, np.int32)
+    unknown.reshape(-1)[cells[:of_ring]] = tiles.UNREACHED
+    around = strips_around(unknown[1:-1, 1:-1])
+    return flat_cells, undrained, _spread(files, tile, around, around)
+
+
+def _steps(files: Files, tile: Tile, around: Strips, first: np.ndarray) -> np.ndarray:
+    """Steps across the open flats of a tile, from where they begin and from beyond the rim; two cells wider."""
+    from basinwright.kernels import tiles
+
+    nrows, ncols = tile.shape
+    field = np.zeros((nrows + 4, ncols + 4), np.int32)  # NO_FLAT
+    set_around(field[1:-1, 1:-1], around)
+    flat = field.reshape(-1)
+    ring = frame(nrows + 4, ncols + 4, 1)
+    ring = ring[(flat[ring] != tiles.NO_FLAT) & (flat[ring] != tiles.UNREACHED)]
+    flat[files.kept(tile, "flats", "cells")] = tiles.UNREACHED
+    flat[first] = 1
+    sources = np.concatenate([first, ring])
+    sources = sources[np.argsort(flat[sources], kind="stable")].astype(np.int32)
+    tiles.spread_steps(flat, ncols + 4, sources, np.empty(flat.size, np.int32))
+    return field
+
+
+def _both_steps(files: Files, tile: Tile, nearer: Strips, away: Strips) -> tuple[np.ndarray, np.ndarray]:
+    from basinwright.kernels.tiles import NO_CODE
+
+    cells = files.kept(tile, "flats", "cells")
+    drains = files.kept(tile, "flats", "towards") != NO_CODE
+    return (
+        _steps(files, tile, nearer, cells[drains]),
+        _steps(files, tile, away, cells[files.kept(tile, "flats", "beside_higher")]),
+    )
+
+
+def _spread(files: Files, tile: Tile, nearer: Strips, away: Strips) -> _Flats:
+    """Count the steps again, knowing what lies around."""
+    fields = _both_steps(files, tile, nearer, away)
+    return _Flats(*(strips_of(field[2:-2, 2:-2]) for field in fields))
+
+
+def _drain(files: Files, tile: Tile, nearer: Strips, away: Strips) -> int:
+    """Give the open flats of a tile their directions; returns the cells that got none."""
+    from basinwright.kernels import tiles
+
+    nrows, ncols = tile.shape
+    to_lower, from_higher = _both_steps(files, tile, nearer, away)
+    cells = files.kept(tile, "flats", "cells")
+    code = np.zeros((nrows + 4) * (ncols + 4), np.uint8)
+    undrained = tiles.drain_open_flats(
+        code, ncols + 4, cells, files.kept(tile, "flats", "towards"), to_lower.reshape(-1), from_higher.reshape(-1)
+    )
+    into = files.padded(files.directions, write=True)[1:-1, 1:-1][tile.rows, tile.cols]
+    row, col = np.divmod(cells, ncols + 4)
+    into[row - 2, col - 2] = code[cells]
+    return int(undrained)
+
+
+# 3. Contributing area
+
+
+class _Outflow(NamedTuple):
+    """What a tile gives to the cells around it, and where the water of its rim leaves it; indices on the raster."""
+
+    visited: int
+    cells: np.ndarray
+    area_m2: np.ndarray
+    rim: np.ndarray
+    rim_ends: np.ndarray
+
+
+def _collect(files: Files, workers: Workers, bounds: np.ndarray, order_file: str) -> None:
+    """Sum the contributing areas."""
+    from basinwright.kernels import forest
+
+    tiling = files.tiling
+    given: list[_Outflow] = workers.map(
+        _sum_own, [(files, tile, order_file, bounds[tile.index : tile.index + 2].tolist()) for tile in tiling]
+    )
+    undone = int(bounds[-1]) - sum(out.visited for out in given)
+    # Nodes: the cells that water from another tile enters.
+    entries = np.unique(np.concatenate([out.cells for out in given]))
+    inflow = np.zeros((entries.size, 1))
+    parent = np.full(entries.size, NO_CELL, np.int32)
+    for out in given:
+        np.add.at(inflow[:, 0], np.searchsorted(entries, out.cells), out.area_m2)
+    for out in given:
+        here = np.isin(out.rim, entries)
+        goes_on = here & (out.rim_ends != NO_CELL)
+        parent[np.searchsorted(entries, out.rim[goes_on])] = np.searchsorted(entries, out.rim_ends[goes_on])
+    order = forest.upstream_first(parent)
+    if undone or order.size != entries.size:
+        raise TerrainError(f"{undone + entries.size - order.size} cells lie on or below a cycle of directions")
+    forest.combine_sums(parent, order, inflow)
+    tile_of = tiling.tile_of(entries)
+    calls = [(files, tile, entries[tile_of == tile.index], inflow[tile_of == tile.index, 0]) for tile in tiling]
+    workers.map(_add_inflow, calls)
+    files.drop("area")
+
+
+def tile_directions(files: Files, tile: Tile) -> np.ndarray:
+    """Finished directions of a tile, flat and padded, VOID around it."""
+    window = np.array(files.padded(files.directions)[tile.padded])
+    window[0], window[-1], window[:, 0], window[:, -1] = VOID, VOID, VOID, VOID
+    return window.reshape(-1)
+
+
+def _sum_own(files: Files, tile: Tile, order_file: str, bounds: list[int]) -> _Outflow:
+    from basinwright.kernels import accumulate, tiles
+
+    nrows, ncols = tile.shape
+    code = tile_directions(files, tile)
+    area = np.empty(code.size)
+    order = np.empty(code.size, np.int32)
+    _, _, row_area = files.sizes(tile)
+    visited = accumulate.contributing_area(code, nrows, ncols, row_area, area, order)
+    np.load(order_file, mmap_mode="r+")[slice(*bounds)] = order[: bounds[1] - bounds[0]]
+    del order
+    files.keep(tile, "area", own=area)
+    around = frame(nrows + 2, tile.stride, 0)
+    out = around[area[around] > 0]
+    rim = frame(nrows + 2, tile.stride, 1)
+    ends = tiles.ways_across(code, tile.stride, rim, np.zeros(code.size, np.int32))
+    stride = files.tiling.stride
+    rim_ends = np.where(ends == NO_CELL, NO_CELL, tile.in_raster(ends, stride))
+    return _Outflow(visited, tile.in_raster(out, stride), area[out], tile.in_raster(rim, stride), rim_ends)
+
+
+def _add_inflow(files: Files, tile: Tile, entries: np.ndarray, inflow: np.ndarray) -> None:
+    from basinwright.kernels.tiles import pour_in
+
+    nrows, ncols = tile.shape
+    area = files.kept(tile, "area", "own")
+    if entries.size:
+        code = tile_directions(files, tile)
+        pour_in(
+            code, tile.stride, tile.in_tile(entries, files.tiling.stride), inflow, area,
+            np.zeros(code.size, np.uint8), np.zeros(code.size),
+        )  # fmt: skip
+    inside = area.reshape(nrows + 2, ncols + 2)[1:-1, 1:-1]
+    files.padded(files.area, write=True)[1:-1, 1:-1][tile.rows, tile.cols] = inside
