@@ -1,0 +1,203 @@
+"""The channel network of the whole raster, and where its channels begin."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+
+from basinwright.terrain.routing import Terrain
+
+LEAST_CELLS = 50
+"""The smallest stream area that is tested holds so many cells of mean size: fewer are hillside, not channels."""
+LEAST_STREAMS = (10, 5)
+"""Streams of order 1 and of higher orders below which their mean drops are not compared."""
+T_LIMIT = 2.0
+"""Mean drops differ where Student's t is larger (Tarboton, Bras & Rodriguez-Iturbe 1991)."""
+FALLBACK_KM2 = 0.25
+"""The stream area where no tested one passes."""
+
+_SERIES = (1.0, 1.25, 1.6, 2.0, 2.5, 3.15, 4.0, 5.0, 6.3, 8.0)
+"""Preferred numbers, ten to a decade (ISO 3, R10): tested areas do not depend on the terrain."""
+
+
+def stream_area_m2(stream_area_km2: float) -> float:
+    """Stream area as the kernels compare it [m2]: 0.07 km2 is 70000 m2, not a hair more."""
+    return round(stream_area_km2 * 1e6, 6)
+
+
+@dataclass(frozen=True, eq=False)
+class Reaches:
+    """The channel network reach by reach.
+
+    A reach runs from a channel head or a junction to the next junction or to where the channel ends; the junction's
+    cell ends it and begins the next one.
+
+    Attributes
+    ----------
+    bounds : int64 array, shape (reaches + 1,)
+    cells : int32 array, shape (reach cells,)
+        Padded indices, downstream; reach i lies in ``[bounds[i], bounds[i + 1])``. Reaches are in the order of their
+        upper cells, row by row.
+    strahler : uint8 array, shape (reaches,)
+        Strahler order.
+    to_reach : int32 array, shape (reaches,)
+        The next reach downstream, -1 where the channel leaves the raster or ends.
+    length_m, drop_m : float64 arrays, shape (reaches,) [m]
+        The drop is on the conditioned surface.
+    top_area_km2, area_km2 : float64 arrays, shape (reaches,) [km2]
+        Contributing area at the upper end, and at the lower end just above the junction.
+    """
+
+    bounds: np.ndarray
+    cells: np.ndarray
+    strahler: np.ndarray
+    to_reach: np.ndarray
+    length_m: np.ndarray
+    drop_m: np.ndarray
+    top_area_km2: np.ndarray
+    area_km2: np.ndarray
+
+
+def channel_reaches(terrain: Terrain, stream_area_km2: float) -> Reaches:
+    """Reaches of the channels that begin at a contributing area.
+
+    Parameters
+    ----------
+    terrain : Terrain
+    stream_area_km2 : float [km2]
+
+    Returns
+    -------
+    Reaches
+    """
+    from basinwright.kernels import network
+
+    cells, below = network.channel_graph(
+        terrain.directions, terrain.area_m2, terrain.order, terrain.ncols, stream_area_m2(stream_area_km2)
+    )
+    strahler, donors = network.strahler_orders(below, np.ones(cells.size, np.bool_))
+    heads = np.flatnonzero((donors != 1) & (below >= 0))
+    heads = heads[np.argsort(cells[heads])]
+    bounds, path, to_reach = network.trace_reaches(cells, below, donors, heads)
+    along = cells[path]
+    first, last = bounds[:-1], bounds[1:] - 1
+    if heads.size == 0:
+        none = np.empty(0)
+        return Reaches(bounds, along, np.empty(0, np.uint8), to_reach, none, none, none, none)
+
+    rows, _ = terrain.rows_cols(along)
+    step_um = terrain.step_um[rows, np.minimum(terrain.directions[along], 7)]
+    step_um[last] = 0
+    junction = donors[path[last]] > 1
+    return Reaches(
+        bounds=bounds,
+        cells=along,
+        strahler=strahler[heads],
+        to_reach=to_reach,
+        length_m=np.add.reduceat(step_um, first) / 1e6,
+        drop_m=terrain.filled_m[along[first]].astype(np.float64) - terrain.filled_m[along[last]],
+        top_area_km2=terrain.area_m2[along[first]] / 1e6,
+        area_km2=terrain.area_m2[along[np.where(junction, last - 1, last)]] / 1e6,
+    )
+
+
+@dataclass(frozen=True)
+class Tested:
+    """One stream area in the constant-drop test.
+
+    Attributes
+    ----------
+    stream_area_km2 : float [km2]
+    first_streams, higher_streams : int
+        Strahler streams of order 1 and of all higher orders; those that leave the raster are not counted.
+    first_drop_m, higher_drop_m : float [m]
+        Their mean drops.
+    t : float
+        Student's t of the difference, two samples with a common variance.
+    """
+
+    stream_area_km2: float
+    first_streams: int
+    higher_streams: int
+    first_drop_m: float
+    higher_drop_m: float
+    t: float
+
+    @cached_property
+    def passes(self) -> bool:
+        """Whether the mean drops do not differ."""
+        return abs(self.t) < T_LIMIT
+
+
+def drop_test(terrain: Terrain) -> list[Tested]:
+    """Test stream areas by the constancy of stream drops.
+
+    The mean fall of Strahler streams is the same for all orders of a channel network (Broscoe 1959). Where channels
+    are begun too high on the hillside, those of order 1 fall more than the others: the smallest area at which they do
+    not is that at which channels begin (Tarboton, Bras & Rodriguez-Iturbe 1991).
+
+    Parameters
+    ----------
+    terrain : Terrain
+
+    Returns
+    -------
+    list of Tested
+        In rising order: from the first of the series of tested areas with `LEAST_CELLS` cells, as long as there are
+        `LEAST_STREAMS`. Each is a preferred number, so that the same areas are tested on every terrain and cell size.
+
+    References
+    ----------
+    Broscoe, A. J. (1959). Quantitative analysis of longitudinal stream profiles of small watersheds. Office of Naval
+    Research, Project NR 389-042, Technical Report 18, Columbia University.
+
+    Tarboton, D. G., Bras, R. L., & Rodriguez-Iturbe, I. (1991). On the extraction of channel networks from digital
+    elevation data. Hydrological Processes, 5(1), 81-100. doi:10.1002/hyp.3360050107
+    """
+    from basinwright.kernels import network
+
+    mean_cell_km2 = float(terrain.row_area_m2.mean()) / 1e6
+    candidates = _candidates(LEAST_CELLS * mean_cell_km2, float(terrain.area_m2.max()) / 1e6)
+    if not candidates:
+        return []
+    cells, below = network.channel_graph(
+        terrain.directions, terrain.area_m2, terrain.order, terrain.ncols, stream_area_m2(candidates[0])
+    )
+    area_m2, elevation_m = terrain.area_m2[cells], terrain.filled_m[cells].astype(np.float64)
+    tested: list[Tested] = []
+    for area_km2 in candidates:
+        strahler, _ = network.strahler_orders(below, area_m2 >= stream_area_m2(area_km2))
+        order, drop_m = network.stream_drops(below, strahler, elevation_m)
+        first, higher = drop_m[order == 1], drop_m[order > 1]
+        if first.size < LEAST_STREAMS[0] or higher.size < LEAST_STREAMS[1]:
+            break
+        tested.append(
+            Tested(area_km2, first.size, higher.size, float(first.mean()), float(higher.mean()), _t(first, higher))
+        )
+    return tested
+
+
+def chosen_stream_area_km2(tested: list[Tested]) -> float | None:
+    """Smallest tested area that passes; None where none does."""
+    return next((entry.stream_area_km2 for entry in tested if entry.passes), None)
+
+
+def _candidates(least_km2: float, most_km2: float) -> list[float]:
+    """Preferred numbers in a range."""
+    decades = range(math.floor(math.log10(least_km2)), math.ceil(math.log10(most_km2)) + 1)
+    numbers = [float(f"{number}e{decade}") for decade in decades for number in _SERIES]
+    return [number for number in numbers if least_km2 <= number <= most_km2]
+
+
+def _t(first: np.ndarray, second: np.ndarray) -> float:
+    """Student's t of two samples with a common variance; 0 where neither varies and the means are equal."""
+    n, m = first.size, second.size
+    difference = float(first.mean() - second.mean())
+    squares = float(((first - first.mean()) ** 2).sum() + ((second - second.mean()) ** 2).sum())
+    error = math.sqrt(squares / (n + m - 2) * (1 / n + 1 / m))
+    if error == 0.0:
+        return 0.0 if difference == 0.0 else math.copysign(math.inf, difference)
+    return difference / error
