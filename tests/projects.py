@@ -155,6 +155,47 @@ def v_valley(rows: int, cols: int, side_slope: float, valley_slope: float, cell:
     return 1000.0 + side_slope * np.abs(col - cols // 2) * cell + valley_slope * (rows - 1 - row) * cell
 
 
+DITCH_HEAD_CELLS = 200
+"""Cells of hillslope above every channel head of `paired_ditches`."""
+DITCH_DROP_M = 20.0
+"""Mean drop of its streams."""
+
+
+def paired_ditches(hillslope_m: float, orders: int = 8) -> NDArray[np.float64]:
+    """Return ditches that join two by two, falling 19 and 21 m, under strips of even hillslope; voids in between.
+
+    By geometry every order has the same mean drop, whatever the stream area: a larger one takes away whole orders.
+    Water leaves in the middle of the last row.
+
+    Parameters
+    ----------
+    hillslope_m : float
+        Fall of the hillslope from cell to cell [m].
+    orders : int
+        Strahler order at the bottom: 2 ** (orders - 1) channel heads.
+    """
+    reach = [2**level + 2 for level in range(orders - 1)]
+    z = np.full((DITCH_HEAD_CELLS + sum(reach) + 4, 2**orders + 1), np.nan)
+    strip = hillslope_m * np.arange(DITCH_HEAD_CELLS - 1, 0, -1)
+
+    def climb(row: int, col: int, level: int, bottom_m: float) -> None:
+        """Two arms up from a junction; above the lowest level, the hillslopes."""
+        for side in (-1, 1):
+            drop_m = DITCH_DROP_M + side
+            for k in range(1, reach[level] + 1):
+                z[row - k, col + side * min(k, 2**level)] = bottom_m + drop_m * k / reach[level]
+            top, at = row - reach[level], col + side * 2**level
+            if level:
+                climb(top, at, level - 1, bottom_m + drop_m)
+            else:
+                z[top - DITCH_HEAD_CELLS + 1 : top, at] = bottom_m + drop_m + strip
+
+    row, col = z.shape[0] - 4, 2 ** (orders - 1)
+    z[row:, col] = 100.0 - np.arange(4)
+    climb(row, col, orders - 2, 100.0)
+    return z
+
+
 def read_table(run: Path, name: str) -> list[dict[str, str]]:
     """Read a CSV of a run as rows of text."""
     with (run / f"{name}.csv").open(encoding="utf-8", newline="") as file:

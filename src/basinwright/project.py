@@ -324,7 +324,6 @@ LATER: tuple[tuple[str, str, Callable[[Any], bool], str], ...] = (
     ("terrain", "sinks", lambda value: value is not None, "leave it out"),
     ("terrain", "flow_direction", lambda value: value is not None, "leave it out"),
     ("terrain", "flow_direction_codes", lambda value: value is not None, "leave it out"),
-    ("terrain", "stream_area", lambda value: value == "auto", 'give an area such as "0.25 km2"'),
     ("terrain", "length_correction", lambda value: value != "none", 'use "none"'),
     ("flow_path", "farthest", lambda value: value != "length", 'use "length"'),
     (

@@ -226,6 +226,7 @@ OUTLETS = Table(
         _text("capacity_basis", "the criterion the capacity rests on, as supplied", optional=True),
         _text("exceeded_at_yr", "smallest tested period over capacity; empty: none; or unknown", optional=True),
         _shown("mean_elevation", "length", "mean elevation of the basin, unconditioned terrain"),
+        _shown("drainage_density", "per_length", "length of the channels in the basin over its area"),
         _shown("reach_length", "length", "length of the flow path from this outlet to the next downstream"),
         _shown("reach_fall", "length", "fall of that path, conditioned terrain"),
         _shown("reach_area", "area", "contributing area at its middle"),
@@ -392,6 +393,22 @@ FLAGS_TABLE = Table(
         _text("message", "the case in words"),
     ),
 )
+
+STREAMS = Table(
+    "streams",
+    "one reach of a channel, from its head or a junction to the next junction or to where it ends",
+    ("reach",),
+    (
+        _count("reach", "number of the reach"),
+        _count("to_reach", "number of the next reach downstream, 0 where the channel leaves the terrain or ends"),
+        _count("strahler_order", "order of the reach (Strahler 1957)"),
+        _shown("length", "length", "length of the reach"),
+        _shown("drop", "length", "fall of the reach, conditioned terrain"),
+        _shown("top_area", "area", "contributing area at its upper end"),
+        _shown("area", "area", "contributing area at its lower end, above the junction"),
+    ),
+)
+"""A layer of ``basins.gpkg`` that no CSV repeats."""
 
 ALL: tuple[Table, ...] = (
     OUTLETS,

@@ -163,6 +163,7 @@ SHOWN: dict[str, Shown] = {
     "area": Shown("mi2", "km2", "mi2", "km2", KM2_PER_MI2),
     "depth": Shown("in", "mm", "in", "mm", MM_PER_IN),
     "flow": Shown("cfs", "m3s", "ft3/s", "m3/s", M3S_PER_CFS),
+    "per_length": Shown("per_mi", "per_km", "1/mi", "1/km", 1000.0 / M_PER_MI),
     "speed": Shown("fps", "mps", "ft/s", "m/s", M_PER_FT),
     "unit_flow": Shown("cfs_per_in", "m3s_per_mm", "ft3/s/in", "m3/s/mm", M3S_PER_CFS / MM_PER_IN),
 }

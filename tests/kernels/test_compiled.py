@@ -11,6 +11,7 @@ from basinwright.kernels import (
     forest,
     geometry,
     labels,
+    network,
     reduce,
     slope,
     trace,
@@ -111,6 +112,16 @@ def everything(seed, pick):
     pick(travel.add_areas_by_time)(label, time_us, NCOLS, AREA, 30_000_000, first_bin, curve_bounds, curve)
     pick(travel.combine_curves)(parent, order, first_bin, curve_bounds, curve)
     out |= {"receives": receives, "length": length, "fall": fall, "source": source, "time": time_us, "curve": curve}
+    channels, below = pick(network.channel_graph)(code, area, out["order"], NCOLS, 2.5 * AREA[0])
+    strahler, donors = pick(network.strahler_orders)(below, area[channels] >= 3.5 * AREA[0])
+    stream, drop = pick(network.stream_drops)(below, strahler, z[channels].astype(np.float64))
+    _, joins = pick(network.strahler_orders)(below, np.ones(below.size, np.bool_))
+    heads = np.flatnonzero((joins != 1) & (below >= 0))
+    reach_bounds, reach_path, to_reach = pick(network.trace_reaches)(channels, below, joins, heads)
+    channel_um = np.zeros(k, np.int64)
+    pick(network.add_channel_length)(code, area, label, NCOLS, step_um, 2.5 * AREA[0], channel_um)
+    out |= {"channels": channels, "below": below, "strahler": strahler, "donors": donors, "stream": stream}
+    out |= {"drop": drop, "reach bounds": reach_bounds, "reaches": reach_path, "to": to_reach, "density": channel_um}
     steep = np.zeros((NROWS, NCOLS))
     ground = np.pad(np.where(np.isfinite(given), given, np.nan), 1, constant_values=np.nan).astype(np.float64)
     pick(slope.horn_slope_pct)(ground, DX, DY, steep)

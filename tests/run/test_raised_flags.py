@@ -5,7 +5,7 @@ All cases are one quiet valley, 100 x 61 cells of 20 m inside a rim, with one th
 
 import numpy as np
 import pytest
-from projects import make_project, read_table, transform_of, v_valley, walled, write_raster
+from projects import make_project, paired_ditches, read_table, transform_of, v_valley, walled, write_raster
 
 from basinwright import pipeline
 from basinwright.flags import FLAGS
@@ -45,6 +45,9 @@ def patched(count, value, background=71):
 def with_town(code):
     """Return land cover with another class on the whole western hillside."""
     return np.where(np.arange(67) < AXIS, code, 71) + np.zeros((106, 1))
+
+
+DITCHES = paired_ditches(2.0)
 
 
 def test_the_quiet_valley_raises_nothing(tmp_path):
@@ -135,6 +138,11 @@ CASES = {
     "SUPERCRITICAL": ({"channel": {"roughness": 0.02}}, {"channel": {"roughness": 0.06}}),
     "SHEET_LIMIT": ({"cover": 41}, {"cover": 71}),  # 100 S^0.5 / n: 71 ft with n 0.40, 189 ft with 0.15
     "NO_CHANNEL": ({"terrain": {"stream_area": "2.5 km2"}}, {"terrain": {"stream_area": "1 km2"}}),
+    # Too few streams to test; ditches of equal mean drop.
+    "STREAM_AREA_UNSURE": (
+        {"terrain": {"stream_area": "auto"}},
+        {"terrain": {"stream_area": "auto"}, "z": DITCHES, "at": (DITCHES.shape[0] - 4, 128), "cell": 10.0},
+    ),
     "TC_MINIMUM": ({"timing": {"minimum": "55 min"}}, {"timing": {"minimum": "45 min"}}),
     "OVERRIDE": ({"columns": {"curve_number": {"A": 80}}}, {"columns": {"curve_number": {}}}),
     "DEEP_FILL": ({"z": with_pit(2.5)}, {"z": with_pit(2.2)}),  # the axis falls by 0.4 m a cell
@@ -186,7 +194,7 @@ def test_every_flag_has_a_case():
 
 def scaled(case):
     """Give a case of another cell size its own valley of the same slopes."""
-    if "cell" in case:
+    if "cell" in case and case["z"] is None:
         return {**case, "z": walled(v_valley(100, 61, 0.08, 0.02, case["cell"]), RIM)}
     return case
 

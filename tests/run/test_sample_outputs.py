@@ -19,7 +19,7 @@ from projects import numbers, read_table
 from rasterio.windows import Window
 
 from basinwright.flags import FLAGS
-from basinwright.tables import ALL, OUTLETS
+from basinwright.tables import ALL, OUTLETS, STREAMS
 
 pytestmark = pytest.mark.xdist_group("sample")
 
@@ -384,6 +384,14 @@ def test_streams_have_the_stream_area(sample):
     assert len(streams) > 100
     assert streams["area_mi2"].min() >= 0.1 / KM2_PER_MI2 - 1e-9
     np.testing.assert_allclose(streams.geometry.length / 0.3048, streams["length_ft"], rtol=1e-6)
+    assert list(streams.columns) == [*(entry.name for entry in STREAMS.fields("us")), "geometry"]
+    assert streams["reach"].tolist() == list(range(1, len(streams) + 1))
+    below = streams.set_index("reach").loc[streams["to_reach"][streams["to_reach"] > 0]]
+    above = streams[streams["to_reach"] > 0]
+    ends = shapely.get_point(above.geometry.to_numpy(), -1)
+    assert (ends == shapely.get_point(below.geometry.to_numpy(), 0)).all()
+    assert (below["strahler_order"].to_numpy() >= above["strahler_order"].to_numpy()).all()
+    assert (below["area_mi2"].to_numpy() > above["area_mi2"].to_numpy()).all()
 
 
 # Rasters

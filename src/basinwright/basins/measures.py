@@ -8,6 +8,7 @@ from basinwright.basins.delineation import Basins
 from basinwright.grid import Grid
 from basinwright.terrain import Terrain
 from basinwright.terrain.land_slope import horn_slope_blocks
+from basinwright.terrain.network import stream_area_m2
 from basinwright.terrain.summable import quantum
 
 _SUMS = ("area", "cells", "contact", "elevation", "slope", "row", "col", "depth")
@@ -52,6 +53,40 @@ def measure(grid: Grid, terrain: Terrain, elevation_m: np.ndarray, basins: Basin
     for name, counts in (("cells", whole["cells"]), ("contact_cells", whole["contact"])):
         columns[name] = basins.by_outlet(counts.astype(np.int64), failed=0)
     return columns
+
+
+def drainage_density_per_km(terrain: Terrain, basins: Basins, stream_area_km2: float) -> np.ndarray:
+    """Length of the channels in every outlet's whole basin over its area (Horton 1932).
+
+    Parameters
+    ----------
+    terrain : Terrain
+    basins : Basins
+    stream_area_km2 : float [km2]
+        Contributing area at which channels begin.
+
+    Returns
+    -------
+    float64 array, shape (n,) [1/km]
+        0 where no channel lies above the outlet; NaN where it failed.
+
+    References
+    ----------
+    Horton, R. E. (1932). Drainage-basin characteristics. Transactions, American Geophysical Union, 13(1), 350-361.
+    """
+    from basinwright.kernels import network, reduce
+
+    length_um = np.zeros(basins.n_labels, np.int64)
+    network.add_channel_length(
+        terrain.directions, terrain.area_m2, basins.label, terrain.ncols, terrain.step_um,
+        stream_area_m2(stream_area_km2), length_um,
+    )  # fmt: skip
+    area_m2 = np.zeros(basins.n_labels)
+    reduce.add_area(
+        basins.label, terrain.ncols, terrain.row_area_m2, 0, terrain.nrows, area_m2, np.zeros(basins.n_labels, np.int64)
+    )
+    whole = basins.whole_sums(np.column_stack([length_um.astype(np.float64), area_m2]))
+    return basins.by_outlet((whole[:, 0] / 1e6) / whole[:, 1] * 1000.0)
 
 
 def _by_label(

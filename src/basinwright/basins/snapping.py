@@ -10,6 +10,7 @@ from numpy.typing import ArrayLike
 from basinwright.grid import Grid
 from basinwright.kernels import NO_CELL
 from basinwright.terrain import Terrain
+from basinwright.terrain.network import stream_area_m2
 
 AREA_TOLERANCE = 0.10
 """Largest relative difference from the expected area; common practice."""
@@ -110,7 +111,7 @@ def snap(
     expected_m2 = np.full(n, np.nan)
     if expected_area_km2 is not None:
         expected_m2[:] = np.asarray(expected_area_km2, np.float64) * 1e6
-    stream_m2 = round(stream_area_km2 * 1e6, 6)  # 0.07 km2 is 70000 m2, not a hair more
+    stream_m2 = stream_area_m2(stream_area_km2)
 
     inside = (px >= 0) & (px < grid.ncols) & (py >= 0) & (py < grid.nrows)
     own = np.full(n, NO_CELL, np.int32)

@@ -1,4 +1,4 @@
-"""Flow paths as compressed rows: profile, cutting into segments, reaches of the stream network.
+"""Flow paths as compressed rows: profile, cutting into segments, lines.
 
 Path i of a set lies in ``[bounds[i], bounds[i + 1])`` of every array per path cell, from the divide down. Along a
 path, each cell owns the stretch from midway to the cell above it to midway to the cell below it.
@@ -9,8 +9,8 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from basinwright.kernels import EXIT, NO_CELL
-from basinwright.kernels.geometry import row_of, steps
+from basinwright.kernels import EXIT
+from basinwright.kernels.geometry import row_of
 
 SHEET, SHALLOW, CHANNEL, OPEN_WATER = range(4)
 """Flow regimes, in the order of `basinwright.tables.REGIMES`."""
@@ -707,68 +707,3 @@ def cut_lines(
         xy[first, 0], xy[first, 1] = _value_at(d, x[a:b], from_m[k]), _value_at(d, y[a:b], from_m[k])
         xy[end - 1, 0], xy[end - 1, 1] = _value_at(d, x[a:b], to_m[k]), _value_at(d, y[a:b], to_m[k])
     return part_bounds, xy
-
-
-@njit(cache=True, nogil=True)
-def trace_reaches(
-    directions: np.ndarray, area_m2: np.ndarray, nrows: int, ncols: int, stream_area_m2: float
-) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Reaches of the stream network, from a channel head or junction to the next junction or exit.
-
-    Parameters
-    ----------
-    directions : uint8 array, shape (cells,)
-    area_m2 : float64 array, shape (cells,) [m2]
-    nrows, ncols : int
-    stream_area_m2 : float [m2]
-
-    Returns
-    -------
-    bounds : int64 array, shape (reaches + 1,)
-    cells : int32 array, shape (reach cells,)
-        The junction at a reach's lower end is its last cell, and the first of the next reach. Reaches are in
-        the order of their first cells, row by row.
-    lower_area_m2 : float64 array, shape (reaches,) [m2]
-        Contributing area at the lower end, just above the junction; at an exit that of the exit.
-    """
-    stride = ncols + 2
-    o = steps(stride)
-    donors = np.zeros(directions.size, np.uint8)
-    for row in range(nrows):
-        start = (row + 1) * stride + 1
-        for c in range(start, start + ncols):
-            if directions[c] < EXIT and area_m2[c] >= stream_area_m2:
-                donors[c + o[directions[c]]] += np.uint8(1)
-    reaches = 0
-    total = 0
-    bounds = np.zeros(1, np.int64)
-    cells = np.empty(0, np.int32)
-    lower_area_m2 = np.empty(0)
-    for filling in (False, True):  # count first, then fill
-        reaches = 0
-        total = 0
-        for row in range(nrows):
-            start = (row + 1) * stride + 1
-            for head in range(start, start + ncols):
-                if area_m2[head] < stream_area_m2 or donors[head] == 1 or directions[head] >= EXIT:
-                    continue
-                c = head
-                if filling:
-                    cells[total] = c
-                total += 1
-                above = c
-                while directions[c] < EXIT and (c == head or donors[c] == 1):
-                    above = c
-                    c += o[directions[c]]
-                    if filling:
-                        cells[total] = c
-                    total += 1
-                if filling:
-                    bounds[reaches + 1] = total
-                    lower_area_m2[reaches] = area_m2[above if donors[c] > 1 else c]
-                reaches += 1
-        if not filling:
-            bounds = np.zeros(reaches + 1, np.int64)
-            cells = np.full(total, NO_CELL, np.int32)
-            lower_area_m2 = np.empty(reaches)
-    return bounds, cells, lower_area_m2

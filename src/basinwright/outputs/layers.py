@@ -12,7 +12,7 @@ import numpy as np
 from basinwright.hydrology import Columns
 from basinwright.project import Project
 from basinwright.store import Draft, Entry
-from basinwright.tables import OUTLETS, SEGMENTS, Table
+from basinwright.tables import OUTLETS, SEGMENTS, STREAMS, Table
 
 if TYPE_CHECKING:
     import geopandas as gpd
@@ -72,7 +72,7 @@ def write_layers(
         ``basins``, ``subbasins``, ``flow_paths``: one for each row of outlets.csv, None where there is none;
         ``segments``: one for each row of segments.csv. A layer without geometries is left out.
     streams : mapping of str to array, or None
-        ``geometry``, ``length_m`` and ``area_km2`` of the stream reaches.
+        ``geometry`` and the columns of `STREAMS`, by inside name.
     """
     import shapely
 
@@ -90,11 +90,10 @@ def write_layers(
             _only(outlets, ("outlet_id", "downstream_outlet_id"), OUTLETS, project), geometries["subbasins"], grid
         )
     if streams is not None:
-        length = OUTLETS.column("path_length")
-        area = OUTLETS.column("area")
+        shown, inside = STREAMS.fields(system), STREAMS.fields("si")
         frame = {
-            length.name(system).replace("path_", ""): streams["length_m"] / length.inside_per_shown(system),
-            area.name(system): streams["area_km2"] / area.inside_per_shown(system),
+            there.name: streams[here.name] / there.factor if there.column.type == "number" else streams[here.name]
+            for there, here in zip(shown, inside, strict=True)
         }
         layers["streams"] = _layer(frame, streams["geometry"], grid)
     layers["flow_paths"] = _layer(_only(outlets, _PATH_COLUMNS, OUTLETS, project), geometries["flow_paths"], grid)

@@ -7,6 +7,7 @@ import numpy as np
 from basinwright.grid import Grid
 from basinwright.paths.tracing import Paths
 from basinwright.terrain import Terrain
+from basinwright.terrain.network import channel_reaches
 
 
 def path_lines(grid: Grid, terrain: Terrain, paths: Paths) -> np.ndarray:
@@ -55,9 +56,6 @@ def segment_lines(grid: Grid, terrain: Terrain, paths: Paths, segments: dict[str
 def stream_reaches(grid: Grid, terrain: Terrain, stream_area_km2: float) -> dict[str, np.ndarray]:
     """The stream network of the whole raster, reach by reach.
 
-    A reach runs from a channel head or a junction to the next junction or to where water leaves the raster;
-    the junction's cell ends it and begins the next one.
-
     Parameters
     ----------
     grid : Grid
@@ -68,22 +66,21 @@ def stream_reaches(grid: Grid, terrain: Terrain, stream_area_km2: float) -> dict
     Returns
     -------
     dict of arrays, shape (reaches,)
-        ``geometry`` (shapely LineString, downstream), ``length_m``, ``area_km2`` (contributing area at the
-        lower end, just above the junction); in the order of the reaches' upper cells, row by row.
+        ``geometry`` (shapely LineString, downstream), ``reach`` (1, 2, ...), ``to_reach`` (0 for none),
+        ``strahler_order``, ``length_m``, ``drop_m``, ``top_area_km2``, ``area_km2``: see
+        `basinwright.terrain.network.Reaches`.
     """
-    from basinwright.kernels import paths as kernel
-
-    bounds, cells, lower_m2 = kernel.trace_reaches(
-        terrain.directions, terrain.area_m2, terrain.nrows, terrain.ncols, round(stream_area_km2 * 1e6, 6)
-    )
-    away_m, _, _ = kernel.profile(
-        bounds, cells, terrain.directions, terrain.ncols, terrain.step_um, terrain.conditioned_m, terrain.area_m2
-    )
-    x, y = grid.xy(*terrain.rows_cols(cells))
+    reaches = channel_reaches(terrain, stream_area_km2)
+    x, y = grid.xy(*terrain.rows_cols(reaches.cells))
     return {
-        "geometry": _lines(bounds, np.column_stack([x, y])),
-        "length_m": away_m[bounds[1:] - 1],
-        "area_km2": lower_m2 / 1e6,
+        "geometry": _lines(reaches.bounds, np.column_stack([x, y])),
+        "reach": np.arange(1, reaches.strahler.size + 1),
+        "to_reach": reaches.to_reach.astype(np.int64) + 1,
+        "strahler_order": reaches.strahler.astype(np.int64),
+        "length_m": reaches.length_m,
+        "drop_m": reaches.drop_m,
+        "top_area_km2": reaches.top_area_km2,
+        "area_km2": reaches.area_km2,
     }
 
 

@@ -13,7 +13,7 @@ from basinwright.grid import Grid
 from basinwright.hydrology import Columns
 from basinwright.outputs.layers import keep_geometries, kept_geometries, write_layers
 from basinwright.pipeline.inputs import Inputs
-from basinwright.pipeline.terrain_half import TerrainHalf
+from basinwright.pipeline.terrain_half import TerrainHalf, keep_columns, kept_columns
 from basinwright.project import Project
 from basinwright.store import Draft, Entry, Store
 from basinwright.tables import SEGMENTS
@@ -50,8 +50,7 @@ class Shapes:
         geometries["segments"] = self._segments(tables, project)
         streams = {
             "geometry": kept_geometries(self.kept, "streams"),
-            "length_m": self.kept.array("streams.length_m"),
-            "area_km2": self.kept.array("streams.area_km2"),
+            **kept_columns(self.kept, "streams"),
         }
         write_layers(path, tables, project, self.grid, geometries, streams)
 
@@ -78,17 +77,16 @@ def shapes(inputs: Inputs, half: TerrainHalf, store: Store) -> Shapes:
     """Make the shapes, or find them in the store."""
     from basinwright.paths import Paths
 
-    stream_area = inputs.project.terrain.stream_area
     kept = store.stage(
         "shapes",
         "Drawing basins, paths and streams",
-        {"paths": half.paths.key, "stream_area": stream_area},
-        lambda draft: _draw(half, float(stream_area), draft),
+        {"paths": half.paths.key, "channels": half.channels.key},
+        lambda draft: _draw(half, draft),
     )
     return Shapes(half.grid, kept, half.paths.record(Paths, "paths"), half.routed())
 
 
-def _draw(half: TerrainHalf, stream_area_km2: float, draft: Draft) -> None:
+def _draw(half: TerrainHalf, draft: Draft) -> None:
     from basinwright.basins import Basins
     from basinwright.basins.polygons import subbasin_polygons, whole_basin_polygons
     from basinwright.paths import Paths
@@ -106,10 +104,9 @@ def _draw(half: TerrainHalf, stream_area_km2: float, draft: Draft) -> None:
     keep_geometries(draft, "basins", by_outlet(whole))
     keep_geometries(draft, "subbasins", by_outlet(subbasins))
     keep_geometries(draft, "flow_paths", path_lines(grid, terrain, half.paths.record(Paths, "paths")))
-    streams = stream_reaches(grid, terrain, stream_area_km2)
-    keep_geometries(draft, "streams", streams["geometry"])
-    draft.array("streams.length_m", streams["length_m"])
-    draft.array("streams.area_km2", streams["area_km2"])
+    streams = stream_reaches(grid, terrain, half.stream_area_km2)
+    keep_geometries(draft, "streams", streams.pop("geometry"))
+    keep_columns(draft, "streams", streams)
     draft.values(
         "grid", {"nrows": grid.nrows, "ncols": grid.ncols, "transform": list(grid.transform)[:6], "crs": grid.crs_wkt}
     )

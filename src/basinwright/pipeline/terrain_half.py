@@ -50,7 +50,7 @@ class TerrainHalf:
         The working grid.
     alignment : list of dict
         How each input came onto the grid.
-    terrain, elevation, cover, basins, paths, tables, time_area : Entry
+    terrain, elevation, channels, cover, basins, paths, tables, time_area : Entry
         Stages in the store; ``tables`` holds the three tables and the flags.
     """
 
@@ -58,6 +58,7 @@ class TerrainHalf:
     alignment: list[dict[str, Any]]
     elevation: Entry
     terrain: Entry
+    channels: Entry
     cover: Entry
     basins: Entry
     paths: Entry
@@ -74,7 +75,13 @@ class TerrainHalf:
         """Return what was done to the terrain, as plain values."""
         terrain = self.routed()
         names = ("data_cells", "flat_cells", "filled_cells", "filled_volume_m3", "deepest_fill_m", "largest_rounding_m")
-        return {name: getattr(terrain, name) for name in names}
+        facts = {name: getattr(terrain, name) for name in names}
+        return facts | {name: self.channels.values(name) for name in ("stream_area_km2", "drop_test")}
+
+    @property
+    def stream_area_km2(self) -> float:
+        """Contributing area at which channels begin, also where the drop test found it [km2]."""
+        return float(self.channels.values("stream_area_km2"))
 
     def frames(self) -> dict[str, pd.DataFrame]:
         """Return the tables that the hydrology reads, in the units of the project."""
@@ -108,6 +115,12 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
         {"elevation": elevation.key, "conditioning": project.terrain.conditioning},
         lambda draft: _routing(grid, elevation, draft),
     )
+    channels = store.stage(
+        "channels",
+        "Finding where channels begin",
+        {"routing": routing.key, "stream_area": project.terrain.stream_area},
+        lambda draft: _channels(inputs, routing.record(Terrain, "terrain"), draft),
+    )
     cover = store.stage(
         "cover",
         "Aligning land cover and soils",
@@ -125,13 +138,12 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
         "y": inputs.y.tolist(),
         "expected": _plain(inputs.expected_area_km2),
         "within": project.outlets.snap_within,
-        "stream_area": project.terrain.stream_area,
     }
     basins = store.stage(
         "basins",
         f"Snapping {len(inputs.points)} outlets and delineating their basins",
-        {"routing": routing.key, "outlets": outlets},
-        lambda draft: _basins(inputs, grid, elevation, routing.record(Terrain, "terrain"), draft),
+        {"routing": routing.key, "channels": channels.key, "outlets": outlets},
+        lambda draft: _basins(inputs, grid, elevation, routing.record(Terrain, "terrain"), channels, draft),
     )
     paths = store.stage(
         "paths",
@@ -159,7 +171,11 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
                 {k: _plain(v) for k, v in inputs.overrides.items()},
             ],
         },
-        lambda draft: _tables(inputs, {"routing": routing, "cover": cover, "basins": basins, "paths": paths}, draft),
+        lambda draft: _tables(
+            inputs,
+            {"routing": routing, "channels": channels, "cover": cover, "basins": basins, "paths": paths},
+            draft,
+        ),
     )
     time_area = store.stage(
         "time_area",
@@ -170,13 +186,16 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
             "options": project.model_dump(mode="json", include={"project", "terrain", "flow_path", "channel"}),
             "two_year_depth": project.storm.two_year_depth_mm,
         },
-        lambda draft: _time_area(inputs, {"routing": routing, "cover": cover, "basins": basins}, draft),
+        lambda draft: _time_area(
+            inputs, {"routing": routing, "channels": channels, "cover": cover, "basins": basins}, draft
+        ),
     )
     return TerrainHalf(
         grid,
         [*elevation.values("alignment"), *cover.values("alignment")],
         elevation,
         routing,
+        channels,
         cover,
         basins,
         paths,
@@ -212,25 +231,44 @@ def _routing(grid: Grid, elevation: Entry, draft: Draft) -> None:
     )
 
 
-def _basins(inputs: Inputs, grid: Grid, elevation: Entry, terrain: Terrain, draft: Draft) -> None:
-    from basinwright.basins import delineate, measure, snap
+def _channels(inputs: Inputs, terrain: Terrain, draft: Draft) -> None:
+    """Decide at which contributing area channels begin."""
+    from basinwright.terrain.network import FALLBACK_KM2, chosen_stream_area_km2, drop_test
+
+    given = inputs.project.terrain.stream_area
+    tested = drop_test(terrain) if isinstance(given, str) else []
+    chosen = chosen_stream_area_km2(tested)
+    draft.values("stream_area_km2", given if not isinstance(given, str) else chosen or FALLBACK_KM2)
+    draft.values("drop_test", [{**vars(entry), "passes": entry.passes} for entry in tested])
+    words = ""
+    if isinstance(given, str) and chosen is None:
+        words = f"none of {len(tested)} tested areas passes the drop test: {FALLBACK_KM2} km2 stands in"
+    elif tested and chosen == tested[0].stream_area_km2:
+        words = f"the smallest tested area, {chosen:g} km2, passes the drop test: channels may begin higher up"
+    draft.values("doubt", words)
+
+
+def _basins(inputs: Inputs, grid: Grid, elevation: Entry, terrain: Terrain, channels: Entry, draft: Draft) -> None:
+    from basinwright.basins import delineate, drainage_density_per_km, measure, snap
 
     project = inputs.project
+    stream_area_km2 = float(channels.values("stream_area_km2"))
     within = project.outlets.snap_within
     snapped = snap(
         grid,
         terrain,
         inputs.x,
         inputs.y,
-        stream_area_km2=float(project.terrain.stream_area),
+        stream_area_km2=stream_area_km2,
         within_m=None if isinstance(within, str) else within,
         expected_area_km2=inputs.expected_area_km2,
     )
     basins = delineate(terrain, snapped.cell)
     measures = measure(grid, terrain, elevation.array("elevation_m"), basins)
+    measures["drainage_density_per_km"] = drainage_density_per_km(terrain, basins, stream_area_km2)
     draft.record(snapped, "snapped")
     draft.record(basins, "basins")
-    _keep_columns(draft, "measures", measures)
+    keep_columns(draft, "measures", measures)
 
 
 def _paths(grid: Grid, elevation: Entry, terrain: Terrain, basins_entry: Entry, draft: Draft) -> None:
@@ -244,8 +282,8 @@ def _paths(grid: Grid, elevation: Entry, terrain: Terrain, basins_entry: Entry, 
         grid, terrain, elevation.array("elevation_m"), paths, measures["centroid_x"], measures["centroid_y"]
     )
     draft.record(paths, "paths")
-    _keep_columns(draft, "profile", profile)
-    _keep_columns(draft, "reaches", reach_measures(terrain, basins))
+    keep_columns(draft, "profile", profile)
+    keep_columns(draft, "reaches", reach_measures(terrain, basins))
 
 
 def _cover(inputs: Inputs, draft: Draft) -> None:
@@ -302,7 +340,7 @@ def _tables(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
     )
     depths = _mean_depths_mm(inputs, terrain, basins)
     rules = CutRules(
-        stream_area_km2=float(project.terrain.stream_area),
+        stream_area_km2=float(stages["channels"].values("stream_area_km2")),
         sheet_limit_m=project.flow_path.sheet_limit,
         min_segment_m=project.flow_path.min_segment,
         slope_floor=project.flow_path.slope_floor,
@@ -314,7 +352,7 @@ def _tables(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
 
     failed = _failures(snapped, measures, shares.failed, depths)
     marks = {"sheet_limited": cut.sheet_limited, **vars(snapped), **measures}
-    flags = _flags(inputs, marks, shares, failed)
+    flags = _flags(inputs, marks, shares, failed, stages["channels"].values("doubt"))
     fine = np.array([i not in failed for i in range(len(inputs.points))], dtype=bool)
     ids = np.array(inputs.points.ids, dtype=object)
     tables = {
@@ -405,7 +443,12 @@ def _time_area(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> Non
 
     terrain = stages["routing"].record(Terrain, "terrain")
     basins = stages["basins"].record(Basins, "basins")
-    step_times = StepTimes(inputs.project, inputs.scheme, stages["cover"].record(CoverLayer, "cover"))
+    step_times = StepTimes(
+        inputs.project,
+        inputs.scheme,
+        stages["cover"].record(CoverLayer, "cover"),
+        float(stages["channels"].values("stream_area_km2")),
+    )
     curves = time_area_curves(terrain, basins, step_times)
     ids = np.array(inputs.points.ids, dtype=object)
     columns = {"outlet_id": ids[curves["outlet"]], **{k: v for k, v in curves.items() if k != "outlet"}}
@@ -431,7 +474,11 @@ def _failures(
 
 
 def _flags(
-    inputs: Inputs, marks: Mapping[str, NDArray[Any]], shares: CoverShares, failed: Mapping[int, str]
+    inputs: Inputs,
+    marks: Mapping[str, NDArray[Any]],
+    shares: CoverShares,
+    failed: Mapping[int, str],
+    channel_doubt: str,
 ) -> list[Flag]:
     """Raise the flags that terrain, snap and cover give, outlet by outlet."""
     project = inputs.project
@@ -471,6 +518,8 @@ def _flags(
     raised += shares.flags
     if inputs.plan.unit_assumed:
         raised += [(i, "VERTICAL_UNIT_ASSUMED", "metres assumed") for i in range(len(inputs.points))]
+    if channel_doubt:
+        raised += [(i, "STREAM_AREA_UNSURE", channel_doubt) for i in range(len(inputs.points))]
     for stem, values in inputs.overrides.items():
         if stem.startswith("depth_"):
             where(~np.isnan(values), "OVERRIDE", lambda i, stem=stem: f"{stem} is a supplied value")  # type: ignore[misc]
@@ -537,7 +586,8 @@ def _outlet_rows(
 
 _MEASURED = (
     "area_km2", "centroid_length_m", "path_length_m", "relief_m", "basin_slope_pct", "path_slope_pct",
-    "path_slope_1085_pct", "mean_elevation_m", "reach_length_m", "reach_fall_m", "reach_area_km2",
+    "path_slope_1085_pct", "mean_elevation_m", "drainage_density_per_km", "reach_length_m", "reach_fall_m",
+    "reach_area_km2",
 )  # fmt: skip
 
 
@@ -572,7 +622,8 @@ def _as_frame(table: Table, columns: Mapping[str, Any], project: Project) -> pd.
 _ALONG_PATH = ("from", "to", "path_length", "path_length_raw")
 
 
-def _keep_columns(draft: Draft, name: str, columns: dict[str, NDArray[Any]]) -> None:
+def keep_columns(draft: Draft, name: str, columns: dict[str, NDArray[Any]]) -> None:
+    """Keep columns in the store under a name."""
     for stem, values in columns.items():
         draft.array(f"{name}.{stem}", np.asarray(values))
     draft.values(name, list(columns))

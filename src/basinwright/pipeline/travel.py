@@ -22,7 +22,7 @@ class StepTimes:
     """Time of the step out of every cell, by the formulas that time the segments.
 
     A cell that nothing drains into flows as a sheet up to the limits of sheet flow and is shallow beyond; a cell under
-    `terrain.stream_area` is shallow, one over it a channel at bankfull, open water a wave. Cells without a listed class
+    the stream area is shallow, one over it a channel at bankfull, open water a wave. Cells without a listed class
     take the commonest one of the layer.
 
     Parameters
@@ -31,12 +31,14 @@ class StepTimes:
     scheme : Scheme
     cover : CoverLayer
         On the working grid.
+    stream_area_km2 : float
+        Contributing area at which channels begin [km2].
     """
 
-    def __init__(self, project: Project, scheme: Scheme, cover: CoverLayer) -> None:
+    def __init__(self, project: Project, scheme: Scheme, cover: CoverLayer, stream_area_km2: float) -> None:
         from basinwright.timing import shallow_coefficients_mps
 
-        self.project, self.classes = project, cover.classes
+        self.project, self.classes, self.stream_area_km2 = project, cover.classes, stream_area_km2
         self.relation = bankfull_relation_of(project)
         found = [scheme.find(code) for code in cover.codes]
         listed = np.array([entry is not None for entry in found], dtype=bool)
@@ -68,7 +70,7 @@ class StepTimes:
         moving = length_m > 0
         slope = np.maximum(fall_m / np.where(moving, length_m, 1.0), project.flow_path.slope_floor)
         water = self.open_water[classes]
-        channel = moving & ~water & (area_km2 >= float(project.terrain.stream_area))
+        channel = moving & ~water & (area_km2 >= self.stream_area_km2)
         sheet = moving & ~water & ~channel & source
         shallow = self.shallow_mps[classes] * np.sqrt(slope)
         hours = length_m / (3600.0 * shallow)

@@ -258,7 +258,7 @@ def settings(run: Run) -> list[tuple[str, str]]:
     return [
         ("Terrain", f"{grid['rows']:,} × {grid['columns']:,} cells of {cell}, {plain(grid['crs_name'])}"),
         ("Conditioning", conditioning),
-        ("Channels begin at", _quantity(terrain["stream_area"], "area", system)),
+        ("Channels begin at", _channel_start(terrain["stream_area"], run.about["terrain"]["stream_area_km2"], system)),
         ("Land cover", f"scheme {plain(project['cover']['scheme'])}"),
         ("Soils", f"one group, {soils['group']}" if soils.get("group") else f"dual groups {soils['dual_groups']}"),
         ("Sheet flow up to", length(path["sheet_limit"])),
@@ -276,6 +276,12 @@ def settings(run: Run) -> list[tuple[str, str]]:
         ("Unit hydrograph", f"{find('unit_hydrograph', uh['shape']).name}{factor}"),
         ("Second opinion on areas", _AUDIT.get(project["audit"]["second_opinion"], "none asked for")),
     ]
+
+
+def _channel_start(wanted: str, found_km2: float, system: System) -> str:
+    """Say at which contributing area channels begin, and who says so."""
+    area = _quantity(f"{found_km2} km2", "area", system)
+    return f"{area}, by the drop test" if wanted == "auto" else area
 
 
 def _roughness(value: float | str) -> str:

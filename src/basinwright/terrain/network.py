@@ -98,14 +98,14 @@ def channel_reaches(terrain: Terrain, stream_area_km2: float) -> Reaches:
         strahler=strahler[heads],
         to_reach=to_reach,
         length_m=np.add.reduceat(step_um, first) / 1e6,
-        drop_m=terrain.filled_m[along[first]].astype(np.float64) - terrain.filled_m[along[last]],
+        drop_m=terrain.conditioned_m[along[first]].astype(np.float64) - terrain.conditioned_m[along[last]],
         top_area_km2=terrain.area_m2[along[first]] / 1e6,
         area_km2=terrain.area_m2[along[np.where(junction, last - 1, last)]] / 1e6,
     )
 
 
 @dataclass(frozen=True)
-class Tested:
+class DropComparison:
     """One stream area in the constant-drop test.
 
     Attributes
@@ -132,7 +132,7 @@ class Tested:
         return abs(self.t) < T_LIMIT
 
 
-def drop_test(terrain: Terrain) -> list[Tested]:
+def drop_test(terrain: Terrain) -> list[DropComparison]:
     """Test stream areas by the constancy of stream drops.
 
     The mean fall of Strahler streams is the same for all orders of a channel network (Broscoe 1959). Where channels
@@ -145,7 +145,7 @@ def drop_test(terrain: Terrain) -> list[Tested]:
 
     Returns
     -------
-    list of Tested
+    list of DropComparison
         In rising order: from the first of the series of tested areas with `LEAST_CELLS` cells, as long as there are
         `LEAST_STREAMS`. Each is a preferred number, so that the same areas are tested on every terrain and cell size.
 
@@ -166,8 +166,8 @@ def drop_test(terrain: Terrain) -> list[Tested]:
     cells, below = network.channel_graph(
         terrain.directions, terrain.area_m2, terrain.order, terrain.ncols, stream_area_m2(candidates[0])
     )
-    area_m2, elevation_m = terrain.area_m2[cells], terrain.filled_m[cells].astype(np.float64)
-    tested: list[Tested] = []
+    area_m2, elevation_m = terrain.area_m2[cells], terrain.conditioned_m[cells].astype(np.float64)
+    tested: list[DropComparison] = []
     for area_km2 in candidates:
         strahler, _ = network.strahler_orders(below, area_m2 >= stream_area_m2(area_km2))
         order, drop_m = network.stream_drops(below, strahler, elevation_m)
@@ -175,14 +175,37 @@ def drop_test(terrain: Terrain) -> list[Tested]:
         if first.size < LEAST_STREAMS[0] or higher.size < LEAST_STREAMS[1]:
             break
         tested.append(
-            Tested(area_km2, first.size, higher.size, float(first.mean()), float(higher.mean()), _t(first, higher))
+            DropComparison(
+                area_km2, first.size, higher.size, float(first.mean()), float(higher.mean()), _t(first, higher)
+            )
         )
     return tested
 
 
-def chosen_stream_area_km2(tested: list[Tested]) -> float | None:
-    """Smallest tested area that passes; None where none does."""
-    return next((entry.stream_area_km2 for entry in tested if entry.passes), None)
+def chosen_stream_area_km2(tested: list[DropComparison]) -> float | None:
+    """Smallest area down to which the drops are constant; None where they are at no tested area.
+
+    Coming down from the largest area, the test fails for good where two neighbouring areas fail: with the usual limit
+    of t one of twenty fails by chance. What passes again below is not looked at: so near the hillslope's scale the
+    drops of many short streams may happen to agree.
+
+    Parameters
+    ----------
+    tested : list of DropComparison
+        In rising order.
+
+    Returns
+    -------
+    float or None [km2]
+    """
+    chosen, failed = None, False
+    for entry in reversed(tested):
+        if not entry.passes and failed:
+            break
+        failed = not entry.passes
+        if entry.passes:
+            chosen = entry.stream_area_km2
+    return chosen
 
 
 def _candidates(least_km2: float, most_km2: float) -> list[float]:
