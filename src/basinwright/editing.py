@@ -88,13 +88,14 @@ class Edited:
         For the hydrology: every dependent cell that is not held is empty.
     held : set of Cell
         The dependent cells that stand as given, and the cells of outlets.csv that differ from the terrain's.
-    segments : set of (outlet id, segment)
-        The segments that differ from what the run first wrote.
+    segments, shares : set of (outlet id, row)
+        The segments and patches that differ from what the run first wrote; an empty row stands for one taken away.
     """
 
     tables: dict[str, pd.DataFrame]
     held: set[Cell]
-    segments: set[tuple[str, str]]
+    segments: set[tuple[str, str]] = field(default_factory=set)
+    shares: set[tuple[str, str]] = field(default_factory=set)
 
 
 def same(a: str, b: str) -> bool:
@@ -146,7 +147,22 @@ def apply(folder: Path, record: Record, system: System, scheme: Scheme) -> Edite
         tables[editor.table.name] = pd.DataFrame(rows, columns=columns, dtype=object)
     if problems := [problem for editor in editors for problem in editor.problems]:
         raise InputRejected(problems)
-    return Edited(tables, set[Cell]().union(*(editor.held for editor in editors)), editors[0].edited)
+    held = set[Cell]().union(*(editor.held for editor in editors))
+    return Edited(tables, held, editors[0].edited, editors[1].edited)
+
+
+def as_first(record: Record, system: System, scheme: Scheme) -> dict[str, pd.DataFrame]:
+    """Return the tables as the terrain half handed them to the hydrology, before any edit."""
+    import pandas as pd
+
+    record = Record(record.first, record.first, record.supplied, record.supplied)
+    tables = {}
+    for kind in (_SegmentEditor, _ShareEditor, _OutletEditor):
+        editor, frame = kind(record, system, scheme), record.first[kind.table.name]
+        rows = [row for of_outlet in by_outlet(frame).values() for row in of_outlet]
+        kept = editor.apply(enumerate(rows, start=2), set())
+        tables[editor.table.name] = pd.DataFrame(kept, columns=list(frame.columns), dtype=object)
+    return tables
 
 
 @dataclass
@@ -270,9 +286,9 @@ class _Editor:
     def apply(self, now: Iterable[tuple[int, Row]], edited_elsewhere: set[str]) -> list[Row]:
         """Return the rows for the hydrology, outlet by outlet in the order of the run."""
         frames = self.record.written[self.table.name], self.record.first[self.table.name]
-        written = _by_outlet(frames[0])
-        first = written if frames[0] is frames[1] else _by_outlet(frames[1])
-        held, supplied = (_by_row(cells, self.table.name) for cells in (self.record.held, self.record.supplied))
+        written = by_outlet(frames[0])
+        first = written if frames[0] is frames[1] else by_outlet(frames[1])
+        held, supplied = (by_row(cells, self.table.name) for cells in (self.record.held, self.record.supplied))
         standing: dict[str, list[tuple[int, Row]]] = {outlet_id: [] for outlet_id in written}
         for number, row in now:
             if row["outlet_id"] in standing:
@@ -527,11 +543,11 @@ class _SegmentEditor(_Editor):
         before = 0.0
         for line in lines:
             row, low = line.row, float(line.row[start])
-            if low < before - _tolerance(before):
+            if low < before - tolerance(before):
                 self.wrong(line.number, start, f"overlaps the segment above, which ends at {before:g}", fix)
-            elif low > before + _tolerance(before):
-                gone = [piece for piece in deleted if float(piece[start]) >= before - _tolerance(before)
-                        and float(piece[end]) <= low + _tolerance(low)]  # fmt: skip
+            elif low > before + tolerance(before):
+                gone = [piece for piece in deleted if float(piece[start]) >= before - tolerance(before)
+                        and float(piece[end]) <= low + tolerance(low)]  # fmt: skip
                 covered = sum(float(piece[end]) - float(piece[start]) for piece in gone)
                 if math.isclose(covered, low - before, rel_tol=1e-6):
                     row[start] = gone[0][start]
@@ -540,7 +556,7 @@ class _SegmentEditor(_Editor):
                 else:
                     self.wrong(line.number, start, f"a gap from {before:g} to {low:g}", fix)
             before = float(row[end])
-        if abs(before - length) > _tolerance(length):
+        if abs(before - length) > tolerance(length):
             what = f"the path ends at {length:g}, not at {before:g}"
             self.wrong(lines[-1].number, end, what, "let the last segment reach the outlet")
 
@@ -557,7 +573,7 @@ class _SegmentEditor(_Editor):
                 for line, column in ((above, bottom), (below, top))
             ]
             if all(as_copied):
-                at = _profile([whole], (start, end, top, bottom), float(above.row[end]))
+                at = profile([whole], (start, end, top, bottom), float(above.row[end]))
                 above.row[bottom] = below.row[top] = at
             elif as_copied[0]:
                 above.row[bottom] = below.row[top]
@@ -566,7 +582,7 @@ class _SegmentEditor(_Editor):
         for line in lines:
             for column, at in ((top, start), (bottom, end)):
                 if not line.row[column].strip():
-                    line.row[column] = _profile(first, (start, end, top, bottom), float(line.row[at]))
+                    line.row[column] = profile(first, (start, end, top, bottom), float(line.row[at]))
             if line.added:
                 for column in ("regime", "cover"):
                     line.row[column] = line.row[column].strip() or line.before[column]
@@ -602,7 +618,8 @@ class _SegmentEditor(_Editor):
                 row["roughness"] = first[0]["roughness"]
 
 
-def _by_outlet(frame: pd.DataFrame) -> dict[str, list[Row]]:
+def by_outlet(frame: pd.DataFrame) -> dict[str, list[Row]]:
+    """Return the rows of a table by outlet, in the order of the table."""
     grouped: dict[str, list[Row]] = {}
     names = [str(name) for name in frame.columns]
     for cells in frame.itertuples(index=False, name=None):
@@ -611,7 +628,8 @@ def _by_outlet(frame: pd.DataFrame) -> dict[str, list[Row]]:
     return grouped
 
 
-def _by_row(cells: Iterable[Cell], table: str) -> dict[tuple[str, str], set[str]]:
+def by_row(cells: Iterable[Cell], table: str) -> dict[tuple[str, str], set[str]]:
+    """Return the stems of the cells of a table, by outlet and row."""
     grouped: dict[tuple[str, str], set[str]] = {}
     for name, outlet_id, row, stem in cells:
         if name == table:
@@ -619,11 +637,12 @@ def _by_row(cells: Iterable[Cell], table: str) -> dict[tuple[str, str], set[str]
     return grouped
 
 
-def _tolerance(distance: float) -> float:
+def tolerance(distance: float) -> float:
+    """Return within what two distances from the divide are the same."""
     return max(1e-6, _SAME * distance)
 
 
-def _profile(rows: Sequence[Row], columns: tuple[str, str, str, str], distance: float) -> str:
+def profile(rows: Sequence[Row], columns: Sequence[str], distance: float) -> str:
     """Read an elevation off the straight lines between the ends of rows: start, end, top and bottom columns."""
     start, end, top, bottom = columns
     row = rows[min(bisect_left(rows, distance, key=lambda row: float(row[end])), len(rows) - 1)]

@@ -14,7 +14,7 @@ import tomllib
 import types
 import typing
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Annotated, Any, Literal, Union
 
@@ -230,6 +230,7 @@ class StormSection(Section):
     depth_rasters: dict[Period, str] = Field(default_factory=dict)
     depth_raster_unit: Literal["in", "mm", "cm"] = "in"
     two_year_depth: Depth | None = None
+    depth_factor: Annotated[Plain, Field(gt=0, le=10)] = 1.0
     areal_reduction: Literal["none", "leclerc_schaake"] = "none"
     critical_duration: bool = False
 
@@ -240,6 +241,11 @@ class StormSection(Section):
     def periods(self) -> list[str]:
         """Return periods as written, in rising order."""
         return sorted(self.depths or self.depth_rasters, key=float)
+
+    @property
+    def has_two_year_depth(self) -> bool:
+        """Whether the 2-year 24-hour depth is given or stands among the depths."""
+        return self.two_year_depth is not None or self._two_year() is not None
 
     @property
     def two_year_depth_mm(self) -> float:
@@ -290,6 +296,34 @@ class Compute(Section):
     memory: str = "auto"
 
 
+_SCENARIO_NAME = re.compile(r"\w([\w .+-]{0,58}\w)?")
+
+
+def _check_scenario_name(name: str) -> str:
+    if not _SCENARIO_NAME.fullmatch(name) or name.lower() == "base":
+        fix = "use up to 60 letters, digits, spaces, hyphens and dots, a letter or digit at both ends, and not base"
+        raise _reject(f"{name!r} cannot name a folder of results", fix)
+    return name
+
+
+class Scenario(Section):
+    """[[scenario]]: the keys of four sections that take the place of the base's.
+
+    The sections are kept as they were written: each is validated as part of the whole project that it makes
+    (`Reading.scenarios`).
+    """
+
+    name: Annotated[str, AfterValidator(_check_scenario_name)]
+    cover: dict[str, Any] | None = None
+    soils: dict[str, Any] | None = None
+    storm: dict[str, Any] | None = None
+    runoff: dict[str, Any] | None = None
+
+
+SCENARIO_SECTIONS = ("cover", "soils", "storm", "runoff")
+"""What a scenario may replace: nothing of terrain, outlets or paths."""
+
+
 class Project(Section):
     """A whole project file."""
 
@@ -306,7 +340,7 @@ class Project(Section):
     unit_hydrograph: UnitHydrograph = UnitHydrograph()
     uncertainty: dict[str, Any] | None = None
     check: dict[str, Any] | None = None
-    scenario: list[dict[str, Any]] = Field(default_factory=list)
+    scenario: list[Scenario] = Field(default_factory=list)
     audit: Audit = Audit()
     compute: Compute = Compute()
 
@@ -336,7 +370,6 @@ LATER: tuple[tuple[str, str, Callable[[Any], bool], str], ...] = (
     ("compute", "memory", lambda value: value != "auto", 'use "auto"'),
     ("", "uncertainty", lambda value: value is not None, "leave the section out"),
     ("", "check", lambda value: value is not None, "leave the section out"),
-    ("", "scenario", bool, "leave the section out"),
 )
 """Options of later versions: section, key, whether a value asks for what is not served yet, what to do instead."""
 
@@ -352,10 +385,13 @@ class Reading:
         defaults, and a section that is missing, or wrong in a key without default, is None.
     problems : list of Problem
         Everything that is wrong in the file itself; the files it names are not opened.
+    scenarios : list of Project
+        The whole project that each scenario makes, in the order of the file.
     """
 
     project: Project
     problems: list[Problem]
+    scenarios: list[Project] = field(default_factory=list)
 
 
 def read_project(path: Path) -> Reading:
@@ -415,14 +451,87 @@ def read_content(data: dict[str, Any], file: str) -> Reading:
             problem = _problem(entry, file)
             problems.setdefault(problem.field, problem)
         project = _sound_part(data, entries)
-    for field, what, fix in _conflicts(data):
-        problems.setdefault(field, Problem(file, field, what, fix))
+    for key, what, fix in _conflicts(data):
+        problems.setdefault(key, Problem(file, key, what, fix))
     for section, key, asks, fix in LATER:
         owner = getattr(project, section) if section else project
         if owner is not None and asks(getattr(owner, key)):
-            field = f"{section}.{key}".lstrip(".")
-            problems.setdefault(field, Problem(file, field, "not yet in this version", fix))
-    return Reading(project, list(problems.values()))
+            name = f"{section}.{key}".lstrip(".")
+            problems.setdefault(name, Problem(file, name, "not yet in this version", fix))
+    base = list(problems.values())
+    scenarios = [_read_scenario(data, entry, number, file, base) for number, entry in enumerate(_scenarios(data), 1)]
+    found = [problem for scenario in scenarios for problem in scenario.problems]
+    return Reading(project, [*base, *found], [scenario.project for scenario in scenarios])
+
+
+def scenario_field(number: int, field: str) -> str:
+    """Return how a key of a scenario, counted from 1, is named in a message."""
+    return f"scenario[{number}].{field}"
+
+
+def _scenarios(data: dict[str, Any]) -> list[dict[str, Any]]:
+    """Return the scenarios of a project file as they stand there."""
+    found = data.get("scenario")
+    return [entry for entry in found if isinstance(entry, dict)] if isinstance(found, list) else []
+
+
+def _read_scenario(data: dict[str, Any], entry: dict[str, Any], number: int, file: str, base: list[Problem]) -> Reading:
+    """Validate the project that a scenario makes; problems of the base are not told again."""
+    merged = scenario_content(data, entry)
+    reading = read_content(merged, file)
+    known = {(problem.field, problem.what) for problem in base}
+    sections = tuple(f"{name}." for name in SCENARIO_SECTIONS if name in entry)
+    found = [
+        replace(problem, field=scenario_field(number, problem.field))
+        for problem in reading.problems
+        if f"{problem.field}.".startswith(sections) and (problem.field, problem.what) not in known
+    ]
+    return Reading(reading.project, found)
+
+
+_SOURCES_OF = {
+    "cover": (("raster", "vector"), ("raster", "vector", "field")),
+    "soils": (("raster", "vector", "group"), ("raster", "vector", "field", "group")),
+    "storm": (("depths", "depth_rasters", "ddf"), ("depths", "depth_rasters")),
+}
+"""By section: where one of the first keys is given anew, the base's second keys no longer count."""
+
+
+def scenario_content(data: dict[str, Any], entry: dict[str, Any]) -> dict[str, Any]:
+    """Return the content of the project that a scenario makes of the base's.
+
+    A key that the scenario gives takes the place of the base's, and a new source that of every other source of its
+    section. ``cover.impervious = "none"`` leaves the base's raster out. The base's 2-year depth stands unless the
+    scenario names another: it times the flow, it is no storm.
+    """
+    merged = {name: section for name, section in data.items() if name != "scenario"}
+    for name in SCENARIO_SECTIONS:
+        given = entry.get(name)
+        if given is None:
+            continue
+        before = data.get(name)
+        if not isinstance(given, dict) or not isinstance(before, dict):
+            merged[name] = given
+            continue
+        sources, dropped = _SOURCES_OF.get(name, ((), ()))
+        replaced = any(key in given for key in sources)
+        merged[name] = {key: value for key, value in before.items() if not (replaced and key in dropped)} | given
+    cover, storm = merged.get("cover"), merged.get("storm")
+    if isinstance(cover, dict) and cover.get("impervious") == "none":
+        merged["cover"] = {
+            key: value for key, value in cover.items() if key not in ("impervious", "connected_fraction")
+        }
+    if isinstance(storm, dict) and "two_year_depth" not in storm and (depth := _two_year_text(data)) is not None:
+        merged["storm"] = {**storm, "two_year_depth": depth}
+    return merged
+
+
+def _two_year_text(data: dict[str, Any]) -> Any:
+    """Return the 2-year depth of the base as it stands among its depths."""
+    storm = data.get("storm")
+    depths = storm.get("depths") if isinstance(storm, dict) else None
+    found = depths.items() if isinstance(depths, dict) else ()
+    return next((depth for text, depth in found if _PERIOD.fullmatch(str(text)) and float(text) == 2.0), None)
 
 
 def _sound_part(data: dict[str, Any], entries: list[ErrorDetails]) -> Project:
@@ -491,6 +600,27 @@ def _conflicts(data: dict[str, Any]) -> Iterator[tuple[str, str, str]]:
             'set shape = "gamma"',
         )
     yield from _storm_conflicts(section("storm"))
+    yield from _scenario_conflicts(_scenarios(data), section("cover"))
+
+
+def _scenario_conflicts(scenarios: list[dict[str, Any]], cover: dict[str, Any]) -> Iterator[tuple[str, str, str]]:
+    names: dict[str, int] = {}
+    for number, entry in enumerate(scenarios, start=1):
+        name = entry.get("name")
+        if isinstance(name, str) and (before := names.setdefault(name.lower(), number)) != number:
+            what = f"{name!r} is also the name of scenario {before}"
+            yield scenario_field(number, "name"), what, "give each its own: they name folders"
+        if not any(entry.get(key) for key in SCENARIO_SECTIONS):
+            what = "replaces nothing"
+            yield scenario_field(number, "cover"), what, f"give one of {', '.join(SCENARIO_SECTIONS)}"
+        own = entry.get("cover")
+        new_cover = isinstance(own, dict) and ("raster" in own or "vector" in own)
+        if isinstance(own, dict) and new_cover and "impervious" in cover and "impervious" not in own:
+            yield (
+                scenario_field(number, "cover.impervious"),
+                "missing, and the base's raster belongs to the base's cover",
+                'name the raster that goes with this cover, or "none"',
+            )
 
 
 def _storm_conflicts(storm: dict[str, Any]) -> Iterator[tuple[str, str, str]]:
@@ -554,7 +684,15 @@ def _problem(entry: ErrorDetails, file: str) -> Problem:
     """Turn one validation error into a line that says which key, what is wrong and how to mend it."""
     place = [part for part in entry["loc"] if part not in _TYPE_PARTS and not str(part).startswith("function-")]
     field = ".".join(str(part) for part in place) or "project"
+    if place[:1] == ["scenario"] and len(place) > 2:
+        field = scenario_field(int(place[1]) + 1, ".".join(map(str, place[2:])))
     kind, context = entry["type"], entry.get("ctx", {})
+    if kind == "extra_forbidden" and place[:1] == ["scenario"] and len(place) == 3:
+        fix = f"give it a project file of its own; a scenario replaces {', '.join(SCENARIO_SECTIONS)}"
+        if place[2] in Project.model_fields:
+            return Problem(file, field, "a scenario cannot change this: that is another project", fix)
+        near = difflib.get_close_matches(str(place[2]), Scenario.model_fields, n=1, cutoff=0.5)
+        return Problem(file, field, "unknown key", f"did you mean {near[0]!r}?" if near else fix)
     if kind == "extra_forbidden":
         known = _keys_at(place[:-1])
         near = difflib.get_close_matches(str(place[-1]), known, n=1, cutoff=0.5)

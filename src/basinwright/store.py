@@ -152,6 +152,7 @@ class StageRecord:
     reused: bool
     seconds: float
     peak_memory_mb: float | None
+    variant: str = ""
 
     def describe(self) -> dict[str, Any]:
         """Return it as plain values."""
@@ -177,12 +178,15 @@ class Store:
         where their key is the same.
     on_stage : callable
         Called with the stage's title when it starts to compute.
+    variant : str
+        What the stages are run for now: a scenario or another cell size; empty for the base.
     """
 
     folder: Path
     earlier: Path | None = None
     on_stage: Callable[[str], None] = lambda title: None
     records: list[StageRecord] = field(default_factory=list)
+    variant: str = ""
 
     def stage(self, name: str, title: str, depends_on: Mapping[str, Any], make: Callable[[Draft], None]) -> Entry:
         """Return the outputs of a stage, computing them only where they are not there yet.
@@ -202,7 +206,7 @@ class Store:
         reused = final.is_dir() or self._take_over(final)
         peak: float | None = None
         if not reused:
-            self.on_stage(title)
+            self._say(title)
             self.folder.mkdir(parents=True, exist_ok=True)
             draft = _draft(final)
             shutil.rmtree(draft, ignore_errors=True)
@@ -211,7 +215,7 @@ class Store:
             make(Draft(draft))
             peak = _peak_memory_mb()
             draft.rename(final)
-        self.records.append(StageRecord(name, key, reused, time.perf_counter() - started, peak))
+        self._record(name, key, reused, started, peak)
         return Entry(name, key, final)
 
     @contextmanager
@@ -223,12 +227,28 @@ class Store:
         name, title, depends_on
             As in `stage`.
         """
-        self.on_stage(title)
+        self._say(title)
         started = time.perf_counter()
         _reset_peak_memory()
         yield
-        seconds = time.perf_counter() - started
-        self.records.append(StageRecord(name, _key(name, depends_on), False, seconds, _peak_memory_mb()))
+        self._record(name, _key(name, depends_on), False, started, _peak_memory_mb())
+
+    @contextmanager
+    def running(self, variant: str) -> Iterator[None]:
+        """Record stages as those of a variant."""
+        self.variant = variant
+        yield
+        self.variant = ""
+
+    def _record(self, name: str, key: str, reused: bool, started: float, peak_mb: float | None) -> None:
+        self.records.append(StageRecord(name, key, reused, time.perf_counter() - started, peak_mb, self.variant))
+
+    def _say(self, title: str) -> None:
+        self.on_stage(f"{self.variant}: {title}" if self.variant else title)
+
+    def described(self, variant: str = "") -> list[dict[str, Any]]:
+        """Return what the manifest says of the stages of a variant."""
+        return [record.describe() for record in self.records if record.variant == variant]
 
     def _take_over(self, final: Path) -> bool:
         source = self.earlier / final.name if self.earlier else None

@@ -382,6 +382,64 @@ BASIN_PARAMETERS = Table(
     ),
 )
 
+SCENARIOS = Table(
+    "scenarios",
+    "one design flood of one outlet in one scenario, beside the base's",
+    ("scenario", "outlet_id", "return_period_yr"),
+    (
+        _text("scenario", "name of the scenario"),
+        _ID,
+        _number("return_period_yr", "return period of the storm", "yr"),
+        _shown("base_depth", "depth", "storm depth in the base"),
+        _shown("depth", "depth", "storm depth in the scenario"),
+        _shown("base_runoff", "depth", "storm runoff in the base"),
+        _shown("runoff", "depth", "storm runoff in the scenario"),
+        _number("runoff_change_pct", "change in runoff, and so in the flood's volume", "%"),
+        _shown("base_peak", "flow", "peak flow in the base"),
+        _shown("peak", "flow", "peak flow in the scenario"),
+        _number("peak_change_pct", "change in peak flow", "%"),
+        _number("base_peak_time_h", "time of the peak from the storm's start in the base", "h"),
+        _number("peak_time_h", "time of the peak from the storm's start in the scenario", "h"),
+        _number("peak_time_change_h", "how much later the peak comes; negative: earlier", "h"),
+        _number("base_tc_h", "time of concentration in the base", "h"),
+        _number("tc_h", "time of concentration in the scenario", "h"),
+        _number("tc_change_h", "change in time of concentration", "h"),
+        _number("base_curve_number", "mean curve number in the base", "1"),
+        _number("curve_number", "mean curve number in the scenario", "1"),
+        _text("over_capacity", "where the peak is over the capacity as supplied", optional=True,
+              choices=("neither", "scenario", "base", "both", "unknown", "")),
+        _text("stands", "supplied values that are the same in base and scenario, and hide what it changes"),
+    ),
+)  # fmt: skip
+
+CELL_SIZES = Table(
+    "cell_sizes",
+    "one outlet on terrain of one cell size: the base's, then coarser ones; without a person's edits",
+    ("outlet_id", "cell_size"),
+    (
+        _ID,
+        _shown("cell_size", "length", "typical size of the terrain's cells"),
+        _text("status", "ok (no flag), flagged or failed (not computed)", choices=("ok", "flagged", "failed")),
+        _shown("area", "area", "drainage area"),
+        _number("area_change_pct", "its change against the base", "%"),
+        _shown("path_length", "length", "length of the longest flow path"),
+        _number("path_length_change_pct", "its change against the base", "%"),
+        _number("path_slope_pct", "fall of the longest flow path over its length", "%"),
+        _number("path_slope_change_pct", "its change against the base, relative", "%"),
+        _number("basin_slope_pct", "mean land slope", "%"),
+        _number("basin_slope_change_pct", "its change against the base, relative", "%"),
+        _number("curve_number", "area-weighted mean curve number", "1"),
+        _number("curve_number_change", "its change against the base", "1"),
+        _number("tc_h", "adopted time of concentration", "h"),
+        _number("tc_change_pct", "its change against the base", "%"),
+        _shown("peak_{T}yr", "flow", "peak flow"),
+        _number("peak_{T}yr_change_pct", "its change against the base", "%"),
+        _text("verdict", "safe to screen on such cells: area and every peak within 10 % of the base",
+              choices=("base", "safe", "not safe", "unknown")),
+        _text("reason", "what moves too far, or why there is no verdict"),
+    ),
+)  # fmt: skip
+
 FLAGS_TABLE = Table(
     "flags",
     "one doubt about one outlet",
@@ -421,6 +479,8 @@ ALL: tuple[Table, ...] = (
     HYDROGRAPHS,
     BASIN_PARAMETERS,
     FLAGS_TABLE,
+    SCENARIOS,
+    CELL_SIZES,
 )
 """Every table a run can write."""
 
@@ -467,6 +527,13 @@ class _Quoted(dict[str, str]):
         special = any(mark in text for mark in ',"\r\n')
         self[text] = quoted = '"' + text.replace('"', '""') + '"' if special else text
         return quoted
+
+
+def as_text(columns: Mapping[Any, Any] | pd.DataFrame) -> pd.DataFrame:
+    """Return columns as the table that `read_csv` would read from their file."""
+    import pandas as pd
+
+    return pd.DataFrame({str(name): texts(values) for name, values in columns.items()}, dtype=object)
 
 
 def csv_text(columns: Mapping[str, Any]) -> str:

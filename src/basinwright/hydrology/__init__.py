@@ -5,8 +5,9 @@
 `hydrograph`; here is only which column feeds which.
 """
 
+from basinwright.hydrology.comparing import cell_sizes_table, scenarios_table
 from basinwright.hydrology.computing import Results, compute
 from basinwright.hydrology.frames import Columns
 from basinwright.hydrology.settings import Settings, bankfull_relation_of
 
-__all__ = ["Columns", "Results", "Settings", "bankfull_relation_of", "compute"]
+__all__ = ["Columns", "Results", "Settings", "bankfull_relation_of", "cell_sizes_table", "compute", "scenarios_table"]

@@ -103,7 +103,7 @@ def _floods(basins: Basins, settings: Settings, duration_h: float, *, series: bo
     storms = settings.storms(duration_h)
     point = basins.depth_mm
     if duration_h != section.duration and settings.ddf is not None:
-        each = [float(settings.ddf.depth_mm(duration_h, period)) for period in section.periods]
+        each = [float(settings.ddf.depth_mm(duration_h, period)) * section.depth_factor for period in section.periods]
         point = np.broadcast_to(np.array(each), basins.depth_mm.shape)
     factor = np.ones(basins.area_km2.size)
     if section.areal_reduction == "leclerc_schaake":

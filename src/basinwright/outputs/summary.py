@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections import Counter
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 
 from basinwright.flags import FLAGS, SEVERITIES, Flag
@@ -32,17 +32,21 @@ class Outcome:
         outlets.csv as written.
     flags : list of Flag
         All flags.
+    scenarios : dict of str to columns
+        outlets.csv of each scenario, by name.
     """
 
     folder: Path
     project: Project
     outlets: Columns
     flags: list[Flag]
+    scenarios: dict[str, Columns] = field(default_factory=dict)
 
     @property
     def failed(self) -> int:
-        """Number of outlets that could not be computed."""
-        return sum(status == "failed" for status in self.outlets["status"])
+        """Number of outlets that could not be computed, in the base and in every scenario."""
+        every = (self.outlets, *self.scenarios.values())
+        return sum(status == "failed" for outlets in every for status in outlets["status"])
 
 
 def show(outcome: Outcome) -> None:

@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import difflib
 import hashlib
-from collections.abc import Callable
-from dataclasses import dataclass, field
+from collections.abc import Callable, Container
+from dataclasses import dataclass, field, replace
 from functools import partial
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, TypeVar
@@ -17,7 +17,7 @@ from basinwright.errors import InputRejected, Problem, RangeError
 from basinwright.io.rasters import check_raster, expand_paths, is_remote, refers_to_remote
 from basinwright.pipeline import design_storm
 from basinwright.pipeline.design_storm import DesignStorm
-from basinwright.project import Cover, Project, Reading, Soils, read_project
+from basinwright.project import SCENARIO_SECTIONS, Cover, Project, Reading, Soils, read_project, scenario_field
 from basinwright.registry import methods
 from basinwright.schemes import SHIPPED
 from basinwright.store import file_sha256
@@ -71,6 +71,8 @@ class Inputs:
     design : DesignStorm
     files : dict
         Path, size and hash of the files described so far.
+    scenarios : dict of str to Inputs
+        The same with some inputs replaced, by the scenario's name.
     """
 
     project: Project
@@ -92,18 +94,20 @@ class Inputs:
     depth_rasters: dict[str, Source]
     design: DesignStorm
     files: dict[str, dict[str, Any]] = field(default_factory=dict)
+    scenarios: dict[str, Inputs] = field(default_factory=dict)
 
     def sources(self) -> list[Source]:
         """List every file that the project names."""
         project, folder = self.project, self.file.parent
         tables = [None if self.scheme.name in SHIPPED else project.cover.scheme, project.storm.table, project.storm.ddf]
         layers = [self.cover, self.soils, self.impervious, *self.depth_rasters.values()]
-        return [
+        own = [
             *self.dem,
             self.points_source,
             *(source for source in layers if source is not None),
             *(folder / name for name in tables if name is not None),
         ]
+        return list(dict.fromkeys([*own, *(source for other in self.scenarios.values() for source in other.sources())]))
 
     def alignment(self) -> list[dict[str, Any]]:
         """Say how the outlets and the rasters that are averaged over basins come onto the grid."""
@@ -282,7 +286,8 @@ def inspect(file: Path) -> Inputs:
     """
     from pyproj.exceptions import ProjError
 
-    look = _Looking(file, read_project(file))
+    reading = read_project(file)
+    look = _Looking(file, reading)
     project = look.project
     _look_at_options(look)
 
@@ -290,18 +295,8 @@ def inspect(file: Path) -> Inputs:
     plan = _plan(look, dem) if dem else None
     points_source = look.source("outlets.source", project.outlets.source) if project.outlets is not None else None
     points = _outlets(look, points_source) if points_source is not None else None
-    cover, soils = (_layer(look, name, getattr(project, name), plan) for name in ("cover", "soils"))
-    scheme = _scheme(look) if project.cover is not None and look.is_sound("cover.scheme") else None
-    design = _design(look) if project.storm is not None and look.is_sound("storm") else None
-    if design is not None and design.ddf is not None:
-        project = look.tried(partial(design_storm.with_depths, project, design.ddf)) or project
-    impervious = project.cover.impervious if project.cover is not None else None
-    depth_rasters = project.storm.depth_rasters if project.storm is not None else {}
-    rasters = {
-        "cover.impervious": impervious,
-        **{f"storm.depth_rasters.{period}": text for period, text in depth_rasters.items()},
-    }
-    found = {key: _raster(look, key, text, plan) for key, text in rasters.items() if text is not None}
+    layers = _replaceable(look, plan)
+    project = layers.project
     x = y = np.empty(0)
     aligned: dict[str, Any] = {}
     if points is not None and plan is not None:
@@ -317,12 +312,16 @@ def inspect(file: Path) -> Inputs:
             fix = "check the coordinate systems of both"
             look.add(Path(points.file).name, "geometry", "every outlet lies outside the terrain", fix)
     expected, capacity, overrides = _attributes(project, points, look)
-    if look.found or plan is None or points is None or points_source is None or cover is None:
+    scenarios = [
+        _scenario(file, number, whole, layers, plan, look)
+        for number, whole in enumerate(reading.scenarios, start=1)
+        if len(project.scenario) == len(reading.scenarios) and project.storm is not None and whole.storm is not None
+    ]
+    if look.found or plan is None or points is None or points_source is None or layers.cover is None:
         raise InputRejected(look.found)
-    if scheme is None or design is None:
+    if layers.scheme is None or layers.design is None:
         raise InputRejected(look.found)
-    return Inputs(
-        project=project,
+    inputs = Inputs(
         file=file.absolute(),
         dem=dem,
         plan=plan,
@@ -334,17 +333,84 @@ def inspect(file: Path) -> Inputs:
         expected_area_km2=expected,
         capacity_m3s=capacity,
         overrides=overrides,
-        cover=cover,
-        soils=soils,
-        scheme=scheme,
-        impervious=found.get("cover.impervious"),
-        depth_rasters={
-            period: path
-            for period in project.storm.depth_rasters
-            if (path := found[f"storm.depth_rasters.{period}"]) is not None
-        },
-        design=design,
+        **vars(layers),
     )
+    for entry, changed in zip(project.scenario, scenarios, strict=True):
+        inputs.scenarios[entry.name] = replace(inputs, scenarios={}, **vars(changed))
+    return inputs
+
+
+@dataclass
+class _Replaceable:
+    """The inputs that a scenario may replace, under their names in `Inputs`; None where something is wrong with one."""
+
+    project: Project
+    cover: Source | None
+    soils: Source | None
+    scheme: Scheme | None
+    impervious: Source | None
+    depth_rasters: dict[str, Source]
+    design: DesignStorm | None
+
+
+def _replaceable(
+    look: _Looking, plan: TerrainPlan | None, base: _Replaceable | None = None, sections: Container[str] = ()
+) -> _Replaceable:
+    """Find and open what a scenario may replace: all of it, or of some sections only and the rest as in the base."""
+    project = look.project
+    if base is not None:
+        found = replace(base, project=project)
+    else:
+        found = _Replaceable(project, None, None, None, None, {}, None)
+        sections = SCENARIO_SECTIONS
+    if "cover" in sections:
+        section = project.cover
+        found.cover = _layer(look, "cover", section, plan)
+        found.scheme = _scheme(look) if section is not None and look.is_sound("cover.scheme") else None
+        raster = section.impervious if section is not None else None
+        found.impervious = None if raster is None else _raster(look, "cover.impervious", raster, plan)
+    if "soils" in sections:
+        found.soils = _layer(look, "soils", project.soils, plan)
+    if "storm" in sections and project.storm is not None:
+        design = found.design = _design(look) if look.is_sound("storm") else None
+        if design is not None and design.ddf is not None:
+            found.project = look.tried(partial(design_storm.with_depths, project, design.ddf)) or project
+        rasters = {
+            period: _raster(look, f"storm.depth_rasters.{period}", text, plan)
+            for period, text in project.storm.depth_rasters.items()
+        }
+        found.depth_rasters = {period: path for period, path in rasters.items() if path is not None}
+    return found
+
+
+def _scenario(
+    file: Path, number: int, whole: Project, layers: _Replaceable, plan: TerrainPlan | None, look: _Looking
+) -> _Replaceable:
+    """Look at the inputs that a scenario, ``whole`` with all it takes over, replaces; name its problems by its keys."""
+    base = layers.project
+    given = base.scenario[number - 1]
+    sections = {name for name in SCENARIO_SECTIONS if getattr(given, name) is not None}
+    own = _Looking(file, Reading(whole, []))
+    _look_at_options(own)
+    changed = _replaceable(own, plan, layers, sections)
+    storm = changed.project.storm if "storm" in sections else base.storm
+    if "two_year_depth" not in (given.storm or {"two_year_depth": None}) and base.storm.has_two_year_depth:
+        storm = storm.model_copy(update={"two_year_depth": base.storm.two_year_depth_mm})
+    if storm.periods != base.storm.periods:
+        what = (
+            f"return periods {', '.join(storm.periods) or 'none'}, where the base has {', '.join(base.storm.periods)}"
+        )
+        own.add(file.name, "storm.depths", what, "give the base's, written alike, so that peaks can be compared")
+    changed.project = changed.project.model_copy(update={"storm": storm})
+    known = {(problem.field, problem.what) for problem in look.found}
+    for problem in own.found:
+        if (problem.field, problem.what) in known:
+            continue
+        if problem.file not in (file.name, "project"):
+            look.found.append(problem)
+        else:
+            look.found.append(replace(problem, file=file.name, field=scenario_field(number, problem.field)))
+    return changed
 
 
 def _look_at_options(look: _Looking) -> None:

@@ -9,24 +9,25 @@ import platform
 import time
 import zlib
 from collections import Counter
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from importlib.metadata import version
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from basinwright.editing import EDITABLE, Cell, Record
+from basinwright.editing import EDITABLE, Cell, Record, as_first
 from basinwright.errors import InputRejected
 from basinwright.flags import Flag
 from basinwright.hydrology import Results, Settings
 from basinwright.outputs.writing import hydrograph_files
 from basinwright.pipeline import design_storm
 from basinwright.pipeline.inputs import Inputs
+from basinwright.pipeline.variants import Ground, ScenarioRun, stage_name
 from basinwright.project import Project, parse_project
 from basinwright.schemes import Scheme
 from basinwright.store import MANIFEST, Store
-from basinwright.tables import texts
+from basinwright.tables import as_text, texts
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -53,10 +54,11 @@ def describe(
     inputs: Inputs,
     half: TerrainHalf,
     store: Store,
+    base: Ground,
+    first: Results,
     held: set[Cell],
-    time_area: pd.DataFrame,
-    terrain_flags: list[Flag],
     results: Results,
+    scenarios: Sequence[ScenarioRun],
     summary_only: bool,
 ) -> dict[str, Any]:
     """Return the manifest of a run as plain values."""
@@ -79,25 +81,47 @@ def describe(
             [x, y] if math.isfinite(x) and math.isfinite(y) else None
             for x, y in zip(inputs.x.tolist(), inputs.y.tolist(), strict=True)
         ],  # in the working CRS, in the order of outlets.csv
-        "stages": [stage.describe() for stage in store.records],
+        "stages": store.described(),
         "summary_only": summary_only,
         "hydrographs": [] if summary_only else hydrograph_files(len(results.status)),
-        **_counts(results),
+        **_counts(results, scenarios),
         "scheme": {"name": inputs.scheme.name, "classes": inputs.scheme.to_rows()},
         "storm_tables": inputs.design.tables,
-        "terrain_flags": [list(flag) for flag in terrain_flags],
-        "time_area": _packed(time_area),
+        "terrain_flags": [list(flag) for flag in base.flags],
+        "time_area": _packed(base.time_area),
         "edits": {
-            "supplied": _listed(held),
+            "supplied": _listed(base.supplied),
             "held": _listed(held),
             "encoding": "numbers: float64, little endian, base64; texts: JSON, zlib, base64",
-            "first": {table.name: _packed(results.tables[table.name]) for table in EDITABLE},
-            "written": {},  # where it differs from the first
+            "first": {table.name: _packed(first.tables[table.name]) for table in EDITABLE},
+            "written": {} if results is first else _changed(results, _first(first)),
         },
+        "scenarios": [
+            {**_scenario(scenario, base), "stages": store.described(stage_name(scenario.name))}
+            for scenario in scenarios
+        ],
     }
 
 
-def _counts(results: Results) -> dict[str, Any]:
+def _scenario(scenario: ScenarioRun, base: Ground) -> dict[str, Any]:
+    """Return what the manifest keeps of a scenario: its tables only where the terrain half made others of them."""
+    ground = scenario.ground
+    scheme = ground.settings.scheme
+    other = {name: frame for name, frame in ground.tables.items() if not frame.equals(base.tables[name])}
+    return {
+        "name": scenario.name,
+        "project": ground.settings.project.resolved(),
+        "alignment": scenario.alignment,
+        "scheme": {"name": scheme.name, "classes": scheme.to_rows()},
+        "storm_tables": ground.storm_tables,
+        "terrain_flags": [list(flag) for flag in ground.flags],
+        "tables": {name: _packed(frame) for name, frame in other.items()},
+        "time_area": None if ground.time_area.equals(base.time_area) else _packed(ground.time_area),
+        "files": scenario.files,
+    }
+
+
+def _counts(results: Results, scenarios: Sequence[ScenarioRun]) -> dict[str, Any]:
     status = Counter(results.status.values())
     return {
         "counts": {
@@ -105,15 +129,31 @@ def _counts(results: Results) -> dict[str, Any]:
             **{name: status[name] for name in ("ok", "flagged", "failed")},
             "flags": dict(sorted(Counter(flag.key for flag in results.flags).items())),
         },
-        "exit_status": 1 if status["failed"] else 0,
+        "exit_status": 1 if status["failed"] or any(scenario.failed for scenario in scenarios) else 0,
     }
 
 
-def retimed(about: Mapping[str, Any], record: Record, held: set[Cell], results: Results) -> dict[str, Any]:
-    """Return the manifest after `retime`: counts and edits are new, the rest stands."""
-    written = {table.name: _as_text(results.tables[table.name]) for table in EDITABLE}
-    changed = {name: _packed(frame) for name, frame in written.items() if not frame.equals(record.first[name])}
-    return {**about, **_counts(results), "edits": {**about["edits"], "held": _listed(held), "written": changed}}
+def retimed(
+    about: Mapping[str, Any], record: Record, held: set[Cell], results: Results, scenarios: Sequence[ScenarioRun]
+) -> dict[str, Any]:
+    """Return the manifest after `retime`: counts, edits and the scenarios' files are new, the rest stands."""
+    files = {scenario.name: scenario.files for scenario in scenarios}
+    return {
+        **about,
+        **_counts(results, scenarios),
+        "edits": {**about["edits"], "held": _listed(held), "written": _changed(results, record.first)},
+        "scenarios": [{**entry, "files": files[entry["name"]]} for entry in about.get("scenarios", [])],
+    }
+
+
+def _first(results: Results) -> dict[str, pd.DataFrame]:
+    return {table.name: as_text(results.tables[table.name]) for table in EDITABLE}
+
+
+def _changed(results: Results, first: Mapping[str, pd.DataFrame]) -> dict[str, Any]:
+    """Return the editable tables where they differ from the first."""
+    written = _first(results)
+    return {name: _packed(frame) for name, frame in written.items() if not frame.equals(first[name])}
 
 
 def write(folder: Path, about: Mapping[str, Any]) -> None:
@@ -156,14 +196,29 @@ def settings(about: Mapping[str, Any]) -> tuple[Project, Settings]:
     return project, Settings(project, scheme, design.storm, design.ddf)
 
 
-def terrain_flags(about: Mapping[str, Any]) -> list[Flag]:
-    """Return what the terrain half had flagged."""
-    return [Flag(*row) for row in about["terrain_flags"]]
+def ground(about: Mapping[str, Any], record: Record, settings: Settings) -> Ground:
+    """Return what the terrain half had handed to the hydrology; its tables only where scenarios need them."""
+    tables = as_first(record, settings.project.project.units, settings.scheme) if about.get("scenarios") else {}
+    flags = [Flag(*row) for row in about["terrain_flags"]]
+    return Ground(tables, _unpacked(about["time_area"]), flags, record.supplied, settings, about["storm_tables"])
 
 
-def time_area(about: Mapping[str, Any]) -> pd.DataFrame:
-    """Return the time-area curves, which no person edits."""
-    return _unpacked(about["time_area"])
+def scenarios(about: Mapping[str, Any]) -> dict[str, Mapping[str, Any]]:
+    """Return what the manifest keeps of each scenario, by name."""
+    return {entry["name"]: entry for entry in about.get("scenarios", [])}
+
+
+def scenario_ground(scenario: Mapping[str, Any], base: Ground) -> Ground:
+    """Return what the terrain half had handed to the hydrology for a scenario."""
+    packed, curves = scenario["tables"], scenario["time_area"]
+    return Ground(
+        {name: _unpacked(packed[name]) if name in packed else frame for name, frame in base.tables.items()},
+        base.time_area if curves is None else _unpacked(curves),
+        [Flag(*row) for row in scenario["terrain_flags"]],
+        base.supplied,
+        settings(scenario)[1],
+        scenario["storm_tables"],
+    )
 
 
 def _listed(cells: set[Cell]) -> list[list[str]]:
@@ -177,12 +232,6 @@ def record(about: Mapping[str, Any]) -> Record:
     written = first | {name: _unpacked(packed) for name, packed in edits["written"].items()}
     supplied, held = ({(a, b, c, d) for a, b, c, d in edits[name]} for name in ("supplied", "held"))
     return Record(first, written, supplied, held)
-
-
-def _as_text(columns: Mapping[str, Any]) -> pd.DataFrame:
-    import pandas as pd
-
-    return pd.DataFrame({name: texts(values) for name, values in columns.items()}, dtype=object)
 
 
 def _packed(columns: Mapping[Any, Any] | pd.DataFrame) -> dict[str, dict[str, str]]:
@@ -209,4 +258,4 @@ def _unpacked(packed: Mapping[str, Mapping[str, str]]) -> pd.DataFrame:
             columns[name] = np.frombuffer(base64.b64decode(column["numbers"]), "<f8")
         else:
             columns[name] = json.loads(zlib.decompress(base64.b64decode(column["texts"])))
-    return _as_text(columns)
+    return as_text(columns)

@@ -10,13 +10,14 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from basinwright.errors import BasinwrightError, InputRejected, PublishError, RangeError
-from basinwright.hydrology import Settings, compute
 from basinwright.outputs.summary import Outcome
 from basinwright.store import STORE, RunFolder, Store
+from basinwright.tables import OUTLETS, as_text
 
 if TYPE_CHECKING:
-    from basinwright.editing import Cell
+    from basinwright.editing import Edited, Record
     from basinwright.pipeline.inputs import Inputs
+    from basinwright.pipeline.variants import Ground
 
 Say = Callable[[str], None]
 
@@ -76,11 +77,10 @@ def run(
         inputs.project = inputs.project.model_copy(update={"compute": compute_section})
     with folder.locked():
         folder.refuse_occupied(resume=resume, overwrite=overwrite)
-        if resume and not overwrite:
-            _refuse_edited(folder.final)
+        edits = _edits_of(folder.final) if resume and not overwrite else None
         partial = folder.begin(keep=resume)
         try:
-            outcome = _build(inputs, folder, partial, resume, summary_only, say)
+            outcome = _build(inputs, folder, partial, resume, summary_only, edits, say)
         except InputRejected:
             folder.discard()
             raise
@@ -94,24 +94,48 @@ def run(
     return outcome
 
 
-def _refuse_edited(folder: Path) -> None:
-    """Refuse to continue a run that holds a person's edits: they would be lost.
+def _edits_of(folder: Path) -> tuple[Edited, Record] | None:
+    """Return a person's edits of the run that a folder holds; None where there are none.
+
+    Raises
+    ------
+    InputRejected
+        Where an edit is impossible.
+    """
+    from basinwright import editing
+    from basinwright.pipeline import manifest
+    from basinwright.tables import read_csv
+
+    if not folder.is_dir():
+        return None
+    about = manifest.read(folder)
+    record = manifest.record(about)
+    tables = {name: path for name in record.first if (path := folder / f"{name}.csv").is_file()}
+    if all(read_csv(path).equals(record.first[name]) for name, path in tables.items()):
+        return None
+    project, settings = manifest.settings(about)
+    return editing.apply(folder, record, project.project.units, settings.scheme), record
+
+
+def _refuse_strangers(edits: Edited, record: Record, ground: Ground) -> None:
+    """Refuse to carry edits onto terrain on which the edited outlets have other basins or paths.
 
     Raises
     ------
     InputRejected
         Saying what to do.
     """
-    from basinwright.pipeline import manifest
-    from basinwright.tables import read_csv
-
-    if not folder.is_dir():
-        return
-    for name, first in manifest.record(manifest.read(folder)).first.items():
-        path = folder / f"{name}.csv"
-        if path.is_file() and not read_csv(path).equals(first):
-            fix = "keep them with: basinwright retime; or drop them by adding --overwrite"
-            raise InputRejected.one(str(folder), "folder", "holds a person's edits, which --resume would drop", fix)
+    name = {stem: OUTLETS.column(stem).name(ground.settings.project.project.units) for stem in ("area", "path_length")}
+    tables = record.first["outlets"], as_text(ground.tables["outlets"])
+    before, now = ({row["outlet_id"]: row for row in table.to_dict("records")} for table in tables)
+    touched = {outlet_id for outlet_id, _ in edits.segments | edits.shares}
+    touched |= {outlet_id for _, outlet_id, _, _ in edits.held - record.supplied}
+    for outlet_id in sorted(touched):
+        old, new = before[outlet_id], now.get(outlet_id, {})
+        if any(old.get(column) != new.get(column) for column in name.values()):
+            what = f"holds a person's edits of outlet {outlet_id!r}, whose basin or path is another one now"
+            fix = "drop the edits by adding --overwrite, or run into another folder"
+            raise InputRejected.one("run", "folder", what, fix)
 
 
 def _no_room(place: Path, error: OSError) -> str:
@@ -119,13 +143,22 @@ def _no_room(place: Path, error: OSError) -> str:
     return f"{place}: folder: cannot be written ({reason}): make room, then repeat the command (run: with --resume)"
 
 
-def _build(inputs: Inputs, folder: RunFolder, partial: Path, resume: bool, summary_only: bool, say: Say) -> Outcome:
+def _build(
+    inputs: Inputs,
+    folder: RunFolder,
+    partial: Path,
+    resume: bool,
+    summary_only: bool,
+    edits: tuple[Edited, Record] | None,
+    say: Say,
+) -> Outcome:
     """Build the run in its partial folder, the manifest last."""
+    from basinwright.editing import Edited
     from basinwright.outputs import writing
-    from basinwright.pipeline import geometry, manifest, second_opinion, terrain_half
+    from basinwright.pipeline import geometry, manifest, second_opinion, terrain_half, variants
     from basinwright.report import write_report
 
-    project = inputs.project
+    project, series = inputs.project, not summary_only
     store = Store(partial / STORE, folder.final / STORE if resume else None, say)
     half = terrain_half.run(inputs, store)
     flags = half.flags()
@@ -133,18 +166,23 @@ def _build(inputs: Inputs, folder: RunFolder, partial: Path, resume: bool, summa
         flags += second_opinion.audit(inputs, half, store)
     shapes = None if summary_only else geometry.shapes(inputs, half, store)
 
-    tables = half.frames()
-    held: set[Cell] = {(table, outlet_id, row, stem) for table, outlet_id, row, stem in half.tables.values("held")}
-    settings = Settings(project, inputs.scheme, inputs.design.storm, inputs.design.ddf)
+    base = variants.ground_of(inputs, half, flags)
+    own = Edited(base.tables, base.supplied)
+    if edits is not None:
+        _refuse_strangers(*edits, base)
+        base, own = base.with_edits(*edits)
     depends_on = {
         "tables": [half.tables.key, half.time_area.key],
         "flags": [list(flag) for flag in flags],
         "options": project.model_dump(mode="json", exclude={"audit", "compute"}),
         "storm": inputs.design.tables,
-        "series": not summary_only,
+        "series": series,
     }
     with store.watched("hydrology", "Timing, runoff and hydrographs", depends_on):
-        results = compute(tables, settings, terrain_flags=flags, held=held, series=not summary_only)
+        first = base.compute(series=series and edits is None)
+        results = first if edits is None else base.compute(own, series=series)
+    scenarios = variants.run_scenarios(inputs, store, partial, edits, series=series)
+    variants.compare(results, scenarios, own.held, project)
 
     say("Writing tables, layers and rasters")
     writing.write_tables(partial, results.tables, project)
@@ -152,12 +190,12 @@ def _build(inputs: Inputs, folder: RunFolder, partial: Path, resume: bool, summa
         shapes.write(partial / "basins.gpkg", results.tables, project)
         writing.write_terrain(partial / "terrain", half.grid, half.routed())
     store.prune()
-    about = manifest.describe(inputs, half, store, held, tables["time_area"], flags, results, summary_only)
+    about = manifest.describe(inputs, half, store, base, first, own.held, results, scenarios, summary_only)
     if not summary_only:
         say("Writing the report")
         write_report(partial, about, jobs=project.compute.jobs, say=say)
     manifest.write(partial, about)
-    return Outcome(folder.final, project, results.tables["outlets"], results.flags)
+    return Outcome(folder.final, project, results.tables["outlets"], results.flags, variants.told(scenarios))
 
 
 def retime(run_dir: Path, *, say: Say = _silent) -> Outcome:
@@ -183,7 +221,7 @@ def retime(run_dir: Path, *, say: Say = _silent) -> Outcome:
     """
     from basinwright import editing
     from basinwright.outputs import writing
-    from basinwright.pipeline import geometry, manifest
+    from basinwright.pipeline import geometry, manifest, variants
     from basinwright.report import write_report
 
     folder = RunFolder(run_dir)
@@ -194,24 +232,29 @@ def retime(run_dir: Path, *, say: Say = _silent) -> Outcome:
         say("Reading the tables")
         record = manifest.record(about)
         edits = editing.apply(folder.final, record, project.project.units, settings.scheme)
+        kept = manifest.scenarios(about)
+        variants.refuse_edited(folder.final, {name: scenario["files"] for name, scenario in kept.items()})
         say("Timing, runoff and hydrographs")
         summary_only = bool(about["summary_only"])
-        flags = manifest.terrain_flags(about)
+        base = manifest.ground(about, record, settings)
         try:
-            results = compute(
-                {**edits.tables, "time_area": manifest.time_area(about)},
-                settings,
-                terrain_flags=flags,
-                held=edits.held,
-                edited=edits.segments,
-                series=not summary_only,
-            )
+            results = base.compute(edits, series=not summary_only)
         except RangeError as error:
             what, fix = f"cannot be computed: {error}", "undo the edit that gave this number"
             raise InputRejected.one(str(folder.final), "tables", what, fix) from error
         say("Writing")
         try:
             partial = folder.begin_copy()
+            scenarios = []
+            for name, scenario in kept.items():
+                say(f"{variants.stage_name(name)}: Timing, runoff and hydrographs")
+                ground = manifest.scenario_ground(scenario, base)
+                scenarios.append(
+                    variants.compute_scenario(
+                        name, ground, scenario["alignment"], partial, (edits, record), series=not summary_only
+                    )
+                )
+            variants.compare(results, scenarios, edits.held, project)
             writing.write_tables(partial, results.tables, project)
             shapes = None if summary_only else geometry.stored(about, partial / STORE)
             if shapes is not None:
@@ -219,7 +262,7 @@ def retime(run_dir: Path, *, say: Say = _silent) -> Outcome:
                 shapes.write(partial / "basins.gpkg", results.tables, project)
             elif (partial / "basins.gpkg").exists():
                 say("basins.gpkg is left as it was: the run's store is not there")
-            about = manifest.retimed(about, record, edits.held, results)
+            about = manifest.retimed(about, record, edits.held, results, scenarios)
             if not summary_only:
                 say("Writing the report")
                 write_report(partial, about, jobs=project.compute.jobs, say=say)
@@ -227,7 +270,7 @@ def retime(run_dir: Path, *, say: Say = _silent) -> Outcome:
         except OSError as error:
             raise PublishError(_no_room(folder.final, error)) from error
         folder.publish()
-    return Outcome(folder.final, project, results.tables["outlets"], results.flags)
+    return Outcome(folder.final, project, results.tables["outlets"], results.flags, variants.told(scenarios))
 
 
 def report(run_dir: Path, outlet_id: str | None = None, *, say: Say = _silent) -> Path:

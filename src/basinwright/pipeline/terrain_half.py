@@ -35,6 +35,7 @@ STORAGE_FILLED_MM = 2.54
 LAKE_STORAGE_PCT = 1.0
 _DEEPEST_MM = 10_000.0
 """Deeper storms than this are no storms but a missing nodata value."""
+_OF_DEPTHS = {"depths", "depth_rasters", "depth_raster_unit", "depth_factor"}
 _BLOCK_ROWS = 256
 QUANTUM = 2.0**-20
 """Distances along the path are written as whole multiples of this many feet or metres: sums of them are exact."""
@@ -163,7 +164,7 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
             "options": project.model_dump(
                 mode="json", include={"project", "terrain", "outlets", "cover", "soils", "flow_path", "channel"}
             ),
-            "storm": project.storm.model_dump(mode="json", include={"depths", "depth_rasters", "depth_raster_unit"}),
+            "storm": project.storm.model_dump(mode="json", include=_OF_DEPTHS),
             "points": [
                 list(inputs.points.names),
                 inputs.points.texts(basis) if (basis := project.outlets.capacity_basis) else [],
@@ -564,7 +565,7 @@ def _outlet_rows(
     for period in project.storm.periods:
         supplied = inputs.overrides.get(f"depth_{period}yr", np.full(len(ids), np.nan))
         depth = depths[period] if period in depths else np.full(len(ids), project.storm.depths[period])
-        columns[f"depth_{period}yr_mm"] = np.where(np.isnan(supplied), depth, supplied)
+        columns[f"depth_{period}yr_mm"] = np.where(np.isnan(supplied), depth, supplied) * project.storm.depth_factor
     optional = {
         "areal_factor": project.storm.areal_reduction != "none",
         "critical_duration_h": project.storm.critical_duration,
