@@ -97,7 +97,7 @@ def everything(seed, pick):
     out["bounds"], out["path"] = bounds, path
     receives, time_us = np.zeros(n, np.uint8), np.zeros(n, np.int64)
     length, fall, source = np.zeros((NROWS, NCOLS)), np.zeros((NROWS, NCOLS)), np.zeros((NROWS, NCOLS), np.uint8)
-    pick(travel.mark_receivers)(code, out["order"], NCOLS, receives)
+    pick(travel.mark_receivers)(code, NCOLS, receives)
     pick(travel.block_steps)(code, z, receives, NCOLS, step_um, 0, length, fall, source)
     time_us.reshape(NROWS + 2, NCOLS + 2)[1:-1, 1:-1] = length * 1e6
     pick(travel.add_down_the_flow)(code, out["order"], NCOLS, time_us)

@@ -1,48 +1,15 @@
 """Terrain routed by tiles: the bits of the same terrain routed whole, however it is cut."""
 
-from pathlib import Path
-
 import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from scipy import ndimage
+from tilings import by_tiles, cell_sizes, check_same, cut_terrains
 
 from basinwright.errors import TerrainError
 from basinwright.kernels import tiles
 from basinwright.terrain import condition_and_route
-from basinwright.terrain.tiled import condition_and_route_tiles
 from basinwright.terrain.tiling import Tiling
-
-SAME = ("conditioned_m", "directions", "area_m2", "step_um", "row_area_m2")
-SAME_FACTS = ("data_cells", "flat_cells", "filled_cells", "filled_volume_m3", "deepest_fill_m", "largest_rounding_m")
-
-
-def cell_sizes(nrows, geographic=False):
-    """Widths, heights [m] and areas [m2] of rows; geographic ones narrow towards the north."""
-    dy = np.full(nrows, 30.0)
-    dx = 30.0 * np.cos(np.radians(60.0 - np.arange(nrows) * 0.02)) if geographic else dy.copy()
-    return dx, dy, dx * dy
-
-
-def by_tiles(folder: Path, z, tiling, sizes=None, **options):
-    folder.mkdir(parents=True, exist_ok=True)
-    np.save(folder / "elevation.npy", z)
-    scratch = folder / "scratch"
-    scratch.mkdir()
-
-    def create(name, shape, dtype):
-        return np.lib.format.open_memmap(folder / f"{name}.npy", mode="w+", shape=shape, dtype=dtype)
-
-    sizes = sizes or cell_sizes(len(z))
-    return condition_and_route_tiles(folder / "elevation.npy", *sizes, tiling, create, scratch, **options)
-
-
-def check_same(tiled, whole):
-    for name in SAME:
-        np.testing.assert_array_equal(getattr(tiled, name), getattr(whole, name), err_msg=name)
-    for name in SAME_FACTS:
-        assert getattr(tiled, name) == getattr(whole, name), name
 
 
 def check_order(terrain):
@@ -61,31 +28,6 @@ def check_order(terrain):
         below = flowing + offsets[terrain.directions[flowing]] @ [stride, 1]
         inside = position[below] >= 0
         assert (position[below] > position[flowing])[inside].all()
-
-
-@st.composite
-def cut_terrains(draw):
-    """Random ground of every kind, and a random way to cut it into tiles."""
-    nrows, ncols = draw(st.integers(1, 40)), draw(st.integers(1, 40))
-    rng = np.random.default_rng(draw(st.integers(0, 2**32 - 1)))
-    kind = draw(st.sampled_from(["noise", "terraces", "smooth", "lakes"]))
-    z = rng.normal(100, 3, (nrows, ncols))
-    if kind == "terraces":
-        z = np.floor(z / 2)
-    elif kind == "smooth":
-        z = ndimage.gaussian_filter(z, 3) * 10
-    elif kind == "lakes":  # wide flats that cross many rims, walled in or not
-        z = np.where(ndimage.gaussian_filter(z, 2) > 100, np.rint(z), 97.0)
-    z += draw(st.sampled_from([0.0, 0.5])) * np.arange(ncols)
-    z[rng.random(z.shape) < draw(st.sampled_from([0.0, 0.02, 0.3]))] = np.nan
-    z[rng.integers(nrows), rng.integers(ncols)] = 1.0
-
-    def edges(size):
-        side = draw(st.integers(3, 40))
-        inner = np.arange(side, size, side) + rng.integers(-1, 2, len(range(side, size, side)))
-        return (0, *inner[(inner > 0) & (inner < size)].tolist(), size)
-
-    return z.astype(draw(st.sampled_from([np.float32, np.float64]))), Tiling(edges(nrows), edges(ncols))
 
 
 @settings(max_examples=40, deadline=None)

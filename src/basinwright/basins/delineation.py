@@ -6,8 +6,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from basinwright.basins.by_tiles import label_tiles
 from basinwright.kernels import NO_CELL
 from basinwright.terrain import Terrain
+from basinwright.terrain.workspace import IN_MEMORY, Workspace
 
 
 @dataclass(frozen=True, eq=False)
@@ -99,7 +101,7 @@ class Basins:
         return first_of_label[self.by_outlet(self.parent, failed=NO_CELL)]  # -1 picks the entry kept for none
 
 
-def delineate(terrain: Terrain, outlet_cells: np.ndarray) -> Basins:
+def delineate(terrain: Terrain, outlet_cells: np.ndarray, space: Workspace = IN_MEMORY) -> Basins:
     """Label the cells of all basins and find their longest flow paths.
 
     Parameters
@@ -107,22 +109,36 @@ def delineate(terrain: Terrain, outlet_cells: np.ndarray) -> Basins:
     terrain : Terrain
     outlet_cells : int32 array, shape (n,)
         Padded indices, as `snap` gives them; -1 for an outlet that failed.
+    space : Workspace
+        With folders where the terrain was routed by tiles.
 
     Returns
     -------
     Basins
         What concerns a whole basin does not depend on which other outlets are given.
     """
-    from basinwright.kernels import forest, labels, reduce
+    from basinwright.kernels import forest
 
     cells = np.asarray(outlet_cells, np.int32)
     placed = cells >= 0
     label_cell, inverse = np.unique(cells[placed], return_inverse=True)
     outlet_label = np.full(cells.size, NO_CELL, np.int32)
     outlet_label[placed] = inverse
-    n = label_cell.size
+    label, parent, farthest_um, farthest_cell = (label_tiles if len(terrain.tiling) > 1 else _label_whole)(
+        terrain, label_cell, space
+    )
+    order = forest.upstream_first(parent)
+    return Basins(label, label_cell, outlet_label, parent, order, farthest_cell, farthest_um)
 
-    label = np.empty(terrain.directions.size, np.int32)
+
+def _label_whole(
+    terrain: Terrain, label_cell: np.ndarray, space: Workspace
+) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """Labels, their parents, and the farthest cells of whole basins, in one sweep."""
+    from basinwright.kernels import forest, labels, reduce
+
+    n = label_cell.size
+    label = space.result("basins.label", (terrain.directions.size,), np.int32)
     distance_um = np.empty(terrain.directions.size, np.int64)
     parent = np.empty(n, np.int32)
     parent_distance_um = np.empty(n, np.int64)
@@ -135,4 +151,4 @@ def delineate(terrain: Terrain, outlet_cells: np.ndarray) -> Basins:
     reduce.keep_farthest(label, terrain.ncols, distance_um, 0, terrain.nrows, farthest_um, farthest_cell)
     order = forest.upstream_first(parent)
     forest.combine_farthest(parent, order, parent_distance_um, farthest_um, farthest_cell)
-    return Basins(label, label_cell, outlet_label, parent, order, farthest_cell, farthest_um)
+    return label, parent, farthest_um, farthest_cell

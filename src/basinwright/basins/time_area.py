@@ -6,9 +6,11 @@ from collections.abc import Callable
 
 import numpy as np
 
+from basinwright.basins.by_tiles import add_down_tiles
 from basinwright.basins.delineation import Basins
 from basinwright.kernels import NO_CELL
 from basinwright.terrain import Terrain
+from basinwright.terrain.workspace import IN_MEMORY, Workspace
 
 BIN_H = 0.01
 """Resolution of travel times [h]."""
@@ -23,7 +25,9 @@ StepTime = Callable[[slice, np.ndarray, np.ndarray, np.ndarray, np.ndarray], np.
 """Time of a step [h] from rows, length [m], fall [m], contributing area [km2] and whether the cell is a source."""
 
 
-def time_area_curves(terrain: Terrain, basins: Basins, step_time_h: StepTime) -> dict[str, np.ndarray]:
+def time_area_curves(
+    terrain: Terrain, basins: Basins, step_time_h: StepTime, space: Workspace = IN_MEMORY
+) -> dict[str, np.ndarray]:
     """Curves of whole basins, from one sweep over the raster.
 
     Parameters
@@ -33,6 +37,8 @@ def time_area_curves(terrain: Terrain, basins: Basins, step_time_h: StepTime) ->
     step_time_h : callable
         Given a block of rows: the rows, and arrays of shape (rows, ncols) with length and fall of the step out of each
         cell [m], contributing area [km2] and whether no cell drains into it (bool); returns the time of the step [h].
+    space : Workspace
+        With folders where the terrain was routed by tiles.
 
     Returns
     -------
@@ -47,9 +53,9 @@ def time_area_curves(terrain: Terrain, basins: Basins, step_time_h: StepTime) ->
     from basinwright.kernels import travel
 
     ncols = terrain.ncols
-    receives = np.zeros(terrain.directions.size, np.uint8)
-    travel.mark_receivers(terrain.directions, terrain.order, ncols, receives)
-    time_us = np.zeros(terrain.directions.size, np.int64)
+    receives = space.temporary("receives", terrain.directions.shape, np.uint8)
+    travel.mark_receivers(terrain.directions, ncols, receives)
+    time_us = space.temporary("step_us", terrain.directions.shape, np.int64)
     for first in range(0, terrain.nrows, _BLOCK_ROWS):
         rows = slice(first, min(first + _BLOCK_ROWS, terrain.nrows))
         shape = (rows.stop - rows.start, ncols)
@@ -59,7 +65,10 @@ def time_area_curves(terrain: Terrain, basins: Basins, step_time_h: StepTime) ->
         )
         step_h = step_time_h(rows, length, fall, terrain.area_grid[rows] * 1e-6, source.astype(bool))
         terrain.grid(time_us)[rows] = np.rint(np.where(length > 0, step_h, 0.0) * _US_PER_H)
-    travel.add_down_the_flow(terrain.directions, terrain.order, ncols, time_us)
+    if len(terrain.tiling) > 1:
+        time_us = add_down_tiles(terrain, time_us, space)
+    else:
+        travel.add_down_the_flow(terrain.directions, terrain.order, ncols, time_us)
 
     bin_us = round(BIN_H * _US_PER_H)
     away_us = time_us[basins.label_cell]

@@ -48,20 +48,18 @@ def block_steps(
 
 
 @njit(cache=True, nogil=True)
-def mark_receivers(directions: np.ndarray, order: np.ndarray, ncols: int, receives: np.ndarray) -> None:
+def mark_receivers(directions: np.ndarray, ncols: int, receives: np.ndarray) -> None:
     """Mark the cells that other cells drain into.
 
     Parameters
     ----------
     directions : uint8 array, shape (cells,)
-    order : int32 array, shape (data cells,)
     ncols : int
     receives : uint8 array, shape (cells,)
         Result; must come in as zeros.
     """
     o = steps(ncols + 2)
-    for j in range(order.size):
-        c = np.uint64(order[j])
+    for c in range(np.uint64(directions.size)):
         code = int(directions[c])
         if code < EXIT:
             receives[c + o[code]] = 1

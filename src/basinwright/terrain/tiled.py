@@ -18,10 +18,9 @@ A step may be repeated: it reads only what earlier steps wrote.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, NamedTuple, Protocol
+from typing import NamedTuple
 
 import numpy as np
 
@@ -40,55 +39,43 @@ from basinwright.terrain.tiling import (
     strips_around,
     strips_of,
 )
+from basinwright.terrain.workspace import Workers, Workspace, file_of
 
 _FILL = Conditioning()
 
 
-class Workers(Protocol):
-    """Whatever calls a function once for each tuple of arguments, here or elsewhere; results in that order."""
-
-    def map(self, function: Callable[..., Any], calls: Sequence[tuple[Any, ...]]) -> list[Any]:
-        """Call the function for each."""
-
-
-class InProcess:
-    """Workers that are this very process."""
-
-    def map(self, function: Callable[..., Any], calls: Sequence[tuple[Any, ...]]) -> list[Any]:
-        """Call the function for each, one after the other."""
-        return [function(*call) for call in calls]
+def padded_raster(file: str, tiling: Tiling, *, write: bool = False) -> np.ndarray:
+    """Map a flat padded array, as a raster of shape (nrows + 2, ncols + 2)."""
+    mapped = np.load(file, mmap_mode="r+" if write else "r")
+    return mapped.reshape(tiling.nrows + 2, tiling.stride)
 
 
-Create = Callable[[str, tuple[int, ...], Any], np.memmap]
-"""Makes an array in a file, from name, shape and type."""
+def write_tile(file: str, tiling: Tiling, tile: Tile, padded: np.ndarray) -> None:
+    """Write a tile into a flat padded array, without its halo."""
+    into = padded_raster(file, tiling, write=True)[1:-1, 1:-1]
+    into[tile.rows, tile.cols] = padded.reshape(-1, tile.stride)[1:-1, 1:-1]
+
+
+def read_tile(file: str, tiling: Tiling, tile: Tile, outside: float) -> np.ndarray:
+    """Read a tile of a flat padded array, flat and padded itself, with a value of no meaning around it."""
+    window = np.array(padded_raster(file, tiling)[tile.padded])
+    window[0], window[-1], window[:, 0], window[:, -1] = outside, outside, outside, outside
+    return window.reshape(-1)
 
 
 @dataclass(frozen=True)
-class Files:
-    """Where the arrays of one terrain lie.
+class Scratch:
+    """What the steps hand each other, tile by tile.
 
     Parameters
     ----------
     tiling : Tiling
-    elevation : str
-        File of the elevations, shape (nrows, ncols) [m].
-    conditioned, directions, area : str
-        Files of the arrays of `Terrain`.
     scratch : str
-        Folder for what only the steps hand each other.
+        Folder.
     """
 
     tiling: Tiling
-    elevation: str
-    conditioned: str
-    directions: str
-    area: str
     scratch: str
-
-    def padded(self, file: str, *, write: bool = False) -> np.ndarray:
-        """Map a flat padded array, as a raster."""
-        mapped = np.load(file, mmap_mode="r+" if write else "r")
-        return mapped.reshape(self.tiling.nrows + 2, self.tiling.stride)
 
     def keep(self, tile: Tile, name: str, **arrays: np.ndarray) -> None:
         """Keep arrays of a tile for a later step."""
@@ -107,6 +94,24 @@ class Files:
     def _scratch(self, tile: Tile, name: str, part: str) -> str:
         return str(Path(self.scratch, f"{name}-{part}-{tile.index}.npy"))
 
+
+@dataclass(frozen=True)
+class Files(Scratch):
+    """Where the arrays of one terrain lie.
+
+    Parameters
+    ----------
+    elevation : str
+        File of the elevations, shape (nrows, ncols) [m].
+    conditioned, directions, area : str
+        Files of the arrays of `Terrain`.
+    """
+
+    elevation: str
+    conditioned: str
+    directions: str
+    area: str
+
     def sizes(self, tile: Tile) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Widths and heights of the cells [m] and their summable areas [m2], by row of the tile."""
         dx, dy, area = np.load(Path(self.scratch, "sizes.npy"))[:, tile.rows]
@@ -119,9 +124,7 @@ def condition_and_route_tiles(
     dy_m: np.ndarray,
     cell_area_m2: np.ndarray,
     tiling: Tiling,
-    create: Create,
-    scratch: Path,
-    workers: Workers | None = None,
+    space: Workspace,
     conditioning: Conditioning = _FILL,
 ) -> Terrain:
     """Do the work of `condition_and_route` on tiles: the same result, in files.
@@ -132,12 +135,8 @@ def condition_and_route_tiles(
         A ``.npy`` file of shape (nrows, ncols) [m], as `condition_and_route` takes it.
     dx_m, dy_m, cell_area_m2 : arrays, shape (nrows,) [m, m2]
     tiling : Tiling
-    create : callable
-        Makes the files of the result.
-    scratch : Path
-        An empty folder for files in between; the workers see it, and all other files, under the same path.
-    workers : Workers, optional
-        This process where not given. The result does not depend on it.
+    space : Workspace
+        With both of its folders; the workers see the elevations too under the same path.
     conditioning : Conditioning
 
     Returns
@@ -150,34 +149,29 @@ def condition_and_route_tiles(
     TerrainError
         As `condition_and_route`.
     """
-    workers = workers or InProcess()
+    if space.scratch is None:
+        raise ValueError("tiles need a workspace with folders")
+    scratch, workers = space.scratch, space.workers
     nrows, ncols = tiling.nrows, tiling.ncols
     dx, dy, cell_area = sizes_by_row(nrows, ncols, dx_m, dy_m, cell_area_m2)
     row_area = summable_areas_m2(cell_area, ncols)
     cells = (nrows + 2) * (ncols + 2)
     np.save(scratch / "sizes.npy", np.stack([dx, dy, row_area]))
-    conditioned = create("conditioned_m", (cells,), np.float32)
-    directions = create("directions", (cells,), np.uint8)
-    area = create("area_m2", (cells,), np.float64)
+    conditioned = space.result("terrain.conditioned_m", (cells,), np.float32)
+    directions = space.result("terrain.directions", (cells,), np.uint8)
+    area = space.result("terrain.area_m2", (cells,), np.float64)
     for array, outside in ((conditioned, np.inf), (directions, VOID), (area, 0.0)):
         halo = array.reshape(nrows + 2, ncols + 2)
         halo[0], halo[-1], halo[:, 0], halo[:, -1] = outside, outside, outside, outside
 
-    files = Files(
-        tiling,
-        str(elevation_file),
-        str(conditioned.filename),
-        str(directions.filename),
-        str(area.filename),
-        str(scratch),
-    )
+    files = Files(tiling, str(scratch), str(elevation_file), file_of(conditioned), file_of(directions), file_of(area))
     data_cells, largest_rounding = _fill(files, workers)
     if data_cells.sum() == 0:
         raise TerrainError("no cell of the terrain has an elevation: is its nodata value right?")
-    order = create("order", (int(data_cells.sum()),), np.int32)
+    order = space.result("terrain.order", (int(data_cells.sum()),), np.int32)
     bounds = np.concatenate([[0], np.cumsum(data_cells)])
     flat_cells = _route(files, workers)
-    _collect(files, workers, bounds, str(order.filename))
+    _collect(files, workers, bounds, file_of(order))
 
     elevation = np.load(elevation_file, mmap_mode="r")
     return Terrain(
@@ -299,14 +293,12 @@ def _raise(files: Files, tile: Tile, terminal_spill: np.ndarray) -> None:
     from basinwright.kernels.fill import raise_to_levels
 
     z, _ = pad(np.load(files.elevation, mmap_mode="r")[tile.rows, tile.cols])
-    nrows, ncols = tile.shape
     label = files.kept(tile, "catchments", "label")
     level = np.maximum(
         files.kept(tile, "catchments", "spill"), terminal_spill[files.kept(tile, "catchments", "reached")]
     )
     raise_to_levels(z, label, level)
-    into = files.padded(files.conditioned, write=True)
-    into[1:-1, 1:-1][tile.rows, tile.cols] = z.reshape(nrows + 2, ncols + 2)[1:-1, 1:-1]
+    write_tile(files.conditioned, files.tiling, tile, z)
 
 
 # 2. Directions
@@ -370,7 +362,7 @@ def _descend(files: Files, tile: Tile) -> tuple[int, int, _Flats | None]:
     stride = ncols + 4
     # The tile, a ring of cells around it whose directions are wanted too, and a ring that those need.
     wide = np.full((nrows + 4, stride), np.inf, np.float32)
-    whole = files.padded(files.conditioned)
+    whole = padded_raster(files.conditioned, files.tiling)
     top, left = tile.rows.start - 1, tile.cols.start - 1
     rows = slice(max(top, 0), min(tile.rows.stop + 3, whole.shape[0]))
     cols = slice(max(left, 0), min(tile.cols.stop + 3, whole.shape[1]))
@@ -389,7 +381,7 @@ def _descend(files: Files, tile: Tile) -> tuple[int, int, _Flats | None]:
         of_ring, cells, towards, beside_higher = tiles.find_open_flats(z, code, stride, ring, queue)
         flats.resolve_flats(z, code, nrows + 2, ncols + 2, queue, np.empty(z.size, np.int32))
     undrained = int(np.count_nonzero(core == FLAT))
-    files.padded(files.directions, write=True)[1:-1, 1:-1][tile.rows, tile.cols] = core
+    padded_raster(files.directions, files.tiling, write=True)[1:-1, 1:-1][tile.rows, tile.cols] = core
     if cells.size == of_ring:
         return flat_cells, undrained, None
     kept = slice(of_ring, None)
@@ -446,7 +438,7 @@ def _drain(files: Files, tile: Tile, nearer: Strips, away: Strips) -> int:
     undrained = tiles.drain_open_flats(
         code, ncols + 4, cells, files.kept(tile, "flats", "towards"), to_lower.reshape(-1), from_higher.reshape(-1)
     )
-    into = files.padded(files.directions, write=True)[1:-1, 1:-1][tile.rows, tile.cols]
+    into = padded_raster(files.directions, files.tiling, write=True)[1:-1, 1:-1][tile.rows, tile.cols]
     row, col = np.divmod(cells, ncols + 4)
     into[row - 2, col - 2] = code[cells]
     return int(undrained)
@@ -494,18 +486,11 @@ def _collect(files: Files, workers: Workers, bounds: np.ndarray, order_file: str
     files.drop("area")
 
 
-def tile_directions(files: Files, tile: Tile) -> np.ndarray:
-    """Finished directions of a tile, flat and padded, VOID around it."""
-    window = np.array(files.padded(files.directions)[tile.padded])
-    window[0], window[-1], window[:, 0], window[:, -1] = VOID, VOID, VOID, VOID
-    return window.reshape(-1)
-
-
 def _sum_own(files: Files, tile: Tile, order_file: str, bounds: list[int]) -> _Outflow:
     from basinwright.kernels import accumulate, tiles
 
     nrows, ncols = tile.shape
-    code = tile_directions(files, tile)
+    code = read_tile(files.directions, files.tiling, tile, VOID)
     area = np.empty(code.size)
     order = np.empty(code.size, np.int32)
     _, _, row_area = files.sizes(tile)
@@ -525,13 +510,11 @@ def _sum_own(files: Files, tile: Tile, order_file: str, bounds: list[int]) -> _O
 def _add_inflow(files: Files, tile: Tile, entries: np.ndarray, inflow: np.ndarray) -> None:
     from basinwright.kernels.tiles import pour_in
 
-    nrows, ncols = tile.shape
     area = files.kept(tile, "area", "own")
     if entries.size:
-        code = tile_directions(files, tile)
+        code = read_tile(files.directions, files.tiling, tile, VOID)
         pour_in(
             code, tile.stride, tile.in_tile(entries, files.tiling.stride), inflow, area,
             np.zeros(code.size, np.uint8), np.zeros(code.size),
         )  # fmt: skip
-    inside = area.reshape(nrows + 2, ncols + 2)[1:-1, 1:-1]
-    files.padded(files.area, write=True)[1:-1, 1:-1][tile.rows, tile.cols] = inside
+    write_tile(files.area, files.tiling, tile, area)
