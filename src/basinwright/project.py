@@ -138,7 +138,7 @@ class Terrain(Section):
     flow_direction: str | None = None
     flow_direction_codes: dict[str, int | str] | None = None
     stream_area: AreaOrAuto = _default("0.25 km2")
-    length_correction: str = "none"
+    length_correction: Literal["none", "straight"] = "none"
 
     @model_validator(mode="before")
     @classmethod
@@ -358,7 +358,6 @@ LATER: tuple[tuple[str, str, Callable[[Any], bool], str], ...] = (
     ("terrain", "sinks", lambda value: value is not None, "leave it out"),
     ("terrain", "flow_direction", lambda value: value is not None, "leave it out"),
     ("terrain", "flow_direction_codes", lambda value: value is not None, "leave it out"),
-    ("terrain", "length_correction", lambda value: value != "none", 'use "none"'),
     ("flow_path", "farthest", lambda value: value != "length", 'use "length"'),
     (
         "channel",

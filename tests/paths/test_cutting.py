@@ -46,7 +46,7 @@ def cut(landscape):
         z = 200 - 0.5 * np.arange(n) if z is None else np.asarray(z, float)
         area = np.full(n, 0.01) if area is None else np.asarray(area, float)
         cells = ground.terrain.cells_at(np.full(n, rows // 2), np.arange(n))
-        paths = Paths(np.array([0, n]), cells, np.arange(n) * step_m, z, area)
+        paths = Paths(np.array([0, n]), cells, np.arange(n) * step_m, np.arange(n) * step_m, z, area)
         return cut_segments(
             ground.grid, ground.terrain, paths, CoverOnGrid(classes, CODES, SHEET_N, np.arange(4) == 0),
             rules(**changed),
@@ -274,13 +274,13 @@ def test_without_any_cover_there_is_no_sheet_flow(cut):
 def test_empty_and_single_cell_paths_have_no_segments(landscape):
     ground = landscape(np.add.outer(np.zeros(3), -np.arange(6.0)))
     cells = ground.terrain.cells_at([1] * 5, [2, 0, 1, 2, 3])
-    paths = Paths(np.array([0, 0, 1, 5, 5]), cells, np.array([0.0, 0, 10, 20, 30]), -np.arange(5.0), np.ones(5))
+    paths = Paths(np.array([0, 0, 1, 5, 5]), cells, *[np.array([0.0, 0, 10, 20, 30])] * 2, -np.arange(5.0), np.ones(5))
     cover = CoverOnGrid(np.full((3, 6), STREET, np.int32), CODES, SHEET_N, np.arange(4) == 0)
     result = cut_segments(ground.grid, ground.terrain, paths, cover, rules())
     assert result.segments["outlet"].tolist() == [2]
     assert result.no_channel.tolist() == [False, True, False, False]
     nothing = cut_segments(
-        ground.grid, ground.terrain, Paths(np.zeros(1, np.int64), cells[:0], *[np.empty(0)] * 3), cover, rules()
+        ground.grid, ground.terrain, Paths(np.zeros(1, np.int64), cells[:0], *[np.empty(0)] * 4), cover, rules()
     )
     assert nothing.segments["outlet"].size == 0
 

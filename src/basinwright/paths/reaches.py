@@ -5,16 +5,21 @@ from __future__ import annotations
 import numpy as np
 
 from basinwright.basins import Basins
+from basinwright.paths.tracing import LengthCorrection, along
 from basinwright.terrain import Terrain
 
 
-def reach_measures(terrain: Terrain, basins: Basins) -> dict[str, np.ndarray]:
+def reach_measures(
+    terrain: Terrain, basins: Basins, length_correction: LengthCorrection = "none"
+) -> dict[str, np.ndarray]:
     """Length, fall and contributing area of the reach from every outlet to the next downstream.
 
     Parameters
     ----------
     terrain : Terrain
     basins : Basins
+    length_correction : {"none", "straight"}
+        See `basinwright.paths.tracing.along`.
 
     Returns
     -------
@@ -22,7 +27,6 @@ def reach_measures(terrain: Terrain, basins: Basins) -> dict[str, np.ndarray]:
         ``reach_length_m``; ``reach_fall_m``, on the conditioned terrain; ``reach_area_km2``, contributing area at the
         last cell in the upper half of the reach. NaN for an outlet with none downstream.
     """
-    from basinwright.kernels import paths as kernel
     from basinwright.kernels.trace import trace_paths
 
     n = basins.n_labels
@@ -31,9 +35,7 @@ def reach_measures(terrain: Terrain, basins: Basins) -> dict[str, np.ndarray]:
     if joined.size:
         starts, ends = basins.label_cell[joined], basins.label_cell[basins.parent[joined]]
         bounds, cells = trace_paths(terrain.directions, terrain.ncols, starts, ends)
-        distance_m, elevation_m, area_km2 = kernel.profile(
-            bounds, cells, terrain.directions, terrain.ncols, terrain.step_um, terrain.conditioned_m, terrain.area_m2
-        )
+        distance_m, _, elevation_m, area_km2 = along(terrain, bounds, cells, length_correction)
         first, last = bounds[:-1], bounds[1:] - 1
         length = distance_m[last]
         in_upper_half = distance_m <= np.repeat(0.5 * length, np.diff(bounds))

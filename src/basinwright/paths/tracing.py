@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
 
@@ -13,6 +14,10 @@ from basinwright.terrain import Terrain
 
 DEEP_FILL_M = 2.0
 """Conditioning that moved the terrain by more than this under the path is a doubt (DEEP_FILL)."""
+
+
+LengthCorrection = Literal["none", "straight"]
+"""Whether the staircase of the grid's steps is taken out of lengths; see `along`."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -27,9 +32,11 @@ class Paths:
     cells : int32 array, shape (path cells,)
         Padded indices.
     distance_m : float64 array, shape (path cells,) [m]
-        From the divide, along the path.
+        From the divide, along the path, corrected where that was asked for.
+    raw_m : float64 array, shape (path cells,) [m]
+        The same along the steps from cell to cell.
     elevation_m : float64 array, shape (path cells,) [m]
-        Conditioned terrain.
+        Conditioned terrain; never rising.
     area_km2 : float64 array, shape (path cells,) [km2]
         Contributing area.
     """
@@ -37,6 +44,7 @@ class Paths:
     bounds: np.ndarray
     cells: np.ndarray
     distance_m: np.ndarray
+    raw_m: np.ndarray
     elevation_m: np.ndarray
     area_km2: np.ndarray
 
@@ -59,28 +67,73 @@ class Paths:
         return first, last
 
 
-def trace(terrain: Terrain, basins: Basins) -> Paths:
+def along(
+    terrain: Terrain, bounds: np.ndarray, cells: np.ndarray, length_correction: LengthCorrection = "none"
+) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """Distance, elevation and contributing area along paths.
+
+    Steps to eight neighbours overstate the length of a straight line by up to 8.2 %, 1 / cos(22.5 degrees), depending
+    on its direction. With the correction "straight" a path is cut into the longest pieces whose cells could be those
+    of one straight line, and each piece is as long as that line (Debled-Rennesson & Reveillès 1995; the estimate
+    converges to the true length as cells get smaller, Coeurjolly & Klette 2004). Pieces in one of the eight directions
+    and bends keep their length: only what cannot be told from a straight line is made one.
+
+    Parameters
+    ----------
+    terrain : Terrain
+    bounds : int64 array, shape (n + 1,)
+    cells : int32 array, shape (path cells,)
+    length_correction : {"none", "straight"}
+
+    Returns
+    -------
+    distance_m, raw_m, elevation_m, area_km2 : float64 arrays, shape (path cells,)
+        As in `Paths`. The elevation is the profile nearest to the conditioned terrain that never rises: that terrain
+        itself where it was conditioned for these directions.
+
+    References
+    ----------
+    Ayer, M., Brunk, H. D., Ewing, G. M., Reid, W. T., & Silverman, E. (1955). An empirical distribution function for
+    sampling with incomplete information. Annals of Mathematical Statistics, 26(4), 641-647.
+
+    Coeurjolly, D., & Klette, R. (2004). A comparative evaluation of length estimators of digital curves. IEEE
+    Transactions on Pattern Analysis and Machine Intelligence, 26(2), 252-258.
+
+    Debled-Rennesson, I., & Reveillès, J.-P. (1995). A linear algorithm for segmentation of digital curves.
+    International Journal of Pattern Recognition and Artificial Intelligence, 9(4), 635-662.
+    """
+    from basinwright.kernels import paths as kernel
+    from basinwright.kernels import straight
+
+    raw_m, elevation_m, area_km2 = kernel.profile(
+        bounds, cells, terrain.directions, terrain.ncols, terrain.step_um, terrain.conditioned_m, terrain.area_m2
+    )
+    distance_m = raw_m
+    if length_correction == "straight":
+        distance_m = straight.straight_distances(bounds, cells, terrain.directions, terrain.ncols, terrain.step_um)
+    return distance_m, raw_m, straight.falling(bounds, raw_m, elevation_m), area_km2
+
+
+def trace(terrain: Terrain, basins: Basins, length_correction: LengthCorrection = "none") -> Paths:
     """Trace the longest flow path of every outlet.
 
     Parameters
     ----------
     terrain : Terrain
     basins : Basins
+    length_correction : {"none", "straight"}
+        Of the distances along it (`along`); which path is the longest is decided without.
 
     Returns
     -------
     Paths
     """
-    from basinwright.kernels import paths as kernel
     from basinwright.kernels.trace import trace_paths
 
     starts = basins.by_outlet(basins.farthest_cell, failed=NO_CELL)
     ends = basins.by_outlet(basins.label_cell, failed=NO_CELL)
     bounds, cells = trace_paths(terrain.directions, terrain.ncols, starts, ends)
-    distance_m, elevation_m, area_km2 = kernel.profile(
-        bounds, cells, terrain.directions, terrain.ncols, terrain.step_um, terrain.conditioned_m, terrain.area_m2
-    )
-    return Paths(bounds, cells, distance_m, elevation_m, area_km2)
+    return Paths(bounds, cells, *along(terrain, bounds, cells, length_correction))
 
 
 def profile_measures(
@@ -106,11 +159,11 @@ def profile_measures(
     Returns
     -------
     dict of arrays, shape (n,)
-        ``path_length_m``; ``centroid_length_m``, along the path from the outlet to the point of the path that
-        is nearest to the centroid; ``path_slope_pct``, fall over length; ``path_slope_1085_pct``, between 10 and
-        85 % of the length from the outlet, on the profile interpolated between cell centres;
-        ``deepest_fill_m``, by which conditioning raised the terrain under the path, outlet included. NaN where
-        the path is empty, slopes also where it is a single cell.
+        ``path_length_m``; ``path_length_raw_m``, before correction; ``centroid_length_m``, along the path from the
+        outlet to the point of the path that is nearest to the centroid; ``path_slope_pct``, fall over
+        length; ``path_slope_1085_pct``, between 10 and 85 % of the length from the outlet, on the profile interpolated
+        between cell centres; ``deepest_fill_m``, by which conditioning raised the terrain under the path, outlet
+        included. NaN where the path is empty, slopes also where it is a single cell.
     """
     from basinwright.kernels import paths as kernel
 
@@ -139,6 +192,7 @@ def profile_measures(
         deepest[some] = np.maximum.reduceat(raised, bounds[:-1][some])
     return {
         "path_length_m": length,
+        "path_length_raw_m": paths.at_ends(paths.raw_m)[1],
         "centroid_length_m": length - nearest,
         "path_slope_pct": slope_pct,
         "path_slope_1085_pct": slope_1085_pct,

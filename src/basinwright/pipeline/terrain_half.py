@@ -149,8 +149,8 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
     paths = store.stage(
         "paths",
         "Tracing the longest flow paths",
-        {"basins": basins.key},
-        lambda draft: _paths(grid, elevation, routing.record(Terrain, "terrain"), basins, draft),
+        {"basins": basins.key, "length_correction": project.terrain.length_correction},
+        lambda draft: _paths(inputs, grid, elevation, routing.record(Terrain, "terrain"), basins, draft),
     )
     tables = store.stage(
         "tables",
@@ -272,19 +272,20 @@ def _basins(inputs: Inputs, grid: Grid, elevation: Entry, terrain: Terrain, chan
     keep_columns(draft, "measures", measures)
 
 
-def _paths(grid: Grid, elevation: Entry, terrain: Terrain, basins_entry: Entry, draft: Draft) -> None:
+def _paths(inputs: Inputs, grid: Grid, elevation: Entry, terrain: Terrain, basins_entry: Entry, draft: Draft) -> None:
     from basinwright.basins import Basins
     from basinwright.paths import profile_measures, reach_measures, trace
 
     basins = basins_entry.record(Basins, "basins")
     measures = kept_columns(basins_entry, "measures")
-    paths = trace(terrain, basins)
+    correction = inputs.project.terrain.length_correction
+    paths = trace(terrain, basins, correction)
     profile = profile_measures(
         grid, terrain, elevation.array("elevation_m"), paths, measures["centroid_x"], measures["centroid_y"]
     )
     draft.record(paths, "paths")
     keep_columns(draft, "profile", profile)
-    keep_columns(draft, "reaches", reach_measures(terrain, basins))
+    keep_columns(draft, "reaches", reach_measures(terrain, basins, correction))
 
 
 def _cover(inputs: Inputs, draft: Draft) -> None:
@@ -555,7 +556,6 @@ def _outlet_rows(
         "longitude": longitude,
         "latitude": latitude,
         "snap_m": snapped.snap_m,
-        "path_length_raw_m": measures["path_length_m"],
         "open_water_pct": open_water_pct,
         **{name: measures[name] for name in _MEASURED},
     }
@@ -586,9 +586,9 @@ def _outlet_rows(
 
 
 _MEASURED = (
-    "area_km2", "centroid_length_m", "path_length_m", "relief_m", "basin_slope_pct", "path_slope_pct",
-    "path_slope_1085_pct", "mean_elevation_m", "drainage_density_per_km", "reach_length_m", "reach_fall_m",
-    "reach_area_km2",
+    "area_km2", "centroid_length_m", "path_length_m", "path_length_raw_m", "relief_m", "basin_slope_pct",
+    "path_slope_pct", "path_slope_1085_pct", "mean_elevation_m", "drainage_density_per_km", "reach_length_m",
+    "reach_fall_m", "reach_area_km2",
 )  # fmt: skip
 
 
