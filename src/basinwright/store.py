@@ -85,12 +85,14 @@ class Entry:
 
     def frame(self, name: str) -> pd.DataFrame:
         """Read a table that `Draft.frame` kept."""
+        import numpy as np
         import pandas as pd
 
-        columns = self.values(name)
-        return pd.DataFrame(
-            {stem: self.array(f"{name}.{stem}") if listed is None else listed for stem, listed in columns}, copy=True
-        ).astype({stem: object for stem, listed in columns if listed is not None})
+        columns = {}
+        for stem, different in self.values(name):
+            array = self.array(f"{name}.{stem}")
+            columns[stem] = array if different is None else np.array(different, dtype=object)[array]
+        return pd.DataFrame(columns, copy=True)
 
     def _field(self, name: str, part: str, plain: dict[str, Any]) -> Any:
         import numpy as np
@@ -114,13 +116,17 @@ class Draft:
         np.save(self.folder / f"{name}.npy", array, allow_pickle=False)
 
     def frame(self, name: str, frame: pd.DataFrame) -> None:
-        """Keep a table: numbers as arrays, everything else as plain values."""
-        columns: list[tuple[str, list[Any] | None]] = []
+        """Keep a table of numbers and texts."""
+        import pandas as pd
+
+        columns: list[tuple[str, list[str] | None]] = []
         for stem in frame:
-            numeric = frame[stem].dtype != object
-            columns.append((str(stem), None if numeric else frame[stem].tolist()))
-            if numeric:
-                self.array(f"{name}.{stem}", frame[stem].to_numpy())
+            array, different = frame[stem].to_numpy(), None
+            if array.dtype == object:
+                array, names = pd.factorize(array)
+                different = names.tolist()
+            self.array(f"{name}.{stem}", array)
+            columns.append((str(stem), different))
         self.values(name, columns)
 
     def values(self, name: str, values: Any) -> None:

@@ -7,6 +7,7 @@ suffix and unit; `Table.fields` does the naming.
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -486,6 +487,7 @@ ALL: tuple[Table, ...] = (
 
 
 _ROWS_AT_ONCE = 20_000
+_SPECIAL = re.compile(r'[,"\r\n]')
 
 
 def texts(values: Any) -> list[str]:
@@ -497,10 +499,14 @@ def texts(values: Any) -> list[str]:
         Numbers, booleans or text. Floats are written so that they read back exactly, booleans as ``true`` and
         ``false``; NaN and None are missing and left empty.
     """
-    array = values if hasattr(values, "dtype") else None
-    if array is not None and array.dtype.kind == "f":
-        return _number_texts(array)
-    listed = array.tolist() if array is not None else list(values)
+    kind = values.dtype.kind if hasattr(values, "dtype") else "O"
+    if kind == "f":
+        return _number_texts(values)
+    listed = values.tolist() if hasattr(values, "tolist") else list(values)
+    if kind == "b":
+        return ["true" if value else "false" for value in listed]
+    if kind in "iu":
+        return list(map(str, listed))
     return [value if type(value) is str else _text_of(value) for value in listed]
 
 
@@ -524,8 +530,7 @@ class _Quoted(dict[str, str]):
     """Texts as RFC 4180 wants them between commas; most stand in a table many times."""
 
     def __missing__(self, text: str) -> str:
-        special = any(mark in text for mark in ',"\r\n')
-        self[text] = quoted = '"' + text.replace('"', '""') + '"' if special else text
+        self[text] = quoted = '"' + text.replace('"', '""') + '"' if _SPECIAL.search(text) else text
         return quoted
 
 
@@ -567,7 +572,8 @@ def _lines(columns: Mapping[str, Any]) -> Iterator[str]:
     if len(lengths) > 1:
         raise ValueError(f"columns of different lengths: {sorted(lengths)}")
     for first in range(0, max(lengths, default=0), _ROWS_AT_ONCE):
-        cells = [_quoted_texts(values[first : first + _ROWS_AT_ONCE], quoted) for values in columns.values()]
+        rows = slice(first, first + _ROWS_AT_ONCE)
+        cells = [_quoted_texts(values[rows], quoted) for values in columns.values()]
         yield "\r\n".join(map(",".join, zip(*cells, strict=True))) + "\r\n"
 
 

@@ -70,16 +70,21 @@ class TimeArea:
         """Travel time from the farthest point, shape (n,) [h]."""
         return self.travel_time_h[self.offsets[1:] - 1]
 
-    def area_within_km2(self, outlet: int, time_h: ArrayLike) -> Floats:
-        """Area of one outlet whose water has arrived by given times, linear between rows [km2]."""
-        rows = slice(self.offsets[outlet], self.offsets[outlet + 1])
-        return _within(self.travel_time_h[rows], self.area_km2[rows], np.asarray(time_h, dtype=np.float64))
+    def within_km2(self, offsets: Integers, time_h: Floats) -> Floats:
+        """Area of each outlet whose water has arrived by given times, linear between rows [km2].
 
+        Parameters
+        ----------
+        offsets : int array, shape (n + 1,)
+            Outlet i owns the times ``offsets[i]`` up to ``offsets[i + 1]``.
+        time_h : array, shape (times,)
+            Times, never falling within an outlet [h].
+        """
+        from basinwright.kernels.curves import areas_within
 
-def _within(travel_time_h: Floats, area_km2: Floats, time_h: Floats) -> Floats:
-    if travel_time_h[0] > 0.0:
-        travel_time_h, area_km2 = np.concatenate(([0.0], travel_time_h)), np.concatenate(([0.0], area_km2))
-    return np.interp(time_h, travel_time_h, area_km2)
+        within_km2 = np.empty(time_h.shape)
+        areas_within(self.offsets, self.travel_time_h, self.area_km2, offsets, time_h, within_km2)
+        return within_km2
 
 
 def arriving_area_km2(travel_time_h: ArrayLike, area_km2: ArrayLike, unit_duration_h: float) -> Floats:
@@ -218,8 +223,7 @@ def _arrivals(unit_duration_h: Floats, longest_h: Floats, curve: TimeArea | None
         arrived = default_time_area(np.minimum(at / longest_h[outlet], 1.0))
     else:
         whole = curve.area_km2[curve.offsets[1:] - 1]
-        each = [curve.area_within_km2(i, at[offsets[i] : offsets[i + 1]]) for i in range(unit_duration_h.size)]
-        arrived = np.concatenate([np.empty(0), *each]) / whole[outlet]
+        arrived = curve.within_km2(offsets, at) / whole[outlet]
     share = np.diff(arrived, prepend=0.0)
     share[offsets[:-1]] = 0.0
     # What lies at the outlet itself (travel time 0) arrives in the first step.

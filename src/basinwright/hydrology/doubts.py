@@ -65,12 +65,13 @@ def flag_segments(flags: Doubts, segments: Frame, times: SegmentTimes, settings:
     }
     for key, (mark, words) in marks.items():
         of_outlet: dict[int, list[str]] = {}
-        for i in np.flatnonzero(mark).tolist():
-            of_outlet.setdefault(int(segments.outlet[i]), []).append(numbers[i])
+        marked = np.flatnonzero(mark)
+        for i, outlet in zip(marked.tolist(), segments.outlet[marked].tolist(), strict=True):
+            of_outlet.setdefault(outlet, []).append(numbers[i])
         for outlet, rows in of_outlet.items():
             flags.add(outlet, key, f"segment{'s' * (len(rows) > 1)} {', '.join(rows)}: {words}")
     count = len(flags.raised("NO_CHANNEL"))
-    in_channel = segments.outlet[np.isin(segments.text("regime"), IN_CHANNEL)]
+    in_channel = segments.outlet[segments.among("regime", IN_CHANNEL)]
     for outlet in np.flatnonzero(np.bincount(in_channel, minlength=count) == 0).tolist():
         flags.add(outlet, "NO_CHANNEL", "the whole path is sheet and shallow flow")
 

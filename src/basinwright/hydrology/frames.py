@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Collection, Mapping
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -69,6 +69,17 @@ class Frame:
     def number(self, stem: str, period: str = "") -> NDArray[np.float64]:
         """Return a column in the unit used inside, NaN where empty."""
         return self.shown(stem, period) * self._column(stem, period)[1]
+
+    def by_text(self, stem: str, value_of: Callable[[str], Any], dtype: Any = np.float64) -> NDArray[Any]:
+        """Return a value of each row that follows from the text of a column: worked out once for each text."""
+        import pandas as pd
+
+        codes, different = pd.factorize(self.text(stem))
+        return np.array([value_of(text) for text in different.tolist()], dtype=dtype)[codes]
+
+    def among(self, stem: str, chosen: Collection[str]) -> NDArray[np.bool_]:
+        """Return which rows hold one of some texts in a column."""
+        return self.by_text(stem, chosen.__contains__, dtype=bool)
 
     def completed(self, stem: str, computed: NDArray[Any]) -> NDArray[Any]:
         """Return a column with what was computed in its empty cells; what stands there stays as it is written."""

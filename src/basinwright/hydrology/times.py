@@ -22,22 +22,23 @@ if TYPE_CHECKING:
 
 def timed(segments: Frame, settings: Settings, held: set[Cell]) -> SegmentTimes:
     """Time the segments: what a person filled stands, the rest follows from the row."""
-    regime, project = segments.text("regime"), settings.project
-    ids, numbers = segments.text("outlet_id").tolist(), segments.text("segment").tolist()
+    project, scheme = settings.project, settings.scheme
+    filled = {cell[1:] for cell in held if cell[0] == "segments"}
 
     def given(stem: str) -> NDArray[np.float64]:
-        mask = np.array([("segments", i, n, stem) in held for i, n in zip(ids, numbers, strict=True)], dtype=bool)
+        if not filled:
+            return np.full(segments.outlet.size, np.nan)
+        keys = zip(segments.text("outlet_id").tolist(), segments.text("segment").tolist(), strict=True)
+        mask = np.array([(*key, stem) in filled for key in keys], dtype=bool)
         return np.where(mask, segments.number(stem), np.nan)
 
-    sheet, shallow = regime == "sheet", regime == "shallow"
+    sheet, shallow = segments.among("regime", ("sheet",)), segments.among("regime", ("shallow",))
     roughness = given("roughness") * np.where(shallow & (segments.system == "us"), M_PER_FT, 1.0)
-    cover = segments.text("cover").tolist()
-    classes = {code: settings.scheme.find(code) for code in set(cover)}
-    sheet_n = np.array([found.sheet_n if (found := classes[code]) else np.nan for code in cover], dtype=np.float64)
+    sheet_n = segments.by_text("cover", lambda code: found.sheet_n if (found := scheme.find(code)) else np.nan)
     weighted = np.where(sheet, segments.number("roughness"), np.nan)  # by length along the path, from the terrain
     columns = {
         "outlet": segments.outlet,
-        "regime": regime,
+        "regime": segments.text("regime"),
         **{f"{stem}_m": segments.number(stem) for stem in ("from", "to", "top_elevation", "bottom_elevation")},
         "area_km2": segments.number("area"),
         "slope": given("slope"),
@@ -45,8 +46,8 @@ def timed(segments: Frame, settings: Settings, held: set[Cell]) -> SegmentTimes:
         "hydraulic_radius_m": given("hydraulic_radius"),
         "hydraulic_radius_half_m": given("hydraulic_radius_half"),
         "sheet_n": np.where(np.isnan(weighted), sheet_n, weighted),
-        "shallow_category": np.array(
-            [found.shallow if (found := classes[code]) else "" for code in cover], dtype=object
+        "shallow_category": segments.by_text(
+            "cover", lambda code: found.shallow if (found := scheme.find(code)) else "", dtype=object
         ),
     }
     return time_segments(
@@ -104,10 +105,10 @@ def replaced(patches: Patches, curve_number: NDArray[np.float64]) -> Patches:
 
 def path_inputs(segments: Frame, times: SegmentTimes, scheme: Scheme, count: int) -> dict[str, NDArray[np.float64]]:
     """Return what timing methods take from the path: its overland part, sheet roughness, retardance, elevation."""
-    regime, outlet = segments.text("regime"), segments.outlet
+    outlet = segments.outlet
     length = segments.number("to") - segments.number("from")
     fall = segments.number("top_elevation") - segments.number("bottom_elevation")
-    sheet, overland = regime == "sheet", np.isin(regime, ("sheet", "shallow"))
+    sheet, overland = segments.among("regime", ("sheet",)), segments.among("regime", ("sheet", "shallow"))
 
     def summed(values: NDArray[np.float64]) -> NDArray[Any]:
         return np.bincount(outlet, weights=values, minlength=count)
@@ -129,24 +130,23 @@ def path_inputs(segments: Frame, times: SegmentTimes, scheme: Scheme, count: int
 
 def _retardance(segments: Frame, overland_m: NDArray[np.float64], scheme: Scheme, count: int) -> NDArray[np.float64]:
     """Return Kerby's N of the cover on most of each overland reach: the table is not to be interpolated."""
-    cover = segments.text("cover").tolist()
+    rows = np.flatnonzero(overland_m > 0)
+    cover = segments.text("cover")[rows].tolist()
     of_class = {code: found.retardance_n if (found := scheme.find(code)) else np.nan for code in set(cover)}
-    result, longest = np.full(count, np.nan), np.zeros(count)
+    result, longest = [np.nan] * count, [0.0] * count
     by_class: dict[tuple[int, str], float] = {}
-    for outlet, code, metres in zip(segments.outlet.tolist(), cover, overland_m.tolist(), strict=True):
-        if metres > 0:
-            total = by_class[outlet, code] = by_class.get((outlet, code), 0.0) + metres
-            if total > longest[outlet]:
-                longest[outlet], result[outlet] = total, of_class[code]
-    return result
+    for outlet, code, metres in zip(segments.outlet[rows].tolist(), cover, overland_m[rows].tolist(), strict=True):
+        total = by_class[outlet, code] = by_class.get((outlet, code), 0.0) + metres
+        if total > longest[outlet]:
+            longest[outlet], result[outlet] = total, of_class[code]
+    return np.array(result, dtype=np.float64)
 
 
 def lengths(segments: Frame, count: int) -> dict[str, NDArray[Any]]:
     """Sum the lengths of the path by regime, in the unit of the file: exact, since distances are binary fractions."""
     length = segments.shown("to") - segments.shown("from")
-    regime = segments.text("regime")
     kinds = {"sheet_length": ("sheet",), "shallow_length": ("shallow",), "channel_length": IN_CHANNEL}
     return {
-        stem: np.bincount(segments.outlet, weights=length * np.isin(regime, names), minlength=count)
+        stem: np.bincount(segments.outlet, weights=length * segments.among("regime", names), minlength=count)
         for stem, names in kinds.items()
     }

@@ -47,14 +47,16 @@ def outlet_columns(
 def segment_columns(segments: Frame, times: SegmentTimes, edited: set[tuple[str, str]]) -> Columns:
     """Put what was computed into the empty cells of the segment table."""
     us = segments.system == "us"
-    shallow = segments.text("regime") == "shallow"
+    shallow = segments.among("regime", ("shallow",))
     computed = {name.removesuffix("_m").removesuffix("_mps"): array for name, array in times.columns().items()}
     shown = segments.shown_of(computed)
     shown["roughness"] = times.roughness / np.where(shallow & us, M_PER_FT, 1.0)
     for stem in ("slope", "roughness", "hydraulic_radius", "hydraulic_radius_half"):
         shown[stem] = segments.completed(stem, shown[stem])
-    keys = zip(segments.text("outlet_id").tolist(), segments.text("segment").tolist(), strict=True)
-    shown["edited"] = np.array([key in edited for key in keys], dtype=bool)
+    shown["edited"] = np.zeros(segments.outlet.size, dtype=bool)
+    if edited:
+        keys = zip(segments.text("outlet_id").tolist(), segments.text("segment").tolist(), strict=True)
+        shown["edited"] = np.array([key in edited for key in keys], dtype=bool)
     return segments.columns(shown)
 
 
@@ -70,7 +72,7 @@ def timing_columns(
     return {
         "outlet_id": np.repeat(np.array(ids, dtype=object), k),
         "method": np.tile(np.array(list(results), dtype=object), n),
-        "tc_h": woven([result.tc_h.tolist() for result in results.values()]),
+        "tc_h": woven([result.tc_h for result in results.values()]).astype(np.float64),
         "adopted": np.outer(by_method, [key == adopt for key in results]).ravel(),
         "applicable": woven([result.applicable.tolist() for result in results.values()]).astype(bool),
         "reason": woven([result.reason.tolist() for result in results.values()]),
