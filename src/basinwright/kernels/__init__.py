@@ -27,6 +27,11 @@ VOID = 9
 """No elevation here, or halo."""
 FLAT = 10
 """A cell without a lower neighbour that is not resolved yet; absent from finished directions."""
+SINK = 11
+"""Water stays here: a declared sink."""
+
+FREE = 255
+"""Where a prescribed direction is expected: none."""
 
 NO_CELL = -1
 """Where a cell index or a label is expected: none."""

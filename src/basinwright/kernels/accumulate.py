@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from basinwright.kernels import EXIT, FLAT, VOID
+from basinwright.kernels import EXIT, FLAT, SINK, VOID
 from basinwright.kernels.geometry import steps
 
 # During the walk the high half of a direction byte counts the donors that are still to come; 15 marks a cell
@@ -82,7 +82,7 @@ def contributing_area(
         first = row * stride + 1
         for start in range(np.uint64(first), np.uint64(first + ncols)):
             here = directions[start]
-            if here > EXIT:
+            if here > EXIT and here != SINK:
                 continue
             c = start
             area = area_m2[c]
@@ -90,13 +90,13 @@ def contributing_area(
                 directions[c] = here | _DONE
                 order[visited] = c
                 visited += 1
-                if here == EXIT:
+                if here >= EXIT:
                     break
                 c += o[here]
                 area += area_m2[c]
                 area_m2[c] = area
                 here = directions[c] - np.uint8(_ONE_DONOR)
-                if here > EXIT:
+                if here > SINK:
                     directions[c] = here
                     break
     for c in range(directions.size):

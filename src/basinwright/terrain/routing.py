@@ -9,7 +9,7 @@ from typing import Any, Literal
 import numpy as np
 
 from basinwright.errors import TerrainError
-from basinwright.terrain.constraints import Constraints
+from basinwright.terrain.constraints import Constraints, drain
 from basinwright.terrain.encoding import to_azimuth
 from basinwright.terrain.summable import summable_areas_m2
 from basinwright.terrain.tiling import Tiling
@@ -50,7 +50,7 @@ class Terrain:
     conditioned_m : float32 array, shape (cells,) [m]
         Elevations without depressions; +inf in voids and in the halo.
     directions : uint8 array, shape (cells,)
-        0 to 7 clockwise from north, EXIT or VOID.
+        0 to 7 clockwise from north, EXIT, SINK or VOID.
     area_m2 : float64 array, shape (cells,) [m2]
         Contributing area, the cell's own included; 0 in voids.
     order : int32 array, shape (data_cells,)
@@ -196,15 +196,19 @@ def condition_and_route(
     cells = (nrows + 2) * (ncols + 2)
 
     z, largest_rounding = pad(elevation_m)
-    code = np.empty(cells, np.uint8)
-    work = np.empty(cells, np.int32)
-    link = np.empty(cells, np.int32)
-    fill.ways_down(z, nrows, ncols, code)
-    labels = fill.label_catchments(z, code, nrows, ncols, link, work)
-    fill.raise_to_levels(z, link, fill.spill_levels(labels, *fill.find_passes(z, link, nrows, ncols)))
-    directions.steepest_descent(z, nrows, ncols, dx, dy, code)
-    flat_cells = flats.resolve_flats(z, code, nrows, ncols, work, link)
-    del link
+    if constraints is not None:
+        constraints.cut(z)
+        z, code, flat_cells = drain(z, nrows, ncols, dx, dy, constraints)
+    else:
+        code = np.empty(cells, np.uint8)
+        work = np.empty(cells, np.int32)
+        link = np.empty(cells, np.int32)
+        fill.ways_down(z, nrows, ncols, code)
+        labels = fill.label_catchments(z, code, nrows, ncols, link, work)
+        fill.raise_to_levels(z, link, fill.spill_levels(labels, *fill.find_passes(z, link, nrows, ncols)))
+        directions.steepest_descent(z, nrows, ncols, dx, dy, code)
+        flat_cells = flats.resolve_flats(z, code, nrows, ncols, work, link)
+        del link, work
     data_cells, undrained = accumulate.count_cells(code)
     if data_cells == 0:
         raise TerrainError("no cell of the terrain has an elevation: is its nodata value right?")
@@ -212,10 +216,9 @@ def condition_and_route(
         raise TerrainError(f"{undrained} of {data_cells} cells do not drain after filling")
 
     row_area = summable_areas_m2(cell_area, ncols)
-    area = np.empty(cells, np.float64)
-    visited = accumulate.contributing_area(code, nrows, ncols, row_area, area, work)
-    if visited != data_cells:
-        raise TerrainError(f"{data_cells - visited} of {data_cells} cells lie on or below a cycle of directions")
+    area, order = route(code, nrows, ncols, row_area)
+    if order.size != data_cells:
+        raise TerrainError(f"{data_cells - order.size} of {data_cells} cells lie on or below a cycle of directions")
 
     return Terrain(
         nrows=nrows,
@@ -223,7 +226,7 @@ def condition_and_route(
         conditioned_m=z,
         directions=code,
         area_m2=area,
-        order=work[:visited],
+        order=order,
         row_area_m2=row_area,
         step_um=step_lengths_um(dx, dy),
         data_cells=data_cells,
@@ -231,6 +234,31 @@ def condition_and_route(
         **measure_conditioning(elevation_m, z, row_area),
         largest_rounding_m=largest_rounding,
     )
+
+
+def route(directions: np.ndarray, nrows: int, ncols: int, row_area_m2: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Contributing area, and the order of cells from the divides downstream.
+
+    Parameters
+    ----------
+    directions : uint8 array, shape (cells,)
+        Finished directions.
+    nrows, ncols : int
+    row_area_m2 : float64 array, shape (nrows,) [m2]
+        Rounded so that sums are exact.
+
+    Returns
+    -------
+    area_m2 : float64 array, shape (cells,) [m2]
+    order : int32 array, shape (visited,)
+        Fewer than the cells with elevation mean a cycle.
+    """
+    from basinwright.kernels import accumulate
+
+    area = np.empty(directions.size, np.float64)
+    order = np.empty(directions.size, np.int32)
+    visited = accumulate.contributing_area(directions, nrows, ncols, row_area_m2, area, order)
+    return area, order[:visited]
 
 
 def sizes_by_row(
