@@ -112,7 +112,7 @@ def everything(seed, pick):
     pick(travel.add_areas_by_time)(label, time_us, NCOLS, AREA, 30_000_000, first_bin, curve_bounds, curve)
     pick(travel.combine_curves)(parent, order, first_bin, curve_bounds, curve)
     out |= {"receives": receives, "length": length, "fall": fall, "source": source, "time": time_us, "curve": curve}
-    channels, below = pick(network.channel_graph)(code, area, out["order"], NCOLS, 2.5 * AREA[0])
+    channels, below = pick(network.channel_graph)(code, area, NCOLS, 2.5 * AREA[0])
     strahler, donors = pick(network.strahler_orders)(below, area[channels] >= 3.5 * AREA[0])
     stream, drop = pick(network.stream_drops)(below, strahler, z[channels].astype(np.float64))
     _, joins = pick(network.strahler_orders)(below, np.ones(below.size, np.bool_))

@@ -64,7 +64,7 @@ def test_orders_are_those_of_pyflwdir(landscape):
     flow = pyflwdir.from_array(codes, ftype="d8", check_ftype=False)
     least = 1500.0
     theirs = flow.stream_order(type="strahler", mask=terrain.area_grid >= least)
-    cells, below = network.channel_graph(terrain.directions, terrain.area_m2, terrain.order, terrain.ncols, least)
+    cells, below = network.channel_graph(terrain.directions, terrain.area_m2, terrain.ncols, least)
     strahler, _ = whole(below)
     ours = np.zeros(z.shape, int)
     ours[terrain.rows_cols(cells)] = strahler

@@ -16,7 +16,7 @@ from basinwright.kernels.geometry import steps
 
 @njit(cache=True, nogil=True)
 def channel_graph(
-    directions: np.ndarray, area_m2: np.ndarray, order: np.ndarray, ncols: int, least_m2: float
+    directions: np.ndarray, area_m2: np.ndarray, ncols: int, least_m2: float
 ) -> tuple[np.ndarray, np.ndarray]:
     """Channel cells and how they hang together.
 
@@ -24,37 +24,53 @@ def channel_graph(
     ----------
     directions : uint8 array, shape (cells,)
     area_m2 : float64 array, shape (cells,) [m2]
-        Never smaller downstream.
-    order : int32 array, shape (data_cells,)
-        Every cell after all cells that drain into it.
+        Never smaller downstream; 0 in voids and halo.
     ncols : int
     least_m2 : float [m2]
-        Area at which a cell is a channel.
+        Area at which a cell is a channel; over 0.
 
     Returns
     -------
     cells : int32 array, shape (m,)
-        Padded indices, from the divides downstream.
+        Padded indices, from the divides downstream, whatever order the rest of the terrain was routed in.
     below : int32 array, shape (m,)
         Position in ``cells`` of the next cell down, -1 for none.
     """
     o = steps(ncols + 2)
     count = 0
-    for c in order:
+    for c in range(area_m2.size):
         count += area_m2[c] >= least_m2
-    cells = np.empty(count, np.int32)
-    position = np.empty(directions.size, np.int32)
+    rowwise = np.empty(count, np.int32)
     count = 0
-    for c in order:
+    for c in range(area_m2.size):
         if area_m2[c] >= least_m2:
-            cells[count] = c
-            position[c] = count
+            rowwise[count] = c
             count += 1
+    down = np.full(count, NO_CELL, np.int32)
+    donors = np.zeros(count, np.uint8)
+    for i in range(count):
+        c = rowwise[i]
+        if directions[c] < EXIT:
+            down[i] = np.searchsorted(rowwise, np.int32(c + np.int64(o[directions[c]])))
+            donors[down[i]] += np.uint8(1)
+
+    cells = np.empty(count, np.int32)
+    position = np.empty(count, np.int32)
+    done = 0
+    for head in range(count):
+        i = head
+        while i >= 0 and donors[i] == 0:
+            donors[i] = 255  # done
+            cells[done] = rowwise[i]
+            position[i] = done
+            done += 1
+            i = down[i]
+            if i >= 0:
+                donors[i] -= np.uint8(1)
     below = np.full(count, NO_CELL, np.int32)
     for i in range(count):
-        c = cells[i]
-        if directions[c] < EXIT:
-            below[i] = position[c + np.int64(o[directions[c]])]
+        if down[i] >= 0:
+            below[position[i]] = position[down[i]]
     return cells, below
 
 

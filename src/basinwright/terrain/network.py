@@ -76,7 +76,7 @@ def channel_reaches(terrain: Terrain, stream_area_km2: float) -> Reaches:
     from basinwright.kernels import network
 
     cells, below = network.channel_graph(
-        terrain.directions, terrain.area_m2, terrain.order, terrain.ncols, stream_area_m2(stream_area_km2)
+        terrain.directions, terrain.area_m2, terrain.ncols, stream_area_m2(stream_area_km2)
     )
     strahler, donors = network.strahler_orders(below, np.ones(cells.size, np.bool_))
     heads = np.flatnonzero((donors != 1) & (below >= 0))
@@ -164,7 +164,7 @@ def drop_test(terrain: Terrain) -> list[DropComparison]:
     if not candidates:
         return []
     cells, below = network.channel_graph(
-        terrain.directions, terrain.area_m2, terrain.order, terrain.ncols, stream_area_m2(candidates[0])
+        terrain.directions, terrain.area_m2, terrain.ncols, stream_area_m2(candidates[0])
     )
     area_m2, elevation_m = terrain.area_m2[cells], terrain.conditioned_m[cells].astype(np.float64)
     tested: list[DropComparison] = []
