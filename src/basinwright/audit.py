@@ -2,7 +2,8 @@
 
 Each audited basin is clipped with a margin. pysheds delineates it twice: on our flow directions, which checks labels
 and sums, and from the unconditioned elevations with its own filling, flats and directions, which checks the terrain as
-well. It runs apart because importing it compiles for a minute the first time, and its faults shall not be ours.
+well. Where the two basins differ, the cells at which they part say why. It runs apart because importing it compiles
+for a minute the first time, and its faults shall not be ours.
 
 Run as a program (``python -m basinwright.audit``) this module is the child.
 """
@@ -18,9 +19,9 @@ import sys
 import tempfile
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, field
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, NamedTuple
 
 from basinwright.errors import BasinwrightError
 from basinwright.kernels import EXIT
@@ -44,6 +45,8 @@ class Clip:
     ----------
     elevation_m : (rows, cols) array
         Unconditioned elevations [m], NaN in voids.
+    conditioned_m : (rows, cols) array
+        Our conditioned elevations [m], infinite in voids.
     directions : (rows, cols) array of uint8
         Our direction codes.
     cell_area_m2 : (rows,) array
@@ -55,6 +58,7 @@ class Clip:
     """
 
     elevation_m: np.ndarray
+    conditioned_m: np.ndarray
     directions: np.ndarray
     cell_area_m2: np.ndarray
     cell_m: tuple[float, float]
@@ -75,11 +79,31 @@ class Opinion:
     lost_km2 : float
         Area that ends inside the basin, in cells to which its own flats gave no direction: on terrain in whole metres
         often cells of the river. Where that water goes it does not say.
+    differs_km2 : float
+        Area that only one of the two has: ours, and the one by its own conditioning.
+    causes_km2 : dict of str to float
+        That area by the reason for which directions part where its water leaves or joins the common basin (`CAUSES`).
     """
 
     same_directions_km2: float
     own_conditioning_km2: float
     lost_km2: float
+    differs_km2: float = 0.0
+    causes_km2: dict[str, float] = field(default_factory=dict)
+
+
+CAUSES = {
+    "edge": "beside a void or the edge of the window",
+    "cut": "conditioning moved the ground differently there",
+    "flat": "level ground after conditioning",
+    "tie": "two neighbours equally steep",
+    "other": "none of these",
+}
+"""Why two sets of directions part at a cell, in the order in which they are looked for."""
+TIE_SLOPE = 1e-6
+"""Slopes that differ by less are equal: elevations of 1000 m in single precision hold a tenth of a millimetre."""
+_MOVED_M = 1e-3
+"""Conditioned elevations that differ by more were conditioned differently, not rounded."""
 
 
 def _ask(folder: str) -> subprocess.CompletedProcess[str]:
@@ -143,6 +167,7 @@ def _answer(folder: Path) -> None:
         clips = [
             Clip(
                 asked[f"elevation_m_{i}"],
+                asked[f"conditioned_m_{i}"],
                 asked[f"directions_{i}"],
                 asked[f"cell_area_m2_{i}"],
                 tuple(asked[f"cell_m_{i}"].tolist()),
@@ -187,10 +212,102 @@ def _delineate(clip: Clip) -> Opinion:
     area = np.broadcast_to(area_km2[:, None], elevation.shape).copy()
     drained_km2 = np.asarray(grid.accumulation(own, weights=raster(area, np.float64(0))))
     around_km2 = drained_km2[row - 1 : row + 2, col - 1 : col + 2].ravel()
-    own_km2 = float(around_km2[np.argmin(np.abs(around_km2 - same_km2))])
+    nearest = int(np.argmin(np.abs(around_km2 - same_km2)))
+    own_km2 = float(around_km2[nearest])
+    own_row, own_col = row - 1 + nearest // 3, col - 1 + nearest % 3
     ends = (np.asarray(own) < 0) & basin & ~_beside_void(elevation)  # beside a void water may leave
     ends[row, col] = False
-    return Opinion(same_km2, own_km2, float(drained_km2[ends].sum()))
+    theirs = np.asarray(grid.catchment(x=own_col, y=own_row, fdir=own, xytype="index"), dtype=bool)
+    conditioned = np.pad(clip.conditioned_m.astype(np.float64), 1, constant_values=np.inf)
+    causes_km2 = _causes(
+        Drawn(basin, _downstream(codes, (row, col)), conditioned),
+        Drawn(theirs, _downstream(np.asarray(own), (own_row, own_col)), np.asarray(filled, dtype=np.float64)),
+        elevation, area, clip.cell_m,
+    )  # fmt: skip
+    return Opinion(same_km2, own_km2, float(drained_km2[ends].sum()), sum(causes_km2.values(), 0.0), causes_km2)
+
+
+class Drawn(NamedTuple):
+    """A basin as one program draws it: its cells, the next cell down of each (flat index, -1 for none), its ground."""
+
+    basin: np.ndarray
+    down: np.ndarray
+    surface_m: np.ndarray
+
+
+def _downstream(codes: np.ndarray, outlet: tuple[int, int]) -> np.ndarray:
+    """Return the flat index of the next cell down of every cell, by pysheds' codes; -1 for none and at the outlet."""
+    import numpy as np
+
+    ncols = codes.shape[1]
+    offset = np.zeros(256, dtype=np.int64)
+    offset[list(_PYSHEDS_CODES)] = (-ncols, 1 - ncols, 1, ncols + 1, ncols, ncols - 1, -1, -ncols - 1)
+    step = offset[np.maximum(codes, 0)]
+    down = np.where(step == 0, -1, np.arange(codes.size).reshape(codes.shape) + step)
+    down[outlet] = -1
+    return down.ravel()
+
+
+def _causes(
+    ours: Drawn, theirs: Drawn, elevation: np.ndarray, area_km2: np.ndarray, cell_m: tuple[float, float]
+) -> dict[str, float]:
+    """Share out the area that only one of two basins has among the causes, largest first."""
+    import numpy as np
+
+    edge = _beside_void(elevation).ravel()
+    total: dict[str, float] = {}
+    for one, other in ((ours, theirs), (theirs, ours)):
+        alone = (one.basin & ~other.basin).ravel()
+        parts = _last_before(one.down, alone)[alone]
+        cells, index = np.unique(parts, return_inverse=True)
+        km2 = np.bincount(index, weights=area_km2.ravel()[alone], minlength=cells.size)
+        causes = _cause_at(cells, one, other, edge, elevation.shape[1], cell_m)
+        for name in CAUSES:
+            if (causes == name).any():
+                total[name] = total.get(name, 0.0) + float(km2[causes == name].sum())
+    return dict(sorted(total.items(), key=lambda entry: -entry[1]))
+
+
+def _last_before(down: np.ndarray, alone: np.ndarray) -> np.ndarray:
+    """Return for every cell of a set the last cell on its way down that is still in the set."""
+    import numpy as np
+
+    here = np.arange(down.size)
+    stays = alone & (down >= 0) & alone[np.maximum(down, 0)]
+    last = np.where(stays, down, here)
+    while True:  # each pass doubles the way looked ahead
+        further = last[last]
+        if np.array_equal(further, last):
+            return last
+        last = further
+
+
+def _cause_at(
+    cells: np.ndarray, one: Drawn, other: Drawn, edge: np.ndarray, ncols: int, cell_m: tuple[float, float]
+) -> np.ndarray:
+    """Say why the directions of two programs part at each of some cells."""
+    import numpy as np
+
+    nexts = [np.where(drawn.down[cells] >= 0, drawn.down[cells], cells) for drawn in (one, other)]
+    ends = other.down[cells] < 0
+    near = [cells, *nexts]
+    surfaces = [drawn.surface_m.ravel() for drawn in (one, other)]
+
+    def slope(surface: np.ndarray, to: np.ndarray) -> np.ndarray:
+        rows, cols = np.abs(to // ncols - cells // ncols), np.abs(to % ncols - cells % ncols)
+        length_m = np.hypot(rows * cell_m[1], cols * cell_m[0])
+        with np.errstate(invalid="ignore", divide="ignore"):
+            return np.where(length_m > 0, (surface[cells] - surface[to]) / length_m, 0.0)
+
+    with np.errstate(invalid="ignore"):
+        moved = [np.abs(surfaces[0][place] - surfaces[1][place]) > _MOVED_M for place in near]
+    conditions = {
+        "edge": np.logical_or.reduce([edge[place] for place in near]),
+        "cut": np.logical_or.reduce(moved),
+        "flat": ends | (slope(surfaces[0], nexts[0]) <= 0) | (slope(surfaces[1], nexts[1]) <= 0),
+        "tie": np.abs(slope(surfaces[0], nexts[0]) - slope(surfaces[0], nexts[1])) <= TIE_SLOPE,
+    }
+    return np.select(list(conditions.values()), list(conditions), default="other")
 
 
 def _beside_void(elevation: np.ndarray) -> np.ndarray:

@@ -143,7 +143,7 @@ FLAGS: dict[str, FlagKind] = {
                  "check the curve number and the depth: the peak is reported as zero"),
         FlagKind("AUDIT_DIFFERS", "serious",
                  "the second opinion differs by over 1 % in area",
-                 "look at both basins on the map before using either"),
+                 "look where the two part: flats and ties are a matter of the rule, cuts of the conditioning"),
         FlagKind("OUTLET_FAILED", "serious",
                  "this outlet could not be computed",
                  "mend what the message names; the other outlets are not affected"),

@@ -54,6 +54,9 @@ def test_pysheds_finds_the_same_basins(run, outlets):
         area_km2 = float(row["area_km2"])
         assert opinion["same_directions_km2"] == pytest.approx(area_km2, rel=1e-9)
         assert opinion["own_conditioning_km2"] == pytest.approx(area_km2, rel=0.01)
+        assert sum(opinion["causes_km2"].values()) == pytest.approx(opinion["differs_km2"])
+        assert opinion["differs_km2"] >= abs(opinion["own_conditioning_km2"] - area_km2) - 1e-9
+        assert opinion["causes_km2"].keys() <= {"edge", "cut", "flat", "tie"}, "whole metres: no rounding between them"
     assert not any("AUDIT_DIFFERS" in row["flags"] for row in outlets.values())
 
 

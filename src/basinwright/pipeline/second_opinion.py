@@ -60,6 +60,9 @@ def _difference(area_km2: float, opinion: Opinion) -> str:
         off = other / area_km2 - 1.0
         if max(off, -off - lost / area_km2) > DIFFERS_OVER:
             parts.append(f"pysheds {name} {other:.4g} km2, {off:+.1%}")
+    if parts and opinion.differs_km2 > 0:
+        causes = ", ".join(f"{name} {km2:.3g}" for name, km2 in opinion.causes_km2.items())
+        parts.append(f"{opinion.differs_km2:.4g} km2 belong to one basin only (by cause, km2: {causes})")
     if parts and opinion.lost_km2 > 0:
         parts.append(f"its flats left {opinion.lost_km2:.4g} km2 undrained")
     return "; ".join(parts)
@@ -69,6 +72,7 @@ def _clips(half: TerrainHalf, basins: Basins, chosen: np.ndarray) -> list[Clip]:
     """Cut out each basin with a margin, voids outside the raster."""
     terrain, grid = half.routed(), half.grid
     elevation, directions = half.elevation.array("elevation_m"), terrain.directions_grid
+    conditioned = terrain.grid(terrain.conditioned_m)
     boxes = _boxes(terrain.grid(basins.label), basins)
     clips = []
     for i in chosen.tolist():
@@ -81,6 +85,7 @@ def _clips(half: TerrainHalf, basins: Basins, chosen: np.ndarray) -> list[Clip]:
         clips.append(
             Clip(
                 np.array(elevation[rows, cols]),
+                np.array(conditioned[rows, cols]),
                 np.array(directions[rows, cols]),
                 np.array(grid.cell_area_m2[rows]),
                 (float(grid.dx_m[middle]), float(grid.dy_m[middle])),
