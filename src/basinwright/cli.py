@@ -153,6 +153,37 @@ def report(
 
 
 @app.command()
+def explain(
+    folder: RunDir,
+    outlet_id: Annotated[str, typer.Argument(metavar="OUTLET_ID", help="The outlet.")],
+    column: Annotated[
+        str,
+        typer.Argument(metavar="COLUMN", help="A column, such as peak_10yr_cfs, or with its table: segments.slope."),
+    ],
+    depth: Annotated[int, typer.Option(metavar="N", min=0, help="Explain inputs in turn, to this depth.")] = 1,
+    where: Annotated[
+        list[str] | None,
+        typer.Option(
+            metavar="COLUMN=VALUE", help="Which row, where the outlet has several: segment=3, method=kirpich."
+        ),
+    ] = None,
+    json_wanted: Annotated[bool, typer.Option("--json", help="Print plain values for other programs.")] = False,
+) -> int:
+    """Say where one number of a finished run came from: formula, inputs, published row, cells, flags."""
+    import json
+
+    from basinwright import explaining
+
+    chosen = dict(text.partition("=")[::2] for text in where or [])
+    explanation = explaining.explain(folder, outlet_id, column, depth=depth, where=chosen)
+    if json_wanted:
+        print(json.dumps(explaining.as_values(explanation), indent=1, ensure_ascii=False))
+    else:
+        print(explaining.as_text(explanation), end="")
+    return DONE
+
+
+@app.command()
 def methods() -> int:
     """Print every timing method, unit hydrograph, storm and published table shipped, with source and range."""
     from basinwright import catalogue

@@ -8,6 +8,7 @@ import warnings
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
+from functools import cache
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
@@ -19,7 +20,7 @@ from basinwright.grid import Grid
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
-    from pyproj import CRS
+    from pyproj import CRS, Transformer
     from rasterio.io import DatasetReader
 
 Resampling = Literal["nearest", "bilinear", "average"]
@@ -453,3 +454,39 @@ def write_cog(
         )  # fmt: skip
     finally:
         draft.unlink(missing_ok=True)
+
+
+@cache
+def _transformer(from_crs: str, to_crs: str) -> Transformer:
+    from pyproj import Transformer
+
+    return Transformer.from_crs(from_crs, to_crs, always_xy=True)
+
+
+def pixel_at(path: Location, crs: str, x: float, y: float) -> tuple[int, int, str] | None:
+    """Return the pixel of a raster under a point: row and column from 0, and its value as text.
+
+    Parameters
+    ----------
+    path : Path or str
+        The raster.
+    crs : str
+        CRS of the point.
+    x, y : float
+        The point.
+
+    Returns
+    -------
+    tuple of int, int and str, or None
+        None where the point lies outside. The value is ``nodata`` where the raster has none.
+    """
+    import rasterio
+    from rasterio.windows import Window
+
+    with rasterio.open(path) as source:
+        easting, northing = _transformer(crs, source.crs.to_wkt()).transform(x, y)
+        row, col = source.index(easting, northing)
+        if not (0 <= row < source.height and 0 <= col < source.width):
+            return None
+        value = source.read(1, window=Window(col, row, 1, 1), masked=True)[0, 0]
+        return row, col, "nodata" if np.ma.is_masked(value) else repr(value.item())
