@@ -30,7 +30,8 @@ from pydantic import (
 )
 from pydantic_core import ErrorDetails, PydanticCustomError
 
-from basinwright.errors import InputRejected, Problem
+from basinwright.confidence import score_correlation
+from basinwright.errors import InputRejected, Problem, RangeError
 from basinwright.units import INSIDE, QuantityError, parse_quantity, unit_of_suffix
 
 
@@ -107,6 +108,97 @@ def _one_of(*values: float) -> AfterValidator:
 def _default(text: str) -> Any:
     """Give an option its default as a person would write it."""
     return Field(default=text, validate_default=True)
+
+
+def _pair(value: Any, one: Callable[[Any], float], example: str) -> tuple[float, float]:
+    """Read a range: its two ends, or what it reaches to either side of the value in use."""
+    if isinstance(value, list | tuple):
+        if len(value) != 2:
+            raise _reject(f"{list(value)!r} is no range", f"give its two ends, such as {example}")
+        low, high = map(one, value)
+    else:
+        high = one(value)
+        low = -high
+    if not low < high:
+        raise _reject(f"{value!r} is an empty or reversed range", f"give the lower end first, such as {example}")
+    return low, high
+
+
+def _plain_number(value: Any) -> float:
+    if isinstance(value, bool) or not isinstance(value, int | float) or not math.isfinite(value):
+        raise _reject(f"{value!r} is not a plain number", "give a number without unit")
+    return float(value)
+
+
+def _read_shift(value: Any) -> tuple[float, float]:
+    return _pair(value, _plain_number, "[-5, 5]")
+
+
+def _read_shares(value: Any) -> tuple[float, float]:
+    low, high = _pair(value, lambda end: _parse(end, "share"), '["-30 %", "30 %"]')
+    if low <= -1.0:
+        raise _reject(f"{value!r} reaches down to nothing", "let it begin above -100 %")
+    return low, high
+
+
+def _read_factors(value: Any) -> tuple[float, float]:
+    """Read a factor that divides and multiplies, or the two factors themselves."""
+    if not isinstance(value, list | tuple):
+        factor = _plain_number(value)
+        if factor <= 1.0:
+            raise _reject(f"{value!r} makes an empty or reversed range", "give a factor over 1, such as 2")
+        value = [1.0 / factor, factor]
+    low, high = _pair(value, _plain_number, "[0.5, 2]")
+    if not 0.0 < low < 1.0 < high:
+        raise _reject(f"{value!r} does not lie on both sides of 1", "give factors such as [0.5, 2]")
+    return low, high
+
+
+def _read_factor_range(value: Any) -> float | tuple[float, float]:
+    if isinstance(value, list | tuple):
+        return _pair(value, _plain_number, "[300, 600]")
+    half = _plain_number(value)
+    if half <= 0:
+        raise _reject(f"{value!r} makes an empty or reversed range", "give a number over zero, or a pair")
+    return half
+
+
+def _read_depths(value: Any) -> tuple[float, float] | dict[str, tuple[float, float]]:
+    """Read a range of depths: shares of the depths in use, or limits of the depth of each return period."""
+    if not isinstance(value, dict):
+        return _read_shares(value)
+    limits = {}
+    for period, ends in value.items():
+        _check_period(str(period))
+        limits[str(period)] = _pair(ends, lambda end: _parse(end, "depth"), '["4.1 in", "5.2 in"]')
+        if not isinstance(ends, list | tuple) or limits[str(period)][0] <= 0:
+            raise _reject(f"{ends!r} is no pair of depths", 'give both limits, such as ["4.1 in", "5.2 in"]')
+    return limits
+
+
+def _write_shares(ends: tuple[float, float]) -> list[str]:
+    return [_percent(end) for end in ends]
+
+
+def _percent(share: float) -> str:
+    """Return a share as text that reads back exactly."""
+    texts = [f"{share * 100:.{digits}g} %" for digits in (15, 16, 17)]
+    return next((text for text in texts if parse_quantity(text, "share") == share), texts[-1])
+
+
+def _write_depths(value: tuple[float, float] | dict[str, tuple[float, float]]) -> Any:
+    if not isinstance(value, dict):
+        return _write_shares(value)
+    return {period: [f"{end!r} mm" for end in ends] for period, ends in value.items()}
+
+
+Shift = Annotated[tuple[float, float], BeforeValidator(_read_shift)]
+ShareRange = Annotated[tuple[float, float], BeforeValidator(_read_shares), PlainSerializer(_write_shares)]
+FactorPair = Annotated[tuple[float, float], BeforeValidator(_read_factors)]
+FactorRange = Annotated[float | tuple[float, float], BeforeValidator(_read_factor_range)]
+DepthRange = Annotated[
+    tuple[float, float] | dict[str, tuple[float, float]], BeforeValidator(_read_depths), PlainSerializer(_write_depths)
+]
 
 
 class Section(BaseModel):
@@ -271,15 +363,76 @@ class Timing(Section):
     minimum: TimeOrNone = _default("6 min")
 
 
+PEAK_RATE_FACTORS = (100, 600)
+"""Peak rate factors that may be given."""
+
+
 class UnitHydrograph(Section):
     """[unit_hydrograph]."""
 
     shape: str = "curvilinear"
-    peak_rate_factor: Annotated[Plain, Field(ge=100, le=600)] = 484
+    peak_rate_factor: Annotated[Plain, Field(ge=PEAK_RATE_FACTORS[0], le=PEAK_RATE_FACTORS[1])] = 484
     time_step: TimeOrAuto = "auto"
     ct: Annotated[Plain, Field(gt=0)] = 2.0
     cp: Annotated[Plain, Field(gt=0)] = 0.6
     storage_ratio: Annotated[Plain, Field(gt=0, lt=1)] = 0.5
+
+
+class Correlated(Section):
+    """Two uncertain inputs that go together, by Spearman's rank correlation."""
+
+    inputs: tuple[str, str]
+    rank: Annotated[Plain, Field(gt=-1, lt=1)]
+
+
+class Uncertainty(Section):
+    """[uncertainty]: an input varies where it has a range; every value in it is as likely as any other.
+
+    Parameters
+    ----------
+    samples, seed : int
+        Size and seed of the sample.
+    curve_number : (low, high)
+        Added to the curve number of every patch.
+    roughness : (low, high)
+        Shares by which the roughness all along the path differs.
+    peak_rate_factor : half-range or (low, high)
+        By the gamma unit hydrograph.
+    stream_area_factor : (low, high)
+        Factors on the area at which channels begin.
+    depths : (low, high), or mapping of return period to (low, high)
+        Shares by which all storm depths differ, or limits of each [mm]; they move together.
+    stage : {"swing", "sample"}
+        Whether the stage of the channels, bankfull or half of it, only swings or is in the sample too.
+    correlated : list of Correlated
+        Inputs that go together in the sample; all others are independent.
+    """
+
+    samples: Annotated[int, Field(ge=20, le=100_000, strict=True)] = 500
+    seed: Annotated[int, Field(ge=0, strict=True)] = 1
+    curve_number: Shift | None = None
+    roughness: ShareRange | None = None
+    peak_rate_factor: FactorRange | None = None
+    stream_area_factor: FactorPair | None = None
+    depths: DepthRange | None = None
+    stage: Literal["swing", "sample"] = "swing"
+    correlated: list[Correlated] = Field(default_factory=list)
+
+    @property
+    def sampled(self) -> list[str]:
+        """The inputs in the sample, in a fixed order."""
+        names = [name for name in UNCERTAIN if name != "stage" and getattr(self, name) is not None]
+        return [*names, "stage"] if self.stage == "sample" else names
+
+
+UNCERTAIN = ("curve_number", "roughness", "peak_rate_factor", "stream_area_factor", "depths", "stage")
+"""Inputs that may have a range."""
+
+
+class Check(Section):
+    """[check]."""
+
+    regression: str | None = None
 
 
 class Audit(Section):
@@ -338,8 +491,8 @@ class Project(Section):
     runoff: Runoff = Runoff()
     timing: Timing = Timing()
     unit_hydrograph: UnitHydrograph = UnitHydrograph()
-    uncertainty: dict[str, Any] | None = None
-    check: dict[str, Any] | None = None
+    uncertainty: Uncertainty | None = None
+    check: Check | None = None
     scenario: list[Scenario] = Field(default_factory=list)
     audit: Audit = Audit()
     compute: Compute = Compute()
@@ -367,8 +520,6 @@ LATER: tuple[tuple[str, str, Callable[[Any], bool], str], ...] = (
     ),
     ("compute", "scheduler", lambda value: value != "", "leave it empty"),
     ("compute", "memory", lambda value: value != "auto", 'use "auto"'),
-    ("", "uncertainty", lambda value: value is not None, "leave the section out"),
-    ("", "check", lambda value: value is not None, "leave the section out"),
 )
 """Options of later versions: section, key, whether a value asks for what is not served yet, what to do instead."""
 
@@ -599,10 +750,16 @@ def _conflicts(data: dict[str, Any]) -> Iterator[tuple[str, str, str]]:
             'set shape = "gamma"',
         )
     yield from _storm_conflicts(section("storm"))
-    yield from _scenario_conflicts(_scenarios(data), section("cover"))
+    yield from _scenario_conflicts(_scenarios(data), section("cover"), section("uncertainty"))
+    if "check" in data and not section("check").get("regression"):
+        yield "check.regression", "missing", 'name the table of equations, such as "regional.csv"'
+    if "uncertainty" in data:
+        yield from _uncertainty_conflicts(section("uncertainty"), section("unit_hydrograph"), section("storm"))
 
 
-def _scenario_conflicts(scenarios: list[dict[str, Any]], cover: dict[str, Any]) -> Iterator[tuple[str, str, str]]:
+def _scenario_conflicts(
+    scenarios: list[dict[str, Any]], cover: dict[str, Any], uncertainty: dict[str, Any]
+) -> Iterator[tuple[str, str, str]]:
     names: dict[str, int] = {}
     for number, entry in enumerate(scenarios, start=1):
         name = entry.get("name")
@@ -620,6 +777,94 @@ def _scenario_conflicts(scenarios: list[dict[str, Any]], cover: dict[str, Any]) 
                 "missing, and the base's raster belongs to the base's cover",
                 'name the raster that goes with this cover, or "none"',
             )
+        limits = isinstance(uncertainty.get("depths"), dict)
+        if limits and isinstance(entry.get("storm"), dict) and "depths" in entry["storm"]:
+            what = "uncertainty.depths gives limits, and they belong to the base's depths"
+            yield scenario_field(number, "storm.depths"), what, 'give uncertainty.depths as a share, such as "10 %"'
+
+
+def _uncertainty_conflicts(
+    given: dict[str, Any], unit: dict[str, Any], storm: dict[str, Any]
+) -> Iterator[tuple[str, str, str]]:
+    try:
+        ranges = Uncertainty.model_validate(given)
+    except ValidationError:
+        return  # the model names it
+    if not ranges.sampled:
+        fix = f"give at least one of {', '.join(UNCERTAIN[:-1])}"
+        yield "uncertainty", "no input has a range", fix
+    if ranges.peak_rate_factor is not None:
+        used, shape = unit.get("peak_rate_factor", 484), unit.get("shape", "curvilinear")
+        if shape not in ("curvilinear", "gamma"):
+            what = f"the {shape} unit hydrograph has no peak rate factor that could vary"
+            yield "uncertainty.peak_rate_factor", what, 'leave it out, or set unit_hydrograph.shape = "gamma"'
+        elif isinstance(used, int | float):
+            low, high = peak_rate_factors(ranges.peak_rate_factor, used)
+            if not PEAK_RATE_FACTORS[0] <= low <= used <= high <= PEAK_RATE_FACTORS[1]:
+                what = f"{low:g} to {high:g} does not hold {used:g}, the factor in use, or leaves 100 to 600"
+                yield "uncertainty.peak_rate_factor", what, "give a range such as [300, 600]"
+    for key in ("curve_number", "roughness"):
+        ends = getattr(ranges, key)
+        if ends is not None and not ends[0] <= 0.0 <= ends[1]:
+            what = "the range does not hold the value in use, a difference of 0"
+            yield f"uncertainty.{key}", what, "give differences to both sides of it"
+    yield from _depth_range_conflicts(ranges, storm)
+    yield from _correlation_conflicts(ranges)
+
+
+def peak_rate_factors(given: float | tuple[float, float], used: float) -> tuple[float, float]:
+    """Return the ends of a range of peak rate factors, given as such or as what it reaches to either side."""
+    return given if isinstance(given, tuple) else (used - given, used + given)
+
+
+def _depth_range_conflicts(ranges: Uncertainty, storm: dict[str, Any]) -> Iterator[tuple[str, str, str]]:
+    key = "uncertainty.depths"
+    if isinstance(ranges.depths, tuple) and not ranges.depths[0] <= 0.0 <= ranges.depths[1]:
+        yield key, "the range does not hold the depths in use, a difference of 0", "give shares to both sides"
+    if not isinstance(ranges.depths, dict):
+        return
+    depths = storm.get("depths")
+    if not isinstance(depths, dict):
+        fix = 'give storm.depths, or a share such as "10 %"'
+        yield key, "limits need the depths that they belong to", fix
+        return
+    if missing := [period for period in depths if period not in ranges.depths]:
+        yield key, f"lacks {', '.join(missing)} years", "give limits for every return period of storm.depths"
+    for period, (low, high) in ranges.depths.items():
+        if period not in depths:
+            yield f"{key}.{period}", "is no return period of storm.depths", f"use {', '.join(depths)}"
+            continue
+        try:
+            used = parse_quantity(depths[period], "depth")
+        except QuantityError:
+            continue  # the model names it
+        if not low <= used <= high:
+            yield f"{key}.{period}", f"the limits do not hold the depth in use, {depths[period]}", "check both"
+
+
+def _correlation_conflicts(ranges: Uncertainty) -> Iterator[tuple[str, str, str]]:
+    declared, pairs = ranges.sampled, set[frozenset[str]]()
+    for i, entry in enumerate(ranges.correlated):
+        field, pair = f"uncertainty.correlated.{i}.inputs", frozenset(entry.inputs)
+        for name in entry.inputs:
+            if name not in declared:
+                near = difflib.get_close_matches(name, declared, n=1)
+                fix = f"did you mean {near[0]!r}?" if near else f"give {name!r} a range, or leave the pair out"
+                yield field, f"{name!r} is not declared: it has no range in the sample", fix
+        if len(pair) < 2 or pair in pairs:
+            yield field, "an input with itself, or a pair that stands more than once", "name each pair once"
+        pairs.add(pair)
+    if pairs and all(len(pair) == 2 and pair <= set(declared) for pair in pairs):
+        try:
+            score_correlation(len(declared), rank_correlation(ranges))
+        except RangeError as error:
+            yield "uncertainty.correlated", str(error), "bring the ranks closer to 0"
+
+
+def rank_correlation(ranges: Uncertainty) -> dict[tuple[int, int], float]:
+    """Return the rank correlations by the places of the two inputs in the sample."""
+    places = {name: i for i, name in enumerate(ranges.sampled)}
+    return {(places[entry.inputs[0]], places[entry.inputs[1]]): entry.rank for entry in ranges.correlated}
 
 
 def _storm_conflicts(storm: dict[str, Any]) -> Iterator[tuple[str, str, str]]:

@@ -440,6 +440,80 @@ CELL_SIZES = Table(
         _text("reason", "what moves too far, or why there is no verdict"),
     ),
 )  # fmt: skip
+UNCERTAINTY = Table(
+    "uncertainty",
+    "the band of one result at one outlet, from a sample over the ranges of the uncertain inputs",
+    ("outlet_id", "quantity", "return_period_yr"),
+    (
+        _ID,
+        _text("quantity", "what the band is of, unit included", choices=("tc_h", "peak_cfs", "peak_m3s")),
+        _number("return_period_yr", "return period of the storm; empty for a time", "yr"),
+        _number("p05", "5 % of the sample lie under it, in the unit that quantity names"),
+        _number("p50", "the middle of the sample, in the unit that quantity names"),
+        _number("p95", "95 % of the sample lie under it, in the unit that quantity names"),
+    ),
+)
+
+SWINGS = Table(
+    "swings",
+    "one uncertain input at the ends of its range, all others as in the run",
+    ("outlet_id", "return_period_yr", "input"),
+    (
+        _ID,
+        _number("return_period_yr", "return period of the storm", "yr"),
+        _text("input", "the input that varies"),
+        _number("low", "lower end of its range, as applied"),
+        _number("high", "upper end of its range, as applied"),
+        _text("applied", "how the ends are applied"),
+        _number("tc_low_h", "time of concentration at the lower end", "h"),
+        _number("tc_high_h", "time of concentration at the upper end", "h"),
+        _shown("peak_low", "flow", "peak flow at the lower end"),
+        _shown("peak_high", "flow", "peak flow at the upper end"),
+        _count("rank", "place among the outlet's inputs by their effect on this peak, 1 the largest"),
+        _count("tc_rank", "place by their effect on the time of concentration"),
+        _yes("sampled", "whether the input is in the sample that uncertainty.csv rests on"),
+    ),
+)
+
+REGIONAL = Table(
+    "regional",
+    "one peak beside the regional regression equation's",
+    ("outlet_id", "return_period_yr"),
+    (
+        _ID,
+        _number("return_period_yr", "return period", "yr"),
+        _shown("peak", "flow", "peak flow of the run"),
+        _shown("regional", "flow", "peak flow by the user's regression equation"),
+        _shown("regional_p05", "flow", "lower end of the equation's 90 % band, 1.645 standard errors below"),
+        _shown("regional_p95", "flow", "upper end of the equation's 90 % band, 1.645 standard errors above"),
+        _number("ratio", "peak of the run over the regional one", "1"),
+        _yes("applicable", "whether every parameter lies inside the equation's range"),
+        _text("reason", "why it is not applicable or not computed"),
+        _text("source", "where the equation was published, as supplied"),
+    ),
+)
+
+CAPACITY = Table(
+    "capacity",
+    "one crossing with its capacity as supplied against the peaks, the first to fail on top",
+    ("outlet_id", "scenario"),
+    (
+        _ID,
+        _text("name", "name from the outlet layer"),
+        _text("scenario", "base, or the name of the scenario"),
+        _count("rank", "place among the crossings of the scenario, 1 the first to fail; empty without a verdict"),
+        _text("verdict", "the case in words"),
+        _text("exceeded_at_yr", "smallest tested period over capacity; empty: none; or unknown"),
+        _number("exceeded_at_interp_yr", "return period that reaches the capacity, between tested ones only", "yr"),
+        _number("exceeded_at_p05_yr", "the same in the sample: 5 % lie under it; empty beyond the tested ones", "yr"),
+        _number("exceeded_at_p95_yr", "the same in the sample: 95 % lie under it; empty beyond the tested ones", "yr"),
+        _text("band", "that band in words"),
+        _number("peak_over_capacity_{T}yr", "peak flow over the capacity", "1"),
+        _number("exceeded_{T}yr_pct", "share of the sample whose peak is over the capacity", "%"),
+        _shown("capacity", "flow", "capacity as supplied"),
+        _text("capacity_basis", "the criterion the capacity rests on, as supplied"),
+    ),
+)
 
 FLAGS_TABLE = Table(
     "flags",
@@ -479,6 +553,10 @@ ALL: tuple[Table, ...] = (
     UNIT_HYDROGRAPHS,
     HYDROGRAPHS,
     BASIN_PARAMETERS,
+    UNCERTAINTY,
+    SWINGS,
+    REGIONAL,
+    CAPACITY,
     FLAGS_TABLE,
     SCENARIOS,
     CELL_SIZES,

@@ -114,6 +114,25 @@ def depths_by_duration(folder):
     (folder / "ddf.csv").write_text("\n".join(rows))
 
 
+def depth_rasters(two_year, ten_year):
+    """Return the preparation of a raster of storm depth [in] for each return period."""
+
+    def prepare(folder):
+        for period, depth in (("2", two_year), ("10", ten_year)):
+            write_raster(folder / f"{period}.tif", np.full((106, 67), depth), transform_of(CELL), "EPSG:32614")
+
+    return prepare
+
+
+RASTERS = {"depths": None, "depth_rasters": {"2": "2.tif", "10": "10.tif"}, "two_year_depth": "3.1 in"}
+
+
+def regional(constant_cfs):
+    """Return the preparation of a regression equation: 10 years, the same peak everywhere, band 0.68 to 1.46 of it."""
+    text = f"return_period_yr,constant_cfs,standard_error_log10\n10,{constant_cfs},0.1\n"
+    return lambda folder: (folder / "regional.csv").write_text(text)
+
+
 # Flag: what raises it, and what comes close.
 CASES = {
     "EDGE_TOUCH": ({"z": valley()[RIM:], "at": (98, AXIS)}, {"z": valley()[RIM - 1 :], "at": (BOTTOM - 2, AXIS)}),
@@ -183,6 +202,14 @@ CASES = {
     "METHOD_RANGE": ({"timing": {"adopt": "kirpich"}}, {"timing": {"adopt": "nrcs_lag"}}),
     "METHOD_SPREAD": ({"channel": {"roughness": 0.25}}, {"channel": {"roughness": 0.06}}),
     "RUNOFF_ZERO": ({"storm": DRY}, {"storm": WET}),  # CN 69: nothing runs off below 0.2 S = 0.90 in
+    "PEAKS_FALL": (
+        {"storm": RASTERS, "prepare": depth_rasters(4.6, 4.5)},
+        {"storm": RASTERS, "prepare": depth_rasters(4.6, 4.6)},
+    ),
+    "REGRESSION_DIFFERS": (  # 566 cfs: 1.49 and 1.43 times the equation's, its band ends at 1.46
+        {"check": {"regression": "regional.csv"}, "prepare": regional(380)},
+        {"check": {"regression": "regional.csv"}, "prepare": regional(395)},
+    ),
     "OUTLET_FAILED": ({"cover": patched(130, 0)}, {"cover": patched(115, 0)}),  # 2.15 % and 1.90 % about gap_limit
 }  # fmt: skip
 ELSEWHERE = {"AUDIT_DIFFERS"}

@@ -5,9 +5,20 @@
 `hydrograph`; here is only which column feeds which.
 """
 
+from basinwright.hydrology.agreement import capacities_table
 from basinwright.hydrology.comparing import cell_sizes_table, scenarios_table
-from basinwright.hydrology.computing import Results, compute
+from basinwright.hydrology.computing import OTHER_STARTS, Results, compute
 from basinwright.hydrology.frames import Columns
 from basinwright.hydrology.settings import Settings, bankfull_relation_of
 
-__all__ = ["Columns", "Results", "Settings", "bankfull_relation_of", "cell_sizes_table", "compute", "scenarios_table"]
+__all__ = [
+    "OTHER_STARTS",
+    "Columns",
+    "Results",
+    "Settings",
+    "bankfull_relation_of",
+    "capacities_table",
+    "cell_sizes_table",
+    "compute",
+    "scenarios_table",
+]

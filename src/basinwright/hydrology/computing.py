@@ -3,19 +3,21 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from basinwright.flags import Flag, status_of
 from basinwright.hydrograph import TimeArea, translation_peak_rate_factor
-from basinwright.hydrology import doubts, times, writing
+from basinwright.hydrology import agreement, doubts, times, uncertainty, writing
 from basinwright.hydrology.cross_checks import cross_checks
 from basinwright.hydrology.floods import Basins, floods_of
 from basinwright.hydrology.frames import Columns, Frame
 from basinwright.hydrology.parameters import basin_parameters
 from basinwright.hydrology.settings import Settings
+from basinwright.hydrology.variation import Response
+from basinwright.registry import find
 from basinwright.runoff import Patches, effective_curve_number, weighted_runoff_mm
 from basinwright.tables import COVER_SHARES, OUTLETS, SEGMENTS, TIME_AREA
 from basinwright.timing import sum_by_outlet, time_of_concentration
@@ -25,9 +27,12 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from basinwright.editing import Cell
+    from basinwright.project import Project
 
 LAG_OF_TC = 0.6
 """Lag over time of concentration: NEH 630 ch. 15 eq. 15-3."""
+OTHER_STARTS = ("segments_small_area", "segments_large_area")
+"""Tables like ``segments``: the paths cut where channels begin at a smaller and at a larger stream area."""
 SHORTEST_TC_H = 8.0 / 3600.0
 """0.133 of it, the longest step of a unit hydrograph, is one second, the shortest that is computed."""
 
@@ -59,14 +64,15 @@ def compute(
     held: Iterable[Cell] = (),
     edited: Iterable[tuple[str, str]] = (),
     series: bool = True,
+    scenario: str = agreement.BASE,
 ) -> Results:
     """Compute times, runoff and hydrographs from the tables.
 
     Parameters
     ----------
     tables : mapping of str to DataFrame
-        ``outlets``, ``segments`` and ``cover_shares``, and ``time_area`` where it is known; cells as text or as
-        numbers, dependent ones empty unless a person filled them.
+        ``outlets``, ``segments`` and ``cover_shares``, and ``time_area`` and those of `OTHER_STARTS` where they are
+        known; cells as text or as numbers, dependent ones empty unless a person filled them.
     settings : Settings
         Options, scheme and storm.
     terrain_flags : sequence of Flag
@@ -77,6 +83,8 @@ def compute(
         The segments that a person changed.
     series : bool
         Whether to keep the unit hydrographs and hydrographs.
+    scenario : str
+        Name of the case, for capacity.csv.
 
     Returns
     -------
@@ -106,19 +114,18 @@ def compute(
     curve_number = np.where(np.isnan(own_curve_number), patches.mean_curve_number(), own_curve_number)
     patches = times.replaced(patches, own_curve_number)
 
-    along = times.path_inputs(segments, timed, settings.scheme, count)
-    results = time_of_concentration(
-        {
-            **{stem: outlets.number(column) for stem, column in _METHOD_COLUMNS.items()},
-            **along,
-            "mean_elevation_above_outlet_m": outlets.number("mean_elevation") - along["outlet_elevation_m"],
-            "curve_number": curve_number,
-            "travel_time_h": travel_h[project.channel.stage],
-            "two_year_depth_mm": np.full(count, project.storm.two_year_depth_mm),
-            "runoff_coefficient": means["runoff_coefficient"],
-            **settings.intensity(),
-        }
-    )
+    along = times.path_times(segments, timed, settings.scheme, count)
+    method_inputs: dict[str, Any] = {
+        **{stem: outlets.number(column) for stem, column in _METHOD_COLUMNS.items()},
+        **along.inputs,
+        "mean_elevation_above_outlet_m": outlets.number("mean_elevation") - along.inputs["outlet_elevation_m"],
+        "curve_number": curve_number,
+        "travel_time_h": travel_h[project.channel.stage],
+        "two_year_depth_mm": np.full(count, project.storm.two_year_depth_mm),
+        "runoff_coefficient": means["runoff_coefficient"],
+        **settings.intensity(),
+    }
+    results = time_of_concentration(method_inputs)
     adopted = results[project.timing.adopt]
     own_tc_h = outlets.number("tc_h")
     tc_h = np.where(np.isnan(own_tc_h), adopted.tc_h, own_tc_h)
@@ -151,12 +158,11 @@ def compute(
     doubts.flag_methods(flags, results, adopted, np.isnan(own_tc_h) & known)
     other = _other_weighting_mm(patches, rain.depth_mm, settings)
     doubts.flag_basins(flags, area_km2, tc_h, floods, rain, other, settings)
+    agreement.flag_falling(floods.peak_m3s, flags, periods)
     for table, outlet_id, _, stem in sorted(supplied):
         if table == "outlets" and outlet_id in index:
             flags.add(index[outlet_id], "OVERRIDE", f"{stem} is a supplied value")
 
-    listed = flags.listed()
-    status = {outlet_id: status_of(of_outlet) for outlet_id, of_outlet in listed.items()}
     unit = floods.unit_hydrographs
     deepest, rows = np.argmax(rain.depth_mm, axis=1), np.arange(count)
     computed: dict[str, Any] = {
@@ -189,7 +195,28 @@ def compute(
     shown = outlets.shown_of(computed) | times.lengths(segments, count)
     if outlets.has("capacity"):
         shown["exceeded_at_yr"] = doubts.exceeded_at(outlets.number("capacity"), floods.peak_m3s, periods, flags)
+    paths, recut = _other_starts(tables, index, settings, along, {outlet_id for outlet_id, _ in edited})
+    confidence = _confidence(
+        Response(
+            settings,
+            replace(basins, depth_mm=rain.point_mm, time_area=curves if _takes_time_area(project) else None),
+            rain.duration_h,
+            own_tc_h,
+            paths,
+            method_inputs,
+        ),
+        recut,
+        every,
+        outlets,
+        shown,
+        np.where(known[:, None], floods.peak_m3s, np.nan),
+        flags,
+        scenario,
+    )
+    listed = flags.listed()
+    status = {outlet_id: status_of(of_outlet) for outlet_id, of_outlet in listed.items()}
     written: dict[str, Columns] = {
+        **confidence,
         "outlets": writing.outlet_columns(every, live, shown, listed, status),
         "segments": writing.segment_columns(segments, timed, set(edited)),
         "cover_shares": shares.columns(shares.shown_of(patch_columns)),
@@ -209,6 +236,64 @@ def compute(
     if series and "time_area" in tables:
         written["time_area"] = {str(name): tables["time_area"][name].to_numpy() for name in tables["time_area"]}
     return Results(written, [flag for of_outlet in listed.values() for flag in of_outlet], status)
+
+
+def _takes_time_area(project: Project) -> bool:
+    return "time_area" in find("unit_hydrograph", project.unit_hydrograph.shape).inputs
+
+
+def _other_starts(
+    tables: Mapping[str, pd.DataFrame],
+    index: Mapping[str, int],
+    settings: Settings,
+    along: times.PathTimes,
+    edited: set[str],
+) -> tuple[list[times.PathTimes], NDArray[np.bool_]]:
+    """Time the paths cut at the small, the run's own and the large stream area, and say for which outlets that is.
+
+    Where a person changed the segments the channel begins where they say: there all three are the run's own.
+    """
+    recut = np.array([outlet_id not in edited for outlet_id in index], dtype=bool)
+    if any(name not in tables for name in OTHER_STARTS):
+        return [along] * 3, np.zeros(recut.size, dtype=bool)
+    cuts = []
+    for name in OTHER_STARTS:
+        segments = Frame(SEGMENTS, tables[name], settings.project).of_outlets(index)
+        timed = times.timed(segments, settings, set())
+        cuts.append(times.path_times(segments, timed, settings.scheme, recut.size))
+        recut &= ~np.isnan(cuts[-1].sheet_h)
+    small, large = (cut.or_else(along, recut) for cut in cuts)
+    return [small, along, large], recut
+
+
+def _confidence(
+    response: Response,
+    recut: NDArray[np.bool_],
+    every: Frame,
+    outlets: Frame,
+    shown: Mapping[str, Any],
+    peak_m3s: NDArray[np.float64],
+    flags: doubts.Doubts,
+    scenario: str,
+) -> dict[str, Columns]:
+    """Make the tables that say how sure the results are, as far as the project asks for them."""
+    settings, project = response.settings, response.settings.project
+    ids = outlets.text("outlet_id").tolist()
+    live = np.flatnonzero(~np.isnan(peak_m3s).any(axis=1))
+    made: dict[str, Columns] = {}
+    bands = None
+    if project.uncertainty is not None:
+        rated = outlets.number("capacity") if outlets.has("capacity") else np.full(len(ids), np.nan)
+        bands = uncertainty.sample(response, ids, live, rated)
+        made["uncertainty"] = uncertainty.uncertainty(bands, ids, live, project)
+        made["swings"] = uncertainty.swings(response, ids, live, recut)
+    if settings.equations:
+        stems = {parameter.stem for equation in settings.equations for parameter in equation.exponents}
+        values = {stem: outlets.inside(stem, shown) for stem in stems}
+        made["regional"] = agreement.regional(settings.equations, values, ids, peak_m3s, flags, project)
+    if every.has("capacity"):
+        made["capacity"] = agreement.capacity(scenario, every, ids, peak_m3s, bands, flags)
+    return made
 
 
 _METHOD_COLUMNS = {

@@ -135,7 +135,7 @@ def exceeded_at(
     capacity_m3s: NDArray[np.float64], peak_m3s: NDArray[np.float64], periods: Sequence[str], flags: Doubts
 ) -> list[str]:
     """Return the smallest tested return period whose peak exceeds the capacity, as text."""
-    doubtful = flags.raised("EDGE_TOUCH") | flags.raised("OUTLET_FAILED")
+    doubtful = flags.raised("EDGE_TOUCH") | flags.raised("OUTLET_FAILED") | flags.raised("PEAKS_FALL")
     verdicts = []
     for i, capacity in enumerate(capacity_m3s.tolist()):
         over = [period for t, period in enumerate(periods) if peak_m3s[i, t] > capacity]

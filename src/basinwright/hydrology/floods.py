@@ -60,6 +60,8 @@ class Basins:
     depth_mm : array, shape (n, T)
         Point depths of the project's storm [mm].
     time_area : TimeArea or None
+    peak_rate_factor : array, shape (n,), or None
+        Of gamma unit hydrographs, in the place of the project's shape.
     """
 
     area_km2: NDArray[np.float64]
@@ -69,6 +71,31 @@ class Basins:
     patches: Patches
     depth_mm: NDArray[np.float64]
     time_area: TimeArea | None
+    peak_rate_factor: NDArray[np.float64] | None = None
+
+    def rows(self, outlets: NDArray[np.int64]) -> Basins:
+        """Return some of the outlets, in any order and any number of times."""
+        patches, curve = self.patches, self.time_area
+        rows = _rows_of(patches.offsets, outlets)
+        some_patches = Patches(
+            _offsets(np.diff(patches.offsets)[outlets]), patches.area_km2[rows], patches.curve_number[rows]
+        )
+        some_curves = None
+        if curve is not None:
+            rows = _rows_of(curve.offsets, outlets)
+            some_curves = TimeArea(
+                _offsets(np.diff(curve.offsets)[outlets]), curve.travel_time_h[rows], curve.area_km2[rows]
+            )
+        return Basins(
+            self.area_km2[outlets],
+            self.tc_h[outlets],
+            self.path_length_m[outlets],
+            self.centroid_length_m[outlets],
+            some_patches,
+            self.depth_mm[outlets],
+            some_curves,
+            None if self.peak_rate_factor is None else self.peak_rate_factor[outlets],
+        )
 
 
 def floods_of(basins: Basins, settings: Settings, *, series: bool) -> tuple[Floods, Rain]:
@@ -84,7 +111,9 @@ def floods_of(basins: Basins, settings: Settings, *, series: bool) -> tuple[Floo
     kept: list[tuple[NDArray[np.int64], Floods, Rain]] = []
     for hours in np.unique(duration).tolist() or [section.duration]:  # the project's, where every outlet failed
         rows = np.flatnonzero(duration == hours)
-        kept.append((rows, *_floods(_some(basins, rows), settings, hours, series=series)))
+        kept.append(
+            (rows, *_floods(basins if rows.size == count else basins.rows(rows), settings, hours, series=series))
+        )
     floods, rain = _merged(kept) if len(kept) != 1 else kept[0][1:]
     return floods, replace(rain, at_end=at_end)
 
@@ -97,14 +126,20 @@ def _durations(durations_h: NDArray[np.float64], longest_h: float) -> NDArray[np
 
 
 def _floods(basins: Basins, settings: Settings, duration_h: float, *, series: bool) -> tuple[Floods, Rain]:
-    """Compute the floods of one storm duration."""
-    project = settings.project
-    section, unit = project.storm, project.unit_hydrograph
-    storms = settings.storms(duration_h)
-    point = basins.depth_mm
+    """Compute the floods of one storm duration, its depths read off the project's table."""
+    section = settings.project.storm
     if duration_h != section.duration and settings.ddf is not None:
         each = [float(settings.ddf.depth_mm(duration_h, period)) * section.depth_factor for period in section.periods]
-        point = np.broadcast_to(np.array(each), basins.depth_mm.shape)
+        basins = replace(basins, depth_mm=np.broadcast_to(np.array(each), basins.depth_mm.shape))
+    return floods_at(basins, settings, duration_h, series=series)
+
+
+def floods_at(basins: Basins, settings: Settings, duration_h: float, *, series: bool) -> tuple[Floods, Rain]:
+    """Compute the floods of one storm duration [h], which the depths of the basins are of."""
+    project = settings.project
+    section, unit = project.storm, project.unit_hydrograph
+    storms, point = settings.storms(duration_h), basins.depth_mm
+    varied = basins.peak_rate_factor
     factor = np.ones(basins.area_km2.size)
     if section.areal_reduction == "leclerc_schaake":
         factor = areal_reduction_leclerc_schaake(basins.area_km2, duration_h)
@@ -118,9 +153,9 @@ def _floods(basins: Basins, settings: Settings, duration_h: float, *, series: bo
         basins.patches,
         storms,
         rain.depth_mm,
-        shape=unit.shape,
+        shape=unit.shape if varied is None else "gamma",
         shape_inputs={
-            "peak_rate_factor": unit.peak_rate_factor,
+            "peak_rate_factor": unit.peak_rate_factor if varied is None else varied,
             "path_length_m": basins.path_length_m,
             "centroid_length_m": basins.centroid_length_m,
             "ct": unit.ct,
@@ -147,32 +182,6 @@ def _rows_of(offsets: NDArray[np.int64], outlets: NDArray[np.int64]) -> NDArray[
 
 def _offsets(counts: NDArray[np.int64]) -> NDArray[np.int64]:
     return np.concatenate(([0], np.cumsum(counts))).astype(np.int64)
-
-
-def _some(basins: Basins, outlets: NDArray[np.int64]) -> Basins:
-    """Return some of the outlets."""
-    if outlets.size == basins.area_km2.size:
-        return basins
-    patches, curve = basins.patches, basins.time_area
-    rows = _rows_of(patches.offsets, outlets)
-    some_patches = Patches(
-        _offsets(np.diff(patches.offsets)[outlets]), patches.area_km2[rows], patches.curve_number[rows]
-    )
-    some_curves = None
-    if curve is not None:
-        rows = _rows_of(curve.offsets, outlets)
-        some_curves = TimeArea(
-            _offsets(np.diff(curve.offsets)[outlets]), curve.travel_time_h[rows], curve.area_km2[rows]
-        )
-    return Basins(
-        basins.area_km2[outlets],
-        basins.tc_h[outlets],
-        basins.path_length_m[outlets],
-        basins.centroid_length_m[outlets],
-        some_patches,
-        basins.depth_mm[outlets],
-        some_curves,
-    )
 
 
 def _merged(groups: list[tuple[NDArray[np.int64], Floods, Rain]]) -> tuple[Floods, Rain]:

@@ -18,6 +18,20 @@ Columns = dict[str, Any]
 """A table as it is written: columns by name, in order."""
 
 
+def columns_of(table: Table, project: Project, values: Mapping[str, Any]) -> Columns:
+    """Return a table as it is written from values by stem in the units used inside, the return period put in."""
+    return {
+        entry.name: values[entry.stem] if entry.factor == 1.0 else np.asarray(values[entry.stem]) / entry.factor
+        for entry in table.fields(project.project.units, project.storm.periods)
+    }
+
+
+def _numbers(column: pd.Series[Any]) -> NDArray[np.float64]:
+    if column.dtype != object:
+        return column.to_numpy(dtype=np.float64, copy=True)
+    return np.array([float(cell) if cell else np.nan for cell in column.to_numpy().tolist()], dtype=np.float64)
+
+
 class Frame:
     """A table read by the stems of its schema in the units used inside.
 
@@ -60,11 +74,12 @@ class Frame:
 
     def shown(self, stem: str, period: str = "") -> NDArray[np.float64]:
         """Return a column as the numbers that stand there, NaN where empty."""
-        column = self.frame[self._column(stem, period)[0]]
-        if column.dtype != object:
-            return column.to_numpy(dtype=np.float64, copy=True)
-        text = column.to_numpy()
-        return np.array([float(cell) if cell else np.nan for cell in text.tolist()], dtype=np.float64)
+        return _numbers(self.frame[self._column(stem, period)[0]])
+
+    def inside(self, stem: str, shown: Mapping[str, Any]) -> NDArray[np.float64]:
+        """Return a column by its stem with the period put in, in the unit used inside: as shown, or as it stands."""
+        entry = next(entry for entry in self.fields if entry.stem == stem)
+        return (shown[stem] if stem in shown else _numbers(self.frame[entry.name])) * entry.factor
 
     def number(self, stem: str, period: str = "") -> NDArray[np.float64]:
         """Return a column in the unit used inside, NaN where empty."""

@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
+from basinwright.confidence import Equation
 from basinwright.numbers import Floats
 from basinwright.project import Project
 from basinwright.registry import find
@@ -32,12 +33,15 @@ class Settings:
         The design storm's distribution; None where it is built from `ddf`.
     ddf : DepthDurationFrequency or None
         Depth by duration and return period, where the project gives it.
+    equations : sequence of Equation
+        Regional regression equations to compare with.
     """
 
     project: Project
     scheme: Scheme
     storm: Storm | None
     ddf: DepthDurationFrequency | None = None
+    equations: Sequence[Equation] = ()
 
     @property
     def relation(self) -> BankfullRelation:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -11,7 +12,7 @@ from basinwright.hydrology.frames import Frame
 from basinwright.hydrology.settings import Settings
 from basinwright.runoff import Patches
 from basinwright.schemes import Scheme
-from basinwright.timing import SegmentTimes, time_segments
+from basinwright.timing import SegmentTimes, sum_by_outlet, time_segments
 from basinwright.units import M_PER_FT
 
 if TYPE_CHECKING:
@@ -57,6 +58,55 @@ def timed(segments: Frame, settings: Settings, held: set[Cell]) -> SegmentTimes:
         channel_roughness=project.channel.roughness,
         slope_floor=project.flow_path.slope_floor,
         open_water_depth_m=project.channel.open_water_depth,
+    )
+
+
+@dataclass(frozen=True)
+class PathTimes:
+    """Travel times along the paths by how they answer to roughness, and what timing methods take from the path.
+
+    Parameters
+    ----------
+    sheet_h : array, shape (n,)
+        Sheet flow: as roughness^0.8 [h].
+    resisted_h, resisted_half_h : arrays, shape (n,)
+        Shallow, channel and conduit flow, at bankfull and at half the depth: as roughness [h].
+    water_h : array, shape (n,)
+        Open water: whatever the roughness [h].
+    inputs : dict of arrays, shape (n,)
+        See `path_inputs`.
+    """
+
+    sheet_h: NDArray[np.float64]
+    resisted_h: NDArray[np.float64]
+    resisted_half_h: NDArray[np.float64]
+    water_h: NDArray[np.float64]
+    inputs: dict[str, NDArray[np.float64]]
+
+    def or_else(self, other: PathTimes, keep: NDArray[np.bool_]) -> PathTimes:
+        """Return these times for the outlets of a mask, another path's for the rest."""
+
+        def chosen(name: str) -> NDArray[np.float64]:
+            return np.where(keep, getattr(self, name), getattr(other, name))
+
+        inputs = {name: np.where(keep, values, other.inputs[name]) for name, values in self.inputs.items()}
+        return PathTimes(chosen("sheet_h"), chosen("resisted_h"), chosen("resisted_half_h"), chosen("water_h"), inputs)
+
+
+def path_times(segments: Frame, times: SegmentTimes, scheme: Scheme, count: int) -> PathTimes:
+    """Add up the travel times of each outlet by their answer to roughness; NaN for an outlet without segments."""
+    regime = segments.text("regime")
+    sheet, water = regime == "sheet", regime == "open_water"
+
+    def summed(hours: NDArray[np.float64], mask: NDArray[np.bool_]) -> NDArray[np.float64]:
+        return sum_by_outlet(segments.outlet, np.where(mask, hours, 0.0), count)
+
+    return PathTimes(
+        summed(times.travel_time_h, sheet),
+        summed(times.travel_time_h, ~sheet & ~water),
+        summed(times.travel_time_half_h, ~sheet & ~water),
+        summed(times.travel_time_h, water),
+        path_inputs(segments, times, scheme, count),
     )
 
 

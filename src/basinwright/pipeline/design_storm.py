@@ -120,7 +120,7 @@ def _check_built(project: Project, ddf: DepthDurationFrequency) -> None:
             raise InputRejected.one(file, f"{period} years", str(error), fix) from None
 
 
-def _rows(path: Path, key: str) -> tuple[list[str], list[dict[str, str]]]:
+def read_rows(path: Path, key: str) -> tuple[list[str], list[dict[str, str]]]:
     """Read a CSV: its columns and its rows."""
     try:
         with path.open(encoding="utf-8-sig", newline="") as stream:
@@ -153,7 +153,7 @@ def _numbers(path: Path, rows: list[dict[str, str]], columns: list[str]) -> list
 
 def _hyetograph(path: Path) -> dict[str, list[float]]:
     """Read a CSV of hour and fraction."""
-    names, rows = _rows(path, "storm.table")
+    names, rows = read_rows(path, "storm.table")
     missing = [name for name in ("hour", "fraction") if name not in names]
     if missing:
         what = f"lacks {' and '.join(missing)}"
@@ -164,7 +164,7 @@ def _hyetograph(path: Path) -> dict[str, list[float]]:
 
 def _depths_by_duration(path: Path) -> dict[str, Any]:
     """Read a CSV of duration_h or duration_min, and depth_<T>yr_in or _mm for each return period."""
-    names, rows = _rows(path, "storm.ddf")
+    names, rows = read_rows(path, "storm.ddf")
     duration = next((name for name in names if name in _DURATIONS), None)
     depths = {name: parts for name in names if (parts := _depth_column(name)) is not None}
     unknown = [name for name in names if name != duration and name not in depths]

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import difflib
 import hashlib
-from collections.abc import Callable, Container
+from collections.abc import Callable, Container, Mapping
 from dataclasses import dataclass, field, replace
 from functools import partial
 from pathlib import Path
@@ -15,7 +15,7 @@ import numpy as np
 from basinwright.editing import LIMITS
 from basinwright.errors import InputRejected, Problem, RangeError
 from basinwright.io.rasters import check_raster, expand_paths, is_remote, refers_to_remote
-from basinwright.pipeline import design_storm
+from basinwright.pipeline import design_storm, regional
 from basinwright.pipeline.design_storm import DesignStorm
 from basinwright.project import SCENARIO_SECTIONS, Cover, Project, Reading, Soils, read_project, scenario_field
 from basinwright.registry import methods
@@ -69,6 +69,8 @@ class Inputs:
     depth_rasters : dict of str to Source
         Raster of storm depth by return period.
     design : DesignStorm
+    regional : dict or None
+        Table of regional regression equations as plain values, checked.
     files : dict
         Path, size and hash of the files described so far.
     scenarios : dict of str to Inputs
@@ -93,13 +95,19 @@ class Inputs:
     impervious: Source | None
     depth_rasters: dict[str, Source]
     design: DesignStorm
+    regional: dict[str, Any] | None = None
     files: dict[str, dict[str, Any]] = field(default_factory=dict)
     scenarios: dict[str, Inputs] = field(default_factory=dict)
 
     def sources(self) -> list[Source]:
         """List every file that the project names."""
         project, folder = self.project, self.file.parent
-        tables = [None if self.scheme.name in SHIPPED else project.cover.scheme, project.storm.table, project.storm.ddf]
+        tables = [
+            None if self.scheme.name in SHIPPED else project.cover.scheme,
+            project.storm.table,
+            project.storm.ddf,
+            project.check.regression if project.check is not None else None,
+        ]
         layers = [self.cover, self.soils, self.impervious, *self.depth_rasters.values()]
         own = [
             *self.dem,
@@ -297,6 +305,7 @@ def inspect(file: Path) -> Inputs:
     points = _outlets(look, points_source) if points_source is not None else None
     layers = _replaceable(look, plan)
     project = layers.project
+    table = _regional(look, project)
     x = y = np.empty(0)
     aligned: dict[str, Any] = {}
     if points is not None and plan is not None:
@@ -334,6 +343,7 @@ def inspect(file: Path) -> Inputs:
         capacity_m3s=capacity,
         overrides=overrides,
         **vars(layers),
+        regional=table,
     )
     for entry, changed in zip(project.scenario, scenarios, strict=True):
         inputs.scenarios[entry.name] = replace(inputs, scenarios={}, **vars(changed))
@@ -514,6 +524,34 @@ def _design(look: _Looking) -> DesignStorm | None:
     return look.tried(partial(design_storm.read, look.project, look.folder)) if all(named) else None
 
 
+def _check_rising(
+    project: Project, points: PointTable, overrides: Mapping[str, NDArray[np.float64]], look: _Looking
+) -> None:
+    """Note where a supplied depth is under that of a more frequent storm, as far as depths are known by now."""
+    depths = project.storm.depths if project.storm is not None else {}
+    deepest, before = np.zeros(len(points)), ""
+    for period in sorted(depths, key=float):
+        supplied = overrides.get(f"depth_{period}yr", np.full(len(points), np.nan))
+        here = np.where(np.isnan(supplied), depths[period], supplied)
+        for i in np.flatnonzero(here < deepest).tolist():
+            what = f"falls from {deepest[i]:.4g} mm at {before} years to {here[i]:.4g} mm"
+            fix = "depths must not fall with the return period: check the depths of this outlet"
+            look.add(Path(points.file).name, f"outlet {points.ids[i]}, depth of {period} years", what, fix)
+        deepest, before = here, period
+
+
+def _regional(look: _Looking, project: Project) -> dict[str, Any] | None:
+    """Read and check the table of regional regression equations; None where there is none."""
+    text = project.check.regression if project.check is not None else None
+    path = look.table(regional.KEY, text) if text is not None else None
+    if path is None:
+        return None
+    table = look.tried(partial(regional.read, path))
+    if table is not None and project.storm is not None and project.storm.periods:
+        look.tried(partial(regional.equations, project, table))
+    return table
+
+
 def _attributes(
     project: Project, points: PointTable | None, look: _Looking
 ) -> tuple[NDArray[np.float64], NDArray[np.float64], dict[str, NDArray[np.float64]]]:
@@ -550,5 +588,6 @@ def _attributes(
             look.add(source, " and ".join(given), "both columns are there", "keep one of them")
         for name in given[:1]:
             overrides[f"depth_{period}yr"] = numbers(name, names[name], 0.0, 1e5)
+    _check_rising(project, points, overrides, look)
     options = project.outlets
     return column(options.expected_area, "area"), column(options.capacity, "flow"), overrides

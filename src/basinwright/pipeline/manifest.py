@@ -21,7 +21,7 @@ from basinwright.errors import InputRejected
 from basinwright.flags import Flag
 from basinwright.hydrology import Results, Settings
 from basinwright.outputs.writing import hydrograph_files
-from basinwright.pipeline import design_storm
+from basinwright.pipeline import design_storm, regional
 from basinwright.pipeline.inputs import Inputs
 from basinwright.pipeline.variants import Ground, ScenarioRun, stage_name
 from basinwright.project import Project, parse_project
@@ -41,6 +41,8 @@ _NEEDED = (
     "storm_tables",
     "terrain_flags",
     "time_area",
+    "other_starts",
+    "regional",
     "edits",
     "stages",
     "summary_only",
@@ -89,6 +91,8 @@ def describe(
         "storm_tables": inputs.design.tables,
         "terrain_flags": [list(flag) for flag in base.flags],
         "time_area": _packed(base.time_area),
+        "other_starts": {name: _packed(frame) for name, frame in base.other_starts.items()},
+        "regional": inputs.regional,
         "edits": {
             "supplied": _listed(base.supplied),
             "held": _listed(held),
@@ -97,13 +101,13 @@ def describe(
             "written": {} if results is first else _changed(results, _first(first)),
         },
         "scenarios": [
-            {**_scenario(scenario, base), "stages": store.described(stage_name(scenario.name))}
+            {**_scenario(scenario, base, inputs.regional), "stages": store.described(stage_name(scenario.name))}
             for scenario in scenarios
         ],
     }
 
 
-def _scenario(scenario: ScenarioRun, base: Ground) -> dict[str, Any]:
+def _scenario(scenario: ScenarioRun, base: Ground, regional: dict[str, Any] | None) -> dict[str, Any]:
     """Return what the manifest keeps of a scenario: its tables only where the terrain half made others of them."""
     ground = scenario.ground
     scheme = ground.settings.scheme
@@ -117,6 +121,12 @@ def _scenario(scenario: ScenarioRun, base: Ground) -> dict[str, Any]:
         "terrain_flags": [list(flag) for flag in ground.flags],
         "tables": {name: _packed(frame) for name, frame in other.items()},
         "time_area": None if ground.time_area.equals(base.time_area) else _packed(ground.time_area),
+        "other_starts": {
+            name: _packed(frame)
+            for name, frame in ground.other_starts.items()
+            if not frame.equals(base.other_starts[name])
+        },
+        "regional": regional,
         "files": scenario.files,
     }
 
@@ -193,14 +203,17 @@ def settings(about: Mapping[str, Any]) -> tuple[Project, Settings]:
     project = parse_project(about["project"], MANIFEST)
     scheme = Scheme.from_rows(about["scheme"]["name"], about["scheme"]["classes"])
     design = design_storm.from_tables(project, about["storm_tables"])
-    return project, Settings(project, scheme, design.storm, design.ddf)
+    return project, Settings(project, scheme, design.storm, design.ddf, regional.equations(project, about["regional"]))
 
 
 def ground(about: Mapping[str, Any], record: Record, settings: Settings) -> Ground:
     """Return what the terrain half had handed to the hydrology; its tables only where scenarios need them."""
     tables = as_first(record, settings.project.project.units, settings.scheme) if about.get("scenarios") else {}
     flags = [Flag(*row) for row in about["terrain_flags"]]
-    return Ground(tables, _unpacked(about["time_area"]), flags, record.supplied, settings, about["storm_tables"])
+    starts = {name: _unpacked(packed) for name, packed in about["other_starts"].items()}
+    return Ground(
+        tables, _unpacked(about["time_area"]), starts, flags, record.supplied, settings, about["storm_tables"]
+    )
 
 
 def scenarios(about: Mapping[str, Any]) -> dict[str, Mapping[str, Any]]:
@@ -214,6 +227,10 @@ def scenario_ground(scenario: Mapping[str, Any], base: Ground) -> Ground:
     return Ground(
         {name: _unpacked(packed[name]) if name in packed else frame for name, frame in base.tables.items()},
         base.time_area if curves is None else _unpacked(curves),
+        {
+            name: _unpacked(scenario["other_starts"][name]) if name in scenario["other_starts"] else frame
+            for name, frame in base.other_starts.items()
+        },
         [Flag(*row) for row in scenario["terrain_flags"]],
         base.supplied,
         settings(scenario)[1],

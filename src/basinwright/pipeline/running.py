@@ -172,10 +172,11 @@ def _build(
         _refuse_strangers(*edits, base)
         base, own = base.with_edits(*edits)
     depends_on = {
-        "tables": [half.tables.key, half.time_area.key],
+        "tables": half.keys(),
         "flags": [list(flag) for flag in flags],
         "options": project.model_dump(mode="json", exclude={"audit", "compute"}),
         "storm": inputs.design.tables,
+        "regional": inputs.regional,
         "series": series,
     }
     with store.watched("hydrology", "Timing, runoff and hydrographs", depends_on):

@@ -11,7 +11,7 @@ import numpy as np
 
 from basinwright.flags import Flag
 from basinwright.grid import Grid
-from basinwright.hydrology import bankfull_relation_of
+from basinwright.hydrology import OTHER_STARTS, bankfull_relation_of
 from basinwright.paths.tracing import DEEP_FILL_M
 from basinwright.pipeline.inputs import Inputs
 from basinwright.project import Project
@@ -24,7 +24,8 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from basinwright.basins import Basins, Snapped
-    from basinwright.cover import CoverShares, Impervious
+    from basinwright.cover import CoverLayer, CoverShares, Impervious
+    from basinwright.paths import Cut, Paths
     from basinwright.terrain import Terrain
 
 AREA_TOLERANCE = 0.1
@@ -53,6 +54,8 @@ class TerrainHalf:
         How each input came onto the grid.
     terrain, elevation, channels, cover, basins, paths, tables, time_area : Entry
         Stages in the store; ``tables`` holds the three tables and the flags.
+    channel_starts : Entry or None
+        The segments where channels begin at a smaller and at a larger area, where the project asks for them.
     """
 
     grid: Grid
@@ -65,6 +68,7 @@ class TerrainHalf:
     paths: Entry
     tables: Entry
     time_area: Entry
+    channel_starts: Entry | None = None
 
     def routed(self) -> Terrain:
         """Return the routed terrain."""
@@ -87,7 +91,15 @@ class TerrainHalf:
     def frames(self) -> dict[str, pd.DataFrame]:
         """Return the tables that the hydrology reads, in the units of the project."""
         frames = {table.name: self.tables.frame(table.name) for table in (OUTLETS, SEGMENTS, COVER_SHARES)}
-        return frames | {TIME_AREA.name: self.time_area.frame(TIME_AREA.name)}
+        frames[TIME_AREA.name] = self.time_area.frame(TIME_AREA.name)
+        if self.channel_starts is not None:
+            frames |= {name: self.channel_starts.frame(name) for name in OTHER_STARTS}
+        return frames
+
+    def keys(self) -> list[str]:
+        """Return the keys of the stages that those tables come from."""
+        stages = (self.tables, self.time_area, self.channel_starts)
+        return [stage.key for stage in stages if stage is not None]
 
     def flags(self) -> list[Flag]:
         """Return what the terrain half flagged."""
@@ -191,6 +203,27 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
             inputs, {"routing": routing, "channels": channels, "cover": cover, "basins": basins}, draft
         ),
     )
+    factors = project.uncertainty.stream_area_factor if project.uncertainty is not None else None
+    channel_starts = None
+    if factors is not None:
+        channel_starts = store.stage(
+            "channel_starts",
+            "Cutting the paths where channels would begin at other areas",
+            {
+                "paths": paths.key,
+                "channels": channels.key,
+                "cover": cover.key,
+                "scheme": inputs.scheme.to_rows(),
+                "options": project.model_dump(mode="json", include={"project", "terrain", "flow_path", "channel"}),
+                "factors": factors,
+            },
+            lambda draft: _channel_starts(
+                inputs,
+                {"routing": routing, "channels": channels, "cover": cover, "paths": paths, "tables": tables},
+                factors,
+                draft,
+            ),
+        )
     return TerrainHalf(
         grid,
         [*elevation.values("alignment"), *cover.values("alignment")],
@@ -202,6 +235,7 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
         paths,
         tables,
         time_area,
+        channel_starts,
     )
 
 
@@ -320,9 +354,8 @@ def _tables(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
     """Make the three tables, with the flags of the terrain half and the cells that the user supplied."""
     from basinwright.basins import Basins, Snapped
     from basinwright.cover import CoverLayer, SoilLayer, combine, cover_shares
-    from basinwright.paths import CoverOnGrid, CutRules, Paths, cut_segments
+    from basinwright.paths import Paths
     from basinwright.terrain import Terrain
-    from basinwright.timing import bankfull_width_m, sheet_limit_m
 
     project, grid = inputs.project, inputs.plan.grid
     terrain = stages["routing"].record(Terrain, "terrain")
@@ -341,16 +374,7 @@ def _tables(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
         _impervious(inputs, terrain, basins, patches.cells, len(patches)),
     )
     depths = _mean_depths_mm(inputs, terrain, basins)
-    rules = CutRules(
-        stream_area_km2=float(stages["channels"].values("stream_area_km2")),
-        sheet_limit_m=project.flow_path.sheet_limit,
-        min_segment_m=project.flow_path.min_segment,
-        slope_floor=project.flow_path.slope_floor,
-        mccuen_spiess_m=sheet_limit_m,
-        bankfull_width_m=partial(bankfull_width_m, relation=bankfull_relation_of(project)),
-    )
-    on_grid = CoverOnGrid(cover.classes, cover.codes, cover.sheet_n(inputs.scheme), cover.open_water(inputs.scheme))
-    cut = cut_segments(grid, terrain, paths, on_grid, rules)
+    cut = _cut(inputs, terrain, paths, cover, float(stages["channels"].values("stream_area_km2")))
 
     failed = _failures(snapped, measures, shares.failed, depths)
     marks = {"sheet_limited": cut.sheet_limited, **vars(snapped), **measures}
@@ -374,6 +398,42 @@ def _tables(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
             for i in np.flatnonzero(~np.isnan(values) & fine).tolist()
         ],
     )
+
+
+def _cut(inputs: Inputs, terrain: Terrain, paths: Paths, cover: CoverLayer, stream_area_km2: float) -> Cut:
+    """Cut the paths into segments where channels begin at an area."""
+    from basinwright.paths import CoverOnGrid, CutRules, cut_segments
+    from basinwright.timing import bankfull_width_m, sheet_limit_m
+
+    project = inputs.project
+    rules = CutRules(
+        stream_area_km2=stream_area_km2,
+        sheet_limit_m=project.flow_path.sheet_limit,
+        min_segment_m=project.flow_path.min_segment,
+        slope_floor=project.flow_path.slope_floor,
+        mccuen_spiess_m=sheet_limit_m,
+        bankfull_width_m=partial(bankfull_width_m, relation=bankfull_relation_of(project)),
+    )
+    on_grid = CoverOnGrid(cover.classes, cover.codes, cover.sheet_n(inputs.scheme), cover.open_water(inputs.scheme))
+    return cut_segments(inputs.plan.grid, terrain, paths, on_grid, rules)
+
+
+def _channel_starts(inputs: Inputs, stages: Mapping[str, Entry], factors: tuple[float, float], draft: Draft) -> None:
+    """Cut the stored paths again where channels begin at a smaller and at a larger area."""
+    from basinwright.cover import CoverLayer
+    from basinwright.paths import Paths
+    from basinwright.terrain import Terrain
+
+    project = inputs.project
+    terrain = stages["routing"].record(Terrain, "terrain")
+    paths, cover = stages["paths"].record(Paths, "paths"), stages["cover"].record(CoverLayer, "cover")
+    failed = {Flag(*row).outlet_id for row in stages["tables"].values("flags") if row[1] == "OUTLET_FAILED"}
+    ids = np.array(inputs.points.ids, dtype=object)
+    fine = np.array([outlet_id not in failed for outlet_id in inputs.points.ids], dtype=bool)
+    for name, factor in zip(OTHER_STARTS, factors, strict=True):
+        cut = _cut(inputs, terrain, paths, cover, factor * float(stages["channels"].values("stream_area_km2")))
+        columns = _of_fine(cut.segments, ids, fine) | {"edited": None}
+        draft.frame(name, _as_frame(SEGMENTS, columns, project))
 
 
 def _patch_areas_km2(terrain: Terrain, basins: Basins, cells: NDArray[np.int32], count: int) -> NDArray[np.float64]:

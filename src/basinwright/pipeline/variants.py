@@ -15,8 +15,10 @@ from basinwright.carrying import carry
 from basinwright.editing import EDITABLE, Cell, Edited, Record
 from basinwright.errors import InputRejected
 from basinwright.flags import Flag
-from basinwright.hydrology import Columns, Results, Settings, compute, scenarios_table
+from basinwright.hydrology import OTHER_STARTS, Columns, Results, Settings, capacities_table, compute, scenarios_table
+from basinwright.hydrology.agreement import BASE
 from basinwright.outputs import writing
+from basinwright.pipeline import regional
 from basinwright.store import Store, file_sha256
 from basinwright.tables import as_text
 
@@ -40,6 +42,8 @@ class Ground:
     tables : dict of str to DataFrame
         ``outlets``, ``segments`` and ``cover_shares``, as text or as numbers.
     time_area : DataFrame
+    other_starts : dict of str to DataFrame
+        Segments where channels begin at other areas, where the project asks for them.
     flags : list of Flag
         What the terrain half flagged.
     supplied : set of Cell
@@ -51,21 +55,23 @@ class Ground:
 
     tables: dict[str, pd.DataFrame]
     time_area: pd.DataFrame
+    other_starts: dict[str, pd.DataFrame]
     flags: list[Flag]
     supplied: set[Cell]
     settings: Settings
     storm_tables: dict[str, Any]
 
-    def compute(self, edits: Edited | None = None, *, series: bool) -> Results:
+    def compute(self, edits: Edited | None = None, *, series: bool, scenario: str = BASE) -> Results:
         """Compute times, runoff and hydrographs, of the tables with a person's edits where there are any."""
         edits = edits or Edited(self.tables, self.supplied)
         return compute(
-            {**edits.tables, "time_area": self.time_area},
+            {**edits.tables, **self.other_starts, "time_area": self.time_area},
             self.settings,
             terrain_flags=self.flags,
             held=edits.held,
             edited=edits.segments,
             series=series,
+            scenario=scenario,
         )
 
     def with_edits(self, edits: Edited, record: Record) -> tuple[Ground, Edited]:
@@ -80,12 +86,15 @@ def ground_of(inputs: Inputs, half: TerrainHalf, flags: Sequence[Flag]) -> Groun
     """Return what the terrain half made of a project."""
     frames = half.frames()
     time_area = frames.pop("time_area")
+    starts = {name: frames.pop(name) for name in OTHER_STARTS if name in frames}
+    equations = regional.equations(inputs.project, inputs.regional)
     return Ground(
         frames,
         time_area,
+        starts,
         list(flags),
         {(table, outlet_id, row, stem) for table, outlet_id, row, stem in half.tables.values("held")},
-        Settings(inputs.project, inputs.scheme, inputs.design.storm, inputs.design.ddf),
+        Settings(inputs.project, inputs.scheme, inputs.design.storm, inputs.design.ddf, equations),
         inputs.design.tables,
     )
 
@@ -102,6 +111,8 @@ class ScenarioRun:
         How each of its inputs came onto the grid.
     outlets : columns
         Its outlets.csv.
+    capacity : columns or None
+        Its capacity.csv, where there are capacities.
     failed : int
         Outlets that could not be computed.
     files : dict of str to str
@@ -112,6 +123,7 @@ class ScenarioRun:
     ground: Ground
     alignment: list[dict[str, Any]]
     outlets: Columns
+    capacity: Columns | None
     failed: int
     files: dict[str, str]
 
@@ -133,9 +145,10 @@ def run_scenarios(
             half = terrain_half.run(changed, store)
             ground = ground_of(changed, half, half.flags())
             depends_on = {
-                "tables": [half.tables.key, half.time_area.key],
+                "tables": half.keys(),
                 "options": changed.project.model_dump(mode="json", exclude={"audit", "compute"}),
                 "storm": changed.design.tables,
+                "regional": changed.regional,
                 "series": series,
             }
             with store.watched("hydrology", "Timing, runoff and hydrographs", depends_on):
@@ -154,12 +167,13 @@ def compute_scenario(
 ) -> ScenarioRun:
     """Compute a scenario with a person's edits of the base, and write its tables into the run's folder."""
     with_flags, own = (ground, None) if edits is None else ground.with_edits(*edits)
-    results = with_flags.compute(own, series=series)
+    results = with_flags.compute(own, series=series, scenario=name)
     place = folder / SCENARIOS / name
     place.mkdir(parents=True, exist_ok=True)
     writing.write_tables(place, results.tables, ground.settings.project)
     failed = sum(status == "failed" for status in results.status.values())
-    return ScenarioRun(name, ground, alignment, results.tables["outlets"], failed, _hashes(place))
+    outlets, capacity = results.tables["outlets"], results.tables.get("capacity")
+    return ScenarioRun(name, ground, alignment, outlets, capacity, failed, _hashes(place))
 
 
 def _hashes(place: Path) -> dict[str, str]:
@@ -183,10 +197,13 @@ def refuse_edited(folder: Path, files: Mapping[str, Mapping[str, str]]) -> None:
 
 
 def compare(results: Results, scenarios: Sequence[ScenarioRun], held: set[Cell], project: Project) -> None:
-    """Put the table that compares the scenarios with the base among the base's."""
+    """Put the table that compares the scenarios with the base among the base's, and their capacities below it."""
     if scenarios:
         outlets = {scenario.name: scenario.outlets for scenario in scenarios}
         results.tables[SCENARIOS] = scenarios_table(results.tables["outlets"], outlets, held, project)
+        capacities = [results.tables.get("capacity"), *(scenario.capacity for scenario in scenarios)]
+        if known := [columns for columns in capacities if columns is not None]:
+            results.tables["capacity"] = capacities_table(known)
 
 
 def told(scenarios: Sequence[ScenarioRun]) -> dict[str, Columns]:

@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from basinwright.numbers import Floats
-from basinwright.registry import Method, methods
+from basinwright.registry import Method, find, methods
 
 Input = ArrayLike | Callable[[Floats], Floats]
 """A column of the outlets, or a function such as an intensity by duration."""
@@ -38,7 +38,7 @@ class MethodResult:
     reason: NDArray[Any]
 
 
-def time_of_concentration(inputs: Mapping[str, Input]) -> dict[str, MethodResult]:
+def time_of_concentration(inputs: Mapping[str, Input], only: str | None = None) -> dict[str, MethodResult]:
     """Evaluate every registered timing method over arrays of outlets.
 
     Parameters
@@ -47,6 +47,8 @@ def time_of_concentration(inputs: Mapping[str, Input]) -> dict[str, MethodResult
         Columns by the names that the methods' ``inputs`` and ranges use, shape (outlets,), NaN where missing; a
         plain number holds for all outlets; ``intensity_mm_per_h`` is a function of duration [h]. What no entry
         gives, the methods that need it go without.
+    only : str, optional
+        Key of the one method wanted.
 
     Returns
     -------
@@ -71,7 +73,8 @@ def time_of_concentration(inputs: Mapping[str, Input]) -> dict[str, MethodResult
     size = max((array.size for array in arrays.values()), default=0)
     arrays = {name: np.broadcast_to(array, (size,)) for name, array in arrays.items()}
     functions = {name: value for name, value in inputs.items() if callable(value)}
-    return {key: _evaluate(entry, arrays, functions, size) for key, entry in methods("timing").items()}
+    wanted = methods("timing") if only is None else {only: find("timing", only)}
+    return {key: _evaluate(entry, arrays, functions, size) for key, entry in wanted.items()}
 
 
 def spread(results: Mapping[str, MethodResult]) -> Floats:
