@@ -147,6 +147,10 @@ FLAGS: dict[str, FlagKind] = {
         FlagKind("REGRESSION_DIFFERS", "warning",
                  "a peak lies outside the 90 % band of the regional regression (check.regression)",
                  "look again at curve number, time and storm; say why this basin differs from its region"),
+        FlagKind("LONGEST_IN_TIME_DIFFERS", "warning",
+                 "the path longest in time and the one longest in length differ by over 5 % in travel time",
+                 "look at both ends on the map: where water from elsewhere arrives last, set flow_path.farthest to "
+                 "time; methods fitted to the longest path by length keep it"),
         FlagKind("AUDIT_DIFFERS", "serious",
                  "the second opinion differs by over 1 % in area",
                  "look where the two part: flats and ties are a matter of the rule, cuts of the conditioning"),

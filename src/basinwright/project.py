@@ -511,7 +511,6 @@ LATER: tuple[tuple[str, str, Callable[[Any], bool], str], ...] = (
     ("terrain", "sinks", lambda value: value is not None, "leave it out"),
     ("terrain", "flow_direction", lambda value: value is not None, "leave it out"),
     ("terrain", "flow_direction_codes", lambda value: value is not None, "leave it out"),
-    ("flow_path", "farthest", lambda value: value != "length", 'use "length"'),
     (
         "channel",
         "roughness",

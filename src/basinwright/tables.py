@@ -215,6 +215,11 @@ OUTLETS = Table(
         _number("tc_h", "adopted time of concentration", "h", editable=True),
         _number("tc_bankfull_h", "travel time along the path, channels at bankfull stage", "h"),
         _number("tc_half_bankfull_h", "the same at half the bankfull depth", "h"),
+        _number(
+            "tc_longest_in_time_h",
+            "travel time along the path that is longest in time, unedited; the path that counts may be another",
+            "h",
+        ),
         _number("lag_h", "basin lag, 0.6 of the time of concentration (NEH 630 ch. 15 eq. 15-3)", "h"),
         _number("unit_duration_h", "duration of the unit hydrograph's excess rain", "h"),
         _number("time_to_peak_h", "time to peak of the unit hydrograph", "h"),

@@ -6,7 +6,7 @@ from hypothesis import strategies as st
 from tilings import by_tiles, cell_sizes, cut_terrains, workspace
 
 from basinwright.basins import delineate
-from basinwright.basins.time_area import time_area_curves
+from basinwright.basins.time_area import farthest_in_time, time_area_curves, travel_times_us
 from basinwright.terrain import condition_and_route
 
 
@@ -30,7 +30,10 @@ def test_labels_paths_and_curves_do_not_depend_on_the_tiling(tmp_path_factory, c
     for name, expected in vars(one).items():
         np.testing.assert_array_equal(getattr(many, name), expected, err_msg=name)
     if len(tiling) > 1 or count:
-        expected = time_area_curves(whole, one, uneven)
-        curves = time_area_curves(tiled, many, uneven, workspace(folder / "curves"))
+        whole_us = travel_times_us(whole, uneven)
+        tiled_us = travel_times_us(tiled, uneven, workspace(folder / "curves"))
+        np.testing.assert_array_equal(farthest_in_time(tiled, many, tiled_us), farthest_in_time(whole, one, whole_us))
+        expected = time_area_curves(whole, one, whole_us)
+        curves = time_area_curves(tiled, many, tiled_us)
         for name, values in expected.items():
             np.testing.assert_array_equal(curves[name], values, err_msg=name)

@@ -350,8 +350,7 @@ LATER = [
     ("terrain", "conditioning", "breach"), ("terrain", "breach_depth", "3 m"), ("terrain", "breach_length", "50 m"),
     ("terrain", "stream_lines", "a.gpkg"), ("terrain", "barriers", "a.gpkg"), ("terrain", "sinks", "a.gpkg"),
     ("terrain", "flow_direction", "d8.tif"), ("terrain", "flow_direction_codes", {"1": 0}),
-    ("flow_path", "farthest", "time"), ("channel", "roughness", "n_column"), ("compute", "scheduler", "tcp://x:1"),
-    ("compute", "memory", "4 GB"),
+    ("channel", "roughness", "n_column"), ("compute", "scheduler", "tcp://x:1"), ("compute", "memory", "4 GB"),
 ]  # fmt: skip
 
 

@@ -133,6 +133,20 @@ def regional(constant_cfs):
     return lambda folder: (folder / "regional.csv").write_text(text)
 
 
+def arms():
+    """Return two strips of 2 % that meet above the outlet: 38 cells from the west, 34 from the east."""
+    z = np.full((7, 80), np.nan)
+    z[3:6, 40] = 100.0 - 0.4 * np.arange(3)
+    z[3, 2:40] = 100.0 + 0.4 * np.arange(38, 0, -1)
+    z[3, 41:75] = 100.0 + 0.4 * np.arange(1, 35)
+    return z
+
+
+def eastern(code):
+    """Return grassland with another class under the eastern strip."""
+    return np.where(np.arange(80) > 40, code, 71) + np.zeros((7, 1))
+
+
 # Flag: what raises it, and what comes close.
 CASES = {
     "EDGE_TOUCH": ({"z": valley()[RIM:], "at": (98, AXIS)}, {"z": valley()[RIM - 1 :], "at": (BOTTOM - 2, AXIS)}),
@@ -161,6 +175,11 @@ CASES = {
     "STREAM_AREA_UNSURE": (
         {"terrain": {"stream_area": "auto"}},
         {"terrain": {"stream_area": "auto"}, "z": DITCHES, "at": (DITCHES.shape[0] - 4, 128), "cell": 10.0},
+    ),
+    # Woods slow the shorter strip; without them the longer one takes longer.
+    "LONGEST_IN_TIME_DIFFERS": (
+        {"z": arms(), "at": (5, 40), "cover": eastern(42)},
+        {"z": arms(), "at": (5, 40), "cover": eastern(71)},
     ),
     "TC_MINIMUM": ({"timing": {"minimum": "55 min"}}, {"timing": {"minimum": "45 min"}}),
     "OVERRIDE": ({"columns": {"curve_number": {"A": 80}}}, {"columns": {"curve_number": {}}}),

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -12,10 +13,12 @@ from basinwright.hydrology.frames import Frame
 from basinwright.hydrology.settings import Settings
 from basinwright.runoff import Patches
 from basinwright.schemes import Scheme
+from basinwright.tables import SEGMENTS
 from basinwright.timing import SegmentTimes, sum_by_outlet, time_segments
 from basinwright.units import M_PER_FT
 
 if TYPE_CHECKING:
+    import pandas as pd
     from numpy.typing import NDArray
 
     from basinwright.editing import Cell
@@ -108,6 +111,24 @@ def path_times(segments: Frame, times: SegmentTimes, scheme: Scheme, count: int)
         summed(times.travel_time_h, water),
         path_inputs(segments, times, scheme, count),
     )
+
+
+def path_times_h(segments: pd.DataFrame, ids: Sequence[str], settings: Settings) -> NDArray[np.float64]:
+    """Return the travel time along the path of each outlet at the stage that counts, NaN where it has no segments.
+
+    Parameters
+    ----------
+    segments : DataFrame
+        Segments as the terrain gives them, unedited.
+    ids : sequence of str
+        The outlets.
+    settings : Settings
+    """
+    frame = Frame(SEGMENTS, segments, settings.project).of_outlets({outlet_id: i for i, outlet_id in enumerate(ids)})
+    times = timed(frame, settings, set())
+    hours = times.travel_time_half_h if settings.project.channel.stage == "half" else times.travel_time_h
+    some = np.bincount(frame.outlet, minlength=len(ids)) > 0
+    return np.where(some, sum_by_outlet(frame.outlet, hours, len(ids)), np.nan)
 
 
 def patches_of(shares: Frame, scheme: Scheme, count: int) -> tuple[Patches, dict[str, Any], dict[str, Any]]:

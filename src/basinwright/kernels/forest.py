@@ -79,6 +79,21 @@ def combine_extremes(
 
 
 @njit(cache=True, nogil=True)
+def combine_largest(parent: np.ndarray, order: np.ndarray, largest: np.ndarray) -> None:
+    """Largest values of whole basins from those of the labels, in place.
+
+    Parameters
+    ----------
+    parent, order : int32 arrays, shape (n,)
+    largest : int64 array, shape (n,)
+    """
+    for i in order:
+        p = parent[i]
+        if p >= 0:
+            largest[p] = max(largest[p], largest[i])
+
+
+@njit(cache=True, nogil=True)
 def combine_farthest(
     parent: np.ndarray,
     order: np.ndarray,

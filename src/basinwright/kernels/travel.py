@@ -155,3 +155,47 @@ def combine_curves(
             shift = bounds[p] + first_bin[i] - first_bin[p]
             for b in range(bounds[i + 1] - bounds[i]):
                 area_m2[shift + b] += area_m2[bounds[i] + b]
+
+
+@njit(cache=True, nogil=True)
+def thinned(
+    bounds: np.ndarray, area_m2: np.ndarray, labels: np.ndarray, most: int
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Cumulate the curves of some labels and thin the long ones evenly; the last bin is kept.
+
+    Parameters
+    ----------
+    bounds : int64 array, shape (n + 1,)
+        Label i owns the bins ``bounds[i]`` up to ``bounds[i + 1]``.
+    area_m2 : float64 array, shape (bins,) [m2]
+    labels : int32 array, shape (m,)
+    most : int
+        Rows of a thinned curve.
+
+    Returns
+    -------
+    curve : int64 array, shape (rows,)
+        Position in `labels`.
+    number : int64 array, shape (rows,)
+        Of the bin, from 0 at the outlet.
+    within_m2 : float64 array, shape (rows,) [m2]
+        Area up to the end of the bin.
+    """
+    rows = 0
+    for i in labels:
+        size = bounds[i + 1] - bounds[i]
+        stride = (size + most - 1) // most
+        rows += (size + stride - 1) // stride
+    curve, number, within_m2 = np.empty(rows, np.int64), np.empty(rows, np.int64), np.empty(rows, np.float64)
+    row = 0
+    for k in range(labels.size):
+        first = bounds[labels[k]]
+        size = bounds[labels[k] + 1] - first
+        stride = (size + most - 1) // most
+        within = 0.0
+        for b in range(size):
+            within += area_m2[first + b]
+            if (size - 1 - b) % stride == 0:
+                curve[row], number[row], within_m2[row] = k, b, within
+                row += 1
+    return curve, number, within_m2

@@ -114,7 +114,12 @@ def along(
     return distance_m, raw_m, straight.falling(bounds, raw_m, elevation_m), area_km2
 
 
-def trace(terrain: Terrain, basins: Basins, length_correction: LengthCorrection = "none") -> Paths:
+def trace(
+    terrain: Terrain,
+    basins: Basins,
+    length_correction: LengthCorrection = "none",
+    farthest_cell: np.ndarray | None = None,
+) -> Paths:
     """Trace the longest flow path of every outlet.
 
     Parameters
@@ -123,6 +128,9 @@ def trace(terrain: Terrain, basins: Basins, length_correction: LengthCorrection 
     basins : Basins
     length_correction : {"none", "straight"}
         Of the distances along it (`along`); which path is the longest is decided without.
+    farthest_cell : int32 array, shape (labels,), optional
+        Padded indices of the cells where the paths start, for each whole basin, -1 for no path; the cells farthest in
+        length where not given.
 
     Returns
     -------
@@ -130,7 +138,7 @@ def trace(terrain: Terrain, basins: Basins, length_correction: LengthCorrection 
     """
     from basinwright.kernels.trace import trace_paths
 
-    starts = basins.by_outlet(basins.farthest_cell, failed=NO_CELL)
+    starts = basins.by_outlet(basins.farthest_cell if farthest_cell is None else farthest_cell, failed=NO_CELL)
     ends = basins.by_outlet(basins.label_cell, failed=NO_CELL)
     bounds, cells = trace_paths(terrain.directions, terrain.ncols, starts, ends)
     return Paths(bounds, cells, *along(terrain, bounds, cells, length_correction))

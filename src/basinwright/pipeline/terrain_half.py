@@ -11,7 +11,7 @@ import numpy as np
 
 from basinwright.flags import Flag
 from basinwright.grid import Grid
-from basinwright.hydrology import OTHER_STARTS, bankfull_relation_of
+from basinwright.hydrology import OTHER_STARTS, Settings, bankfull_relation_of, path_times_h
 from basinwright.paths.tracing import DEEP_FILL_M
 from basinwright.pipeline.inputs import Inputs
 from basinwright.project import Project
@@ -30,6 +30,8 @@ if TYPE_CHECKING:
 
 AREA_TOLERANCE = 0.1
 """Relative difference from the expected area above which AREA_MISMATCH is raised."""
+LONGEST_TOLERANCE = 0.05
+"""Relative difference in travel time of the paths longest in length and in time above which it is a doubt."""
 SMALL_BASIN_CELLS = 200
 STORAGE_FILLED_MM = 2.54
 """0.1 in over the basin."""
@@ -158,17 +160,35 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
         {"routing": routing.key, "channels": channels.key, "outlets": outlets},
         lambda draft: _basins(inputs, grid, elevation, routing.record(Terrain, "terrain"), channels, draft),
     )
+    time_area = store.stage(
+        "time_area",
+        "Adding up travel times along the flow",
+        {
+            "basins": basins.key,
+            "cover": cover.key,
+            "options": project.model_dump(mode="json", include={"project", "terrain", "flow_path", "channel"}),
+            "two_year_depth": project.storm.two_year_depth_mm,
+        },
+        lambda draft: _time_area(
+            inputs, {"routing": routing, "channels": channels, "cover": cover, "basins": basins}, draft
+        ),
+    )
     paths = store.stage(
         "paths",
         "Tracing the longest flow paths",
-        {"basins": basins.key, "length_correction": project.terrain.length_correction},
-        lambda draft: _paths(inputs, grid, elevation, routing.record(Terrain, "terrain"), basins, draft),
+        {
+            "basins": basins.key,
+            "length_correction": project.terrain.length_correction,
+            "farthest": time_area.key if project.flow_path.farthest == "time" else "length",
+        },
+        lambda draft: _paths(inputs, grid, elevation, routing.record(Terrain, "terrain"), basins, time_area, draft),
     )
     tables = store.stage(
         "tables",
         "Cutting the paths into segments and adding up land cover",
         {
             "paths": paths.key,
+            "time_area": time_area.key,
             "cover": cover.key,
             "scheme": inputs.scheme.to_rows(),
             "impervious": inputs.sha256(inputs.impervious),
@@ -186,21 +206,15 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
         },
         lambda draft: _tables(
             inputs,
-            {"routing": routing, "channels": channels, "cover": cover, "basins": basins, "paths": paths},
+            {
+                "routing": routing,
+                "channels": channels,
+                "cover": cover,
+                "basins": basins,
+                "time_area": time_area,
+                "paths": paths,
+            },
             draft,
-        ),
-    )
-    time_area = store.stage(
-        "time_area",
-        "Drawing time-area curves",
-        {
-            "basins": basins.key,
-            "cover": cover.key,
-            "options": project.model_dump(mode="json", include={"project", "terrain", "flow_path", "channel"}),
-            "two_year_depth": project.storm.two_year_depth_mm,
-        },
-        lambda draft: _time_area(
-            inputs, {"routing": routing, "channels": channels, "cover": cover, "basins": basins}, draft
         ),
     )
     factors = project.uncertainty.stream_area_factor if project.uncertainty is not None else None
@@ -306,14 +320,23 @@ def _basins(inputs: Inputs, grid: Grid, elevation: Entry, terrain: Terrain, chan
     keep_columns(draft, "measures", measures)
 
 
-def _paths(inputs: Inputs, grid: Grid, elevation: Entry, terrain: Terrain, basins_entry: Entry, draft: Draft) -> None:
+def _paths(
+    inputs: Inputs,
+    grid: Grid,
+    elevation: Entry,
+    terrain: Terrain,
+    basins_entry: Entry,
+    time_area: Entry,
+    draft: Draft,
+) -> None:
     from basinwright.basins import Basins
     from basinwright.paths import profile_measures, reach_measures, trace
 
     basins = basins_entry.record(Basins, "basins")
     measures = kept_columns(basins_entry, "measures")
     correction = inputs.project.terrain.length_correction
-    paths = trace(terrain, basins, correction)
+    in_time = inputs.project.flow_path.farthest == "time"
+    paths = trace(terrain, basins, correction, time_area.array("farthest_cell") if in_time else None)
     profile = profile_measures(
         grid, terrain, elevation.array("elevation_m"), paths, measures["centroid_x"], measures["centroid_y"]
     )
@@ -374,13 +397,18 @@ def _tables(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
         _impervious(inputs, terrain, basins, patches.cells, len(patches)),
     )
     depths = _mean_depths_mm(inputs, terrain, basins)
-    cut = _cut(inputs, terrain, paths, cover, float(stages["channels"].values("stream_area_km2")))
+    stream_area_km2 = float(stages["channels"].values("stream_area_km2"))
+    cut = _cut(inputs, terrain, paths, cover, stream_area_km2)
+    along_other = _cut(inputs, terrain, _other_paths(inputs, stages, terrain, basins), cover, stream_area_km2)
 
     failed = _failures(snapped, measures, shares.failed, depths)
-    marks = {"sheet_limited": cut.sheet_limited, **vars(snapped), **measures}
-    flags = _flags(inputs, marks, shares, failed, stages["channels"].values("doubt"))
     fine = np.array([i not in failed for i in range(len(inputs.points))], dtype=bool)
     ids = np.array(inputs.points.ids, dtype=object)
+    measures |= _times_of_both(
+        inputs, ids, _of_fine(cut.segments, ids, fine), _of_fine(along_other.segments, ids, fine)
+    )
+    marks = {"sheet_limited": cut.sheet_limited, **vars(snapped), **measures}
+    flags = _flags(inputs, marks, shares, failed, stages["channels"].values("doubt"))
     tables = {
         OUTLETS: _outlet_rows(inputs, grid, ids, snapped, measures, shares.open_water_pct, depths, fine),
         SEGMENTS: _of_fine(cut.segments, ids, fine) | {"edited": None},
@@ -434,6 +462,32 @@ def _channel_starts(inputs: Inputs, stages: Mapping[str, Entry], factors: tuple[
         cut = _cut(inputs, terrain, paths, cover, factor * float(stages["channels"].values("stream_area_km2")))
         columns = _of_fine(cut.segments, ids, fine) | {"edited": None}
         draft.frame(name, _as_frame(SEGMENTS, columns, project))
+
+
+def _other_paths(inputs: Inputs, stages: Mapping[str, Entry], terrain: Terrain, basins: Basins) -> Paths:
+    """Trace the paths that are longest in the sense that does not count, where they are other paths."""
+    from basinwright.kernels import NO_CELL
+    from basinwright.paths import trace
+
+    project, in_time = inputs.project, stages["time_area"].array("farthest_cell")
+    other = in_time if project.flow_path.farthest == "length" else basins.farthest_cell
+    differs = np.where(in_time == basins.farthest_cell, NO_CELL, other).astype(np.int32)
+    return trace(terrain, basins, project.terrain.length_correction, differs)
+
+
+def _times_of_both(
+    inputs: Inputs, ids: NDArray[Any], counted: Mapping[str, Any], other: Mapping[str, Any]
+) -> dict[str, NDArray[np.float64]]:
+    """Return the travel times along the paths longest in length and longest in time, by their segments [h]."""
+    project, design = inputs.project, inputs.design
+    settings = Settings(project, inputs.scheme, design.storm, design.ddf)
+    own_h, other_h = (
+        path_times_h(_as_frame(SEGMENTS, {**columns, "edited": None}, project), ids.tolist(), settings)
+        for columns in (counted, other)
+    )
+    other_h = np.where(np.isnan(other_h), own_h, other_h)  # one path is the longest in both senses
+    in_length_h, in_time_h = (own_h, other_h) if project.flow_path.farthest == "length" else (other_h, own_h)
+    return {"tc_longest_in_length_h": in_length_h, "tc_longest_in_time_h": in_time_h}
 
 
 def _patch_areas_km2(terrain: Terrain, basins: Basins, cells: NDArray[np.int32], count: int) -> NDArray[np.float64]:
@@ -496,9 +550,9 @@ def _mean_depths_mm(inputs: Inputs, terrain: Terrain, basins: Basins) -> dict[st
 
 
 def _time_area(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
-    """Draw the time-area curves as the table that the hydrology reads."""
+    """Find the cells farthest in time, and draw the time-area curves as the table that the hydrology reads."""
     from basinwright.basins import Basins
-    from basinwright.basins.time_area import time_area_curves
+    from basinwright.basins.time_area import farthest_in_time, time_area_curves, travel_times_us
     from basinwright.cover import CoverLayer
     from basinwright.pipeline.travel import StepTimes
     from basinwright.terrain import Terrain
@@ -511,7 +565,9 @@ def _time_area(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> Non
         stages["cover"].record(CoverLayer, "cover"),
         float(stages["channels"].values("stream_area_km2")),
     )
-    curves = time_area_curves(terrain, basins, step_times)
+    time_us = travel_times_us(terrain, step_times)
+    draft.array("farthest_cell", farthest_in_time(terrain, basins, time_us))
+    curves = time_area_curves(terrain, basins, time_us)
     ids = np.array(inputs.points.ids, dtype=object)
     columns = {"outlet_id": ids[curves["outlet"]], **{k: v for k, v in curves.items() if k != "outlet"}}
     draft.frame(TIME_AREA.name, _as_frame(TIME_AREA, columns, inputs.project))
@@ -565,6 +621,15 @@ def _flags(
         where(marks["ambiguous"], "SNAP_AMBIGUOUS", lambda i: "another flow line passes within the search distance")
         where(np.abs(off) > AREA_TOLERANCE, "AREA_MISMATCH", lambda i: f"{off[i]:+.0%} against the expected area")
         where(marks["cells"] < SMALL_BASIN_CELLS, "SMALL_BASIN", lambda i: f"{int(marks['cells'][i])} cells")
+        in_length_h, in_time_h = marks["tc_longest_in_length_h"], marks["tc_longest_in_time_h"]
+        where(
+            np.abs(in_time_h / in_length_h - 1.0) > LONGEST_TOLERANCE,
+            "LONGEST_IN_TIME_DIFFERS",
+            lambda i: (
+                f"{in_time_h[i]:.3g} h along the path longest in time, {in_length_h[i]:.3g} h along the one "
+                "longest in length"
+            ),
+        )
         where(marks["sheet_limited"], "SHEET_LIMIT", lambda i: "100 root S / n (ft) is under flow_path.sheet_limit")
         where(
             deepest > DEEP_FILL_M,
@@ -648,7 +713,7 @@ def _outlet_rows(
 _MEASURED = (
     "area_km2", "centroid_length_m", "path_length_m", "path_length_raw_m", "relief_m", "basin_slope_pct",
     "path_slope_pct", "path_slope_1085_pct", "mean_elevation_m", "drainage_density_per_km", "reach_length_m",
-    "reach_fall_m", "reach_area_km2",
+    "reach_fall_m", "reach_area_km2", "tc_longest_in_time_h",
 )  # fmt: skip
 
 
