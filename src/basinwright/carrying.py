@@ -67,7 +67,8 @@ def carry(
     if not edits.segments and not edits.shares and edits.held == supplied:
         return Carried(Edited(dict(onto), supplied))
     carriers = [kind(edits, record, system) for kind in (_OutletCarrier, _SegmentCarrier, _ShareCarrier)]
-    tables, result = dict(onto), Carried(Edited(tables := dict(onto), set()))
+    tables = dict(onto)
+    result = Carried(Edited(tables, set()))
     for carrier in carriers:
         frame = onto[carrier.table.name]
         rows = carrier.carry(by_outlet(frame), by_row(supplied, carrier.table.name))

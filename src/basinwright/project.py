@@ -656,10 +656,10 @@ def scenario_content(data: dict[str, Any], entry: dict[str, Any]) -> dict[str, A
     merged = {name: section for name, section in data.items() if name != "scenario"}
     for name in SCENARIO_SECTIONS:
         given = entry.get(name)
-        if given is None:
-            continue
+        if not isinstance(given, dict):
+            continue  # the model names it
         before = data.get(name)
-        if not isinstance(given, dict) or not isinstance(before, dict):
+        if not isinstance(before, dict):
             merged[name] = given
             continue
         sources, dropped = _SOURCES_OF.get(name, ((), ()))
@@ -765,7 +765,7 @@ def _scenario_conflicts(
         if isinstance(name, str) and (before := names.setdefault(name.lower(), number)) != number:
             what = f"{name!r} is also the name of scenario {before}"
             yield scenario_field(number, "name"), what, "give each its own: they name folders"
-        if not any(entry.get(key) for key in SCENARIO_SECTIONS):
+        if not any(section for key, section in entry.items() if key != "name"):
             what = "replaces nothing"
             yield scenario_field(number, "cover"), what, f"give one of {', '.join(SCENARIO_SECTIONS)}"
         own = entry.get("cover")
