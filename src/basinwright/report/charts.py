@@ -289,6 +289,53 @@ def floods(run: Run, outlet: Outlet) -> Markup | None:
     return picture(WIDE, 440.0, "Design floods", description + ".", *parts, key=f"{outlet.anchor}-floods")
 
 
+def scenarios(run: Run, outlet: Outlet) -> Markup | None:
+    """Draw the rarest flood of the base and of every scenario; None where there are none."""
+    if not outlet.floods or not outlet.scenario_floods:
+        return None
+    period = max(outlet.floods, key=float)
+    drawn = {"base": outlet.floods[period]}
+    drawn |= {name: floods[period] for name, floods in outlet.scenario_floods.items() if period in floods}
+    biggest = max(float(flood["flow"].max()) for flood in drawn.values())
+    if not biggest > 0:
+        return None
+    unit = words.unit_of(HYDROGRAPHS.column("flow"), run.system)
+    capacity = outlet.row.get("capacity", math.nan)
+    with_capacity = capacity == capacity and capacity < 1.6 * biggest
+    shown = [flood["time_h"][flood["flow"] > 0.01 * biggest] for flood in drawn.values()]
+    first = min((float(hours[0]) for hours in shown if hours.size), default=0.0)
+    last = max(float(hours[-1]) for hours in shown if hours.size)
+    first = max(first - 0.04 * (last - first), 0.0)
+    key = 22.0 * len(drawn)
+    top, bottom = 18.0 + key, 300.0 + key
+    along = Scale(first, last, _LEFT, WIDE - _RIGHT)
+    up = Scale(0.0, max(biggest, capacity if with_capacity else 0.0) * 1.06, bottom, top + 12)
+    parts = [
+        axis_left(up, _LEFT, "", WIDE - _RIGHT),
+        axis_bottom(along, bottom, f"time from the start of the {period}-year storm, h; flow in {unit}", top=top + 12),
+    ]
+    told = []
+    for place, (name, flood) in enumerate(drawn.items()):
+        style, inside = palette.scenario(place), (flood["time_h"] >= first) & (flood["time_h"] <= last)
+        line = _thinned(flood["time_h"][inside], flood["flow"][inside], along, up)
+        at = int(flood["flow"].argmax())
+        label = f"{words.short(name, 40)}: {words.figure(float(flood['flow'][at]))} {unit}"
+        label += f" at {words.figure(float(flood['time_h'][at]))} h"
+        look = {"stroke": style.colour, "stroke_width": 2.2, "stroke_dasharray": style.dash or None}
+        parts.append(polyline(line, **look))
+        parts.append(el("path", d=f"M{number(_LEFT)} {number(14.0 + 22.0 * place)}h34", **look))
+        parts.append(text(_LEFT + 42, 18.0 + 22.0 * place, label))
+        told.append(label)
+    if with_capacity:
+        y = up(capacity)
+        parts.append(el("path", d=f"M{_LEFT} {number(y)}H{WIDE - _RIGHT}", class_="capacity"))
+        label = f"capacity {words.figure(capacity)} {unit}"
+        parts.append(text(WIDE - _RIGHT, y - 5, label, anchor="end", class_="capacity-label"))
+    description = f"Flood of the {period}-year storm. " + "; ".join(told) + "."
+    title = "Floods of base and scenarios"
+    return picture(WIDE, bottom + 40.0, title, description, *parts, key=f"{outlet.anchor}-scenarios")
+
+
 def _swatch(x: float, y: float, colour: str, label: str) -> Markup:
     return join([el("rect", x=x, y=y - 9, width=11.0, height=10.0, fill=colour), text(x + 16, y, label)])
 

@@ -11,7 +11,7 @@ from typing import Any
 from basinwright import published
 from basinwright.flags import FLAGS, SEVERITIES
 from basinwright.registry import find
-from basinwright.report import charts, palette, words
+from basinwright.report import charts, comparisons, palette, words
 from basinwright.report.reading import Outlet, Run
 from basinwright.report.words import count, elevation, figure, listed, plain, short, station, unit_label, with_unit
 from basinwright.tables import COVER_SHARES, CROSS_CHECKS, OUTLETS, SEGMENTS
@@ -392,6 +392,8 @@ def outlet_facts(run: Run, outlet: Outlet) -> dict[str, Any]:
     translation = row.get("translation_peak_rate_factor", math.nan)
     facts["translation"] = "" if translation != translation else figure(translation)
     facts["shares"] = _worksheet(run, outlet)
+    facts["scenarios"] = comparisons.of_scenarios(run, outlet)
+    facts["cell_sizes"] = comparisons.of_cell_sizes(run, outlet)
     return facts
 
 

@@ -22,7 +22,7 @@ from typing import TYPE_CHECKING, Any
 from markupsafe import Markup
 
 from basinwright.errors import BasinwrightError
-from basinwright.report import charts, context, maps, palette, words
+from basinwright.report import charts, comparisons, context, maps, palette, words
 from basinwright.report.reading import Outlet, Run, read_run
 
 if TYPE_CHECKING:
@@ -142,6 +142,9 @@ def _index(run: Run, outlets: list[Outlet]) -> str:
         more_worries=len(worries) - len(shown),
         columns=context.index_columns(run),
         rows=[(link(outlet), outlet.severity, context.index_row(run, outlet)) for outlet in run.outlets],
+        periods=run.periods,
+        scenarios=comparisons.scenario_summary(run),
+        cell_sizes=comparisons.cell_size_summary(run),
         flags=context.flag_summary(run),
         settings=context.settings(run),
         inputs=context.inputs(run),
@@ -169,6 +172,7 @@ def _page(run: Run, outlet: Outlet) -> dict[str, Any]:
         "time_area": charts.time_area(run, outlet),
         "unit_hydrograph": charts.unit_hydrograph(run, outlet),
         "floods": charts.floods(run, outlet),
+        "scenario_chart": charts.scenarios(run, outlet),
         "capacity": charts.capacity(run, outlet),
     }
 

@@ -81,6 +81,22 @@ MARKS: dict[str, Mark] = {
     "ok": Mark("no doubt", "#ffffff", "M-5 0A5 5 0 1 1 5 0A5 5 0 1 1-5 0Z"),
 }
 
+SCENARIOS: tuple[LineStyle, ...] = (
+    LineStyle("base", INK),
+    LineStyle("", "#c8405a", "9 3"),
+    LineStyle("", "#2f7fb5", "3 2.5"),
+    LineStyle("", "#b8670a", "12 3 2 3"),
+    LineStyle("", "#7b5aa6", "6 2 2 2 2 2"),
+    LineStyle("", "#3d8a5f", "1.5 2"),
+)
+"""The base, then the scenarios in their order, over and over."""
+
+
+def scenario(place: int) -> LineStyle:
+    """Return the style of a scenario counted from 1; the base is 0."""
+    return SCENARIOS[0] if place == 0 else SCENARIOS[1 + (place - 1) % (len(SCENARIOS) - 1)]
+
+
 _FIRST, _LAST = (0x5B, 0x97, 0xBD), (0x0D, 0x1B, 0x4C)
 
 

@@ -17,11 +17,13 @@ from basinwright.flags import FLAGS, SEVERITIES
 from basinwright.outputs import hydrographs_nc
 from basinwright.report import words
 from basinwright.tables import (
+    CELL_SIZES,
     COVER_SHARES,
     CROSS_CHECKS,
     FLAGS_TABLE,
     HYDROGRAPHS,
     OUTLETS,
+    SCENARIOS,
     SEGMENTS,
     TIME_AREA,
     TIMING,
@@ -70,7 +72,7 @@ class Outlet:
         Its row there.
     doubts : list of Doubt
         Its flags, the gravest first.
-    segments, timing, shares, cross_checks : list of Row
+    segments, timing, shares, cross_checks, scenarios, cell_sizes : list of Row
         Its rows of those tables.
     time_area : dict
         ``travel_time_h`` and ``area``; empty where the run keeps none.
@@ -78,6 +80,8 @@ class Outlet:
         ``time_h`` and ``flow``; empty where the run keeps none.
     floods : dict
         By return period as written: ``time_h``, ``rain``, ``excess``, ``flow``.
+    scenario_floods : dict
+        The floods of each scenario, by its name.
     basin, subbasin, path : geometry or None
         In the working CRS.
     lines : dict
@@ -97,9 +101,12 @@ class Outlet:
     timing: list[Row] = field(default_factory=list)
     shares: list[Row] = field(default_factory=list)
     cross_checks: list[Row] = field(default_factory=list)
+    scenarios: list[Row] = field(default_factory=list)
+    cell_sizes: list[Row] = field(default_factory=list)
     time_area: dict[str, Any] = field(default_factory=dict)
     unit_hydrograph: dict[str, Any] = field(default_factory=dict)
     floods: dict[str, dict[str, Any]] = field(default_factory=dict)
+    scenario_floods: dict[str, dict[str, dict[str, Any]]] = field(default_factory=dict)
     basin: Any = None
     subbasin: Any = None
     path: Any = None
@@ -245,6 +252,7 @@ def read_run(folder: Path, about: Mapping[str, Any]) -> Run:
     for outlet in outlets:
         outlet.doubts.sort(key=lambda doubt: (-_SEVERITIES.index(doubt.severity), order.index(doubt.key)))
     lists = {"segments": SEGMENTS, "timing": TIMING, "shares": COVER_SHARES, "cross_checks": CROSS_CHECKS}
+    lists |= {"scenarios": SCENARIOS, "cell_sizes": CELL_SIZES}
     for name, source in lists.items():
         for row in _rows(read(source)):
             getattr(by_id[row["outlet_id"]], name).append(row)
@@ -252,16 +260,27 @@ def read_run(folder: Path, about: Mapping[str, Any]) -> Run:
         by_id[outlet_id].time_area = part
     for outlet_id, _, part in _series(read(UNIT_HYDROGRAPHS), ("time_h", "flow")):
         by_id[outlet_id].unit_hydrograph = part
-    written = {float(period): period for period in periods}
-    netcdf = folder / hydrographs_nc.FILE
-    only_netcdf = netcdf.is_file() and not (folder / f"{HYDROGRAPHS.name}.csv").is_file()
-    hydrographs = hydrographs_nc.read_hydrographs(netcdf) if only_netcdf else read(HYDROGRAPHS)
-    for outlet_id, period, part in _series(hydrographs, ("time_h", "rain", "excess", "flow")):
-        by_id[outlet_id].floods[written[period]] = part
+    for outlet_id, period, part in _floods(folder, system, periods):
+        by_id[outlet_id].floods[period] = part
+    for scenario in about.get("scenarios", []):
+        for outlet_id, period, part in _floods(folder / "scenarios" / scenario["name"], system, periods):
+            by_id[outlet_id].scenario_floods.setdefault(scenario["name"], {})[period] = part
     run = Run(folder, about, system, periods, outlets, set(table.columns))
     if (folder / "basins.gpkg").is_file():
         _read_layers(run, by_id)
     return run
+
+
+def _floods(folder: Path, system: System, periods: Sequence[str]) -> Iterator[tuple[str, str, dict[str, Any]]]:
+    """Yield outlet, return period as written and columns of each hydrograph in a folder."""
+    written = {float(period): period for period in periods}
+    netcdf, table = folder / hydrographs_nc.FILE, folder / f"{HYDROGRAPHS.name}.csv"
+    if netcdf.is_file() and not table.is_file():
+        hydrographs = hydrographs_nc.read_hydrographs(netcdf)
+    else:
+        hydrographs = _read(table, HYDROGRAPHS, system, periods)
+    for outlet_id, period, part in _series(hydrographs, ("time_h", "rain", "excess", "flow")):
+        yield outlet_id, written[period], part
 
 
 def _read(path: Path, table: Table, system: System, periods: Sequence[str]) -> pd.DataFrame:
