@@ -96,6 +96,10 @@ FLAGS: dict[str, FlagKind] = {
         FlagKind("DEEP_FILL", "warning",
                  "conditioning moved the terrain under the path or at the outlet by over 2 m",
                  "look for an embankment, a pit or a quarry there; correct the terrain or confirm the path"),
+        FlagKind("BREACH_INSIDE", "note",
+                 "conditioning cut over 1 m deep somewhere in the basin",
+                 "look at terrain/conditioning_change.tif: a culvert or bridge there is taken to pass every flow "
+                 "without ponding; where there is none, lower terrain.breach_depth or correct the terrain"),
         FlagKind("STORAGE_FILLED", "warning",
                  "the volume filled in the basin exceeds 0.1 in over its area",
                  "real depressions may attenuate the flood: consider routing through them"),

@@ -503,9 +503,6 @@ class Project(Section):
 
 
 LATER: tuple[tuple[str, str, Callable[[Any], bool], str], ...] = (
-    ("terrain", "conditioning", lambda value: value != "fill", 'use "fill"'),
-    ("terrain", "breach_depth", lambda value: value != 5.0, "leave it out"),
-    ("terrain", "breach_length", lambda value: value != 100.0, "leave it out"),
     ("terrain", "stream_lines", lambda value: value is not None, "leave it out"),
     ("terrain", "barriers", lambda value: value is not None, "leave it out"),
     ("terrain", "sinks", lambda value: value is not None, "leave it out"),

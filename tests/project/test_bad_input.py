@@ -347,7 +347,6 @@ def test_an_option_that_is_none(rejected, tmp_path, overrides, words):
 
 
 LATER = [
-    ("terrain", "conditioning", "breach"), ("terrain", "breach_depth", "3 m"), ("terrain", "breach_length", "50 m"),
     ("terrain", "stream_lines", "a.gpkg"), ("terrain", "barriers", "a.gpkg"), ("terrain", "sinks", "a.gpkg"),
     ("terrain", "flow_direction", "d8.tif"), ("terrain", "flow_direction_codes", {"1": 0}),
     ("channel", "roughness", "n_column"), ("compute", "scheduler", "tcp://x:1"), ("compute", "memory", "4 GB"),
@@ -363,7 +362,7 @@ def test_options_of_later_versions(rejected, tmp_path, section, key, value):
 def test_options_of_later_versions_at_their_default(tmp_path):
     file = project(
         tmp_path,
-        terrain={"conditioning": "fill", "breach_depth": "5 m", "breach_length": "100 m", "length_correction": "none"},
+        terrain={"length_correction": "none"},
         cover={"connected_fraction": 1.0},
         flow_path={"farthest": "length"},
         unit_hydrograph={"ct": 2.0, "cp": 0.6, "storage_ratio": 0.5},

@@ -11,7 +11,7 @@ from basinwright.terrain.land_slope import horn_slope_blocks
 from basinwright.terrain.network import stream_area_m2
 from basinwright.terrain.summable import quantum
 
-_SUMS = ("area", "cells", "contact", "elevation", "slope", "row", "col", "depth")
+_SUMS = ("area", "cells", "contact", "elevation", "slope", "row", "col", "filled")
 
 
 def measure(grid: Grid, terrain: Terrain, elevation_m: np.ndarray, basins: Basins) -> dict[str, np.ndarray]:
@@ -31,10 +31,11 @@ def measure(grid: Grid, terrain: Terrain, elevation_m: np.ndarray, basins: Basin
         ``downstream_outlet`` (index, -1 for none), ``area_km2``, ``cells``, ``relief_m`` (highest minus lowest
         unconditioned elevation), ``mean_elevation_m``, ``basin_slope_pct`` (mean land slope, Horn 1981,
         weighted by area), ``centroid_x``, ``centroid_y`` (centre of area, map coordinates),
-        ``path_length_m`` (longest flow path), ``filled_volume_m3``, ``contact_cells`` (cells at the raster's
-        edge or beside a void, the outlet's own included). Outlets that failed have NaN; 0 cells.
+        ``path_length_m`` (longest flow path), ``filled_volume_m3``, ``deepest_cut_inside_m`` (by conditioning),
+        ``contact_cells`` (cells at the raster's edge or beside a void, the outlet's own included). Outlets that
+        failed have NaN; 0 cells.
     """
-    sums, lowest, highest = _by_label(grid, terrain, elevation_m, basins)
+    sums, lowest, highest, deepest_cut = _by_label(grid, terrain, elevation_m, basins)
     whole = dict(zip(_SUMS, basins.whole_sums(sums).T, strict=True))
     area = whole["area"]
     centroid_x, centroid_y = grid.xy(whole["row"] / area, whole["col"] / area)
@@ -46,7 +47,8 @@ def measure(grid: Grid, terrain: Terrain, elevation_m: np.ndarray, basins: Basin
         "centroid_x": centroid_x,
         "centroid_y": centroid_y,
         "path_length_m": basins.farthest_um / 1e6,
-        "filled_volume_m3": whole["depth"],
+        "filled_volume_m3": whole["filled"],
+        "deepest_cut_inside_m": deepest_cut,
     }
     columns = {"downstream_outlet": basins.downstream_outlet}
     columns |= {name: basins.by_outlet(values) for name, values in by_label.items()}
@@ -91,8 +93,8 @@ def drainage_density_per_km(terrain: Terrain, basins: Basins, stream_area_km2: f
 
 def _by_label(
     grid: Grid, terrain: Terrain, elevation_m: np.ndarray, basins: Basins
-) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Sums over sub-basins, shape (labels, sums), and the extremes of whole basins."""
+) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """Sums over sub-basins, shape (labels, sums); lowest, highest elevation and deepest cut of whole basins."""
     from basinwright.kernels import forest, reduce
 
     n, ncols, label = basins.n_labels, terrain.ncols, basins.label
@@ -102,22 +104,21 @@ def _by_label(
     reduce.add_area(label, ncols, by_area, 0, terrain.nrows, sums["area"], cells)
     sums["cells"][:] = cells
 
-    lowest, highest, highest_cell = np.full(n, np.inf), np.full(n, -np.inf), np.full(n, -1, np.int32)
+    ground, change = _Extremes(n), _Extremes(n)
     quanta = _quanta(grid, terrain, elevation_m)
     weight = np.empty(n)
     for first, slope in horn_slope_blocks(elevation_m, grid.dx_m, grid.dy_m):
         rows = slice(first, first + len(slope))
         elevation = np.ascontiguousarray(elevation_m[rows], np.float64)
-        reduce.keep_extremes(label, ncols, first, elevation, lowest, highest, highest_cell)
-        filled = terrain.conditioned_grid[rows]
-        with np.errstate(invalid="ignore"):
-            depth = np.where(np.isfinite(filled), filled - elevation.astype(np.float32), 0).astype(np.float64)
+        rise = terrain.change_m(elevation_m, rows).astype(np.float64)
+        for extremes, block in ((ground, elevation), (change, rise)):
+            reduce.keep_extremes(label, ncols, first, block, *extremes.arrays)
         values = {
             "elevation": elevation,
             "slope": slope,
             "row": np.broadcast_to(np.arange(first, first + len(slope), dtype=float)[:, None], slope.shape),
             "col": np.broadcast_to(np.arange(ncols, dtype=float), slope.shape),
-            "depth": depth,
+            "filled": np.maximum(rise, 0.0),
             "contact": _contact(terrain, rows),
         }
         for name, block in values.items():
@@ -125,8 +126,16 @@ def _by_label(
             reduce.add_values(
                 label, ncols, weights, first, np.ascontiguousarray(block), quanta[name], sums[name], weight
             )
-    forest.combine_extremes(basins.parent, basins.upstream_first, lowest, highest, highest_cell)
-    return np.column_stack([sums[name] for name in _SUMS]), lowest, highest
+    for extremes in (ground, change):
+        forest.combine_extremes(basins.parent, basins.upstream_first, *extremes.arrays)
+    return np.column_stack([sums[name] for name in _SUMS]), *ground.arrays[:2], np.maximum(0.0, -change.arrays[0])
+
+
+class _Extremes:
+    """Lowest and highest value by label, and the cell of the highest."""
+
+    def __init__(self, n: int) -> None:
+        self.arrays = np.full(n, np.inf), np.full(n, -np.inf), np.full(n, -1, np.int32)
 
 
 def _quanta(grid: Grid, terrain: Terrain, elevation_m: np.ndarray) -> dict[str, float]:
@@ -142,7 +151,7 @@ def _quanta(grid: Grid, terrain: Terrain, elevation_m: np.ndarray) -> dict[str, 
         "slope": quantum(steepest_pct * total_m2),
         "row": quantum(grid.nrows * total_m2),
         "col": quantum(grid.ncols * total_m2),
-        "depth": quantum(terrain.deepest_fill_m * total_m2),
+        "filled": quantum(terrain.deepest_fill_m * total_m2),
         "contact": 1.0,
     }
 

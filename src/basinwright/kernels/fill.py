@@ -321,39 +321,68 @@ def raise_to_levels(z: np.ndarray, label: np.ndarray, spill: np.ndarray) -> None
         z[c] = np.inf if filled == -np.inf else filled
 
 
-@njit(cache=True, nogil=True)
-def measure_fill(
-    filled: np.ndarray, ncols: int, first_row: int, given: np.ndarray, row_depth_m: np.ndarray
-) -> tuple[int, float]:
-    """How far filling raised a block of rows.
+def fill_everywhere(
+    z: np.ndarray, nrows: int, ncols: int, ways: np.ndarray, label: np.ndarray, stack: np.ndarray
+) -> None:
+    """Fill the whole raster in place; voids and halo turn from -inf to +inf.
 
     Parameters
     ----------
-    filled : float32 array, shape (cells,) [m]
+    z : float32 array, shape (cells,) [m]
+        Elevations, -inf in voids and halo.
+    nrows, ncols : int
+    ways, label, stack : uint8 and two int32 arrays, shape (cells,)
+        Work space.
+    """
+    ways_down(z, nrows, ncols, ways)
+    labels = label_catchments(z, ways, nrows, ncols, label, stack)
+    raise_to_levels(z, label, spill_levels(labels, *find_passes(z, label, nrows, ncols)))
+
+
+@njit(cache=True, nogil=True)
+def measure_change(
+    conditioned: np.ndarray, ncols: int, first_row: int, given: np.ndarray, row_filled_m: np.ndarray,
+    row_cut_m: np.ndarray,
+) -> tuple[int, float, int, float]:  # fmt: skip
+    """How far conditioning raised and cut a block of rows.
+
+    Parameters
+    ----------
+    conditioned : float32 array, shape (cells,) [m]
         +inf in voids.
     ncols, first_row : int
     given : float32 array, shape (rows, ncols) [m]
-        The terrain before filling.
-    row_depth_m : float64 array, shape (nrows,) [m]
-        Result for the rows of the block: sum of depths of fill.
+        The terrain before.
+    row_filled_m, row_cut_m : float64 arrays, shape (nrows,) [m]
+        Results for the rows of the block: sums of depths.
 
     Returns
     -------
-    cells : int
-        Cells raised.
-    deepest_m : float
+    filled_cells : int
+    deepest_fill_m : float
+    cut_cells : int
+    deepest_cut_m : float
     """
-    cells = 0
-    deepest = 0.0
+    filled_cells = 0
+    cut_cells = 0
+    deepest_fill = 0.0
+    deepest_cut = 0.0
     for r in range(given.shape[0]):
         start = (first_row + r + 1) * (ncols + 2) + 1
-        total = 0.0
+        filled = 0.0
+        cut = 0.0
         for col in range(ncols):
-            level = filled[start + col]
-            if level > given[r, col] and level < np.inf:
-                depth = np.float64(level) - np.float64(given[r, col])
-                cells += 1
-                total += depth
-                deepest = max(deepest, depth)
-        row_depth_m[first_row + r] = total
-    return cells, deepest
+            level = conditioned[start + col]
+            if level != given[r, col] and level < np.inf:
+                rise = np.float64(level) - np.float64(given[r, col])
+                if rise > 0.0:
+                    filled_cells += 1
+                    filled += rise
+                    deepest_fill = max(deepest_fill, rise)
+                else:
+                    cut_cells += 1
+                    cut -= rise
+                    deepest_cut = max(deepest_cut, -rise)
+        row_filled_m[first_row + r] = filled
+        row_cut_m[first_row + r] = cut
+    return filled_cells, deepest_fill, cut_cells, deepest_cut

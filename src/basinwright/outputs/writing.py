@@ -15,6 +15,8 @@ from basinwright.project import Project
 from basinwright.tables import ALL, HYDROGRAPHS, Table, frictionless_schema, write_csv
 
 if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
     from basinwright.grid import Grid
     from basinwright.terrain import Terrain
 
@@ -79,8 +81,18 @@ def _resource(table: Table, schema: Mapping[str, Any]) -> dict[str, Any]:
     }
 
 
-def write_terrain(folder: Path, grid: Grid, terrain: Terrain) -> None:
-    """Write the conditioned terrain, the flow directions and the contributing area as cloud-optimised GeoTIFFs."""
+def write_terrain(folder: Path, grid: Grid, terrain: Terrain, elevation_m: NDArray[Any]) -> None:
+    """Write the conditioned terrain, what conditioning changed, flow directions and contributing area.
+
+    Parameters
+    ----------
+    folder : Path
+        Where to write the cloud-optimised GeoTIFFs; made here.
+    grid : Grid
+    terrain : Terrain
+    elevation_m : float array, shape (nrows, ncols) [m]
+        The terrain before conditioning.
+    """
     from basinwright.io.rasters import write_cog
 
     folder.mkdir()
@@ -89,7 +101,15 @@ def write_terrain(folder: Path, grid: Grid, terrain: Terrain) -> None:
         folder / "conditioned.tif",
         np.where(np.isfinite(conditioned), conditioned, np.float32(-9999.0)),
         grid,
-        meaning="elevation after conditioning: depressions filled",
+        meaning="elevation after conditioning: depressions breached or filled",
+        unit="m",
+        nodata=-9999.0,
+    )
+    write_cog(
+        folder / "conditioning_change.tif",
+        np.where(np.isfinite(conditioned), terrain.change_m(elevation_m), np.float32(-9999.0)),
+        grid,
+        meaning="change of elevation by conditioning: negative where cut, positive where filled",
         unit="m",
         nodata=-9999.0,
     )

@@ -170,8 +170,8 @@ def profile_measures(
         ``path_length_m``; ``path_length_raw_m``, before correction; ``centroid_length_m``, along the path from the
         outlet to the point of the path that is nearest to the centroid; ``path_slope_pct``, fall over
         length; ``path_slope_1085_pct``, between 10 and 85 % of the length from the outlet, on the profile interpolated
-        between cell centres; ``deepest_fill_m``, by which conditioning raised the terrain under the path, outlet
-        included. NaN where the path is empty, slopes also where it is a single cell.
+        between cell centres; ``deepest_fill_m`` and ``deepest_cut_m``, by which conditioning raised and cut the terrain
+        under the path, outlet included. NaN where the path is empty, slopes also where it is a single cell.
     """
     from basinwright.kernels import paths as kernel
 
@@ -194,15 +194,17 @@ def profile_measures(
 
     rows, cols = terrain.rows_cols(paths.cells)
     raised = paths.elevation_m - elevation_m[rows, cols]
-    deepest = np.full(paths.n, np.nan)
+    deepest_fill, deepest_cut = np.full(paths.n, np.nan), np.full(paths.n, np.nan)
     some = np.diff(bounds) > 0
     if some.any():
-        deepest[some] = np.maximum.reduceat(raised, bounds[:-1][some])
+        deepest_fill[some] = np.maximum.reduceat(np.maximum(raised, 0.0), bounds[:-1][some])
+        deepest_cut[some] = np.maximum.reduceat(np.maximum(-raised, 0.0), bounds[:-1][some])
     return {
         "path_length_m": length,
         "path_length_raw_m": paths.at_ends(paths.raw_m)[1],
         "centroid_length_m": length - nearest,
         "path_slope_pct": slope_pct,
         "path_slope_1085_pct": slope_1085_pct,
-        "deepest_fill_m": deepest,
+        "deepest_fill_m": deepest_fill,
+        "deepest_cut_m": deepest_cut,
     }

@@ -189,7 +189,7 @@ def _build(
     writing.write_tables(partial, results.tables, project)
     if shapes is not None:
         shapes.write(partial / "basins.gpkg", results.tables, project)
-        writing.write_terrain(partial / "terrain", half.grid, half.routed())
+        writing.write_terrain(partial / "terrain", half.grid, half.routed(), half.elevation.array("elevation_m"))
     store.prune()
     about = manifest.describe(inputs, half, store, base, first, own.held, results, scenarios, summary_only)
     if not summary_only:

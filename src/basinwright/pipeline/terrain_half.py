@@ -26,7 +26,7 @@ if TYPE_CHECKING:
     from basinwright.basins import Basins, Snapped
     from basinwright.cover import CoverLayer, CoverShares, Impervious
     from basinwright.paths import Cut, Paths
-    from basinwright.terrain import Terrain
+    from basinwright.terrain import Conditioning, Terrain
 
 AREA_TOLERANCE = 0.1
 """Relative difference from the expected area above which AREA_MISMATCH is raised."""
@@ -36,6 +36,14 @@ SMALL_BASIN_CELLS = 200
 STORAGE_FILLED_MM = 2.54
 """0.1 in over the basin."""
 LAKE_STORAGE_PCT = 1.0
+BREACH_INSIDE_M = 1.0
+"""A deeper cut than this takes water through something that was built or has to be looked at."""
+_FACTS = (
+    "data_cells", "flat_cells", "raised_pits", "pits", "breached", "breached_second", "failed",
+    "filled_cells", "filled_volume_m3", "deepest_fill_m", "cut_cells", "cut_volume_m3", "deepest_cut_m",
+    "largest_rounding_m",
+)  # fmt: skip
+"""What the manifest says of the terrain."""
 _DEEPEST_MM = 10_000.0
 """Deeper storms than this are no storms but a missing nodata value."""
 _OF_DEPTHS = {"depths", "depth_rasters", "depth_raster_unit", "depth_factor"}
@@ -81,8 +89,7 @@ class TerrainHalf:
     def facts(self) -> dict[str, Any]:
         """Return what was done to the terrain, as plain values."""
         terrain = self.routed()
-        names = ("data_cells", "flat_cells", "filled_cells", "filled_volume_m3", "deepest_fill_m", "largest_rounding_m")
-        facts = {name: getattr(terrain, name) for name in names}
+        facts = {name: getattr(terrain, name) for name in _FACTS}
         return facts | {name: self.channels.values(name) for name in ("stream_area_km2", "drop_test")}
 
     @property
@@ -127,8 +134,8 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
     routing = store.stage(
         "routing",
         f"Conditioning and routing {grid.nrows * grid.ncols / 1e6:.2f} million cells{_compiling()}",
-        {"elevation": elevation.key, "conditioning": project.terrain.conditioning},
-        lambda draft: _routing(grid, elevation, draft),
+        {"elevation": elevation.key, "conditioning": vars(_conditioning(project))},
+        lambda draft: _routing(project, grid, elevation, draft),
     )
     channels = store.stage(
         "channels",
@@ -272,12 +279,27 @@ def _elevation(inputs: Inputs, draft: Draft) -> None:
     draft.values("alignment", terrain.plan.alignment)
 
 
-def _routing(grid: Grid, elevation: Entry, draft: Draft) -> None:
+def _conditioning(project: Project) -> Conditioning:
+    from basinwright.terrain import Conditioning
+
+    options = project.terrain
+    if options.conditioning == "fill":
+        return Conditioning("fill")
+    return Conditioning("breach", options.breach_depth, options.breach_length)
+
+
+def _routing(project: Project, grid: Grid, elevation: Entry, draft: Draft) -> None:
     from basinwright.terrain import condition_and_route
 
-    draft.record(
-        condition_and_route(elevation.array("elevation_m"), grid.dx_m, grid.dy_m, grid.cell_area_m2), "terrain"
+    terrain = condition_and_route(
+        elevation.array("elevation_m"),
+        grid.dx_m,
+        grid.dy_m,
+        grid.cell_area_m2,
+        _conditioning(project),
+        threads=project.compute.jobs,
     )
+    draft.record(terrain, "terrain")
 
 
 def _channels(inputs: Inputs, terrain: Terrain, draft: Draft) -> None:
@@ -608,7 +630,8 @@ def _flags(
         raised.extend((i, key, words(i)) for i in np.flatnonzero(mask).tolist())
 
     area, expected = marks["area_km2"], inputs.expected_area_km2
-    deepest, water = marks["deepest_fill_m"], shares.open_water_pct
+    moved, water = np.maximum(marks["deepest_fill_m"], marks["deepest_cut_m"]), shares.open_water_pct
+    cut_inside = marks["deepest_cut_inside_m"]
     with np.errstate(invalid="ignore", divide="ignore"):
         filled_mm = marks["filled_volume_m3"] / area / 1000.0
         off = area / expected - 1.0
@@ -631,10 +654,16 @@ def _flags(
             ),
         )
         where(marks["sheet_limited"], "SHEET_LIMIT", lambda i: "100 root S / n (ft) is under flow_path.sheet_limit")
+        for how, deepest in (("raised", marks["deepest_fill_m"]), ("cut", marks["deepest_cut_m"])):
+            where(
+                (deepest > DEEP_FILL_M) & (deepest == moved),
+                "DEEP_FILL",
+                lambda i, how=how: f"{how} by up to {moved[i] / foot:.3g} {length} under the path",  # type: ignore[misc]
+            )
         where(
-            deepest > DEEP_FILL_M,
-            "DEEP_FILL",
-            lambda i: f"raised by up to {deepest[i] / foot:.3g} {length} under the path",
+            cut_inside > BREACH_INSIDE_M,
+            "BREACH_INSIDE",
+            lambda i: f"a cut of up to {cut_inside[i] / foot:.3g} {length} lets water through",
         )
         where(
             filled_mm > STORAGE_FILLED_MM,

@@ -249,9 +249,10 @@ def settings(run: Run) -> list[tuple[str, str]]:
         return _quantity(text, "length", system)
 
     cell = length(f"{grid['cell_size_m']} m")
-    conditioning = {"fill": "depressions filled to their lowest rim"}.get(
-        terrain["conditioning"], terrain["conditioning"]
-    )
+    conditioning = "depressions filled to their lowest rim"
+    if terrain["conditioning"] == "breach":
+        limits = f"{length(terrain['breach_depth'])} deep and {length(terrain['breach_length'])} long"
+        conditioning = f"depressions breached by cuts up to {limits}, else filled"
     depths = [f"{period} yr {_quantity(text, 'depth', system)}" for period, text in (storm.get("depths") or {}).items()]
     least = _quantity(timing["minimum"], "time", system)
     factor = f", peak rate factor {uh['peak_rate_factor']:g}" if uh["shape"] in _WITH_FACTOR else ""

@@ -9,6 +9,7 @@ from typing import Any, Literal
 import numpy as np
 
 from basinwright.errors import TerrainError
+from basinwright.terrain.breaching import Pits, breach
 from basinwright.terrain.constraints import Constraints, drain
 from basinwright.terrain.encoding import to_azimuth
 from basinwright.terrain.summable import summable_areas_m2
@@ -60,10 +61,15 @@ class Terrain:
         Area of a cell of each row, rounded so that sums are exact.
     step_um : int64 array, shape (nrows, 8) [micrometres]
         Length of a step out of a cell, by row and direction.
-    data_cells, flat_cells, filled_cells : int
-        Cells with elevation; of these, cells without a lower neighbour after filling, and cells raised by it.
-    filled_volume_m3, deepest_fill_m : float
-        By filling.
+    data_cells, flat_cells : int
+        Cells with elevation; of these, cells without a lower neighbour after conditioning.
+    filled_cells, filled_volume_m3, deepest_fill_m
+        Cells raised by conditioning, by how much in all and at most.
+    cut_cells, cut_volume_m3, deepest_cut_m
+        Cells cut by conditioning, by how much in all and at most.
+    raised_pits, pits, breached, breached_second, failed : int
+        By breaching (`terrain.breaching.Pits`): single cells raised to their lowest neighbour; further pits; pits
+        with a way out within the limits; pits that have one once they are partly filled; pits that were filled.
     largest_rounding_m : float
         Largest change of an elevation by rounding it to float32; 0 for float32 input and for whole numbers
         up to 2**24.
@@ -86,7 +92,15 @@ class Terrain:
     filled_cells: int
     filled_volume_m3: float
     deepest_fill_m: float
+    cut_cells: int
+    cut_volume_m3: float
+    deepest_cut_m: float
     largest_rounding_m: float
+    raised_pits: int = 0
+    pits: int = 0
+    breached: int = 0
+    breached_second: int = 0
+    failed: int = 0
     row_edges: np.ndarray | None = None
     col_edges: np.ndarray | None = None
     order_bounds: np.ndarray | None = None
@@ -106,6 +120,20 @@ class Terrain:
     def conditioned_grid(self) -> np.ndarray:
         """Conditioned elevations [m], +inf in voids."""
         return self.grid(self.conditioned_m)
+
+    def change_m(self, elevation_m: np.ndarray, rows: slice = slice(None)) -> np.ndarray:
+        """By how much conditioning raised (positive) or cut (negative) some rows, float32 [m]; 0 in voids.
+
+        Parameters
+        ----------
+        elevation_m : float array, shape (nrows, ncols) [m]
+            The terrain before.
+        rows : slice
+        """
+        conditioned = self.conditioned_grid[rows]
+        with np.errstate(invalid="ignore", over="ignore"):
+            change = conditioned - elevation_m[rows].astype(np.float32)
+        return np.where(np.isfinite(conditioned), change, np.float32(0))
 
     @property
     def directions_grid(self) -> np.ndarray:
@@ -158,8 +186,9 @@ def condition_and_route(
     cell_area_m2: np.ndarray,
     conditioning: Conditioning = Conditioning(),
     constraints: Constraints | None = None,
+    threads: int = 1,
 ) -> Terrain:
-    """Fill depressions, route every cell by D8, resolve flats and sum contributing areas.
+    """Fill or breach depressions, route every cell by D8, resolve flats and sum contributing areas.
 
     A cell at the rim or beside a void drains inward if it has a lower neighbour; else water leaves there. Every
     cell with elevation drains to such an exit.
@@ -176,6 +205,9 @@ def condition_and_route(
         Area of a cell of each row, positive.
     conditioning : Conditioning
     constraints : Constraints, optional
+        What maps prescribe.
+    threads : int
+        The result does not depend on it.
 
     Returns
     -------
@@ -196,24 +228,28 @@ def condition_and_route(
     cells = (nrows + 2) * (ncols + 2)
 
     z, largest_rounding = pad(elevation_m)
+    step_um = step_lengths_um(dx, dy)
+    work = np.empty(cells, np.uint8), np.empty(cells, np.int32), np.empty(cells, np.int32)
+    pits = Pits()
     if constraints is not None:
         constraints.cut(z)
+    if conditioning.mode == "breach":
+        limits = conditioning.depth_m, conditioning.length_m
+        pits = breach(z, nrows, ncols, step_um, *limits, constraints, work, threads)
+    elif constraints is None:
+        fill.fill_everywhere(z, nrows, ncols, *work)
+    if constraints is not None:
         z, code, flat_cells = drain(z, nrows, ncols, dx, dy, constraints)
     else:
-        code = np.empty(cells, np.uint8)
-        work = np.empty(cells, np.int32)
-        link = np.empty(cells, np.int32)
-        fill.ways_down(z, nrows, ncols, code)
-        labels = fill.label_catchments(z, code, nrows, ncols, link, work)
-        fill.raise_to_levels(z, link, fill.spill_levels(labels, *fill.find_passes(z, link, nrows, ncols)))
+        code = work[0]
         directions.steepest_descent(z, nrows, ncols, dx, dy, code)
-        flat_cells = flats.resolve_flats(z, code, nrows, ncols, work, link)
-        del link, work
+        flat_cells = flats.resolve_flats(z, code, nrows, ncols, work[1], work[2])
+    del work
     data_cells, undrained = accumulate.count_cells(code)
     if data_cells == 0:
         raise TerrainError("no cell of the terrain has an elevation: is its nodata value right?")
     if undrained:
-        raise TerrainError(f"{undrained} of {data_cells} cells do not drain after filling")
+        raise TerrainError(f"{undrained} of {data_cells} cells do not drain after conditioning")
 
     row_area = summable_areas_m2(cell_area, ncols)
     area, order = route(code, nrows, ncols, row_area)
@@ -228,10 +264,11 @@ def condition_and_route(
         area_m2=area,
         order=order,
         row_area_m2=row_area,
-        step_um=step_lengths_um(dx, dy),
+        step_um=step_um,
         data_cells=data_cells,
         flat_cells=flat_cells,
         **measure_conditioning(elevation_m, z, row_area),
+        **vars(pits),
         largest_rounding_m=largest_rounding,
     )
 
@@ -300,18 +337,24 @@ def pad(elevation_m: np.ndarray) -> tuple[np.ndarray, float]:
     return z.reshape(-1), largest_rounding
 
 
-def measure_conditioning(elevation_m: np.ndarray, filled: np.ndarray, row_area_m2: np.ndarray) -> dict[str, Any]:
-    """Cells raised by filling, their volume [m3] and the deepest fill [m], by their names in `Terrain`."""
-    from basinwright.kernels.fill import measure_fill
+def measure_conditioning(elevation_m: np.ndarray, conditioned: np.ndarray, row_area_m2: np.ndarray) -> dict[str, Any]:
+    """How many cells were raised and cut, their volumes [m3] and the deepest of each [m], by their names in `Terrain`."""
+    from basinwright.kernels.fill import measure_change
 
     nrows, ncols = elevation_m.shape
-    row_depth = np.empty(nrows)
-    cells = 0
-    deepest = 0.0
+    row_filled, row_cut = np.empty(nrows), np.empty(nrows)
+    cells = np.zeros(2, np.int64)
+    deepest = np.zeros(2)
     for first in range(0, nrows, _BLOCK_ROWS):
         given = np.ascontiguousarray(elevation_m[first : first + _BLOCK_ROWS], np.float32)
-        block_cells, block_deepest = measure_fill(filled, ncols, first, given, row_depth)
-        cells += block_cells
-        deepest = max(deepest, block_deepest)
-    volume = math.fsum(row_depth * row_area_m2)
-    return {"filled_cells": cells, "filled_volume_m3": volume, "deepest_fill_m": deepest}
+        filled, deepest_fill, cut, deepest_cut = measure_change(conditioned, ncols, first, given, row_filled, row_cut)
+        cells += filled, cut
+        deepest = np.maximum(deepest, (deepest_fill, deepest_cut))
+    return {
+        "filled_cells": int(cells[0]),
+        "filled_volume_m3": math.fsum(row_filled * row_area_m2),
+        "deepest_fill_m": float(deepest[0]),
+        "cut_cells": int(cells[1]),
+        "cut_volume_m3": math.fsum(row_cut * row_area_m2),
+        "deepest_cut_m": float(deepest[1]),
+    }
