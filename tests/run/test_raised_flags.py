@@ -67,6 +67,13 @@ def with_pit(depth_m):
     return z
 
 
+def with_dam(height_m):
+    """A level bank of three rows; the cell at its foot is 0.4 m higher and is raised by as much again."""
+    z = valley()
+    z[60:63] = np.maximum(z[60:63], z[60, AXIS] + height_m)
+    return z
+
+
 def with_hollow(depth_m):
     """Sink 144 of the 6,039 cells to a floor that lies as much below the lowest cell beside them."""
     z = valley()
@@ -99,6 +106,7 @@ def coarse_storm(hours):
 
 SOILS = {"group": None, "raster": "soils.tif", "groups": {"2": "B"}, "missing": "D"}
 TABLE = {"distribution": "table", "table": "storm.csv"}
+FILL, BREACH = {"conditioning": "fill"}, {"conditioning": "breach"}
 DRY = {"depths": {"2": "0.5 in", "10": "4.6 in"}, "two_year_depth": "3.1 in"}
 WET = {"depths": {"2": "1.0 in", "10": "4.6 in"}, "two_year_depth": "3.1 in"}
 
@@ -184,7 +192,11 @@ CASES = {
     "TC_MINIMUM": ({"timing": {"minimum": "55 min"}}, {"timing": {"minimum": "45 min"}}),
     "OVERRIDE": ({"columns": {"curve_number": {"A": 80}}}, {"columns": {"curve_number": {}}}),
     "DEEP_FILL": ({"z": with_pit(2.5)}, {"z": with_pit(2.2)}),  # the axis falls by 0.4 m a cell
-    "STORAGE_FILLED": ({"z": with_hollow(0.11)}, {"z": with_hollow(0.1)}),  # 2.62 and 2.38 mm about 2.54
+    "BREACH_INSIDE": ({"z": with_dam(1.9), "terrain": BREACH}, {"z": with_dam(1.7), "terrain": BREACH}),  # 1.1, 0.9 m
+    "STORAGE_FILLED": (
+        {"z": with_hollow(0.11), "terrain": FILL},
+        {"z": with_hollow(0.1), "terrain": FILL},
+    ),  # 2.62 and 2.38 mm about 2.54
     "LAKE_STORAGE": ({"cover": patched(61, 11)}, {"cover": patched(60, 11)}),  # 1.01 % and 0.99 % of 6,039 cells
     "COVER_GAP": ({"cover": patched(100, 0)}, {"cover": patched(0, 0)}),
     "SOILS_ASSUMED": (

@@ -38,6 +38,7 @@ END = 16  # keeps its water
 FIXED = 32  # drains by prescription
 _POOL = 64  # in the lake that is being filled
 _RAISED = 128  # in a lake that was filled
+_ALL = 255
 
 TO_DO, BREACHED, BREACHED_FROM_POOL, DRAINED, FAILED, OPEN = range(6)
 """What became of a pit. DRAINED: by another pit's cut."""
@@ -284,8 +285,8 @@ def block_minima(z: np.ndarray, nrows: int, ncols: int) -> np.ndarray:
 @njit(cache=True, nogil=True)
 def _is_hopeless(lowest: np.ndarray, row0: int, row1: int, col0: int, col1: int, level: float) -> bool:
     """Whether no cell of a rectangle of the padded raster lies below a level."""
-    for b in range(max(row0, 0) // BLOCK, min(row1 // BLOCK, lowest.shape[0] - 1) + 1):
-        for a in range(max(col0, 0) // BLOCK, min(col1 // BLOCK, lowest.shape[1] - 1) + 1):
+    for b in range(row0 // BLOCK, row1 // BLOCK + 1):
+        for a in range(col0 // BLOCK, col1 // BLOCK + 1):
             if lowest[b, a] < level:
                 return False
     return True
@@ -584,23 +585,20 @@ def breach_pits(
             col0 = min(col0, col)
             col1 = max(col1, col)
         down, across = _reach(row0, row1, step_mm, limit_mm)
-        row0 -= down
-        row1 += down
-        col0 -= across
-        col1 += across
+        row0 = max(row0 - down, 0)
+        row1 = min(row1 + down, step_mm.shape[0] + 1)
+        col0 = max(col0 - across, 0)
+        col1 = min(col1 + across, stride - 1)
         bits = _bits_for(col1 - col0 + 1)
         places = (row1 - row0 + 1) << bits
         if places > 1 << _PLACE_BITS or _is_hopeless(lowest, row0, row1, col0, col1, level):
             state[p] = FAILED
             continue
         if places > key.size:
-            key = np.empty(places, np.uint64)
+            key = np.full(places, _UNREACHED)
             about = np.zeros(places, np.uint8)
-            length = np.empty(places, np.int32)
+            length = np.full(places, np.int32(-1))
             touched = np.empty(places, np.int32)
-            for i in range(places):
-                key[i] = _UNREACHED
-                length[i] = -1
         if count > sources.size:
             sources = np.empty(2 * count, np.int32)
             queue = np.empty(2 * count, np.int32)
@@ -665,12 +663,13 @@ _SPILLS, _TOO_NARROW, _UNKNOWN, _CLOSED = range(4)
 @njit(cache=True, nogil=True)
 def _flood(
     z: np.ndarray, z_bits: np.ndarray, mark: np.ndarray, walls: np.ndarray, walled: bool, stride: int, seed: int,
-    row0: int, row1: int, col0: int, bits: int, down: int, across: int,
+    row0: int, col0: int, bits: int, north: int, south: int, west: int, east: int,
     about: np.ndarray, heap: np.ndarray, pool: np.ndarray, pool_level: np.ndarray, touched: np.ndarray,
 ) -> tuple[int, int, np.floating, int, np.ndarray]:  # fmt: skip
     """Let the water rise from a cell until it spills to lower ground.
 
-    `pool` gets the places in the order in which water reaches them, `pool_level` the water level then. Returns how
+    The window is too narrow where water comes beyond the given rows and columns of the padded raster. `pool` gets
+    the places in the order in which water reaches them, `pool_level` the water level then. Returns how
     it ended, the number of places in the pool, the level of the spill, the number of touched places, and the heap.
     """
     o = neighbours(stride)
@@ -688,11 +687,11 @@ def _flood(
     while size > 0:
         here = np.int64(_pop(heap, size) & np.uint64(0xFFFFFFFF))
         size -= 1
-        in_row = here >> bits
-        in_col = here & (width - 1)
-        if in_row < down or in_row > row1 - row0 - down or in_col < across or in_col > width - 1 - across:
+        row = row0 + (here >> bits)
+        col = col0 + (here & (width - 1))
+        if row < north or row > south or col < west or col > east:
             return _TOO_NARROW, count, water, touches, heap
-        c = np.uint64((row0 + in_row) * stride + col0 + in_col)
+        c = np.uint64(row * stride + col)
         water = max(water, z[c])
         if mark[c] & (END | FIXED):
             return _SPILLS, count, water, touches, heap
@@ -777,27 +776,26 @@ def breach_pools(
         down, across = _reach(row, row, step_mm, limit_mm)
         beyond = 24
         while True:
-            row0 = row - down - beyond
-            row1 = row + down + beyond
-            bits = _bits_for(2 * (across + beyond) + 1)
-            col0 = col - (1 << (bits - 1))
+            north, south, west, east = row - beyond, row + beyond, col - beyond, col + beyond
+            row0, row1 = max(north - down, 0), min(south + down, step_mm.shape[0] + 1)
+            col0, col1 = max(west - across, 0), min(east + across, stride - 1)
+            bits = _bits_for(col1 - col0 + 1)
             places = (row1 - row0 + 1) << bits
             if places > 1 << _PLACE_BITS:
                 how = _CLOSED
                 break
             if places > key.size:
-                key = np.empty(places, np.uint64)
+                key = np.full(places, _UNREACHED)
                 about = np.zeros(places, np.uint8)
-                length = np.empty(places, np.int32)
+                length = np.full(places, np.int32(-1))
                 touched = np.empty(places, np.int32)
                 pool = np.empty(places, np.int32)
                 pool_level = np.empty(places, np.float32)
                 queue = np.empty(places, np.int32)
-                for j in range(places):
-                    key[j] = _UNREACHED
-                    length[j] = -1
             how, count, spill, touches, heap = _flood(
-                z, z_bits, mark, walls, walled, stride, seed, row0, row1, col0, bits, down, across,
+                z, z_bits, mark, walls, walled, stride, seed, row0, col0, bits,
+                north if row0 > 0 else 0, south if row1 <= step_mm.shape[0] else stride * stride,
+                west if col0 > 0 else 0, east if col1 < stride - 1 else stride,
                 about, heap, pool, pool_level, touched,
             )  # fmt: skip
             for j in range(touches):
@@ -911,10 +909,10 @@ def fill_lakes(
                 size += 1
         looked_at += count
         for i in range(size):
-            mark[heap[i] & np.uint64(0xFFFFFFFF)] &= ~_POOL
+            mark[heap[i] & np.uint64(0xFFFFFFFF)] &= _ALL - _POOL
         for i in range(count):
             c = np.uint64(lake[i])
-            mark[c] &= ~_POOL
+            mark[c] &= _ALL - _POOL
             if spills:
                 mark[c] |= _RAISED
                 z[c] = water
