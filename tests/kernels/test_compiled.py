@@ -68,7 +68,7 @@ def breached(seed, pick):
     )
     pick(breach.make_cuts)(z, mark, again, at)
     out |= {"cut again": again, "at": at, "state again": state}
-    pick(breach.fill_lakes)(z, mark, walls, True, NCOLS, members[bounds[failed]], np.zeros(n, np.int32), n)
+    pick(breach.fill_lakes)(z, mark, NCOLS, members[bounds[failed]], np.zeros(n, np.int32), n)
     pick(breach.close_voids)(z)
     return out | {"breached": z}
 

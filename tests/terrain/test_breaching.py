@@ -313,9 +313,9 @@ def test_mapped_streams_are_never_pits_and_never_cut():
 def breached_surface(z, constraints):
     """The conditioned surface alone, as directions along walls and into sinks are another step's."""
     from basinwright.terrain.breaching import breach
-    from basinwright.terrain.routing import _pad, step_lengths_um
+    from basinwright.terrain.routing import pad, step_lengths_um
 
-    flat, _ = _pad(np.asarray(z, np.float32))
+    flat, _ = pad(np.asarray(z, np.float32))
     size = np.full(len(z), CELL_M)
     work = np.empty(flat.size, np.uint8), np.empty(flat.size, np.int32), np.empty(flat.size, np.int32)
     breach(flat, *z.shape, step_lengths_um(size, size), 10.0, 1000.0, constraints, work, threads=1)

@@ -687,11 +687,11 @@ def _flood(
     while size > 0:
         here = np.int64(_pop(heap, size) & np.uint64(0xFFFFFFFF))
         size -= 1
-        row = row0 + (here >> bits)
-        col = col0 + (here & (width - 1))
-        if row < north or row > south or col < west or col > east:
+        in_row = row0 + (here >> bits)
+        in_col = col0 + (here & (width - 1))
+        if in_row < north or in_row > south or in_col < west or in_col > east:
             return _TOO_NARROW, count, water, touches, heap
-        c = np.uint64(row * stride + col)
+        c = np.uint64(in_row * stride + in_col)
         water = max(water, z[c])
         if mark[c] & (END | FIXED):
             return _SPILLS, count, water, touches, heap

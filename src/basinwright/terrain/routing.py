@@ -338,7 +338,7 @@ def pad(elevation_m: np.ndarray) -> tuple[np.ndarray, float]:
 
 
 def measure_conditioning(elevation_m: np.ndarray, conditioned: np.ndarray, row_area_m2: np.ndarray) -> dict[str, Any]:
-    """How many cells were raised and cut, their volumes [m3] and the deepest of each [m], by their names in `Terrain`."""
+    """Cells raised and cut, their volumes [m3] and the deepest of each [m], by their names in `Terrain`."""
     from basinwright.kernels.fill import measure_change
 
     nrows, ncols = elevation_m.shape
