@@ -134,7 +134,7 @@ def apply(folder: Path, record: Record, system: System, scheme: Scheme) -> Edite
     import pandas as pd
 
     # The outlets come last: whether one is as the run first wrote it depends on its segments and shares too.
-    editors = [kind(record, system, scheme) for kind in (_SegmentEditor, _ShareEditor, _OutletEditor)]
+    editors = [kind(record, system, scheme) for kind in _EDITORS]
     tables: dict[str, pd.DataFrame] = {}
     edited_outlets: set[str] = set()
     for editor in editors:
@@ -616,6 +616,14 @@ class _SegmentEditor(_Editor):
             sheet = first[0]["regime"] == row["regime"] == "sheet" and row["cover"] == first[0]["cover"]
             if sheet and not row["roughness"]:
                 row["roughness"] = first[0]["roughness"]
+
+
+_EDITORS: tuple[type[_Editor], ...] = (_SegmentEditor, _ShareEditor, _OutletEditor)
+
+
+def dependent_stems(table: str) -> tuple[str, ...]:
+    """Return the stems of a table's editable cells that are computed where no person filled them."""
+    return next(editor.dependent_stems for editor in _EDITORS if editor.table.name == table)
 
 
 def by_outlet(frame: pd.DataFrame) -> dict[str, list[Row]]:

@@ -320,12 +320,13 @@ class RunFolder:
 
     def __init__(self, final: Path) -> None:
         self.final = Path(os.path.realpath(final))
-        self.partial = self._beside("partial")
-        self.previous = self._beside("previous")
-        self._lock = self._beside("lock")
+        self.partial = self.beside("partial")
+        self.previous = self.beside("previous")
+        self._lock = self.beside("lock")
         self._made: list[Path] = []
 
-    def _beside(self, what: str) -> Path:
+    def beside(self, what: str) -> Path:
+        """Return the place of something that belongs to the run but does not stand in it."""
         return self.final.with_name(f".{self.final.name}.{what}")
 
     @contextmanager
@@ -465,7 +466,7 @@ class RunFolder:
 
     def _drop_previous(self) -> None:
         """Drop the run that was replaced, but hand on what other people had put into its folder."""
-        dropped = self._beside("dropped")
+        dropped = self.beside("dropped")
         if self.previous.is_dir() and self.final.is_dir():
             ours = self._files_of(self.previous) or set()
             for entry in list(self.previous.iterdir()):

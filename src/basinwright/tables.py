@@ -548,6 +548,32 @@ STREAMS = Table(
 )
 """A layer of ``basins.gpkg`` that no CSV repeats."""
 
+EDITS = Table(
+    "edits",
+    "one thing that a person changed on the review page, in the order of doing; rows are only ever added",
+    (),
+    (
+        _text("time", "when, UTC, ISO 8601"),
+        _ID,
+        _text("field", "what was changed"),
+        _text("from", "what it was"),
+        _text("to", "what it became"),
+        _text("reason", "why, in the reviewer's words"),
+    ),
+)
+
+REVIEW = Table(
+    "review",
+    "how far the review of one outlet has come",
+    ("outlet_id",),
+    (
+        _ID,
+        _text("state", "what the reviewer decided", choices=("left", "accepted", "edited", "rejected", "field_check")),
+        _text("reason", "why, in the reviewer's words"),
+        _text("time", "when, UTC, ISO 8601; empty for outlets not looked at yet"),
+    ),
+)
+
 ALL: tuple[Table, ...] = (
     OUTLETS,
     SEGMENTS,
@@ -565,6 +591,8 @@ ALL: tuple[Table, ...] = (
     FLAGS_TABLE,
     SCENARIOS,
     CELL_SIZES,
+    EDITS,
+    REVIEW,
 )
 """Every table a run can write."""
 

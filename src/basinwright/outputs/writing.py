@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -12,7 +12,7 @@ import numpy as np
 from basinwright.hydrology import Columns
 from basinwright.outputs import hydrographs_nc
 from basinwright.project import Project
-from basinwright.tables import ALL, HYDROGRAPHS, Table, frictionless_schema, write_csv
+from basinwright.tables import ALL, HYDROGRAPHS, Table, frictionless_schema, read_csv, write_csv
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -23,6 +23,8 @@ if TYPE_CHECKING:
 
 def write_tables(folder: Path, tables: Mapping[str, Columns], project: Project) -> None:
     """Write the tables of a run as CSV, the hydrographs as netCDF too, and ``tables.json``, which describes them.
+
+    Tables that stand in the folder already and are not among the given ones are described too.
 
     Parameters
     ----------
@@ -44,11 +46,17 @@ def write_tables(folder: Path, tables: Mapping[str, Columns], project: Project) 
         hydrographs_nc.write_hydrographs(folder / hydrographs_nc.FILE, tables, project)
     resources = []
     for table in ALL:
-        if table.name not in tables or (table is HYDROGRAPHS and f"{table.name}.csv" not in series):
+        path = folder / f"{table.name}.csv"
+        if table is HYDROGRAPHS and path.name not in series:
             continue
-        columns = tables[table.name]
-        (folder / f"{table.name}.csv").unlink(missing_ok=True)  # it may be a link to a file of the run before
-        write_csv(folder / f"{table.name}.csv", columns)
+        if table.name in tables:
+            columns: Collection[str] = tables[table.name]
+            path.unlink(missing_ok=True)  # it may be a link to a file of the run before
+            write_csv(path, tables[table.name])
+        elif path.is_file():
+            columns = [str(name) for name in read_csv(path).columns]
+        else:
+            continue
         optional = [column.stem for column in table.columns if column.optional and column.name(system) in columns]
         schema = frictionless_schema(table.fields(system, project.storm.periods, optional), system, table.key)
         resources.append(_resource(table, schema))

@@ -199,13 +199,15 @@ def _build(
     return Outcome(folder.final, project, results.tables["outlets"], results.flags, variants.told(scenarios))
 
 
-def retime(run_dir: Path, *, say: Say = _silent) -> Outcome:
+def retime(run_dir: Path, *, revise: Callable[[Path], None] | None = None, say: Say = _silent) -> Outcome:
     """Compute timing, runoff and hydrographs again from a run's tables, edited or not.
 
     Parameters
     ----------
     run_dir : Path
         The run's folder: ``run.json``, ``outlets.csv``, ``segments.csv`` and ``cover_shares.csv`` are needed.
+    revise : callable, optional
+        Handed a copy of the run's folder by links, whose tables it may replace before they are read.
     say : callable
         Told what is happening.
 
@@ -232,9 +234,17 @@ def retime(run_dir: Path, *, say: Say = _silent) -> Outcome:
         project, settings = manifest.settings(about)
         say("Reading the tables")
         record = manifest.record(about)
-        edits = editing.apply(folder.final, record, project.project.units, settings.scheme)
         kept = manifest.scenarios(about)
         variants.refuse_edited(folder.final, {name: scenario["files"] for name, scenario in kept.items()})
+        try:
+            place = folder.final if revise is None else folder.begin_copy()
+            if revise is not None:
+                revise(place)
+            edits = editing.apply(place, record, project.project.units, settings.scheme)
+        except InputRejected:
+            if revise is not None:
+                folder.discard()
+            raise
         say("Timing, runoff and hydrographs")
         summary_only = bool(about["summary_only"])
         base = manifest.ground(about, record, settings)
@@ -245,7 +255,7 @@ def retime(run_dir: Path, *, say: Say = _silent) -> Outcome:
             raise InputRejected.one(str(folder.final), "tables", what, fix) from error
         say("Writing")
         try:
-            partial = folder.begin_copy()
+            partial = place if revise is not None else folder.begin_copy()
             scenarios = []
             for name, scenario in kept.items():
                 say(f"{variants.stage_name(name)}: Timing, runoff and hydrographs")
