@@ -184,6 +184,19 @@ def explain(
 
 
 @app.command()
+def review(
+    folder: RunDir,
+    port: Annotated[int, typer.Option(metavar="N", min=0, max=65535, help="Where to listen; default: any free.")] = 0,
+    browser: Annotated[bool, typer.Option(help="Open the page in the browser.")] = True,
+) -> int:
+    """Check and correct a run outlet by outlet on a page of this machine."""
+    from basinwright.review.server import serve
+
+    serve(folder, port=port, say=lambda text: print(text, flush=True), browser=browser)
+    return DONE
+
+
+@app.command()
 def methods() -> int:
     """Print every timing method, unit hydrograph, storm and published table shipped, with source and range."""
     from basinwright import catalogue

@@ -17,11 +17,12 @@ Bounds = tuple[float, float, float, float]
 """West, south, east and north edge in map coordinates."""
 
 
-def read_layer(path: Path, layer: str, columns: Sequence[str]) -> gpd.GeoDataFrame:
-    """Read a layer of a GeoPackage that this program wrote, with only these columns."""
+def read_layer(path: Path, layer: str, columns: Sequence[str], outlet_id: str | None = None) -> gpd.GeoDataFrame:
+    """Read a layer of a GeoPackage that this program wrote, with only these columns, of one outlet where named."""
     import pyogrio
 
-    return pyogrio.read_dataframe(path, layer=layer, columns=list(columns))
+    quoted = None if outlet_id is None else "outlet_id = '{}'".format(outlet_id.replace("'", "''"))
+    return pyogrio.read_dataframe(path, layer=layer, columns=list(columns), where=quoted)
 
 
 def read_terrain(path: Path, bounds: Bounds, most_cells: int) -> tuple[NDArray[np.float32], Bounds]:

@@ -42,7 +42,7 @@ def profile(run: Run, outlet: Outlet, slope_floor: float) -> Markup | None:
     length = points[-1][0]
     elevations = [elevation for _, elevation in points]
     span = max(max(elevations) - min(elevations), 1e-6)
-    along = Scale(0.0, length, _LEFT, WIDE - _RIGHT)
+    along = along_profile(length)
     height = Scale(min(elevations) - 0.06 * span, max(elevations) + 0.08 * span, 232.0, 30.0)
     lowest = 100.0 * min([slope_floor, *(row["slope"] for row in outlet.segments if row["slope"] > 0)])
     # Open water is level: it stands at the foot of a logarithmic axis.
@@ -95,6 +95,11 @@ def profile(run: Run, outlet: Outlet, slope_floor: float) -> Markup | None:
         + (f" The channel begins {words.station(start, run.system)} {unit} from the divide." if start else "")
     )
     return picture(WIDE, 392.0, "Long profile", description, *parts, *lines, key=f"{outlet.anchor}-profile")
+
+
+def along_profile(length: float) -> Scale:
+    """Return the scale of distances on the long profile of a path of this length."""
+    return Scale(0.0, length, _LEFT, WIDE - _RIGHT)
 
 
 def _segment_told(run: Run, row: Row, unit: str) -> str:

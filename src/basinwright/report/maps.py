@@ -404,14 +404,21 @@ def legend_line(regime: str) -> Markup:
     return el("svg", line, viewBox="0 0 36 10", class_="swatch", aria_hidden="true")
 
 
-def outlet_map(run: Run, outlet: Outlet) -> Markup | None:
-    """Draw an outlet's basin and its longest flow path by regime; None where there is no basin."""
+def outlet_view(run: Run, outlet: Outlet) -> Frame | None:
+    """Return the frame of an outlet's map; None where there is no basin."""
     if outlet.basin is None or outlet.place is None:
         return None
     x, y = outlet.place
     bounds = outlet.basin.bounds
     around = (min(bounds[0], x), min(bounds[1], y), max(bounds[2], x), max(bounds[3], y))
-    view = frame(run, _padded(around, 0.06), PAGE_WIDTH)
+    return frame(run, _padded(around, 0.06), PAGE_WIDTH)
+
+
+def outlet_map(run: Run, outlet: Outlet) -> Markup | None:
+    """Draw an outlet's basin and its longest flow path by regime; None where there is no basin."""
+    view = outlet_view(run, outlet)
+    if view is None:
+        return None
     ring = _data(outlet.basin, view, 3.0)
     # On a large basin only its larger streams can be told apart.
     least = outlet.row["area"] / 150.0

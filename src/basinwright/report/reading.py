@@ -214,7 +214,7 @@ class Run:
         raise InputRejected.one(str(self.folder / "outlets.csv"), "outlet_id", f"has no {outlet_id!r}", fix)
 
 
-def read_run(folder: Path, about: Mapping[str, Any]) -> Run:
+def read_run(folder: Path, about: Mapping[str, Any], only: str | None = None) -> Run:
     """Read a run's folder.
 
     Parameters
@@ -223,6 +223,8 @@ def read_run(folder: Path, about: Mapping[str, Any]) -> Run:
         Where the tables lie; layers and terrain are used where they are there.
     about : mapping
         The manifest.
+    only : str, optional
+        The one outlet whose tables and geometries are wanted; of the others, only their row is read.
 
     Raises
     ------
@@ -235,7 +237,8 @@ def read_run(folder: Path, about: Mapping[str, Any]) -> Run:
     periods = sorted(storm.get("depths") or storm.get("depth_rasters"), key=float)
 
     def read(table: Table) -> pd.DataFrame:
-        return _read(folder / f"{table.name}.csv", table, system, periods)
+        frame = _read(folder / f"{table.name}.csv", table, system, periods)
+        return frame if only is None or table is OUTLETS else frame[frame["outlet_id"] == only]
 
     table = read(OUTLETS)
     if table.empty:
@@ -267,7 +270,7 @@ def read_run(folder: Path, about: Mapping[str, Any]) -> Run:
             by_id[outlet_id].scenario_floods.setdefault(scenario["name"], {})[period] = part
     run = Run(folder, about, system, periods, outlets, set(table.columns))
     if (folder / "basins.gpkg").is_file():
-        _read_layers(run, by_id)
+        _read_layers(run, by_id, only)
     return run
 
 
@@ -324,7 +327,7 @@ def _series(frame: pd.DataFrame, columns: Sequence[str]) -> Iterator[tuple[str, 
         yield str(ids[a]), float(periods[a]), {name: values[a:b] for name, values in arrays.items()}
 
 
-def _read_layers(run: Run, by_id: Mapping[str, Outlet]) -> None:
+def _read_layers(run: Run, by_id: Mapping[str, Outlet], only: str | None) -> None:
     """Give each outlet its geometries, and the streams and outlets in its neighbourhood."""
     import numpy as np
     import shapely
@@ -333,10 +336,10 @@ def _read_layers(run: Run, by_id: Mapping[str, Outlet]) -> None:
 
     path = run.folder / "basins.gpkg"
     for layer, name in (("basins", "basin"), ("subbasins", "subbasin"), ("flow_paths", "path")):
-        frame = read_layer(path, layer, ["outlet_id"])
+        frame = read_layer(path, layer, ["outlet_id"], only)
         for outlet_id, geometry in zip(frame["outlet_id"], frame.geometry, strict=True):
             setattr(by_id[outlet_id], name, geometry)
-    frame = read_layer(path, "segments", ["outlet_id", "segment"])
+    frame = read_layer(path, "segments", ["outlet_id", "segment"], only)
     for outlet_id, segment, geometry in zip(frame["outlet_id"], frame["segment"], frame.geometry, strict=True):
         by_id[outlet_id].lines[int(segment)] = geometry
 
@@ -345,13 +348,14 @@ def _read_layers(run: Run, by_id: Mapping[str, Outlet]) -> None:
     lines, areas = streams.geometry.to_numpy(), streams[area].to_numpy(dtype=float)
     tree = shapely.STRtree(lines)
     drawn = [outlet for outlet in run.outlets if outlet.basin is not None and outlet.place is not None]
-    among = shapely.STRtree([shapely.Point(outlet.place) for outlet in drawn if outlet.place])
+    placed = [outlet for outlet in run.outlets if outlet.place]
+    among = shapely.STRtree([shapely.Point(outlet.place) for outlet in placed if outlet.place])
     for outlet in drawn:
         window = shapely.box(*outlet.basin.bounds).buffer(0.1 * max(_spans(outlet.basin.bounds)))
         near = np.sort(tree.query(window))
         outlet.streams = [(lines[i], float(areas[i])) for i in near.tolist()]
         inside = np.sort(among.query(outlet.basin, predicate="contains"))
-        others = [drawn[i] for i in inside.tolist() if drawn[i] is not outlet]
+        others = [placed[i] for i in inside.tolist() if placed[i] is not outlet]
         outlet.neighbours = [
             (other.id, *other.place) for other in others if other.place and other.place != outlet.place
         ]

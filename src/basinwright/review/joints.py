@@ -79,9 +79,7 @@ def joints(rows: Sequence[Row], names: Names) -> list[Joint]:
     return found
 
 
-def moved(
-    rows: Sequence[Row], names: Names, joint: Joint, at: float, elevation: Callable[[float], str]
-) -> list[Row]:
+def moved(rows: Sequence[Row], names: Names, joint: Joint, at: float, elevation: Callable[[float], str]) -> list[Row]:
     """Return the segments with a joint moved to another distance.
 
     The segment that the joint moves into gives way, up to vanishing; the one on the other side follows.

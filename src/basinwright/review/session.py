@@ -225,7 +225,7 @@ class Session:
 
     def queue(self) -> list[dict[str, Any]]:
         """List the outlets, those first that need eyes first: by severity, then by how many lie downstream."""
-        outlets = self.record.written["outlets"].to_dict("records")
+        outlets = _plain_rows(self.record.written["outlets"])
         severity = self._severities()
         below = self._influence(outlets)
         order = sorted(outlets, key=lambda row: (-severity[row["outlet_id"]], -below[row["outlet_id"]]))
@@ -244,13 +244,14 @@ class Session:
 
     def _severities(self) -> dict[str, int]:
         path = self.folder / "flags.csv"
-        rank = {"": 0, **{key: i for i, key in enumerate(SEVERITIES, start=1)}}
+        rank: dict[str, int] = {key: i for i, key in enumerate(SEVERITIES, start=1)}
         found = dict.fromkeys(self.ids, 0)
         if path.is_file():
             for outlet_id, severity in read_csv(path)[["outlet_id", "severity"]].itertuples(index=False, name=None):
                 found[outlet_id] = max(found[outlet_id], rank[severity])
         failed = self.record.written["outlets"]
-        return found | dict.fromkeys(failed["outlet_id"][failed["status"] == "failed"], len(SEVERITIES) + 1)
+        worst: list[str] = failed["outlet_id"][failed["status"] == "failed"].tolist()
+        return found | dict.fromkeys(worst, len(SEVERITIES) + 1)
 
     def _influence(self, outlets: list[dict[str, str]]) -> dict[str, int]:
         """Count the outlets whose basin each outlet's choice of place bounds: all those upstream of it."""
@@ -472,6 +473,14 @@ class Session:
         self.saved = self.position
         self.revision += 1
 
+    def discard(self) -> None:
+        """Give up everything that is not saved."""
+        self.journal.clear()
+        self.history.clear()
+        self._states.clear()
+        self.position = self.saved = 0
+        self.revision += 1
+
     def _since_saved(self) -> list[Step]:
         low, high = sorted((self.saved, self.position))
         return self.history[low:high]
@@ -493,7 +502,7 @@ class Session:
         frame = self.record.written[name]
         rows: list[Row] = []
         done = set()
-        for row in frame.to_dict("records"):
+        for row in _plain_rows(frame):
             outlet_id = row["outlet_id"]
             if outlet_id not in states:
                 rows.append(row)
@@ -508,7 +517,11 @@ _DEPENDENT = {name: editing.dependent_stems(name) for name in TABLES}
 
 
 def _rows_of(frame: pd.DataFrame, outlet_id: str) -> list[Row]:
-    return frame[frame["outlet_id"] == outlet_id].to_dict("records")
+    return _plain_rows(frame[frame["outlet_id"] == outlet_id])
+
+
+def _plain_rows(frame: pd.DataFrame) -> list[Row]:
+    return [{str(name): cell for name, cell in row.items()} for row in frame.to_dict("records")]
 
 
 def _refilled(rows: list[Row], written: list[Row], name: str, system: System) -> list[Row]:
@@ -534,7 +547,7 @@ def _of_outlet(record: Record, outlet_id: str) -> Record:
 
 def _fingerprint(frames: Mapping[str, pd.DataFrame]) -> str:
     """Hash of the editable tables: which steps can be taken up again, and whether somebody else changed them."""
-    text = [csv_text(_columns([str(c) for c in frames[name].columns], frames[name].to_dict("records"))) for name in TABLES]
+    text = [csv_text(_columns([str(c) for c in frames[name].columns], _plain_rows(frames[name]))) for name in TABLES]
     return hashlib.sha256("".join(text).encode()).hexdigest()
 
 
@@ -544,7 +557,7 @@ def _columns(names: list[str], rows: list[Row]) -> dict[str, list[str]]:
 
 def _entries(folder: Path) -> list[Row]:
     path = folder / f"{EDITS.name}.csv"
-    return read_csv(path).to_dict("records") if path.is_file() else []
+    return _plain_rows(read_csv(path)) if path.is_file() else []
 
 
 def _replace(path: Path, text: str) -> None:
