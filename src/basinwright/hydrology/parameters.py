@@ -81,7 +81,7 @@ def _incremental(
     place_of = dict(zip(ids, places, strict=True))
     upstream: dict[tuple[Any, Any], dict[tuple[Any, Any], float]] = {}
     for place, below, area in zip(places, downstream, area_km2.tolist(), strict=True):
-        if below:
+        if below in place_of:
             upstream.setdefault(place_of[below], {})[place] = area
     return area_km2 - np.array([sum(upstream.get(place, {}).values()) for place in places], dtype=np.float64)
 

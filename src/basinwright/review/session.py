@@ -7,7 +7,7 @@ import math
 import tempfile
 import time
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -16,7 +16,7 @@ from basinwright import editing
 from basinwright.editing import Cell, Record
 from basinwright.errors import InputRejected
 from basinwright.flags import SEVERITIES
-from basinwright.hydrology import Results, compute
+from basinwright.hydrology import Results
 from basinwright.pipeline import geometry, manifest, running
 from basinwright.review.joints import Joint, Names, Row, joints, moved
 from basinwright.review.journal import Journal
@@ -145,8 +145,7 @@ class Session:
         self.names = Names(self.system)
         self.ids: list[str] = self.record.written["outlets"]["outlet_id"].tolist()
         self.identity = _fingerprint(self.record.written)
-        self._frames = {"time_area": manifest.time_area(self.about)}
-        self._flags = manifest.terrain_flags(self.about)
+        self.ground = manifest.ground(self.about, self.record, self.settings)
         self._states: dict[str, State] = {}
         self._marks = self._stored_marks()
         self.__dict__.pop("shapes", None)
@@ -278,14 +277,13 @@ class Session:
             for name, rows in self.standing(outlet_id, state).items():
                 write_csv(folder / f"{name}.csv", _columns(list(record.written[name].columns), rows))
             edits = editing.apply(folder, record, self.system, self.settings.scheme)
-        curves = self._frames["time_area"]
-        return compute(
-            {**edits.tables, "time_area": curves[curves["outlet_id"] == outlet_id]},
-            self.settings,
-            terrain_flags=[flag for flag in self._flags if flag.outlet_id == outlet_id],
-            held=edits.held,
-            edited=edits.segments,
+        curves = self.ground.time_area
+        ground = replace(
+            self.ground,
+            time_area=curves[curves["outlet_id"] == outlet_id],
+            flags=[flag for flag in self.ground.flags if flag.outlet_id == outlet_id],
         )
+        return ground.compute(edits, series=True)
 
     # -- what the person does ---------------------------------------------------------------------------------------
 
