@@ -17,12 +17,25 @@ Bounds = tuple[float, float, float, float]
 """West, south, east and north edge in map coordinates."""
 
 
-def read_layer(path: Path, layer: str, columns: Sequence[str], outlet_id: str | None = None) -> gpd.GeoDataFrame:
-    """Read a layer of a GeoPackage that this program wrote, with only these columns, of one outlet where named."""
+def read_layer(
+    path: Path, layer: str, columns: Sequence[str], *, outlet_id: str | None = None, bounds: Bounds | None = None
+) -> gpd.GeoDataFrame:
+    """Read a layer of a GeoPackage that this program wrote, with only these columns.
+
+    Parameters
+    ----------
+    path : Path
+    layer : str
+    columns : sequence of str
+    outlet_id : str, optional
+        The one outlet whose features are wanted.
+    bounds : tuple of float, optional
+        What the wanted features touch, in the layer's CRS.
+    """
     import pyogrio
 
     quoted = None if outlet_id is None else "outlet_id = '{}'".format(outlet_id.replace("'", "''"))
-    return pyogrio.read_dataframe(path, layer=layer, columns=list(columns), where=quoted)
+    return pyogrio.read_dataframe(path, layer=layer, columns=list(columns), where=quoted, bbox=bounds)
 
 
 def read_terrain(path: Path, bounds: Bounds, most_cells: int) -> tuple[NDArray[np.float32], Bounds]:

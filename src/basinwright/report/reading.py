@@ -214,7 +214,7 @@ class Run:
         raise InputRejected.one(str(self.folder / "outlets.csv"), "outlet_id", f"has no {outlet_id!r}", fix)
 
 
-def read_run(folder: Path, about: Mapping[str, Any], only: str | None = None) -> Run:
+def read_run(folder: Path, about: Mapping[str, Any], *, rows_only: bool = False) -> Run:
     """Read a run's folder.
 
     Parameters
@@ -223,8 +223,8 @@ def read_run(folder: Path, about: Mapping[str, Any], only: str | None = None) ->
         Where the tables lie; layers and terrain are used where they are there.
     about : mapping
         The manifest.
-    only : str, optional
-        The one outlet whose tables and geometries are wanted; of the others, only their row is read.
+    rows_only : bool
+        Whether the rows and doubts of the outlets are enough: `read_layers` then gives one its geometries.
 
     Raises
     ------
@@ -237,8 +237,7 @@ def read_run(folder: Path, about: Mapping[str, Any], only: str | None = None) ->
     periods = sorted(storm.get("depths") or storm.get("depth_rasters"), key=float)
 
     def read(table: Table) -> pd.DataFrame:
-        frame = _read(folder / f"{table.name}.csv", table, system, periods)
-        return frame if only is None or table is OUTLETS else frame[frame["outlet_id"] == only]
+        return _read(folder / f"{table.name}.csv", table, system, periods)
 
     table = read(OUTLETS)
     if table.empty:
@@ -254,6 +253,9 @@ def read_run(folder: Path, about: Mapping[str, Any], only: str | None = None) ->
     order = list(FLAGS)
     for outlet in outlets:
         outlet.doubts.sort(key=lambda doubt: (-_SEVERITIES.index(doubt.severity), order.index(doubt.key)))
+    run = Run(folder, about, system, periods, outlets, set(table.columns))
+    if rows_only:
+        return run
     lists = {"segments": SEGMENTS, "timing": TIMING, "shares": COVER_SHARES, "cross_checks": CROSS_CHECKS}
     lists |= {"scenarios": SCENARIOS, "cell_sizes": CELL_SIZES}
     for name, source in lists.items():
@@ -268,9 +270,7 @@ def read_run(folder: Path, about: Mapping[str, Any], only: str | None = None) ->
     for scenario in about.get("scenarios", []):
         for outlet_id, period, part in _floods(folder / "scenarios" / scenario["name"], system, periods):
             by_id[outlet_id].scenario_floods.setdefault(scenario["name"], {})[period] = part
-    run = Run(folder, about, system, periods, outlets, set(table.columns))
-    if (folder / "basins.gpkg").is_file():
-        _read_layers(run, by_id, only)
+    read_layers(run)
     return run
 
 
@@ -327,31 +327,38 @@ def _series(frame: pd.DataFrame, columns: Sequence[str]) -> Iterator[tuple[str, 
         yield str(ids[a]), float(periods[a]), {name: values[a:b] for name, values in arrays.items()}
 
 
-def _read_layers(run: Run, by_id: Mapping[str, Outlet], only: str | None) -> None:
-    """Give each outlet its geometries, and the streams and outlets in its neighbourhood."""
+def read_layers(run: Run, only: str | None = None) -> None:
+    """Give each outlet, or only the one of an id, its geometries, and the streams and outlets in its neighbourhood."""
     import numpy as np
     import shapely
 
     from basinwright.io.pictures import read_layer
 
     path = run.folder / "basins.gpkg"
+    if not path.is_file():
+        return
+    by_id = {outlet.id: outlet for outlet in run.outlets}
     for layer, name in (("basins", "basin"), ("subbasins", "subbasin"), ("flow_paths", "path")):
-        frame = read_layer(path, layer, ["outlet_id"], only)
+        frame = read_layer(path, layer, ["outlet_id"], outlet_id=only)
         for outlet_id, geometry in zip(frame["outlet_id"], frame.geometry, strict=True):
             setattr(by_id[outlet_id], name, geometry)
-    frame = read_layer(path, "segments", ["outlet_id", "segment"], only)
+    frame = read_layer(path, "segments", ["outlet_id", "segment"], outlet_id=only)
     for outlet_id, segment, geometry in zip(frame["outlet_id"], frame["segment"], frame.geometry, strict=True):
         by_id[outlet_id].lines[int(segment)] = geometry
 
+    drawn = [
+        outlet
+        for outlet in run.outlets
+        if outlet.basin is not None and outlet.place is not None and only in (None, outlet.id)
+    ]
+    windows = [shapely.box(*outlet.basin.bounds).buffer(0.1 * max(_spans(outlet.basin.bounds))) for outlet in drawn]
     area = OUTLETS.column("area").name(run.system)
-    streams = read_layer(path, "streams", [area])
+    streams = read_layer(path, "streams", [area], bounds=windows[0].bounds if only and windows else None)
     lines, areas = streams.geometry.to_numpy(), streams[area].to_numpy(dtype=float)
     tree = shapely.STRtree(lines)
-    drawn = [outlet for outlet in run.outlets if outlet.basin is not None and outlet.place is not None]
     placed = [outlet for outlet in run.outlets if outlet.place]
     among = shapely.STRtree([shapely.Point(outlet.place) for outlet in placed if outlet.place])
-    for outlet in drawn:
-        window = shapely.box(*outlet.basin.bounds).buffer(0.1 * max(_spans(outlet.basin.bounds)))
+    for outlet, window in zip(drawn, windows, strict=True):
         near = np.sort(tree.query(window))
         outlet.streams = [(lines[i], float(areas[i])) for i in near.tolist()]
         inside = np.sort(among.query(outlet.basin, predicate="contains"))

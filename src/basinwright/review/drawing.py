@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 import tempfile
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -12,7 +13,7 @@ from basinwright.flags import FLAGS
 from basinwright.hydrology import Results
 from basinwright.outputs.writing import write_tables
 from basinwright.report import charts, maps, words
-from basinwright.report.reading import SUPPLIED, Outlet, Run, read_run
+from basinwright.report.reading import SUPPLIED, Outlet, Run, read_layers, read_run
 from basinwright.review.joints import joints
 from basinwright.review.session import Session, State
 from basinwright.tables import COVER_SHARES, OUTLETS, SEGMENTS, Column, Table
@@ -52,16 +53,21 @@ class Drawing:
     def _run(self, outlet_id: str) -> tuple[Run, Outlet, Outlet | None]:
         """Return the run with the geometries of an outlet, that outlet, and the outlet as the run first computed it."""
         session = self.session
+        session.state(outlet_id)  # refuses an unknown one
         if self._of != (session.identity, outlet_id):
-            session.state(outlet_id)  # refuses an unknown one
-            self._run_read = read_run(session.folder, session.about, only=outlet_id)
-            self._outlet = self._run_read.outlet(outlet_id)
-            first = None
-            if not self._outlet.failed:
-                first = self._as_outlet(session.compute(outlet_id, session.first(outlet_id)))
-            self._first = first
-            self._of = session.identity, outlet_id
-        return self._run_read, self._outlet, self._first
+            run = read_run(session.folder, session.about, rows_only=True)
+            read_layers(run, outlet_id)
+            base = run.outlet(outlet_id)
+            first = None if base.failed else self._computed(outlet_id, session.first(outlet_id))
+            self._of, self._held = (session.identity, outlet_id), (run, base, first)
+        return self._held
+
+    def _computed(self, outlet_id: str, state: State) -> Outlet:
+        """Return an outlet as computed from a state of it; computed once where the state is that of the first run."""
+        if self._of == (self.session.identity, outlet_id) and state.rows == self.session.first(outlet_id).rows:
+            if (first := self._held[2]) is not None:
+                return replace(first)
+        return self._as_outlet(self.session.compute(outlet_id, state))
 
     def _as_outlet(self, results: Results) -> Outlet:
         """Return the results of one outlet as the report reads them."""
@@ -93,7 +99,7 @@ class Drawing:
         if first is None:
             doubts = [self._doubt(doubt.key, doubt.message) for doubt in base.doubts]
             return {**shown, "failed": True, "doubts": doubts}
-        now = self._as_outlet(session.compute(outlet_id, state))
+        now = self._computed(outlet_id, state)
         now.number, now.basin, now.supplied = base.number, base.basin, base.supplied
         now.streams, now.neighbours = base.streams, base.neighbours
         floor = float(session.about["project"]["flow_path"]["slope_floor"])

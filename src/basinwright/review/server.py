@@ -21,7 +21,7 @@ import tornado.web
 
 from basinwright.errors import BasinwrightError, InputRejected
 from basinwright.review.drawing import Drawing, refusal
-from basinwright.review.session import STATES, Session
+from basinwright.review.session import REVIEW_FIELD, STATES, Session
 
 HOST = "127.0.0.1"
 _MOST_BYTES = 1 << 20
@@ -151,8 +151,11 @@ class Act(Guarded):
             fix = "the page has been brought up to date: do it again"
             raise InputRejected.one("review", "page", "was changed in another window", fix)
         outlet_id = str(asked.get("id"))
-        self.session.do(outlet_id, asked)
-        self.answer(outlet=self.drawing.outlet(outlet_id))
+        step = self.session.do(outlet_id, asked)
+        if step.field == REVIEW_FIELD:
+            self.answer(outlet={"id": outlet_id, "mark": vars(step.after.mark)})
+        else:
+            self.answer(outlet=self.drawing.outlet(outlet_id))
 
     def _undo(self, asked: dict[str, Any]) -> None:
         self._walked(asked, self.session.undo())

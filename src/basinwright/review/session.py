@@ -35,6 +35,8 @@ STATES = {
     "field_check": "to be checked in the field",
 }
 """How far the review of an outlet has come."""
+REVIEW_FIELD = "review"
+"""What a step changes that is a decision about the outlet and leaves its tables as they are."""
 TABLES = ("segments", "outlets", "cover_shares")
 _MOST_TEXT = 500
 
@@ -310,7 +312,7 @@ class Session:
             raise InputRejected.one("review", "kind", "is no action of this page", f"use one of {', '.join(kinds)}")
         what, old, new, after = make(outlet_id, before, action)
         reason = str(action.get("reason") or "").strip()[:_MOST_TEXT]
-        if what != "review":
+        if what != REVIEW_FIELD:
             note = reason or before.mark.reason
             after = State(after.rows, Mark("edited", note, _now()))
         return Step(_now(), outlet_id, what, old, new, reason, before, after)
@@ -324,7 +326,7 @@ class Session:
             As for `attempt`, or where its tables cannot be computed; nothing is changed then.
         """
         step = self.attempt(outlet_id, action)
-        if step.field != "review":
+        if step.field != REVIEW_FIELD:
             self.compute(outlet_id, step.after)
         self.journal.append({"step": step.plain()})
         self._advance(step)
@@ -430,7 +432,7 @@ class Session:
         reason = str(action.get("reason") or "").strip()[:_MOST_TEXT]
         if value in ("rejected", "field_check") and not reason:
             raise InputRejected.one("review", "reason", "is missing", "say why: the next reader has only this")
-        return "review", before.mark.state, value, State(before.rows, Mark(value, reason, _now()))
+        return REVIEW_FIELD, before.mark.state, value, State(before.rows, Mark(value, reason, _now()))
 
     def _first(self, outlet_id: str, before: State, action: Mapping[str, Any]) -> tuple[str, str, str, State]:
         del action

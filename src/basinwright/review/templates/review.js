@@ -208,7 +208,7 @@
   async function act(action) {
     action.reason = action.reason || $("reason").value;
     const answer = await ask("/api/do", { ...action, id: current.id, revision });
-    if (answer) show(answer.outlet);
+    if (answer) show({ ...current, ...answer.outlet });
     else if (action.kind !== "mark") await open(current.id);
   }
 
