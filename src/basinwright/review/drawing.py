@@ -64,9 +64,9 @@ class Drawing:
 
     def _computed(self, outlet_id: str, state: State) -> Outlet:
         """Return an outlet as computed from a state of it; computed once where the state is that of the first run."""
-        if self._of == (self.session.identity, outlet_id) and state.rows == self.session.first(outlet_id).rows:
-            if (first := self._held[2]) is not None:
-                return replace(first)
+        known = self._held[2] if self._of == (self.session.identity, outlet_id) else None
+        if known is not None and state.rows == self.session.first(outlet_id).rows:
+            return replace(known)
         return self._as_outlet(self.session.compute(outlet_id, state))
 
     def _as_outlet(self, results: Results) -> Outlet:
