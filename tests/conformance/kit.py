@@ -479,7 +479,7 @@ def wkt(crs: str) -> str:
     """CRS as text."""
     from pyproj import CRS
 
-    return str(CRS.from_user_input(crs).towkt())
+    return str(CRS.from_user_input(crs).to_wkt())
 
 
 def _down(codes: np.ndarray, moves: np.ndarray, known: np.ndarray) -> np.ndarray:

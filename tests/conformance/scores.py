@@ -41,7 +41,7 @@ def ask(side: str) -> dict[str, dict[str, float | str | None]]:
 
 def collect() -> None:
     """Ask all sides and keep what they say."""
-    sides = {side: {"version": version(side) if side != "basinwright" else "", "answers": ask(side)} for side in SIDES}
+    sides = {side: {"version": "" if side == "basinwright" else version(side), "answers": ask(side)} for side in SIDES}
     SCORES.write_text(json.dumps(sides, indent=1) + "\n", encoding="utf-8")
 
 

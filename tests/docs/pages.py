@@ -267,11 +267,11 @@ def _conformance() -> Iterator[str]:
     yield from _table(("", *names), scores.totals())
     yield from (
         "",
-        "What lies behind the differences: pyflwdir's `from_dem` lets water follow the order of its flood, which drains",
-        "every cell but is not the steepest way; it takes the earth for a sphere. pysheds takes slopes in degrees as they",
-        "are and has no cell areas there; its flats are resolved by increments that floats of this size do not always",
-        "hold. Both fill and neither cuts: an embankment with a sag is crossed at the sag. Routing that steps to the",
-        "steepest neighbour is a choice, and theirs may suit other ends better.",
+        "What lies behind the differences: pyflwdir's `from_dem` lets water follow the order of its flood, which "
+        "drains every cell but is not the steepest way; it takes the earth for a sphere. pysheds takes slopes in "
+        "degrees as they are and has no cell areas there; the increments that drain its flats do not always survive in "
+        "floats of this size. Both fill and neither cuts, so that an embankment with a sag is crossed at the sag. "
+        "Stepping to the steepest neighbour is a choice; theirs may suit other ends better.",
         "",
     )
     yield from _table(("terrain", "question", "exact", *SIDES), scores.score_table())
@@ -279,14 +279,15 @@ def _conformance() -> Iterator[str]:
         "",
         "## What is left of the grid's staircase in lengths",
         "",
-        "Error in percent of the length of a flow path, for valleys and planes that fall to different azimuths. Steps to",
-        "eight neighbours overstate a straight line by up to 8.2 %. Weights for the two kinds of steps (Borgefors 1986)",
-        'centre that error but shorten paths along the axes and diagonals; `length_correction = "straight"` gives every',
-        "stretch that could be a straight line the length of that line, whatever its angle.",
+        "Error in percent of the length of a flow path, for valleys and planes that fall to different azimuths. Steps "
+        "to eight neighbours overstate a straight line by up to 8.2 %. Weights for the two kinds of steps (Borgefors "
+        '1986) centre that error but shorten paths along the axes and diagonals; `length_correction = "straight"` '
+        "gives every stretch that could be a straight line the length of that line, whatever its angle. Reaches of "
+        "the `streams` layer, drainage density and time-area curves stay with the steps.",
         "",
-        "On an even plane water goes the same way at every step and drifts off the fall line: the path is straight, and",
-        "too long by 1 / cos of the angle between. No correction of the path's length can know that, and none is made.",
-        "Real hillsides gather water within a few cells, after which the path follows a valley.",
+        "On an even plane water goes the same way at every step and drifts off the fall line: the path is straight, "
+        "and too long by 1 / cos of the angle between. No correction of the path's length can know that, and none is "
+        "made. Real hillsides gather water within a few cells, and the path then follows a valley.",
         "",
     )
     yield from _table(
