@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from basinwright.errors import BasinwrightError, InputRejected
+from basinwright.errors import BasinwrightError
 
 if TYPE_CHECKING:
     from basinwright.pipeline import Outcome
@@ -116,16 +116,23 @@ def run(
     ] = False,
     also_at: Annotated[
         list[str] | None,
-        typer.Option("--also-at", metavar="SIZE", help="Repeat on coarser cells and compare: not yet in this version."),
+        typer.Option(
+            "--also-at", metavar="SIZE", help='Repeat on coarser cells, such as "30 m", and compare; may be repeated.'
+        ),
     ] = None,
 ) -> int:
     """Do the whole job: terrain to flood hydrographs, for every outlet."""
     from basinwright import pipeline
 
-    if also_at:
-        raise InputRejected.one("command line", "--also-at", "not yet in this version", "leave it out")
     outcome = pipeline.run(
-        project, out=out, jobs=jobs, resume=resume, overwrite=overwrite, summary_only=summary_only, say=Screen()
+        project,
+        out=out,
+        jobs=jobs,
+        resume=resume,
+        overwrite=overwrite,
+        summary_only=summary_only,
+        also_at=also_at or (),
+        say=Screen(),
     )
     return _report(outcome)
 

@@ -106,6 +106,12 @@ class Grid:
         """Typical size of a cell [m]: the square root of its area at mid-height."""
         return float(np.sqrt(self.cell_area_m2[self.nrows // 2]))
 
+    def coarsened(self, cells: int) -> Grid:
+        """Return the grid of blocks of so many cells a side from the upper left corner; the last ones reach beyond."""
+        t = self.transform
+        transform = Affine(cells * t.a, 0.0, t.c, 0.0, cells * t.e, t.f)
+        return Grid(-(-self.nrows // cells), -(-self.ncols // cells), transform, self.crs_wkt)
+
     def xy(self, row: ArrayLike, col: ArrayLike) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Return map coordinates of cell centres (rows and columns may be fractional)."""
         x = self.transform.c + (np.asarray(col, dtype=float) + 0.5) * self.transform.a

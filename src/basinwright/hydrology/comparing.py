@@ -161,7 +161,7 @@ def _verdict(
         if outlets.flagged(i, _NO_VERDICT):
             return "unknown", f"the basin goes on beyond the terrain {name}"
     moved = {stem.replace("_", " "): float(columns[change][i]) for stem, change in changes.items()}
-    far = [f"{stem} {pct:+.0f} %" for stem, pct in moved.items() if not abs(pct) <= SAFE_PCT]
+    far = [f"{stem} {pct:+.3g} %" for stem, pct in moved.items() if not abs(pct) <= SAFE_PCT]
     return ("not safe", ", ".join(far)) if far else ("safe", "")
 
 

@@ -75,6 +75,8 @@ class Inputs:
         Path, size and hash of the files described so far.
     scenarios : dict of str to Inputs
         The same with some inputs replaced, by the scenario's name.
+    coarsened : int
+        Cells of the terrain as read along a side of one of the working grid.
     """
 
     project: Project
@@ -98,6 +100,7 @@ class Inputs:
     regional: dict[str, Any] | None = None
     files: dict[str, dict[str, Any]] = field(default_factory=dict)
     scenarios: dict[str, Inputs] = field(default_factory=dict)
+    coarsened: int = 1
 
     def sources(self) -> list[Source]:
         """List every file that the project names."""

@@ -27,7 +27,7 @@ from basinwright.pipeline.variants import Ground, ScenarioRun, stage_name
 from basinwright.project import Project, parse_project
 from basinwright.schemes import Scheme
 from basinwright.store import MANIFEST, Store
-from basinwright.tables import as_text, texts
+from basinwright.tables import CELL_SIZES, as_text, texts
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -61,6 +61,7 @@ def describe(
     held: set[Cell],
     results: Results,
     scenarios: Sequence[ScenarioRun],
+    cell_sizes: Sequence[Mapping[str, Any]],
     summary_only: bool,
 ) -> dict[str, Any]:
     """Return the manifest of a run as plain values."""
@@ -99,6 +100,10 @@ def describe(
             "encoding": "numbers: float64, little endian, base64; texts: JSON, zlib, base64",
             "first": {table.name: _packed(first.tables[table.name]) for table in EDITABLE},
             "written": {} if results is first else _changed(results, _first(first)),
+        },
+        "cell_sizes": {
+            "runs": list(cell_sizes),
+            "table": _packed(results.tables[CELL_SIZES.name]) if cell_sizes else None,
         },
         "scenarios": [
             {**_scenario(scenario, base, inputs.regional), "stages": store.described(stage_name(scenario.name))}
@@ -214,6 +219,13 @@ def ground(about: Mapping[str, Any], record: Record, settings: Settings) -> Grou
     return Ground(
         tables, _unpacked(about["time_area"]), starts, flags, record.supplied, settings, about["storm_tables"]
     )
+
+
+def cell_sizes(about: Mapping[str, Any]) -> dict[str, Any]:
+    """Return the table of coarser cell sizes by its name, where there is one: no edit changes it."""
+    packed = about.get("cell_sizes", {}).get("table")
+    frame = None if packed is None else _unpacked(packed)
+    return {} if frame is None else {CELL_SIZES.name: {str(name): frame[name].to_numpy() for name in frame}}
 
 
 def scenarios(about: Mapping[str, Any]) -> dict[str, Mapping[str, Any]]:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import shutil
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from filecmp import cmp
 from importlib.resources import files
 from pathlib import Path
@@ -16,6 +16,7 @@ from basinwright.tables import OUTLETS, as_text
 
 if TYPE_CHECKING:
     from basinwright.editing import Edited, Record
+    from basinwright.pipeline.cell_sizes import CellSize
     from basinwright.pipeline.inputs import Inputs
     from basinwright.pipeline.variants import Ground
 
@@ -34,6 +35,7 @@ def run(
     resume: bool = False,
     overwrite: bool = False,
     summary_only: bool = False,
+    also_at: Sequence[str] = (),
     say: Say = _silent,
 ) -> Outcome:
     """Do the whole job of a project.
@@ -52,6 +54,8 @@ def run(
         Replace the run that the folder holds.
     summary_only : bool
         Tables only: no polygons, no terrain rasters, no hydrograph series.
+    also_at : sequence of str
+        Coarser cell sizes, such as ``30 m``, on which to repeat the job and compare.
     say : callable
         Told what is happening.
 
@@ -66,6 +70,7 @@ def run(
     PublishError
         Where the results could not be put in place; the folder is then as it was.
     """
+    from basinwright.pipeline.cell_sizes import read_sizes
     from basinwright.pipeline.inputs import inspect
 
     folder = RunFolder(out if out is not None else project_file.absolute().parent / "out")
@@ -75,12 +80,13 @@ def run(
     if jobs is not None:
         compute_section = inputs.project.compute.model_copy(update={"jobs": jobs})
         inputs.project = inputs.project.model_copy(update={"compute": compute_section})
+    sizes = read_sizes(also_at, inputs.plan.grid)
     with folder.locked():
         folder.refuse_occupied(resume=resume, overwrite=overwrite)
         edits = _edits_of(folder.final) if resume and not overwrite else None
         partial = folder.begin(keep=resume)
         try:
-            outcome = _build(inputs, folder, partial, resume, summary_only, edits, say)
+            outcome = _build(inputs, folder, partial, resume, summary_only, sizes, edits, say)
         except InputRejected:
             folder.discard()
             raise
@@ -149,13 +155,14 @@ def _build(
     partial: Path,
     resume: bool,
     summary_only: bool,
+    sizes: Sequence[CellSize],
     edits: tuple[Edited, Record] | None,
     say: Say,
 ) -> Outcome:
     """Build the run in its partial folder, the manifest last."""
     from basinwright.editing import Edited
     from basinwright.outputs import writing
-    from basinwright.pipeline import geometry, manifest, second_opinion, terrain_half, variants
+    from basinwright.pipeline import cell_sizes, geometry, manifest, second_opinion, terrain_half, variants
     from basinwright.report import write_report
 
     project, series = inputs.project, not summary_only
@@ -184,6 +191,9 @@ def _build(
         results = first if edits is None else base.compute(own, series=series)
     scenarios = variants.run_scenarios(inputs, store, partial, edits, series=series)
     variants.compare(results, scenarios, own.held, project)
+    size_runs, compared = cell_sizes.run_sizes(inputs, sizes, first.tables["outlets"], store)
+    if compared is not None:
+        results.tables[cell_sizes.TABLE] = compared
 
     say("Writing tables, layers and rasters")
     writing.write_tables(partial, results.tables, project)
@@ -191,7 +201,7 @@ def _build(
         shapes.write(partial / "basins.gpkg", results.tables, project)
         writing.write_terrain(partial / "terrain", half.grid, half.routed(), half.elevation.array("elevation_m"))
     store.prune()
-    about = manifest.describe(inputs, half, store, base, first, own.held, results, scenarios, summary_only)
+    about = manifest.describe(inputs, half, store, base, first, own.held, results, scenarios, size_runs, summary_only)
     if not summary_only:
         say("Writing the report")
         write_report(partial, about, jobs=project.compute.jobs, say=say)
@@ -266,6 +276,7 @@ def retime(run_dir: Path, *, revise: Callable[[Path], None] | None = None, say: 
                     )
                 )
             variants.compare(results, scenarios, edits.held, project)
+            results.tables.update(manifest.cell_sizes(about))
             writing.write_tables(partial, results.tables, project)
             shapes = None if summary_only else geometry.stored(about, partial / STORE)
             if shapes is not None:

@@ -131,6 +131,14 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
         lambda draft: _elevation(inputs, draft),
     )
     grid = inputs.plan.grid
+    if inputs.coarsened > 1:
+        fine = elevation
+        elevation = store.stage(
+            "coarser_elevation",
+            f"Averaging the terrain over {inputs.coarsened} x {inputs.coarsened} cells",
+            {"elevation": fine.key, "cells": inputs.coarsened},
+            lambda draft: _coarser(fine, inputs.coarsened, draft),
+        )
     routing = store.stage(
         "routing",
         f"Conditioning and routing {grid.nrows * grid.ncols / 1e6:.2f} million cells{_compiling()}",
@@ -286,6 +294,13 @@ def _conditioning(project: Project) -> Conditioning:
     if options.conditioning == "fill":
         return Conditioning("fill")
     return Conditioning("breach", options.breach_depth, options.breach_length)
+
+
+def _coarser(elevation: Entry, cells: int, draft: Draft) -> None:
+    from basinwright.terrain.coarsening import block_means
+
+    draft.array("elevation_m", block_means(elevation.array("elevation_m"), cells))
+    draft.values("alignment", elevation.values("alignment"))
 
 
 def _routing(project: Project, grid: Grid, elevation: Entry, draft: Draft) -> None:
