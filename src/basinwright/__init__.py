@@ -1,8 +1,8 @@
 """From terrain to design flood hydrographs for ungauged outlets, with the evidence for every number.
 
-`run` does the whole job of a project file, `retime` computes times and flows again from a run's edited tables, `check`
-validates a project without computing. The halves serve alone as well: `basinwright.timing`, `storms`, `runoff` and
-`hydrograph` are pure functions on numbers and need no raster library.
+`Project` is a project file, `Run` a finished run: tables as data frames, rasters as xarray with their CRS. The halves
+serve alone as well: `route` on a terrain in memory; `time_segments`, `time_of_concentration` and `design_floods` on
+numbers measured by hand. Nothing heavy is imported before it is used.
 """
 
 from __future__ import annotations
@@ -13,13 +13,51 @@ from typing import TYPE_CHECKING, Any
 from basinwright.errors import BasinwrightError, InputRejected, PublishError
 
 if TYPE_CHECKING:
-    from basinwright.pipeline import Outcome, check, retime, run, start
+    from basinwright.api import Project, Run, check, explain, retime, route, run, start, storm
+    from basinwright.hydrograph import design_floods
+    from basinwright.outputs.summary import Outcome
+    from basinwright.runoff import Patches
+    from basinwright.timing import time_of_concentration, time_segments
 
-__all__ = ["BasinwrightError", "InputRejected", "Outcome", "PublishError", "check", "retime", "run", "start"]
+__all__ = [
+    "BasinwrightError",
+    "InputRejected",
+    "Outcome",
+    "Patches",
+    "Project",
+    "PublishError",
+    "Run",
+    "check",
+    "design_floods",
+    "explain",
+    "retime",
+    "route",
+    "run",
+    "start",
+    "storm",
+    "time_of_concentration",
+    "time_segments",
+]
+
+_HOMES = {
+    **dict.fromkeys(
+        ("Project", "Run", "check", "explain", "retime", "route", "run", "start", "storm"), "basinwright.api"
+    ),
+    "Outcome": "basinwright.outputs.summary",
+    "Patches": "basinwright.runoff",
+    "design_floods": "basinwright.hydrograph",
+    "time_of_concentration": "basinwright.timing",
+    "time_segments": "basinwright.timing",
+}
+"""Where the names live that are imported when they are first asked for."""
 
 
 def __getattr__(name: str) -> Any:
-    """Import the pipeline, and the heavy libraries behind it, only where it is asked for."""
-    if name in ("Outcome", "check", "retime", "run", "start"):
-        return getattr(importlib.import_module("basinwright.pipeline"), name)
+    """Import a public name, and the libraries behind it, where it is asked for."""
+    if name in _HOMES:
+        return getattr(importlib.import_module(_HOMES[name]), name)
     raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
+
+
+def __dir__() -> list[str]:
+    return sorted({*globals(), *__all__})

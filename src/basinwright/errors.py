@@ -7,7 +7,13 @@ from dataclasses import dataclass
 
 
 class BasinwrightError(Exception):
-    """Base of all errors raised on purpose: its text is meant for the user, never a traceback."""
+    """Base of all errors raised on purpose: its text is meant for the user, never a traceback.
+
+    Examples
+    --------
+    >>> issubclass(InputRejected, BasinwrightError) and issubclass(PublishError, BasinwrightError)
+    True
+    """
 
 
 @dataclass(frozen=True)
@@ -36,7 +42,13 @@ class Problem:
 
 
 class InputRejected(BasinwrightError):  # noqa: N818 - the event, as the user meets it
-    """The input cannot be computed: every problem that could be known beforehand, all at once (exit 2)."""
+    """The input cannot be computed: every problem that could be known beforehand, all at once (exit 2).
+
+    Examples
+    --------
+    >>> print(InputRejected.one("project.toml", "terrain.dem", "missing", "name the raster"))
+    project.toml: terrain.dem: missing: name the raster
+    """
 
     def __init__(self, problems: Iterable[Problem]) -> None:
         self.problems = list(problems)
@@ -61,4 +73,10 @@ class RangeError(BasinwrightError, ValueError):
 
 
 class PublishError(BasinwrightError):
-    """The results could not be put in place: no space, no permission, another run at work (nothing changed)."""
+    """The results could not be put in place: no space, no permission, another run at work (nothing changed).
+
+    Examples
+    --------
+    >>> print(PublishError("out: folder: cannot be written (No space left on device): make room"))
+    out: folder: cannot be written (No space left on device): make room
+    """

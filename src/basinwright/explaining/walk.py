@@ -41,6 +41,8 @@ HOWS: Mapping[str, Mapping[str, Choice]] = {
 }
 """How each column comes to be, by table and stem: one record, or a choice of records, for every column."""
 
+_UNRECORDED = How("there is no record of how this column comes to be")
+
 SAME = 1e-9
 """Relative difference up to which the figure computed again is the table's."""
 _MOST_ROWS = 3
@@ -256,7 +258,7 @@ def _record_of(here: Here) -> tuple[How, str]:
         if place in run.record.supplied:
             return How("supplied with the outlet, in the outlet layer: it stands instead of the computed value"), edited
         return How("a person filled it in the table: it stands until it is emptied"), edited
-    choice = HOWS[table][here.stem]
+    choice = HOWS.get(table, {}).get(here.stem, _UNRECORDED)
     return (choice if isinstance(choice, How) else choice(here)), edited
 
 

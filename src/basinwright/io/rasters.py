@@ -490,3 +490,11 @@ def pixel_at(path: Location, crs: str, x: float, y: float) -> tuple[int, int, st
             return None
         value = source.read(1, window=Window(col, row, 1, 1), masked=True)[0, 0]
         return row, col, "nodata" if np.ma.is_masked(value) else repr(value.item())
+
+
+def read_whole(path: Path) -> tuple[NDArray[Any], Affine, str]:
+    """Read a raster of this program whole: values (floating ones NaN where there is no data), transform, CRS as WKT."""
+    with cells_of(path) as source:
+        band = source.read(1, masked=True)
+        values = band.filled(np.nan) if band.dtype.kind == "f" else band.data
+        return values, source.transform, source.crs.to_wkt()

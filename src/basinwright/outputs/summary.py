@@ -34,6 +34,13 @@ class Outcome:
         All flags.
     scenarios : dict of str to columns
         outlets.csv of each scenario, by name.
+
+    Examples
+    --------
+    >>> from basinwright.project import Project
+    >>> columns = {"outlet_id": ["A", "B"], "status": ["ok", "failed"]}
+    >>> Outcome(Path("out"), Project.model_construct(), columns, []).failed
+    1
     """
 
     folder: Path

@@ -39,6 +39,13 @@ class Patches:
     ------
     RangeError
         Where a number is out of range, or an outlet has no area.
+
+    Examples
+    --------
+    Technical Release 55 (1986), example 2-1: pasture in good condition, 75 ac on group B and 175 ac on group C.
+
+    >>> Patches([0, 2], [75.0, 175.0], [61.0, 74.0]).mean_curve_number().round(1).tolist()
+    [70.1]
     """
 
     offsets: Integers
