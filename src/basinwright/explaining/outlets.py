@@ -511,6 +511,14 @@ OUTLET_HOWS: Mapping[str, Choice] = {
         {"f": _areal, "A": cell("area", "km2")},
         source="G. Leclerc and J. C. Schaake, MIT Report 142, 1972",
     ),
+    "drainage_density": How(
+        "length of the channels in the basin over its area; channels begin at terrain.stream_area",
+        places=ground.basin_places,
+    ),
+    "tc_longest_in_time_h": How(
+        "travel time along the path from the cell whose water takes longest, by the time-area sweep; not edited",
+        places=ground.basin_places,
+    ),
     "critical_duration_h": How(
         "of the durations of storm.ddf the one whose storm gives the highest peak of the rarest flood"
     ),

@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 
 from basinwright.errors import InputRejected
+from basinwright.explaining.comparisons import COMPARISON_HOWS
 from basinwright.explaining.others import (
     COVER_HOWS,
     CROSS_HOWS,
@@ -38,6 +39,7 @@ HOWS: Mapping[str, Mapping[str, Choice]] = {
     "hydrographs": HYDROGRAPH_HOWS,
     "basin_parameters": BASIN_HOWS,
     "flags": FLAG_HOWS,
+    **COMPARISON_HOWS,
 }
 """How each column comes to be, by table and stem: one record, or a choice of records, for every column."""
 
