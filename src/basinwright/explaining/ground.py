@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -88,31 +89,15 @@ def pixel_words(here: Here, layer: str, x: float, y: float) -> list[str]:
 
 
 def _files(here: Here, layer: str) -> list[Path]:
-    """Return the files of an option as the run read them."""
-    section, _, key = layer.partition(".")
-    value = getattr(getattr(here.run.project, section), key)
+    """Return the files of an option as the run read them: the terrain's are listed first, then the outlets'."""
+    project = here.run.project
     inputs = [Path(entry["path"]) for entry in here.run.about["inputs"]]
     if layer == DEM:
-        others = {Path(str(text)).name for text in _other_sources(here) if text}
-        return [path for path in inputs if path.name not in others]
+        outlets = Path(project.outlets.source).name
+        return list(itertools.takewhile(lambda path: path.name != outlets, inputs))
+    section, _, key = layer.partition(".")
+    value = getattr(getattr(project, section), key)
     return [path for path in inputs if value and path.name == Path(str(value)).name]
-
-
-def _other_sources(here: Here) -> list[str | None]:
-    project = here.run.project
-    cover, soils, storm = project.cover, project.soils, project.storm
-    return [
-        project.outlets.source,
-        cover.raster,
-        cover.vector,
-        cover.impervious,
-        cover.scheme,
-        soils.raster,
-        soils.vector,
-        storm.table,
-        storm.ddf,
-        *storm.depth_rasters.values(),
-    ]
 
 
 def outlet_places(here: Here) -> list[str]:
