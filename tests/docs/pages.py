@@ -311,7 +311,10 @@ PAGES: dict[str, Callable[[], str]] = {
 }
 
 if __name__ == "__main__":
+    from docs import pictures
+
     scores.collect()
+    pictures.draw_all()
     for name, page in PAGES.items():
         (FOLDER / name).write_text(page(), encoding="utf-8")
         print(FOLDER / name)
