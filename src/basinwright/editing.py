@@ -70,12 +70,15 @@ class Record:
     supplied, held : set of Cell
         The dependent cells that stood as given when the run first wrote them (the outlet layer supplied them), and
         those that do in ``written``.
+    mapped_roughness : bool
+        Whether channels have the roughness of mapped lines, which stands where nobody changed it.
     """
 
     first: dict[str, pd.DataFrame]
     written: dict[str, pd.DataFrame]
     supplied: set[Cell] = field(default_factory=set)
     held: set[Cell] = field(default_factory=set)
+    mapped_roughness: bool = False
 
 
 @dataclass(frozen=True)
@@ -155,7 +158,7 @@ def as_first(record: Record, system: System, scheme: Scheme) -> dict[str, pd.Dat
     """Return the tables as the terrain half handed them to the hydrology, before any edit."""
     import pandas as pd
 
-    record = Record(record.first, record.first, record.supplied, record.supplied)
+    record = Record(record.first, record.first, record.supplied, record.supplied, record.mapped_roughness)
     tables = {}
     for kind in (_SegmentEditor, _ShareEditor, _OutletEditor):
         editor, frame = kind(record, system, scheme), record.first[kind.table.name]
@@ -616,6 +619,10 @@ class _SegmentEditor(_Editor):
             sheet = first[0]["regime"] == row["regime"] == "sheet" and row["cover"] == first[0]["cover"]
             if sheet and not row["roughness"]:
                 row["roughness"] = first[0]["roughness"]
+            if self.record.mapped_roughness and row["regime"] == "channel" and not row["roughness"]:
+                middle = 0.5 * (float(row[start]) + float(row[end]))
+                whole = next((piece for piece in first if float(piece[end]) >= middle), first[-1])
+                row["roughness"] = whole["roughness"] if whole["regime"] == "channel" else ""
 
 
 _EDITORS: tuple[type[_Editor], ...] = (_SegmentEditor, _ShareEditor, _OutletEditor)

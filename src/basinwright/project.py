@@ -88,12 +88,32 @@ Length = Annotated[float, _read("length"), _positive, _write("length")]
 LengthOrNone = Annotated[float, _read("length"), Field(ge=0), _write("length")]
 LengthOrAuto = Annotated[float | str, _read("length", "auto"), _positive, _write("length")]
 AreaOrAuto = Annotated[float | str, _read("area", "auto"), _positive, _write("area")]
+AreaOrNone = Annotated[float, _read("area"), Field(ge=0), _write("area")]
 Depth = Annotated[float, _read("depth"), _positive, _write("depth")]
 Time = Annotated[float, _read("time"), _positive, _write("time")]
 TimeOrNone = Annotated[float, _read("time"), Field(ge=0), _write("time")]
 TimeOrAuto = Annotated[float | str, _read("time", "auto"), _positive, _write("time")]
 Share = Annotated[float, _read("share"), Field(ge=0, le=1), _write("share")]
 Plain = Annotated[float, Field(allow_inf_nan=False, strict=True)]
+
+
+def _check_code(text: str) -> str:
+    try:
+        float(text)
+    except ValueError:
+        raise _reject(f"{text!r} is no code of a raster", "write the numbers that stand in the raster") from None
+    return text
+
+
+def _check_meaning(value: int | str) -> int | str:
+    if value in ("exit", "sink") or (isinstance(value, int) and value in range(0, 360, 45)):
+        return value
+    raise _reject(f"{value!r} is no direction", 'use an azimuth of 0, 45, ... 315 degrees, "exit" or "sink"')
+
+
+Code = Annotated[str, AfterValidator(_check_code)]
+"""A number of a raster, as text: keys of a table in the project file are texts."""
+Meaning = Annotated[int | str, AfterValidator(_check_meaning)]
 
 
 def _one_of(*values: float) -> AfterValidator:
@@ -221,6 +241,7 @@ class Terrain(Section):
     dem: list[str] = Field(min_length=1)
     vertical_unit: Literal["m", "ft", "us-ft"] | None = None
     crs: str = "auto"
+    fill_voids: AreaOrNone = _default("500 m2")
     conditioning: Literal["fill", "breach"] = "fill"
     breach_depth: Length = _default("5 m")
     breach_length: Length = _default("100 m")
@@ -228,7 +249,7 @@ class Terrain(Section):
     barriers: str | None = None
     sinks: str | None = None
     flow_direction: str | None = None
-    flow_direction_codes: dict[str, int | str] | None = None
+    flow_direction_codes: dict[Code, Meaning] | None = None
     stream_area: AreaOrAuto = _default("0.25 km2")
     length_correction: Literal["none", "straight"] = "none"
 
@@ -503,17 +524,6 @@ class Project(Section):
 
 
 LATER: tuple[tuple[str, str, Callable[[Any], bool], str], ...] = (
-    ("terrain", "stream_lines", lambda value: value is not None, "leave it out"),
-    ("terrain", "barriers", lambda value: value is not None, "leave it out"),
-    ("terrain", "sinks", lambda value: value is not None, "leave it out"),
-    ("terrain", "flow_direction", lambda value: value is not None, "leave it out"),
-    ("terrain", "flow_direction_codes", lambda value: value is not None, "leave it out"),
-    (
-        "channel",
-        "roughness",
-        lambda value: isinstance(value, str) and value != "jarrett",
-        'give Manning\'s n as a number, or "jarrett"',
-    ),
     ("compute", "scheduler", lambda value: value != "", "leave it empty"),
     ("compute", "memory", lambda value: value != "auto", 'use "auto"'),
 )
@@ -738,6 +748,7 @@ def _conflicts(data: dict[str, Any]) -> Iterator[tuple[str, str, str]]:
                     'missing, and bankfull_region is "own"',
                     "give { coefficient = ..., exponent = ... }",
                 )
+    yield from _hydrography_conflicts(section("terrain"), channel)
     shape = section("unit_hydrograph")
     if shape.get("peak_rate_factor", 484) != 484 and shape.get("shape", "curvilinear") != "gamma":
         yield (
@@ -861,6 +872,24 @@ def rank_correlation(ranges: Uncertainty) -> dict[tuple[int, int], float]:
     """Return the rank correlations by the places of the two inputs in the sample."""
     places = {name: i for i, name in enumerate(ranges.sampled)}
     return {(places[entry.inputs[0]], places[entry.inputs[1]]): entry.rank for entry in ranges.correlated}
+
+
+def _hydrography_conflicts(terrain: dict[str, Any], channel: dict[str, Any]) -> Iterator[tuple[str, str, str]]:
+    roughness = channel.get("roughness")
+    by_column = isinstance(roughness, str) and roughness != "jarrett"
+    if by_column and "stream_lines" not in terrain:
+        what = f"{roughness!r} is taken for a column of terrain.stream_lines, which is missing"
+        yield "channel.roughness", what, 'give terrain.stream_lines, or Manning\'s n as a number, or "jarrett"'
+    if "flow_direction_codes" in terrain and "flow_direction" not in terrain:
+        yield "terrain.flow_direction_codes", "given without flow_direction", "name the raster of directions"
+    if "flow_direction" not in terrain:
+        return
+    if "flow_direction_codes" not in terrain:
+        fix = 'say what each code means, such as { 1 = 0, 2 = 45, 0 = "exit" }'
+        yield "terrain.flow_direction_codes", "missing, and flow_direction is given", fix
+    for key in ("barriers", "sinks", *(() if by_column else ("stream_lines",))):
+        if key in terrain:
+            yield f"terrain.{key}", "given beside flow_direction, which it cannot change", "leave one of the two out"
 
 
 def _storm_conflicts(storm: dict[str, Any]) -> Iterator[tuple[str, str, str]]:

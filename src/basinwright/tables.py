@@ -236,6 +236,8 @@ OUTLETS = Table(
         _shown("reach_length", "length", "length of the flow path from this outlet to the next downstream"),
         _shown("reach_fall", "length", "fall of that path, conditioned terrain"),
         _shown("reach_area", "area", "contributing area at its middle"),
+        _shown("sink_area", "area", "area that drains to sinks and, if they spilt, to the outlet: not in its area",
+               optional=True),
         _number("translation_peak_rate_factor", "peak rate factor of translation alone: an index", "1", optional=True),
         _number("areal_factor", "factor from point to areal rainfall", "1", optional=True),
         _number("critical_duration_h", "storm duration that gives the highest peak", "h", optional=True),

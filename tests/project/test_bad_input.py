@@ -334,6 +334,12 @@ UNKNOWN = [
     ({"storm": {"distribution": "balanced"}}, "storm.ddf: missing"),
     ({"storm": {"distribution": None}}, "storm.distribution: missing"),
     ({"terrain": {"dem": None}}, "terrain.dem: missing"),
+    ({"terrain": {"stream_lines": "a.gpkg"}}, "terrain.stream_lines: 'a.gpkg' does not exist"),
+    ({"terrain": {"flow_direction": "d8.tif"}}, "terrain.flow_direction_codes: missing"),
+    ({"terrain": {"flow_direction_codes": {"1": 0}}}, "terrain.flow_direction_codes: given without"),
+    ({"terrain": {"flow_direction_codes": {"1": 30}}}, "30 is no direction"),
+    ({"terrain": {"flow_direction_codes": {"north": 0}}}, "'north' is no code"),
+    ({"channel": {"roughness": "n_column"}}, "channel.roughness: 'n_column' is taken for a column"),
     ({"terrain": {"dem": []}}, "terrain.dem"),
     ({"outlets": {"source": None}}, "outlets.source: missing"),
     ({"cover": {"scheme": None}}, "cover.scheme: missing"),
@@ -347,9 +353,7 @@ def test_an_option_that_is_none(rejected, tmp_path, overrides, words):
 
 
 LATER = [
-    ("terrain", "stream_lines", "a.gpkg"), ("terrain", "barriers", "a.gpkg"), ("terrain", "sinks", "a.gpkg"),
-    ("terrain", "flow_direction", "d8.tif"), ("terrain", "flow_direction_codes", {"1": 0}),
-    ("channel", "roughness", "n_column"), ("compute", "scheduler", "tcp://x:1"), ("compute", "memory", "4 GB"),
+    ("compute", "scheduler", "tcp://x:1"), ("compute", "memory", "4 GB"),
 ]  # fmt: skip
 
 

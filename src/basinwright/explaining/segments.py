@@ -137,6 +137,11 @@ def _channel_n(here: Here) -> How:
             {"S": cell("slope"), "R": cell("hydraulic_radius", "ft")},
             source=_JARRETT,
         )
+    if isinstance(here.run.project.channel.roughness, str):
+        return How(
+            f"Manning n of the stream lines' column {here.run.project.channel.roughness}, 0.045 off them",
+            places=ground.at_distance("from"),
+        )
     return How("the project's Manning n of channels", "n", {"n": option("channel.roughness")})
 
 

@@ -15,6 +15,7 @@ from basinwright.runoff import Patches
 from basinwright.schemes import Scheme
 from basinwright.tables import SEGMENTS
 from basinwright.timing import SegmentTimes, sum_by_outlet, time_segments
+from basinwright.timing.segments import PLAIN_ROUGHNESS_N
 from basinwright.units import M_PER_FT
 
 if TYPE_CHECKING:
@@ -39,6 +40,12 @@ def timed(segments: Frame, settings: Settings, held: set[Cell]) -> SegmentTimes:
     sheet, shallow = segments.among("regime", ("sheet",)), segments.among("regime", ("shallow",))
     roughness = given("roughness") * np.where(shallow & (segments.system == "us"), M_PER_FT, 1.0)
     sheet_n = segments.by_text("cover", lambda code: found.sheet_n if (found := scheme.find(code)) else np.nan)
+    channel_n: Any = project.channel.roughness
+    words = "n of the project"
+    if isinstance(channel_n, str) and channel_n != "jarrett":
+        words = f"n of the stream lines, {PLAIN_ROUGHNESS_N:g} off them"
+        mapped = np.where(segments.among("regime", ("channel",)), segments.number("roughness"), np.nan)
+        channel_n = np.where(np.isnan(mapped), PLAIN_ROUGHNESS_N, mapped)
     weighted = np.where(sheet, segments.number("roughness"), np.nan)  # by length along the path, from the terrain
     columns = {
         "outlet": segments.outlet,
@@ -58,7 +65,8 @@ def timed(segments: Frame, settings: Settings, held: set[Cell]) -> SegmentTimes:
         columns,
         two_year_depth_mm=project.storm.two_year_depth_mm,
         relation=settings.relation,
-        channel_roughness=project.channel.roughness,
+        channel_roughness=channel_n,
+        channel_roughness_words=words,
         slope_floor=project.flow_path.slope_floor,
         open_water_depth_m=project.channel.open_water_depth,
     )

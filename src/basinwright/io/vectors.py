@@ -310,11 +310,16 @@ def _id_problems(file: str, field: str, ids: Sequence[str]) -> list[Problem]:
 
 def check_polygons(path: Location, field: str, layer: str | None = None) -> list[Problem]:
     """List what the header of a polygon layer shows to be wrong: file, layer, CRS, column, kind of geometry."""
-    return _polygon_layer(path, field, layer)[1]
+    return layer_of_kind(path, field, layer)[1]
 
 
-def _polygon_layer(path: Location, field: str, layer: str | None) -> tuple[str, list[Problem]]:
-    """Return the name of the polygon layer to read and what is wrong with it."""
+_KINDS = {"polygons": ("Polygon", "Surface"), "lines": ("LineString", "Curve")}
+
+
+def layer_of_kind(
+    path: Location, field: str | None, layer: str | None = None, kind: str = "polygons"
+) -> tuple[str, list[Problem]]:
+    """Return the name of the layer of polygons or lines to read and what is wrong with it."""
     import pyogrio
     from pyogrio.errors import DataSourceError
 
@@ -333,14 +338,14 @@ def _polygon_layer(path: Location, field: str, layer: str | None) -> tuple[str, 
     problems = []
     if not about["crs"]:
         problems.append(Problem(file, "crs", "is not declared", "assign the one it was made in"))
-    if field not in about["fields"]:
+    if field is not None and field not in about["fields"]:
         fix = nearest_name(field, [str(name) for name in about["fields"]])
         problems.append(Problem(file, f"column {field}", "does not exist", fix))
-    kind = about["geometry_type"] or "no geometry"
-    if "Polygon" not in kind and "Surface" not in kind and kind not in ("Unknown", "GeometryCollection"):
-        problems.append(Problem(file, "geometry", f"is {kind}, not polygons", "give a layer of polygons"))
+    found = about["geometry_type"] or "no geometry"
+    if not any(word in found for word in (*_KINDS[kind], "Unknown", "GeometryCollection")):
+        problems.append(Problem(file, "geometry", f"is {found}, not {kind}", f"give a layer of {kind}"))
     if about["features"] == 0:
-        problems.append(Problem(file, "layer", "has no polygons", "give at least one"))
+        problems.append(Problem(file, "layer", f"has no {kind}", "give at least one"))
     return layer or layers[0], problems
 
 
@@ -380,7 +385,7 @@ def rasterize_polygons(
     import pyogrio
     from rasterio.features import rasterize
 
-    name, problems = _polygon_layer(path, field, layer)
+    name, problems = layer_of_kind(path, field, layer)
     if problems:
         raise InputRejected(problems)
     frame = pyogrio.read_dataframe(path, layer=name, columns=[field])

@@ -10,7 +10,7 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from basinwright.kernels import EXIT, FREE, NO_CELL
+from basinwright.kernels import EXIT, FREE, NO_CELL, VOID
 from basinwright.kernels.constraints import offsets
 from basinwright.kernels.heap import enlarged, pop, push
 
@@ -39,7 +39,7 @@ def lay_lines(
     x: np.ndarray, y: np.ndarray, bounds: np.ndarray, z: np.ndarray, nrows: int, ncols: int, links: np.ndarray,
     line_of: np.ndarray,
 ) -> None:  # fmt: skip
-    """Lay lines on the grid as chains of neighbouring cells, corners cut.
+    """Lay lines on the grid as chains of neighbouring cells, corners cut; the same whichever way they were drawn.
 
     Parameters
     ----------
@@ -61,10 +61,12 @@ def lay_lines(
         here = NO_CELL
         first = bounds[line]
         last = bounds[line + 1] - 1
-        for i in range(first, max(last, first + 1)):
-            j = min(i + 1, last)
+        onward = x[first] < x[last] or (x[first] == x[last] and y[first] <= y[last])
+        for vertex in range(max(last - first, 1)):
+            i = first + vertex if onward else last - vertex
+            j = min(i + 1, last) if onward else i - 1
             pieces = max(1, int(np.ceil(2.0 * max(abs(x[j] - x[i]), abs(y[j] - y[i])))))
-            for piece in range(0 if i == first else 1, pieces + 1):
+            for piece in range(0 if vertex == 0 else 1, pieces + 1):
                 part = piece / pieces
                 col = int(np.floor(x[i] + (x[j] - x[i]) * part))
                 row = int(np.floor(y[i] + (y[j] - y[i]) * part))
@@ -230,7 +232,7 @@ def orient(
                 if size + 1 >= keys.size:
                     keys = enlarged(keys, size, 2 * keys.size)
                     ties = enlarged(ties, size, 2 * ties.size)
-                size = push(keys, ties, size, max(level, np.float64(z[n])), along[i] * _TIE_CELLS + n)
+                size = push(keys, ties, size, max(level, np.float64(z[n])), int(along[i]) * _TIE_CELLS + n)
 
 
 @njit(cache=True, nogil=True, inline="always")
@@ -549,3 +551,53 @@ def spills(
                 keys = enlarged(keys, size, 2 * keys.size)
                 ties = enlarged(ties, size, 2 * ties.size)
             size = push(keys, ties, size, np.float64(level[n]), n)
+
+
+@njit(cache=True, nogil=True)
+def send_off(directions: np.ndarray, nrows: int, ncols: int) -> None:
+    """Make an EXIT of every cell whose direction leads into a void or off the raster, in place."""
+    stride = ncols + 2
+    o = offsets(stride)
+    for c in range(stride, directions.size - stride):
+        if directions[c] < EXIT and directions[c + o[directions[c]]] == VOID:
+            directions[c] = EXIT
+
+
+@njit(cache=True, nogil=True)
+def find_loops(directions: np.ndarray, ncols: int, order: np.ndarray) -> np.ndarray:
+    """First cell of every loop of directions.
+
+    Parameters
+    ----------
+    directions : uint8 array, shape (cells,)
+    ncols : int
+    order : int32 array, shape (visited,)
+        From `contributing_area`: without the cells on loops and below them.
+
+    Returns
+    -------
+    int32 array, shape (loops,)
+        The smallest index of each.
+    """
+    o = offsets(ncols + 2)
+    seen = np.zeros(directions.size, np.int32)
+    for i in range(order.size):
+        seen[order[i]] = -1
+    first = np.empty(directions.size - order.size, np.int32)
+    count = 0
+    for start in range(directions.size):
+        if directions[start] == VOID or seen[start] != 0:
+            continue
+        c = start
+        while directions[c] < EXIT and seen[c] == 0:
+            seen[c] = start
+            c += o[directions[c]]
+        if directions[c] < EXIT and seen[c] == start:
+            least = c
+            n = c + o[directions[c]]
+            while n != c:
+                least = min(least, n)
+                n += o[directions[n]]
+            first[count] = least
+            count += 1
+    return first[:count]

@@ -62,12 +62,15 @@ class CoverOnGrid:
     sheet_n : float64 array, shape (k,)
         Manning n for sheet flow; NaN where the scheme has none.
     open_water : bool array, shape (k,)
+    channel_n : float array, shape (nrows, ncols), optional
+        Manning n of mapped channels; NaN where there is none.
     """
 
     classes: np.ndarray
     codes: Sequence[str]
     sheet_n: np.ndarray
     open_water: np.ndarray
+    channel_n: np.ndarray | None = None
 
 
 @dataclass(frozen=True, eq=False)
@@ -78,8 +81,8 @@ class Cut:
     ----------
     segments : dict of arrays, shape (segments,)
         ``outlet`` (index), ``segment`` (from 1), ``regime``, ``cover``, ``from_m``, ``to_m``,
-        ``top_elevation_m``, ``bottom_elevation_m``, ``roughness`` (sheet flow only, else NaN), ``area_km2``;
-        outlet by outlet, downstream.
+        ``top_elevation_m``, ``bottom_elevation_m``, ``roughness`` (sheet flow and mapped channels, else NaN),
+        ``area_km2``; outlet by outlet, downstream.
     sheet_limited : bool array, shape (n,)
         The McCuen-Spiess limit ended the sheet flow, not `CutRules.sheet_limit_m`, a channel, open water or
         the outlet (SHEET_LIMIT).
@@ -99,9 +102,9 @@ def cut_segments(grid: Grid, terrain: Terrain, paths: Paths, cover: CoverOnGrid,
     and length-weighted roughness, and the start of channel or open water. The channel starts at the centre of the first
     cell with the stream area. Open water is where the cover is water, the profile falls by less than the slope
     floor times the length, the stretch is at least the shortest segment long, and most transects across it are wider
-    than three bankfull widths at its middle. Shallow and channel flow are cut midway between cells of
-    different cover, and at a cell whose area is 1.5 times that of the one above or more; in shallow flow such a
-    tributary must also bring a tenth of the stream area.
+    than three bankfull widths at its middle. Shallow and channel flow are cut midway between cells of different cover
+    (channels also where the roughness of mapped ones changes), and at a cell whose area is 1.5 times that of the one
+    above or more; in shallow flow such a tributary must also bring a tenth of the stream area.
 
     Pieces shorter than the shortest segment, looked at from the divide down, join the longer neighbour of
     their regime, the upstream one of equals; without such a neighbour they stay. A joined piece has the cover of
@@ -133,13 +136,16 @@ def cut_segments(grid: Grid, terrain: Terrain, paths: Paths, cover: CoverOnGrid,
     sheet, roughness, limited = _sheet(paths, classes, cover, sheet_end, rules)
 
     n_classes = len(cover.codes)
+    channel_n, kind = _channel_kinds(terrain, paths, cover, rules)
+    kinds = channel_n.size
     segment_bounds, pieces = kernel.cut(
-        bounds, distance, paths.area_km2, np.where(classes < 0, n_classes, classes).astype(np.int32),
-        n_classes + 1, sheet, channel, np.searchsorted(path, np.arange(paths.n + 1)), first, last,
+        bounds, distance, paths.area_km2, (np.where(classes < 0, n_classes, classes) * kinds + kind).astype(np.int32),
+        (n_classes + 1) * kinds, sheet, channel, np.searchsorted(path, np.arange(paths.n + 1)), first, last,
         LEAST_TRIBUTARY * rules.stream_area_km2, rules.min_segment_m,
     )  # fmt: skip
     to_m = pieces[:, 0].copy()
     regime, main = pieces[:, 1:].astype(np.int64).T
+    main, kind = np.divmod(main, kinds)
     from_m, top, bottom, area = kernel.at_segments(bounds, distance, elevation, paths.area_km2, segment_bounds, to_m)
     outlet = np.repeat(np.arange(paths.n), np.diff(segment_bounds))
     segments = {
@@ -151,11 +157,26 @@ def cut_segments(grid: Grid, terrain: Terrain, paths: Paths, cover: CoverOnGrid,
         "to_m": to_m,
         "top_elevation_m": top,
         "bottom_elevation_m": bottom,
-        "roughness": np.where(regime == kernel.SHEET, roughness[outlet], np.nan),
+        "roughness": np.where(
+            regime == kernel.SHEET, roughness[outlet], np.where(regime == kernel.CHANNEL, channel_n[kind], np.nan)
+        ),
         "area_km2": area,
     }
     has_channel = np.bincount(outlet[regime == kernel.CHANNEL], minlength=paths.n) > 0
     return Cut(segments, limited, ~has_channel & (np.diff(bounds) > 0))
+
+
+def _channel_kinds(
+    terrain: Terrain, paths: Paths, cover: CoverOnGrid, rules: CutRules
+) -> tuple[np.ndarray, np.ndarray]:
+    """Values of Manning n of mapped channels, NaN the last, and which of them each cell of the paths has."""
+    if cover.channel_n is None:
+        return np.full(1, np.nan), np.zeros(paths.cells.size, np.int64)
+    along = np.where(
+        paths.area_km2 >= rules.stream_area_km2, cover.channel_n[terrain.rows_cols(paths.cells)], np.nan
+    ).astype(np.float64)
+    known = np.unique(along[~np.isnan(along)])
+    return np.append(known, np.nan), np.where(np.isnan(along), known.size, np.searchsorted(known, along))
 
 
 def _gaps_filled(paths: Paths, values: np.ndarray, known: np.ndarray) -> np.ndarray:

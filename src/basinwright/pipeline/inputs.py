@@ -68,6 +68,8 @@ class Inputs:
         Raster of percent impervious.
     depth_rasters : dict of str to Source
         Raster of storm depth by return period.
+    mapped : dict of str to Source
+        Mapped hydrography by option: ``stream_lines``, ``barriers``, ``sinks``, ``flow_direction``.
     design : DesignStorm
     regional : dict or None
         Table of regional regression equations as plain values, checked.
@@ -96,6 +98,7 @@ class Inputs:
     scheme: Scheme
     impervious: Source | None
     depth_rasters: dict[str, Source]
+    mapped: dict[str, Source]
     design: DesignStorm
     regional: dict[str, Any] | None = None
     files: dict[str, dict[str, Any]] = field(default_factory=dict)
@@ -111,7 +114,7 @@ class Inputs:
             project.storm.ddf,
             project.check.regression if project.check is not None else None,
         ]
-        layers = [self.cover, self.soils, self.impervious, *self.depth_rasters.values()]
+        layers = [self.cover, self.soils, self.impervious, *self.depth_rasters.values(), *self.mapped.values()]
         own = [
             *self.dem,
             self.points_source,
@@ -309,6 +312,7 @@ def inspect(file: Path) -> Inputs:
     layers = _replaceable(look, plan)
     project = layers.project
     table = _regional(look, project)
+    mapped = _mapped(look, plan) if project.terrain is not None else {}
     x = y = np.empty(0)
     aligned: dict[str, Any] = {}
     if points is not None and plan is not None:
@@ -345,6 +349,7 @@ def inspect(file: Path) -> Inputs:
         expected_area_km2=expected,
         capacity_m3s=capacity,
         overrides=overrides,
+        mapped=mapped,
         **vars(layers),
         regional=table,
     )
@@ -506,6 +511,39 @@ def _raster(look: _Looking, key: str, text: str, plan: TerrainPlan | None) -> So
     if path is not None:
         look.found += check_raster(path, plan.grid if plan else None)
     return path
+
+
+def _mapped(look: _Looking, plan: TerrainPlan | None) -> dict[str, Source]:
+    """Find and check mapped hydrography, by option."""
+    from basinwright.io.hydrography import check_layer, check_same_cells, read_lines, read_sinks
+
+    section, grid, sources = look.project.terrain, plan.grid if plan else None, {}
+    for key, kind in (("stream_lines", "lines"), ("barriers", "lines"), ("sinks", "polygons"), ("flow_direction", "")):
+        text = getattr(section, key)
+        path = None if text is None else look.source(f"terrain.{key}", text)
+        if path is None:
+            continue
+        sources[key] = path
+        if kind:
+            column = roughness_column(look.project) if key == "stream_lines" else None
+            if grid is None:
+                look.found += check_layer(path, kind, column)
+            elif kind == "lines":
+                look.tried(partial(read_lines, path, grid, column, LIMITS["roughness"]))
+            else:
+                look.tried(partial(read_sinks, path, grid))
+        elif plan is not None and plan.reason:
+            what = f"terrain is resampled ({plan.reason}), and directions cannot be"
+            look.add(look.file.name, f"terrain.{key}", what, "give terrain and directions in a CRS of true areas")
+        elif plan is not None:
+            look.found += check_same_cells(path, plan.grid)
+    return sources
+
+
+def roughness_column(project: Project) -> str | None:
+    """Return the column of the stream lines that holds Manning's n; None where it comes from elsewhere."""
+    roughness = project.channel.roughness if project.channel is not None else None
+    return roughness if isinstance(roughness, str) and roughness != "jarrett" else None
 
 
 def _scheme(look: _Looking) -> Scheme | None:

@@ -260,7 +260,8 @@ def record(about: Mapping[str, Any]) -> Record:
     first = {table.name: _unpacked(edits["first"][table.name]) for table in EDITABLE}
     written = first | {name: _unpacked(packed) for name, packed in edits["written"].items()}
     supplied, held = ({(a, b, c, d) for a, b, c, d in edits[name]} for name in ("supplied", "held"))
-    return Record(first, written, supplied, held)
+    roughness = about["project"]["channel"]["roughness"]
+    return Record(first, written, supplied, held, isinstance(roughness, str) and roughness != "jarrett")
 
 
 def _packed(columns: Mapping[Any, Any] | pd.DataFrame) -> dict[str, dict[str, str]]:

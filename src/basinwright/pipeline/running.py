@@ -359,9 +359,11 @@ def check(project_file: Path) -> list[str]:
         With every problem at once.
     """
     from basinwright.io.elevation import open_terrain
+    from basinwright.pipeline import mapping
     from basinwright.pipeline.inputs import inspect
 
     inputs = inspect(project_file)
+    mapping.check(inputs)
     open_terrain(inputs.dem, inputs.project.terrain.crs, inputs.project.terrain.vertical_unit)  # all void, impossible
     grid = inputs.plan.grid.describe()
     return [

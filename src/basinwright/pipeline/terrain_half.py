@@ -13,11 +13,12 @@ from basinwright.flags import Flag
 from basinwright.grid import Grid
 from basinwright.hydrology import OTHER_STARTS, Settings, bankfull_relation_of, path_times_h
 from basinwright.paths.tracing import DEEP_FILL_M
+from basinwright.pipeline import mapping
 from basinwright.pipeline.inputs import Inputs
 from basinwright.project import Project
 from basinwright.store import Draft, Entry, Store
 from basinwright.tables import COVER_SHARES, OUTLETS, SEGMENTS, TIME_AREA, Table, texts
-from basinwright.units import M_PER_FT, MM_PER_IN, UNITS
+from basinwright.units import KM2_PER_MI2, M_PER_FT, MM_PER_IN, UNITS
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -62,6 +63,8 @@ class TerrainHalf:
         The working grid.
     alignment : list of dict
         How each input came onto the grid.
+    hydrography : Entry or None
+        What maps prescribe, where the project names any of it.
     terrain, elevation, channels, cover, basins, paths, tables, time_area : Entry
         Stages in the store; ``tables`` holds the three tables and the flags.
     channel_starts : Entry or None
@@ -71,6 +74,7 @@ class TerrainHalf:
     grid: Grid
     alignment: list[dict[str, Any]]
     elevation: Entry
+    hydrography: Entry | None
     terrain: Entry
     channels: Entry
     cover: Entry
@@ -90,6 +94,9 @@ class TerrainHalf:
         """Return what was done to the terrain, as plain values."""
         terrain = self.routed()
         facts = {name: getattr(terrain, name) for name in _FACTS}
+        facts |= self.elevation.values("voids")
+        if self.hydrography is not None:
+            facts["hydrography"] = self.hydrography.values("facts")
         return facts | {name: self.channels.values(name) for name in ("stream_area_km2", "drop_test")}
 
     @property
@@ -127,6 +134,7 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
             "dem": inputs.sha256(*inputs.dem),
             "crs": project.terrain.crs,
             "vertical_unit": project.terrain.vertical_unit,
+            "fill_voids": project.terrain.fill_voids,
         },
         lambda draft: _elevation(inputs, draft),
     )
@@ -139,11 +147,16 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
             {"elevation": fine.key, "cells": inputs.coarsened},
             lambda draft: _coarser(fine, inputs.coarsened, draft),
         )
+    hydrography = mapping.run(inputs, elevation, store) if inputs.mapped else None
     routing = store.stage(
         "routing",
         f"Conditioning and routing {grid.nrows * grid.ncols / 1e6:.2f} million cells{_compiling()}",
-        {"elevation": elevation.key, "conditioning": vars(_conditioning(project))},
-        lambda draft: _routing(project, grid, elevation, draft),
+        {
+            "elevation": elevation.key,
+            "conditioning": vars(_conditioning(project)),
+            "hydrography": hydrography.key if hydrography else None,
+        },
+        lambda draft: _routing(project, grid, elevation, hydrography, draft),
     )
     channels = store.stage(
         "channels",
@@ -173,19 +186,20 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
         "basins",
         f"Snapping {len(inputs.points)} outlets and delineating their basins",
         {"routing": routing.key, "channels": channels.key, "outlets": outlets},
-        lambda draft: _basins(inputs, grid, elevation, routing.record(Terrain, "terrain"), channels, draft),
+        lambda draft: _basins(inputs, grid, elevation, routing, channels, draft),
     )
     time_area = store.stage(
         "time_area",
         "Adding up travel times along the flow",
         {
             "basins": basins.key,
+            "hydrography": hydrography.key if hydrography else None,
             "cover": cover.key,
             "options": project.model_dump(mode="json", include={"project", "terrain", "flow_path", "channel"}),
             "two_year_depth": project.storm.two_year_depth_mm,
         },
         lambda draft: _time_area(
-            inputs, {"routing": routing, "channels": channels, "cover": cover, "basins": basins}, draft
+            inputs, {"routing": routing, "channels": channels, "cover": cover, "basins": basins}, hydrography, draft
         ),
     )
     paths = store.stage(
@@ -206,6 +220,7 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
             "time_area": time_area.key,
             "cover": cover.key,
             "scheme": inputs.scheme.to_rows(),
+            "hydrography": hydrography.key if hydrography else None,
             "impervious": inputs.sha256(inputs.impervious),
             "depth_rasters": inputs.sha256(*inputs.depth_rasters.values()),
             "options": project.model_dump(
@@ -229,6 +244,7 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
                 "time_area": time_area,
                 "paths": paths,
             },
+            hydrography,
             draft,
         ),
     )
@@ -242,6 +258,7 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
                 "paths": paths.key,
                 "channels": channels.key,
                 "cover": cover.key,
+                "hydrography": hydrography.key if hydrography else None,
                 "scheme": inputs.scheme.to_rows(),
                 "options": project.model_dump(mode="json", include={"project", "terrain", "flow_path", "channel"}),
                 "factors": factors,
@@ -249,14 +266,20 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
             lambda draft: _channel_starts(
                 inputs,
                 {"routing": routing, "channels": channels, "cover": cover, "paths": paths, "tables": tables},
+                hydrography,
                 factors,
                 draft,
             ),
         )
     return TerrainHalf(
         grid,
-        [*elevation.values("alignment"), *cover.values("alignment")],
+        [
+            *elevation.values("alignment"),
+            *(hydrography.values("alignment") if hydrography else ()),
+            *cover.values("alignment"),
+        ],
         elevation,
+        hydrography,
         routing,
         channels,
         cover,
@@ -280,10 +303,14 @@ def _compiling() -> str:
 
 def _elevation(inputs: Inputs, draft: Draft) -> None:
     from basinwright.io.elevation import open_terrain
+    from basinwright.terrain.voids import fill_small_voids
 
     project = inputs.project
     terrain = open_terrain(inputs.dem, project.terrain.crs, project.terrain.vertical_unit)
-    draft.array("elevation_m", terrain.elevation_m)
+    grid, largest_m2 = terrain.grid, project.terrain.fill_voids * 1e6
+    elevation, facts = fill_small_voids(terrain.elevation_m, grid.dx_m, grid.dy_m, grid.cell_area_m2, largest_m2)
+    draft.array("elevation_m", elevation)
+    draft.values("voids", facts)
     draft.values("alignment", terrain.plan.alignment)
 
 
@@ -303,18 +330,24 @@ def _coarser(elevation: Entry, cells: int, draft: Draft) -> None:
     draft.values("alignment", elevation.values("alignment"))
 
 
-def _routing(project: Project, grid: Grid, elevation: Entry, draft: Draft) -> None:
+def _routing(project: Project, grid: Grid, elevation: Entry, hydrography: Entry | None, draft: Draft) -> None:
     from basinwright.terrain import condition_and_route
+    from basinwright.terrain.hydrography import sink_spills
 
-    terrain = condition_and_route(
-        elevation.array("elevation_m"),
-        grid.dx_m,
-        grid.dy_m,
-        grid.cell_area_m2,
-        _conditioning(project),
-        threads=project.compute.jobs,
-    )
+    constraints = mapping.constraints(hydrography)
+    terrain = mapping.given_terrain(hydrography)
+    if terrain is None:
+        terrain = condition_and_route(
+            elevation.array("elevation_m"),
+            grid.dx_m,
+            grid.dy_m,
+            grid.cell_area_m2,
+            _conditioning(project),
+            constraints,
+            threads=project.compute.jobs,
+        )
     draft.record(terrain, "terrain")
+    draft.record(sink_spills(terrain, constraints), "sinks")
 
 
 def _channels(inputs: Inputs, terrain: Terrain, draft: Draft) -> None:
@@ -334,10 +367,13 @@ def _channels(inputs: Inputs, terrain: Terrain, draft: Draft) -> None:
     draft.values("doubt", words)
 
 
-def _basins(inputs: Inputs, grid: Grid, elevation: Entry, terrain: Terrain, channels: Entry, draft: Draft) -> None:
+def _basins(inputs: Inputs, grid: Grid, elevation: Entry, routing: Entry, channels: Entry, draft: Draft) -> None:
     from basinwright.basins import delineate, drainage_density_per_km, measure, snap
+    from basinwright.basins.contact import contact_lengths_m, sink_areas_km2
+    from basinwright.terrain import Terrain
+    from basinwright.terrain.hydrography import Sinks
 
-    project = inputs.project
+    project, terrain = inputs.project, routing.record(Terrain, "terrain")
     stream_area_km2 = float(channels.values("stream_area_km2"))
     within = project.outlets.snap_within
     snapped = snap(
@@ -352,6 +388,8 @@ def _basins(inputs: Inputs, grid: Grid, elevation: Entry, terrain: Terrain, chan
     basins = delineate(terrain, snapped.cell)
     measures = measure(grid, terrain, elevation.array("elevation_m"), basins)
     measures["drainage_density_per_km"] = drainage_density_per_km(terrain, basins, stream_area_km2)
+    measures["sink_area_km2"] = sink_areas_km2(terrain, basins, routing.record(Sinks, "sinks"))
+    measures |= {f"contact_{side}_m": m for side, m in contact_lengths_m(grid, terrain, basins).items()}
     draft.record(snapped, "snapped")
     draft.record(basins, "basins")
     keep_columns(draft, "measures", measures)
@@ -410,7 +448,14 @@ def _cover(inputs: Inputs, draft: Draft) -> None:
     draft.values("alignment", [cover.record, soils.record])
 
 
-def _tables(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
+def _unmapped_m(segments: Mapping[str, NDArray[Any]], count: int) -> NDArray[np.float64]:
+    """Return the length of channel without a mapped roughness, by outlet."""
+    unmapped = (segments["regime"] == "channel") & np.isnan(segments["roughness"])
+    lengths: NDArray[Any] = (segments["to_m"] - segments["from_m"]) * unmapped
+    return np.bincount(segments["outlet"], lengths, count).astype(np.float64)
+
+
+def _tables(inputs: Inputs, stages: Mapping[str, Entry], hydrography: Entry | None, draft: Draft) -> None:
     """Make the three tables, with the flags of the terrain half and the cells that the user supplied."""
     from basinwright.basins import Basins, Snapped
     from basinwright.cover import CoverLayer, SoilLayer, combine, cover_shares
@@ -435,8 +480,10 @@ def _tables(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
     )
     depths = _mean_depths_mm(inputs, terrain, basins)
     stream_area_km2 = float(stages["channels"].values("stream_area_km2"))
-    cut = _cut(inputs, terrain, paths, cover, stream_area_km2)
-    along_other = _cut(inputs, terrain, _other_paths(inputs, stages, terrain, basins), cover, stream_area_km2)
+    channel_n = mapping.channel_n(inputs, hydrography)
+    cut = _cut(inputs, terrain, paths, cover, stream_area_km2, channel_n)
+    other_paths = _other_paths(inputs, stages, terrain, basins)
+    along_other = _cut(inputs, terrain, other_paths, cover, stream_area_km2, channel_n)
 
     failed = _failures(snapped, measures, shares.failed, depths)
     fine = np.array([i not in failed for i in range(len(inputs.points))], dtype=bool)
@@ -445,6 +492,7 @@ def _tables(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
         inputs, ids, _of_fine(cut.segments, ids, fine), _of_fine(along_other.segments, ids, fine)
     )
     marks = {"sheet_limited": cut.sheet_limited, **vars(snapped), **measures}
+    marks["unmapped_m"] = _unmapped_m(cut.segments, len(inputs.points)) if channel_n is not None else np.zeros(1)
     flags = _flags(inputs, marks, shares, failed, stages["channels"].values("doubt"))
     tables = {
         OUTLETS: _outlet_rows(inputs, grid, ids, snapped, measures, shares.open_water_pct, depths, fine),
@@ -465,7 +513,14 @@ def _tables(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
     )
 
 
-def _cut(inputs: Inputs, terrain: Terrain, paths: Paths, cover: CoverLayer, stream_area_km2: float) -> Cut:
+def _cut(
+    inputs: Inputs,
+    terrain: Terrain,
+    paths: Paths,
+    cover: CoverLayer,
+    stream_area_km2: float,
+    channel_n: NDArray[np.float64] | None,
+) -> Cut:
     """Cut the paths into segments where channels begin at an area."""
     from basinwright.paths import CoverOnGrid, CutRules, cut_segments
     from basinwright.timing import bankfull_width_m, sheet_limit_m
@@ -479,11 +534,19 @@ def _cut(inputs: Inputs, terrain: Terrain, paths: Paths, cover: CoverLayer, stre
         mccuen_spiess_m=sheet_limit_m,
         bankfull_width_m=partial(bankfull_width_m, relation=bankfull_relation_of(project)),
     )
-    on_grid = CoverOnGrid(cover.classes, cover.codes, cover.sheet_n(inputs.scheme), cover.open_water(inputs.scheme))
+    on_grid = CoverOnGrid(
+        cover.classes, cover.codes, cover.sheet_n(inputs.scheme), cover.open_water(inputs.scheme), channel_n
+    )
     return cut_segments(inputs.plan.grid, terrain, paths, on_grid, rules)
 
 
-def _channel_starts(inputs: Inputs, stages: Mapping[str, Entry], factors: tuple[float, float], draft: Draft) -> None:
+def _channel_starts(
+    inputs: Inputs,
+    stages: Mapping[str, Entry],
+    hydrography: Entry | None,
+    factors: tuple[float, float],
+    draft: Draft,
+) -> None:
     """Cut the stored paths again where channels begin at a smaller and at a larger area."""
     from basinwright.cover import CoverLayer
     from basinwright.paths import Paths
@@ -496,7 +559,8 @@ def _channel_starts(inputs: Inputs, stages: Mapping[str, Entry], factors: tuple[
     ids = np.array(inputs.points.ids, dtype=object)
     fine = np.array([outlet_id not in failed for outlet_id in inputs.points.ids], dtype=bool)
     for name, factor in zip(OTHER_STARTS, factors, strict=True):
-        cut = _cut(inputs, terrain, paths, cover, factor * float(stages["channels"].values("stream_area_km2")))
+        stream_area_km2 = factor * float(stages["channels"].values("stream_area_km2"))
+        cut = _cut(inputs, terrain, paths, cover, stream_area_km2, mapping.channel_n(inputs, hydrography))
         columns = _of_fine(cut.segments, ids, fine) | {"edited": None}
         draft.frame(name, _as_frame(SEGMENTS, columns, project))
 
@@ -586,7 +650,7 @@ def _mean_depths_mm(inputs: Inputs, terrain: Terrain, basins: Basins) -> dict[st
     return means
 
 
-def _time_area(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> None:
+def _time_area(inputs: Inputs, stages: Mapping[str, Entry], hydrography: Entry | None, draft: Draft) -> None:
     """Find the cells farthest in time, and draw the time-area curves as the table that the hydrology reads."""
     from basinwright.basins import Basins
     from basinwright.basins.time_area import farthest_in_time, time_area_curves, travel_times_us
@@ -601,6 +665,7 @@ def _time_area(inputs: Inputs, stages: Mapping[str, Entry], draft: Draft) -> Non
         inputs.scheme,
         stages["cover"].record(CoverLayer, "cover"),
         float(stages["channels"].values("stream_area_km2")),
+        mapping.channel_n(inputs, hydrography),
     )
     time_us = travel_times_us(terrain, step_times)
     draft.array("farthest_cell", farthest_in_time(terrain, basins, time_us))
@@ -653,7 +718,19 @@ def _flags(
         where(
             marks["contact_cells"] > 0,
             "EDGE_TOUCH",
-            lambda i: f"{int(marks['contact_cells'][i])} cells at the edge or beside a void",
+            lambda i: _contact_words(marks, i, length, foot),
+        )
+        where(
+            marks["sink_area_km2"] > 0,
+            "SINK_INSIDE",
+            lambda i: (
+                f"{marks['sink_area_km2'][i] / (KM2_PER_MI2 if us else 1):.3g} {'mi2' if us else 'km2'} drain to sinks"
+            ),
+        )
+        where(
+            marks["unmapped_m"] > 0,
+            "ROUGHNESS_UNMAPPED",
+            lambda i: f"{marks['unmapped_m'][i] / foot:.4g} {length} of channel",
         )
         where(marks["far"], "SNAP_FAR", lambda i: f"moved {marks['snap_m'][i] / foot:.3g} {length}")
         where(marks["ambiguous"], "SNAP_AMBIGUOUS", lambda i: "another flow line passes within the search distance")
@@ -696,6 +773,16 @@ def _flags(
             where(~np.isnan(values), "OVERRIDE", lambda i, stem=stem: f"{stem} is a supplied value")  # type: ignore[misc]
     ids = inputs.points.ids
     return [Flag(ids[i], key, words) for i, key, words in raised if i not in failed or key == "OUTLET_FAILED"]
+
+
+def _contact_words(marks: Mapping[str, NDArray[Any]], i: int, unit: str, per_unit: float) -> str:
+    """Say where a basin touches the raster's edge or voids, and how much of its boundary lies there."""
+    found = {side: float(marks[f"contact_{side}_m"][i]) / per_unit for side in ("north", "east", "south", "west")}
+    parts = [f"{side} edge {value:.4g} {unit}" for side, value in found.items() if value > 0]
+    if (voids := float(marks["contact_void_m"][i]) / per_unit) > 0:
+        parts.append(f"voids {voids:.4g} {unit}")
+    cells = int(marks["contact_cells"][i])
+    return f"{cells} cells at the edge or beside a void" + (f"; boundary there: {', '.join(parts)}" if parts else "")
 
 
 def _outlet_rows(
@@ -746,6 +833,9 @@ def _outlet_rows(
         columns["exceeded_at_yr"] = None
     if project.outlets.capacity_basis is not None:
         columns["capacity_basis"] = np.array(points.texts(project.outlets.capacity_basis), dtype=object)
+    terrain = project.terrain
+    if terrain.sinks or terrain.barriers or "sink" in (terrain.flow_direction_codes or {}).values():
+        columns["sink_area_km2"] = measures["sink_area_km2"]
     known = {"outlet_id", "name", "capacity_m3s", "capacity_basis"}
     for name, values in columns.items():
         if values is not None and name not in known:

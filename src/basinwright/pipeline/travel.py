@@ -33,12 +33,22 @@ class StepTimes:
         On the working grid.
     stream_area_km2 : float
         Contributing area at which channels begin [km2].
+    channel_n : float array, shape (nrows, ncols), optional
+        Manning n of mapped channels, NaN elsewhere.
     """
 
-    def __init__(self, project: Project, scheme: Scheme, cover: CoverLayer, stream_area_km2: float) -> None:
+    def __init__(
+        self,
+        project: Project,
+        scheme: Scheme,
+        cover: CoverLayer,
+        stream_area_km2: float,
+        channel_n: Floats | None = None,
+    ) -> None:
         from basinwright.timing import shallow_coefficients_mps
 
         self.project, self.classes, self.stream_area_km2 = project, cover.classes, stream_area_km2
+        self.channel_n = channel_n
         self.relation = bankfull_relation_of(project)
         found = [scheme.find(code) for code in cover.codes]
         listed = np.array([entry is not None for entry in found], dtype=bool)
@@ -79,7 +89,9 @@ class StepTimes:
         depth = bankfull_depth_m(area_km2[channel], self.relation)
         if project.channel.stage == "half":
             depth = 0.5 * depth
-        velocity = manning_velocity_mps(hydraulic_radius_m(width, depth), slope[channel], self._roughness())
+        velocity = manning_velocity_mps(
+            hydraulic_radius_m(width, depth), slope[channel], self._roughness(rows, channel)
+        )
         hours[channel] = length_m[channel] / (3600.0 * velocity)
 
         n = self.sheet_n[classes][sheet]
@@ -91,8 +103,11 @@ class StepTimes:
         hours[lake] = length_m[lake] / (3600.0 * float(wave_velocity_mps(project.channel.open_water_depth)))
         return hours
 
-    def _roughness(self) -> float:
+    def _roughness(self, rows: slice, channel: NDArray[np.bool_]) -> float | Floats:
         from basinwright.timing.segments import PLAIN_ROUGHNESS_N
 
         n = self.project.channel.roughness
-        return PLAIN_ROUGHNESS_N if isinstance(n, str) else n
+        if self.channel_n is None:
+            return PLAIN_ROUGHNESS_N if isinstance(n, str) else n
+        mapped = self.channel_n[rows][channel]
+        return np.where(np.isnan(mapped), PLAIN_ROUGHNESS_N, mapped)

@@ -132,6 +132,27 @@ def prescribe(
     return Hydrography(constraints, ground.inner(line_of).copy(), facts)
 
 
+def lines_on_cells(elevation_m: np.ndarray, streams: Lines) -> np.ndarray:
+    """The first line on each cell, -1 where there is none.
+
+    Parameters
+    ----------
+    elevation_m : float array, shape (nrows, ncols) [m]
+    streams : Lines
+
+    Returns
+    -------
+    int32 array, shape (nrows, ncols)
+    """
+    from basinwright.kernels import hydrography as kernel
+
+    ground = _Ground(elevation_m, np.ones(len(elevation_m)), np.ones(len(elevation_m)), np.ones(len(elevation_m)))
+    line_of = np.full(ground.z.size, NO_CELL, np.int32)
+    links = np.zeros(ground.z.size, np.uint8)
+    kernel.lay_lines(streams.x, streams.y, streams.bounds, ground.z, ground.nrows, ground.ncols, links, line_of)
+    return ground.inner(line_of).copy()
+
+
 class _Ground:
     """Elevations as the kernels take them, and cell sizes."""
 
@@ -216,10 +237,13 @@ class Sinks:
     spill_cells : int32 array, shape (n,)
         The cell to which the sink's water would go if it rose until it spilt; -1 for out of the raster or nowhere.
         Cells that hang together are one sink.
+    next_sink : int32 array, shape (n,)
+        Position in `cells` of the one that the spilt water would come to next; -1 for none.
     """
 
     cells: np.ndarray
     spill_cells: np.ndarray
+    next_sink: np.ndarray
 
 
 def sink_spills(terrain: Terrain, constraints: Constraints | None) -> Sinks:
@@ -243,7 +267,7 @@ def sink_spills(terrain: Terrain, constraints: Constraints | None) -> Sinks:
     keeps = terrain.directions == SINK
     cells = np.flatnonzero(keeps).astype(np.int32)
     if cells.size == 0:
-        return Sinks(cells, cells.copy())
+        return Sinks(cells, cells.copy(), cells.copy())
     shape = (terrain.nrows + 2, terrain.ncols + 2)
     number = label(keeps.reshape(shape), structure=np.ones((3, 3)))[0].reshape(-1)[cells] - 1
     at_cell = np.empty(terrain.directions.size, np.int32)
@@ -254,9 +278,11 @@ def sink_spills(terrain: Terrain, constraints: Constraints | None) -> Sinks:
         between_um,
     )  # fmt: skip
     sink = np.append(number, NO_CELL).astype(np.int32)[at_cell]
-    del at_cell, distance_um
+    del distance_um
     walls, fixed, _ = (constraints or Constraints()).arrays(sink.size)
     level = np.empty(sink.size, np.float32)
     spill = np.empty(int(number.max()) + 1, np.int32)
     kernel.spills(terrain.conditioned_m, terrain.nrows, terrain.ncols, walls, fixed, sink, level, spill)
-    return Sinks(cells, spill[number])
+    spill_cells = spill[number]
+    next_sink = np.where(spill_cells >= 0, at_cell[spill_cells], NO_CELL).astype(np.int32)
+    return Sinks(cells, spill_cells, next_sink)

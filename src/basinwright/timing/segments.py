@@ -97,6 +97,7 @@ def time_segments(
     two_year_depth_mm: ArrayLike,
     relation: BankfullRelation,
     channel_roughness: ArrayLike | Literal["jarrett"] = PLAIN_ROUGHNESS_N,
+    channel_roughness_words: str = "n of the project",
     slope_floor: float = 0.0005,
     open_water_depth_m: float = 2.0,
 ) -> SegmentTimes:
@@ -117,6 +118,8 @@ def time_segments(
         Bankfull width and depth from contributing area.
     channel_roughness : float, array of shape (rows,), or "jarrett"
         Manning n [-] of channel rows that have none, or Jarrett's (1984) from slope and hydraulic radius.
+    channel_roughness_words : str
+        What the basis says of a number among these.
     slope_floor : float
         Least slope [m/m] of rows whose slope is computed and used; a given slope stands.
     open_water_depth_m : float
@@ -185,7 +188,7 @@ def time_segments(
 
     _time_sheet(rows, used, two_year_depth_mm, out, basis)
     _time_shallow(rows, used, out, basis)
-    _time_channel(rows, used, relation, channel_roughness, out, marks, basis)
+    _time_channel(rows, used, relation, channel_roughness, channel_roughness_words, out, marks, basis)
     _time_conduits(rows, used, out, basis)
     water = rows.regime_is("open_water")
     out["roughness"][water] = np.nan
@@ -414,6 +417,7 @@ def _time_channel(
     slope: Floats,
     relation: BankfullRelation,
     channel_roughness: ArrayLike | Literal["jarrett"],
+    plain_text: str,
     out: dict[str, Floats],
     marks: dict[str, Marks],
     basis: _Basis,
@@ -430,7 +434,6 @@ def _time_channel(
     rows.needed("roughness", channel & ~np.isnan(out["roughness"]), out["roughness"], "give a Manning n above zero")
     n_is_given = ~np.isnan(n_given)
     by_jarrett = np.zeros(n_given.size, dtype=bool)
-    plain_text = "n of the project"
     if isinstance(channel_roughness, str):
         if channel_roughness != "jarrett":
             raise RangeError(f'channel_roughness is {channel_roughness!r}: it must be a Manning n or "jarrett"')
