@@ -87,6 +87,8 @@ def show(outcome: Outcome) -> None:
                 console.print(f"[{_STYLE[severity]}]{severity}[/] {key} ({escape(_some(flagged))}): {kind.trigger}")
                 if severity != "note":
                     console.print(f"    {kind.remedy}", style="dim", highlight=False)
+    for name, outlets in outcome.scenarios.items():
+        console.print(f"scenario {escape(name)}: {_against(columns, outlets, names[len(_STEMS) :])}", highlight=False)
     status: Counter[str] = Counter(columns["status"])
     console.print(
         f"\n{len(ids)} outlets: {status['ok']} ok, {status['flagged']} flagged, {status['failed']} failed.\n"
@@ -97,6 +99,23 @@ def show(outcome: Outcome) -> None:
         "These results support, and do not replace, the judgement of a licensed engineer and local drainage criteria.",
         style="dim",
     )
+
+
+def _against(base: Columns, scenario: Columns, names: list[str]) -> str:
+    """Say how the peaks of a scenario differ from the base's, from the least to the most, by return period."""
+    told = []
+    for name in names:
+        if not name.startswith("peak_"):
+            continue
+        pairs = [(_number(a), _number(b)) for a, b in zip(base[name], scenario[name], strict=True)]
+        changes = sorted(100.0 * (after / before - 1.0) for before, after in pairs if before > 0 and after >= 0)
+        if changes:
+            told.append(f"{name.split('_')[1]} {changes[0]:+.0f} to {changes[-1]:+.0f} %")
+    return f"peaks {', '.join(told)}" if told else "no peak to compare"
+
+
+def _number(value: object) -> float:
+    return math.nan if value is None or value == "" else float(str(value))
 
 
 def _some(names: list[str]) -> str:

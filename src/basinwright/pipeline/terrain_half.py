@@ -47,7 +47,7 @@ _FACTS = (
 """What the manifest says of the terrain."""
 _DEEPEST_MM = 10_000.0
 """Deeper storms than this are no storms but a missing nodata value."""
-_OF_DEPTHS = {"depths", "depth_rasters", "depth_raster_unit", "depth_factor"}
+_OF_DEPTHS = {"depths", "depth_rasters", "depth_raster_unit"}
 _BLOCK_ROWS = 256
 QUANTUM = 2.0**-20
 """Distances along the path are written as whole multiples of this many feet or metres: sums of them are exact."""
@@ -104,9 +104,12 @@ class TerrainHalf:
         """Contributing area at which channels begin, also where the drop test found it [km2]."""
         return float(self.channels.values("stream_area_km2"))
 
-    def frames(self) -> dict[str, pd.DataFrame]:
-        """Return the tables that the hydrology reads, in the units of the project."""
+    def frames(self, project: Project) -> dict[str, pd.DataFrame]:
+        """Return the tables that the hydrology reads, in the units of the project, its storms with their factor."""
         frames = {table.name: self.tables.frame(table.name) for table in (OUTLETS, SEGMENTS, COVER_SHARES)}
+        column, system = OUTLETS.column("depth_{T}yr"), project.project.units
+        depths = [column.name(system, period) for period in project.storm.periods]
+        frames[OUTLETS.name][depths] *= project.storm.depth_factor
         frames[TIME_AREA.name] = self.time_area.frame(TIME_AREA.name)
         if self.channel_starts is not None:
             frames |= {name: self.channel_starts.frame(name) for name in OTHER_STARTS}
@@ -821,7 +824,7 @@ def _outlet_rows(
     for period in project.storm.periods:
         supplied = inputs.overrides.get(f"depth_{period}yr", np.full(len(ids), np.nan))
         depth = depths[period] if period in depths else np.full(len(ids), project.storm.depths[period])
-        columns[f"depth_{period}yr_mm"] = np.where(np.isnan(supplied), depth, supplied) * project.storm.depth_factor
+        columns[f"depth_{period}yr_mm"] = np.where(np.isnan(supplied), depth, supplied)
     optional = {
         "areal_factor": project.storm.areal_reduction != "none",
         "critical_duration_h": project.storm.critical_duration,

@@ -84,7 +84,7 @@ class Ground:
 
 def ground_of(inputs: Inputs, half: TerrainHalf, flags: Sequence[Flag]) -> Ground:
     """Return what the terrain half made of a project."""
-    frames = half.frames()
+    frames = half.frames(inputs.project)
     time_area = frames.pop("time_area")
     starts = {name: frames.pop(name) for name in OTHER_STARTS if name in frames}
     equations = regional.equations(inputs.project, inputs.regional)
