@@ -67,7 +67,10 @@ REFUSED = {
         "uncertainty.correlated.0.inputs", "with itself",
     ),
     "twice": (
-        {"curve_number": 5, "depths": "5 %", "correlated": [pair("curve_number", "depths"), pair("depths", "curve_number")]},
+        {
+            "curve_number": 5, "depths": "5 %",
+            "correlated": [pair("curve_number", "depths"), pair("depths", "curve_number")],
+        },
         "uncertainty.correlated.1.inputs", "more than once",
     ),
     "wholly": (
