@@ -22,7 +22,7 @@ from typing import TYPE_CHECKING, Any
 from markupsafe import Markup
 
 from basinwright.errors import BasinwrightError
-from basinwright.report import charts, comparisons, context, maps, palette, words
+from basinwright.report import charts, comparisons, confidence, context, maps, palette, words
 from basinwright.report.reading import Outlet, Run, read_run
 
 if TYPE_CHECKING:
@@ -145,6 +145,7 @@ def _index(run: Run, outlets: list[Outlet]) -> str:
         periods=run.periods,
         scenarios=comparisons.scenario_summary(run),
         cell_sizes=comparisons.cell_size_summary(run),
+        failing=confidence.failing(run),
         flags=context.flag_summary(run),
         settings=context.settings(run),
         inputs=context.inputs(run),
@@ -174,6 +175,10 @@ def _page(run: Run, outlet: Outlet) -> dict[str, Any]:
         "floods": charts.floods(run, outlet),
         "scenario_chart": charts.scenarios(run, outlet),
         "capacity": charts.capacity(run, outlet),
+        "bands": confidence.bands(run, outlet),
+        "peak_swings": confidence.peak_swings(run, outlet),
+        "time_swings": confidence.time_swings(run, outlet),
+        "regional": confidence.regional(run, outlet),
     }
 
 

@@ -17,16 +17,20 @@ from basinwright.flags import FLAGS, SEVERITIES
 from basinwright.outputs import hydrographs_nc
 from basinwright.report import words
 from basinwright.tables import (
+    CAPACITY,
     CELL_SIZES,
     COVER_SHARES,
     CROSS_CHECKS,
     FLAGS_TABLE,
     HYDROGRAPHS,
     OUTLETS,
+    REGIONAL,
     SCENARIOS,
     SEGMENTS,
+    SWINGS,
     TIME_AREA,
     TIMING,
+    UNCERTAINTY,
     UNIT_HYDROGRAPHS,
     Table,
 )
@@ -101,6 +105,9 @@ class Outlet:
     timing: list[Row] = field(default_factory=list)
     shares: list[Row] = field(default_factory=list)
     cross_checks: list[Row] = field(default_factory=list)
+    bands: list[Row] = field(default_factory=list)
+    swings: list[Row] = field(default_factory=list)
+    regional: list[Row] = field(default_factory=list)
     scenarios: list[Row] = field(default_factory=list)
     cell_sizes: list[Row] = field(default_factory=list)
     time_area: dict[str, Any] = field(default_factory=dict)
@@ -176,6 +183,8 @@ class Run:
         In the order of outlets.csv.
     columns : set of str
         Stems of the columns that outlets.csv has.
+    capacity : list of Row
+        The crossings by what fails first, scenario by scenario.
     """
 
     folder: Path
@@ -184,6 +193,7 @@ class Run:
     periods: list[str]
     outlets: list[Outlet]
     columns: set[str]
+    capacity: list[Row] = field(default_factory=list)
 
     @property
     def terrain(self) -> Path | None:
@@ -253,10 +263,18 @@ def read_run(folder: Path, about: Mapping[str, Any], *, rows_only: bool = False)
     order = list(FLAGS)
     for outlet in outlets:
         outlet.doubts.sort(key=lambda doubt: (-_SEVERITIES.index(doubt.severity), order.index(doubt.key)))
-    run = Run(folder, about, system, periods, outlets, set(table.columns))
+    run = Run(folder, about, system, periods, outlets, set(table.columns), _rows(read(CAPACITY)))
     if rows_only:
         return run
-    lists = {"segments": SEGMENTS, "timing": TIMING, "shares": COVER_SHARES, "cross_checks": CROSS_CHECKS}
+    lists = {
+        "segments": SEGMENTS,
+        "timing": TIMING,
+        "shares": COVER_SHARES,
+        "cross_checks": CROSS_CHECKS,
+        "bands": UNCERTAINTY,
+        "swings": SWINGS,
+        "regional": REGIONAL,
+    }
     lists |= {"scenarios": SCENARIOS, "cell_sizes": CELL_SIZES}
     for name, source in lists.items():
         for row in _rows(read(source)):
