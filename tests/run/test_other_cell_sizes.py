@@ -29,8 +29,8 @@ def finished(tmp_path_factory):
     folder = tmp_path_factory.mktemp("sizes")
     cover = np.full((ROWS, COLS), 71)
     cover[:30] = 41
-    file = make_project(folder, ground(), {"A": (82, 33), "B": (56, 33)}, cover=cover,
-                        overrides={"outlets": {"snap_within": "40 m"}})  # fmt: skip
+    options = {"outlets": {"snap_within": "40 m"}, "uncertainty": {"curve_number": 5, "samples": 20}}
+    file = make_project(folder, ground(), {"A": (82, 33), "B": (56, 33)}, cover=cover, overrides=options)
     pipeline.run(file, out=folder / "alone", summary_only=True)
     return pipeline.run(file, also_at=SIZES, summary_only=True).folder
 
@@ -38,6 +38,10 @@ def finished(tmp_path_factory):
 @pytest.fixture(scope="module")
 def rows(finished):
     return read_table(finished, "cell_sizes")
+
+
+def of(rows, outlet_id):
+    return [row for row in rows if row["outlet_id"] == outlet_id]
 
 
 def of_size(rows, size):
@@ -59,6 +63,8 @@ def test_blocks_are_averaged_as_another_library_does(data):
 
 def test_the_base_is_as_without_it(finished):
     for path in (finished.parent / "alone").glob("*.csv"):
+        if path.stem == "swings":  # it ranks the cell size too
+            continue
         assert path.read_bytes() == (finished / path.name).read_bytes(), path.name
 
 
@@ -98,6 +104,23 @@ def test_changes_and_verdicts_are_those_of_the_rows(rows):
     assert {row["verdict"] for row in rows} == {"base", "safe", "not safe"}
     moved = numbers(rows, "curve_number") - np.repeat(numbers(rows, "curve_number")[::4], 4)
     assert numbers(rows, "curve_number_change")[1:4] == pytest.approx(moved[1:4])
+
+
+def test_cell_size_is_ranked_among_the_swings(finished, rows):
+    alone, swings = read_table(finished.parent / "alone", "swings"), read_table(finished, "swings")
+    others = [{**row, "rank": "", "tc_rank": ""} for row in swings if row["input"] != "cell_size"]
+    assert sorted(map(str, others)) == sorted(str({**row, "rank": "", "tc_rank": ""}) for row in alone)
+    own = [row for row in swings if row["input"] == "cell_size"]
+    assert len(own) == 2 * 3
+    for row in own:
+        base, coarsest = (of_size(of(rows, row["outlet_id"]), size)[0] for size in (10.0, 60.0))
+        peak = f"peak_{float(row['return_period_yr']):g}yr_m3s"
+        assert [row["tc_low_h"], row["tc_high_h"]] == [base["tc_h"], coarsest["tc_h"]]
+        assert [row["peak_low_m3s"], row["peak_high_m3s"]] == [base[peak], coarsest[peak]]
+        same = [other for other in of(swings, row["outlet_id"]) if other["return_period_yr"] == row["return_period_yr"]]
+        effects = [abs(float(other["peak_high_m3s"]) - float(other["peak_low_m3s"])) for other in same]
+        assert effects == sorted(effects, reverse=True)
+        assert [other["rank"] for other in same] == [str(place) for place in range(1, len(same) + 1)]
 
 
 def test_only_the_coarser_terrain_is_computed_anew(finished):

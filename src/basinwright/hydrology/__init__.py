@@ -6,7 +6,7 @@ run and a later `retime` of the same tables give the same numbers to the last bi
 """
 
 from basinwright.hydrology.agreement import capacities_table
-from basinwright.hydrology.comparing import cell_sizes_table, scenarios_table
+from basinwright.hydrology.comparing import cell_sizes_table, scenarios_table, swings_with_cell_sizes
 from basinwright.hydrology.computing import OTHER_STARTS, Results, compute
 from basinwright.hydrology.frames import Columns
 from basinwright.hydrology.settings import Settings, bankfull_relation_of
@@ -23,4 +23,5 @@ __all__ = [
     "compute",
     "path_times_h",
     "scenarios_table",
+    "swings_with_cell_sizes",
 ]

@@ -9,7 +9,7 @@ import numpy as np
 
 from basinwright.hydrology.frames import Columns
 from basinwright.project import Project
-from basinwright.tables import CELL_SIZES, OUTLETS, SCENARIOS
+from basinwright.tables import CELL_SIZES, OUTLETS, SCENARIOS, SWINGS
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -116,6 +116,55 @@ def cell_sizes_table(base: Columns, sizes: Iterable[tuple[float, Columns]], proj
     metres = CELL_SIZES.column("cell_size").inside_per_shown(system)
     rows = [_size_columns(before, outlets, size / metres, periods) for size, outlets in listed]
     return {field.name: [part[field.stem][i] for i in range(len(before.ids)) for part in rows] for field in fields}
+
+
+def swings_with_cell_sizes(swings: Columns, sizes: Columns, project: Project) -> Columns:
+    """Return ``swings.csv`` with the cell size as one more input, from the base's cells to the coarsest that served.
+
+    Parameters
+    ----------
+    swings, sizes : columns
+        ``swings.csv`` and ``cell_sizes.csv`` of one run.
+    project : Project
+        Gives units and return periods.
+    """
+    system, periods = project.project.units, project.storm.periods
+    size_name, tc, peaks = CELL_SIZES.column("cell_size").name(system), "tc_h", CELL_SIZES.column("peak_{T}yr")
+    of_outlet: dict[str, list[dict[str, Any]]] = {}
+    for row in _rows(sizes):
+        of_outlet.setdefault(row["outlet_id"], []).append(row)
+    fields = SWINGS.fields(system)
+    names = {field.stem: field.name for field in fields}
+    groups: dict[tuple[str, float], list[dict[str, Any]]] = {}
+    for row in _rows(swings):
+        groups.setdefault((row["outlet_id"], float(row["return_period_yr"])), []).append(row)
+    written = {float(period): peaks.name(system, period) for period in periods}
+    for (outlet_id, period), rows in groups.items():
+        served = [row for row in of_outlet.get(outlet_id, []) if row["status"] != "failed"]
+        if len(served) > 1 and served[0]["verdict"] == "base":
+            base, coarsest = served[0], served[-1]
+            stems = {"tc_low_h": base[tc], "tc_high_h": coarsest[tc],
+                     "peak_low": base[written[period]], "peak_high": coarsest[written[period]]}  # fmt: skip
+            stems |= {"low": base[size_name], "high": coarsest[size_name], "input": "cell_size", "sampled": False}
+            stems["applied"] = f"size of the terrain's cells, {CELL_SIZES.column('cell_size').unit_in(system)}"
+            own = {names[stem]: value for stem, value in stems.items()}
+            rows.append({**rows[0], **own})
+        for rank, low, high in (("tc_rank", "tc_low_h", "tc_high_h"), ("rank", "peak_low", "peak_high")):
+            rows.sort(key=lambda row, a=names[low], b=names[high]: -abs(float(row[b]) - float(row[a])))  # type: ignore[misc]
+            for place, row in enumerate(rows, start=1):
+                row[names[rank]] = place
+    every = [row for rows in groups.values() for row in rows]
+    return {
+        field.name: np.array(values, dtype=bool) if field.column.type == "boolean" else values
+        for field in fields
+        for values in [[row[field.name] for row in every]]
+    }
+
+
+def _rows(columns: Columns) -> list[dict[str, Any]]:
+    return [
+        dict(zip(columns, row, strict=True)) for row in zip(*(list(column) for column in columns.values()), strict=True)
+    ]
 
 
 def _size_columns(before: _Outlets, after: _Outlets, cell_size: float, periods: list[str]) -> dict[str, Any]:

@@ -7,13 +7,14 @@ from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any
 
 from basinwright.errors import InputRejected, Problem
-from basinwright.hydrology import Columns, cell_sizes_table
+from basinwright.hydrology import Columns, Results, cell_sizes_table, swings_with_cell_sizes
 from basinwright.pipeline.variants import ground_of
 from basinwright.units import QuantityError, parse_quantity
 
 if TYPE_CHECKING:
     from basinwright.grid import Grid
     from basinwright.pipeline.inputs import Inputs
+    from basinwright.project import Project
     from basinwright.store import Store
 
 TABLE = "cell_sizes"
@@ -103,6 +104,15 @@ def run_sizes(
         about = {"asked": size.asked, "cells": size.cells, "method": f"mean of {size.cells} x {size.cells} cells"}
         runs.append({**about, "grid": grid.describe(), "stages": store.described(name)})
     return runs, cell_sizes_table(base, outlets, inputs.project)
+
+
+def add(results: Results, table: Columns | None, project: Project) -> None:
+    """Put ``cell_sizes.csv`` among the tables of a run, and the cell size among the inputs that swings.csv ranks."""
+    if table is None:
+        return
+    results.tables[TABLE] = table
+    if "swings" in results.tables:
+        results.tables["swings"] = swings_with_cell_sizes(results.tables["swings"], table, project)
 
 
 def _on_coarser_cells(inputs: Inputs, cells: int) -> Inputs:

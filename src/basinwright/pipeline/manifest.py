@@ -19,7 +19,7 @@ import numpy as np
 from basinwright.editing import EDITABLE, Cell, Record, as_first
 from basinwright.errors import InputRejected
 from basinwright.flags import Flag
-from basinwright.hydrology import Results, Settings
+from basinwright.hydrology import Columns, Results, Settings
 from basinwright.outputs.writing import hydrograph_files
 from basinwright.pipeline import design_storm, regional
 from basinwright.pipeline.inputs import Inputs
@@ -221,11 +221,11 @@ def ground(about: Mapping[str, Any], record: Record, settings: Settings) -> Grou
     )
 
 
-def cell_sizes(about: Mapping[str, Any]) -> dict[str, Any]:
-    """Return the table of coarser cell sizes by its name, where there is one: no edit changes it."""
+def cell_sizes(about: Mapping[str, Any]) -> Columns | None:
+    """Return the table of coarser cell sizes, where there is one: no edit changes it."""
     packed = about.get("cell_sizes", {}).get("table")
     frame = None if packed is None else _unpacked(packed)
-    return {} if frame is None else {CELL_SIZES.name: {str(name): frame[name].to_numpy() for name in frame}}
+    return None if frame is None else {str(name): frame[name].to_numpy() for name in frame}
 
 
 def scenarios(about: Mapping[str, Any]) -> dict[str, Mapping[str, Any]]:

@@ -192,8 +192,7 @@ def _build(
     scenarios = variants.run_scenarios(inputs, store, partial, edits, series=series)
     variants.compare(results, scenarios, own.held, project)
     size_runs, compared = cell_sizes.run_sizes(inputs, sizes, first.tables["outlets"], store)
-    if compared is not None:
-        results.tables[cell_sizes.TABLE] = compared
+    cell_sizes.add(results, compared, project)
 
     say("Writing tables, layers and rasters")
     writing.write_tables(partial, results.tables, project)
@@ -234,7 +233,7 @@ def retime(run_dir: Path, *, revise: Callable[[Path], None] | None = None, say: 
     """
     from basinwright import editing
     from basinwright.outputs import writing
-    from basinwright.pipeline import geometry, manifest, variants
+    from basinwright.pipeline import cell_sizes, geometry, manifest, variants
     from basinwright.report import write_report
 
     folder = RunFolder(run_dir)
@@ -276,7 +275,7 @@ def retime(run_dir: Path, *, revise: Callable[[Path], None] | None = None, say: 
                     )
                 )
             variants.compare(results, scenarios, edits.held, project)
-            results.tables.update(manifest.cell_sizes(about))
+            cell_sizes.add(results, manifest.cell_sizes(about), project)
             writing.write_tables(partial, results.tables, project)
             shapes = None if summary_only else geometry.stored(about, partial / STORE)
             if shapes is not None:
