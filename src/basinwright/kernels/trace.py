@@ -32,20 +32,20 @@ def trace_paths(
     o = steps(ncols + 2)
     n = starts.size
     bounds = np.zeros(n + 1, np.int64)
+    cells = np.empty(1024, np.int32)
+    count = 0
     for i in range(n):
         c = starts[i]
-        count = 0
-        if c >= 0:
-            count = 1
-            while c != ends[i] and directions[c] < EXIT:
+        walking = c >= 0
+        while walking:
+            if count == cells.size:
+                longer = np.empty(2 * count, np.int32)
+                longer[:count] = cells
+                cells = longer
+            cells[count] = c
+            count += 1
+            walking = c != ends[i] and directions[c] < EXIT
+            if walking:
                 c += np.int64(o[directions[c]])
-                count += 1
-        bounds[i + 1] = bounds[i] + count
-    cells = np.empty(bounds[n], np.int32)
-    for i in range(n):
-        c = starts[i]
-        for j in range(bounds[i], bounds[i + 1]):
-            cells[j] = c
-            if directions[c] < EXIT:
-                c += np.int64(o[directions[c]])
-    return bounds, cells
+        bounds[i + 1] = count
+    return bounds, cells[:count].copy()

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import itertools
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -30,11 +30,11 @@ _PATH_COLUMNS = (
 )  # fmt: skip
 
 
-def keep_geometries(draft: Draft, name: str, geometries: Iterable[Any]) -> None:
+def keep_geometries(draft: Draft, name: str, geometries: Sequence[Any] | NDArray[Any]) -> None:
     """Keep geometries in the store as WKB, None where there is none."""
     import shapely
 
-    pieces = [b"" if geometry is None else shapely.to_wkb(geometry) for geometry in geometries]
+    pieces = [piece or b"" for piece in shapely.to_wkb(np.array(geometries, dtype=object)).tolist()]
     draft.array(f"{name}.wkb", np.frombuffer(b"".join(pieces), dtype=np.uint8))
     draft.array(f"{name}.bounds", np.cumsum([0, *map(len, pieces)], dtype=np.int64))
 
@@ -114,7 +114,11 @@ def _typed(table: Table, columns: Columns, project: Project) -> dict[str, NDArra
     }
     typed: dict[str, NDArray[Any]] = {}
     for name, values in columns.items():
-        kind, listed = kinds[name], list(values)
+        kind = kinds[name]
+        if kind != "text" and isinstance(values, np.ndarray) and values.dtype != object:
+            typed[name] = values  # as it was computed
+            continue
+        listed = list(values)
         if kind == "number":
             typed[name] = np.array([np.nan if value is None or value == "" else float(value) for value in listed])
         elif kind == "integer":
