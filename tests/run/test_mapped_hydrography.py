@@ -114,6 +114,20 @@ def test_given_directions_that_are_our_own_give_the_same_tables(tmp_path):
         assert (runs[0] / f"{table}.csv").read_bytes() == (runs[1] / f"{table}.csv").read_bytes()
 
 
+def test_published_directions_have_no_coarser_cells(tmp_path):
+    codes = {str(i + 1): 45 * i for i in range(8)}
+    file = make_project(
+        tmp_path,
+        v_valley(40, 31, 0.1, 0.02),
+        {"A": (39, 15)},
+        overrides={"terrain": {"flow_direction": "d8.tif", "flow_direction_codes": codes}},
+    )
+    write_raster(tmp_path / "d8.tif", np.full((40, 31), 3, np.uint8), transform_of(), CRS, nodata=0)
+    with pytest.raises(InputRejected, match="published directions are of one cell size"):
+        pipeline.run(file, also_at=["30 m"])
+    assert not (tmp_path / "out").exists()
+
+
 def rejected(folder, terrain, **sections):
     """Return the problems of a project, which `check` and `run` name alike and before anything is written."""
     file = make_project(

@@ -2,7 +2,8 @@
 
 import numpy as np
 import pytest
-from hydrographies import lines, on_grid, prescribed, routed, steps
+from hydrographies import DCOL, DROW, lines, on_grid, prescribed, routed, steps
+from matplotlib.cbook import get_sample_data
 from projects import transform_of, v_valley
 from rasterio.crs import CRS
 from scipy import ndimage
@@ -11,10 +12,11 @@ from basinwright.basins import delineate
 from basinwright.basins.contact import contact_lengths_m, sink_areas_km2
 from basinwright.grid import Grid
 from basinwright.kernels import EXIT, SINK
-from basinwright.terrain import condition_and_route
+from basinwright.terrain import Conditioning, Constraints, condition_and_route
 from basinwright.terrain.hydrography import sink_spills
 
 ROWS, COLS, AXIS, HEAD = 80, 61, 30, 10
+BREACH = Conditioning("breach")
 
 
 def valley(noise=0.0, seed=0):
@@ -160,6 +162,21 @@ def test_nothing_prescribed_is_the_plain_fill_bit_for_bit():
     np.testing.assert_array_equal(plain.directions, constrained.directions)
 
 
+def test_a_lake_in_which_one_step_is_barred_drains_as_without_but_for_that_step():
+    z = valley(0.5)
+    z[60] = 2000.0  # a dam across the valley
+    size = np.full(ROWS, 10.0)
+    plain = condition_and_route(z, size, size, size * size)
+    walls = np.zeros(plain.directions.size, np.uint8)
+    cell = int(plain.cells_at(np.array([50]), np.array([AXIS]))[0])
+    code = int(plain.directions[cell])
+    below = cell + int(DROW[code]) * (COLS + 2) + int(DCOL[code])
+    walls[cell], walls[below] = 1 << code, 1 << (code + 4) % 8
+    barred = condition_and_route(z, size, size, size * size, constraints=Constraints(walls=walls))
+    np.testing.assert_array_equal(barred.conditioned_m, plain.conditioned_m)
+    assert np.flatnonzero(barred.directions != plain.directions).tolist() == [cell]
+
+
 def test_a_barrier_stops_water_but_where_a_stream_crosses_it():
     levee = lines([(-1.0, 50.2), (COLS + 1.0, 50.2)])
     _, stopped = routed(valley(), barriers=levee)
@@ -242,3 +259,30 @@ def test_boundary_at_the_edges_and_against_voids_is_measured():
         for axis, here in ((0, np.s_[1:]), (1, np.s_[:, 1:]))
     )
     assert lengths["void"][0] == pytest.approx(10.0 * sides)
+
+
+@pytest.mark.parametrize("shift", [(1, 0), (-3, 2)])
+def test_real_streams_drawn_beside_their_valleys_carry_the_water_of_these(shift):
+    """The channel network of a real terrain, moved by some cells, against itself where it was."""
+    z = get_sample_data("jacksboro_fault_dem.npz")["elevation"].astype(np.float32)  # SRTM, Tennessee
+    size = np.full(len(z), 30.0)
+    plain = condition_and_route(z, size, size, size * size, BREACH)
+    right, down = shift
+    rows, cols, _, below_rows, below_cols = steps(plain)
+    channel = plain.area_grid >= 800 * 900.0
+    along_it = channel[rows, cols]
+    ways = np.stack([np.column_stack([cols, rows]), np.column_stack([below_cols, below_rows])], axis=1)[along_it] + 0.5
+    found, moved = routed(z, 30.0, BREACH, streams=lines(*np.add(ways, [right, down])))
+
+    at = np.argwhere(channel)
+    there = np.add(at, [down, right])
+    inside = ((there >= 0) & (there < z.shape)).all(axis=1)
+    at, there = tuple(at[inside].T), tuple(there[inside].T)
+    assert np.mean(moved.directions_grid[there] == plain.directions_grid[at]) > 0.98
+    carried = moved.area_grid[there] / plain.area_grid[at]
+    assert np.mean(np.abs(carried - 1.0) < 0.1) > 0.75  # the rest near confluences, which lie elsewhere now
+    mapped = found.line_of >= 0
+    apart, nearest = ndimage.distance_transform_edt(~mapped, return_indices=True)
+    beside = ~mapped & (apart <= 5) & (moved.area_grid > 1600 * 900.0)
+    double = beside & (moved.area_grid > 0.5 * moved.area_grid[tuple(nearest)])
+    assert np.count_nonzero(double) < 0.01 * np.count_nonzero(mapped)

@@ -158,7 +158,7 @@ def orient(
     ----------
     z : float32 array, shape (cells,) [m]
     natural : float32 array, shape (cells,) [m]
-        Level at which water leaves each cell without the mapped network.
+        Level at which water leaves each cell, or the ground within reach of it, without the mapped network.
     nrows, ncols : int
     links : uint8 array, shape (cells,)
     ends : bool array, shape (cells,)

@@ -80,6 +80,9 @@ def run(
     if jobs is not None:
         compute_section = inputs.project.compute.model_copy(update={"jobs": jobs})
         inputs.project = inputs.project.model_copy(update={"compute": compute_section})
+    if also_at and "flow_direction" in inputs.mapped:
+        what, fix = "published directions are of one cell size", "leave it out, or let directions be computed"
+        raise InputRejected.one("command line", "--also-at", what, fix)
     sizes = read_sizes(also_at, inputs.plan.grid)
     with folder.locked():
         folder.refuse_occupied(resume=resume, overwrite=overwrite)

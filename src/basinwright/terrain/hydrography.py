@@ -173,6 +173,8 @@ def _follow(
     crest_m: float,
 ) -> dict[str, int]:  # fmt: skip
     """Prescribe the directions of mapped streams, and of what is led into them; cut the ground along them."""
+    from scipy.ndimage import minimum_filter
+
     from basinwright.kernels import constraints as constraint_kernel
     from basinwright.kernels import hydrography as kernel
 
@@ -181,6 +183,8 @@ def _follow(
     natural = np.empty_like(z)
     work = np.empty(z.size, np.int32)
     constraint_kernel.constrained_levels(z, nrows, ncols, walls, np.full_like(fixed, 255), ends.copy(), work, natural)
+    # The lowest level within reach: a mouth that lies beside its valley, up a slope, is still the lowest end.
+    natural = minimum_filter(natural.reshape(nrows + 2, stride), size=2 * REACH_CELLS + 1).reshape(-1)
     links = np.zeros(z.size, np.uint8)
     kernel.lay_lines(streams.x, streams.y, streams.bounds, z, nrows, ncols, links, line_of)
     network = _orient(ground, natural, links, line_of, fixed, ends)
