@@ -438,7 +438,7 @@ OUTLET_HOWS: Mapping[str, Choice] = {
         {
             "z85": ground.profile_at_share(0.15),
             "z10": ground.profile_at_share(0.90),
-            "L": ground.first_outlet_cell("path_length_raw", "m"),
+            "L": ground.first_outlet_cell("path_length", "m"),
         },
         places=ground.path_places,
     ),
