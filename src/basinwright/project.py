@@ -87,7 +87,7 @@ Period = Annotated[str, AfterValidator(_check_period)]
 Length = Annotated[float, _read("length"), _positive, _write("length")]
 LengthOrNone = Annotated[float, _read("length"), Field(ge=0), _write("length")]
 LengthOrAuto = Annotated[float | str, _read("length", "auto"), _positive, _write("length")]
-AreaOrAuto = Annotated[float | str, _read("area", "auto"), _positive, _write("area")]
+StreamArea = Annotated[float | str, _read("area", "auto", "mapped"), _positive, _write("area")]
 AreaOrNone = Annotated[float, _read("area"), Field(ge=0), _write("area")]
 Depth = Annotated[float, _read("depth"), _positive, _write("depth")]
 Time = Annotated[float, _read("time"), _positive, _write("time")]
@@ -250,7 +250,7 @@ class Terrain(Section):
     sinks: str | None = None
     flow_direction: str | None = None
     flow_direction_codes: dict[Code, Meaning] | None = None
-    stream_area: AreaOrAuto = _default("0.25 km2")
+    stream_area: StreamArea = _default("0.25 km2")
     length_correction: Literal["none", "straight"] = "none"
 
     @model_validator(mode="before")
@@ -761,6 +761,9 @@ def _conflicts(data: dict[str, Any]) -> Iterator[tuple[str, str, str]]:
     if "check" in data and not section("check").get("regression"):
         yield "check.regression", "missing", 'name the table of equations, such as "regional.csv"'
     if "uncertainty" in data:
+        if section("terrain").get("stream_area") == "mapped" and "stream_area_factor" in section("uncertainty"):
+            what, fix = 'has no area to vary: terrain.stream_area is "mapped"', "leave it out"
+            yield "uncertainty.stream_area_factor", what, fix
         yield from _uncertainty_conflicts(section("uncertainty"), section("unit_hydrograph"), section("storm"))
 
 
@@ -880,6 +883,9 @@ def _hydrography_conflicts(terrain: dict[str, Any], channel: dict[str, Any]) -> 
     if by_column and "stream_lines" not in terrain:
         what = f"{roughness!r} is taken for a column of terrain.stream_lines, which is missing"
         yield "channel.roughness", what, 'give terrain.stream_lines, or Manning\'s n as a number, or "jarrett"'
+    by_map = terrain.get("stream_area") == "mapped"
+    if by_map and "stream_lines" not in terrain:
+        yield "terrain.stream_area", 'is "mapped", and terrain.stream_lines is missing', "give terrain.stream_lines"
     if "flow_direction_codes" in terrain and "flow_direction" not in terrain:
         yield "terrain.flow_direction_codes", "given without flow_direction", "name the raster of directions"
     if "flow_direction" not in terrain:
@@ -887,7 +893,7 @@ def _hydrography_conflicts(terrain: dict[str, Any], channel: dict[str, Any]) -> 
     if "flow_direction_codes" not in terrain:
         fix = 'say what each code means, such as { 1 = 0, 2 = 45, 0 = "exit" }'
         yield "terrain.flow_direction_codes", "missing, and flow_direction is given", fix
-    for key in ("barriers", "sinks", *(() if by_column else ("stream_lines",))):
+    for key in ("barriers", "sinks", *(() if by_column or by_map else ("stream_lines",))):
         if key in terrain:
             yield f"terrain.{key}", "given beside flow_direction, which it cannot change", "leave one of the two out"
 

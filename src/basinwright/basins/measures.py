@@ -8,7 +8,7 @@ from basinwright.basins.delineation import Basins
 from basinwright.grid import Grid
 from basinwright.terrain import Terrain
 from basinwright.terrain.land_slope import horn_slope_blocks
-from basinwright.terrain.network import stream_area_m2
+from basinwright.terrain.network import channel_test
 from basinwright.terrain.summable import quantum
 
 _SUMS = ("area", "cells", "contact", "elevation", "slope", "row", "col", "filled")
@@ -57,7 +57,9 @@ def measure(grid: Grid, terrain: Terrain, elevation_m: np.ndarray, basins: Basin
     return columns
 
 
-def drainage_density_per_km(terrain: Terrain, basins: Basins, stream_area_km2: float) -> np.ndarray:
+def drainage_density_per_km(
+    terrain: Terrain, basins: Basins, stream_area_km2: float, channels: np.ndarray | None = None
+) -> np.ndarray:
     """Length of the channels in every outlet's whole basin over its area (Horton 1932).
 
     Parameters
@@ -66,6 +68,8 @@ def drainage_density_per_km(terrain: Terrain, basins: Basins, stream_area_km2: f
     basins : Basins
     stream_area_km2 : float [km2]
         Contributing area at which channels begin.
+    channels : bool array, shape (cells,), optional
+        The channels themselves; see `basinwright.terrain.network.channel_test`.
 
     Returns
     -------
@@ -78,10 +82,10 @@ def drainage_density_per_km(terrain: Terrain, basins: Basins, stream_area_km2: f
     """
     from basinwright.kernels import network, reduce
 
+    channel_area_m2, least_m2 = channel_test(terrain, stream_area_km2, channels)
     length_um = np.zeros(basins.n_labels, np.int64)
     network.add_channel_length(
-        terrain.directions, terrain.area_m2, basins.label, terrain.ncols, terrain.step_um,
-        stream_area_m2(stream_area_km2), length_um,
+        terrain.directions, channel_area_m2, basins.label, terrain.ncols, terrain.step_um, least_m2, length_um,
     )  # fmt: skip
     area_m2 = np.zeros(basins.n_labels)
     reduce.add_area(

@@ -10,7 +10,7 @@ from numpy.typing import ArrayLike
 from basinwright.grid import Grid
 from basinwright.kernels import NO_CELL
 from basinwright.terrain import Terrain
-from basinwright.terrain.network import stream_area_m2
+from basinwright.terrain.network import channel_test
 
 AREA_TOLERANCE = 0.10
 """Largest relative difference from the expected area; common practice."""
@@ -68,6 +68,7 @@ def snap(
     y: ArrayLike,
     *,
     stream_area_km2: float,
+    channels: np.ndarray | None = None,
     within_m: float | None = None,
     expected_area_km2: ArrayLike | None = None,
 ) -> Snapped:
@@ -86,6 +87,8 @@ def snap(
         Points in the grid's map coordinates.
     stream_area_km2 : float [km2]
         Contributing area at which channels begin.
+    channels : bool array, shape (cells,), optional
+        The channels themselves; see `basinwright.terrain.network.channel_test`.
     within_m : float, optional [m]
         Search distance, in a straight line from the point to the centre of a cell; default
         `search_distance_m`.
@@ -111,7 +114,7 @@ def snap(
     expected_m2 = np.full(n, np.nan)
     if expected_area_km2 is not None:
         expected_m2[:] = np.asarray(expected_area_km2, np.float64) * 1e6
-    stream_m2 = stream_area_m2(stream_area_km2)
+    channel_area_m2, stream_m2 = channel_test(terrain, stream_area_km2, channels)
 
     inside = (px >= 0) & (px < grid.ncols) & (py >= 0) & (py < grid.nrows)
     own = np.full(n, NO_CELL, np.int32)
@@ -123,7 +126,7 @@ def snap(
     failed[void] = "the point lies in a void of the terrain: move it, or fill the void"
 
     sizes = (terrain.ncols, grid.dx_m, grid.dy_m)
-    lines = (terrain.directions, terrain.area_m2)
+    lines = (terrain.directions, channel_area_m2)
     sought = np.where(own >= 0, expected_m2, np.nan)
     cell = snapping.nearest_with_area(py, px, sought, AREA_TOLERANCE, within, *sizes, terrain.area_m2)
     expected_met = cell >= 0

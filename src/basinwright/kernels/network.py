@@ -75,6 +75,27 @@ def channel_graph(
 
 
 @njit(cache=True, nogil=True)
+def mark_below(directions: np.ndarray, ncols: int, mark: np.ndarray) -> None:
+    """Mark every cell below a marked one.
+
+    Parameters
+    ----------
+    directions : uint8 array, shape (cells,)
+    ncols : int
+    mark : uint8 array, shape (cells,)
+        1 for the marked cells, else 0; on return 2 for them and all below.
+    """
+    o = steps(ncols + 2)
+    for start in range(mark.size):
+        c = start
+        while mark[c] == 1 or (c != start and mark[c] == 0):
+            mark[c] = 2
+            if directions[c] >= EXIT:
+                break
+            c = int(c + np.int64(o[directions[c]]))
+
+
+@njit(cache=True, nogil=True)
 def strahler_orders(below: np.ndarray, channel: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Strahler order of every channel cell, and how many channels join in it.
 

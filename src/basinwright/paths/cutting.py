@@ -28,7 +28,7 @@ class CutRules:
     Parameters
     ----------
     stream_area_km2 : float [km2]
-        Contributing area at which channels begin.
+        Contributing area at which channels begin; also the measure of a tributary.
     sheet_limit_m : float [m]
         Longest sheet flow.
     min_segment_m : float [m]
@@ -39,6 +39,8 @@ class CutRules:
         ``(roughness_n, slope) -> length [m]``, on arrays.
     bankfull_width_m : callable
         ``(area_km2) -> width [m]``, on arrays.
+    channels : bool array, shape (cells,), optional
+        The channels themselves, whatever area they begin at.
     """
 
     stream_area_km2: float
@@ -47,6 +49,7 @@ class CutRules:
     slope_floor: float
     mccuen_spiess_m: Callable[[np.ndarray, np.ndarray], np.ndarray]
     bankfull_width_m: Callable[[np.ndarray], np.ndarray]
+    channels: np.ndarray | None = None
 
 
 @dataclass(frozen=True)
@@ -132,7 +135,10 @@ def cut_segments(grid: Grid, terrain: Terrain, paths: Paths, cover: CoverOnGrid,
     classes = cover.classes[terrain.rows_cols(paths.cells)]
     classes = _gaps_filled(paths, classes, classes >= 0)
     path, first, last = _open_water(grid, paths, classes, terrain.ncols, cover, rules)
-    channel, sheet_end = kernel.regime_starts(bounds, distance, paths.area_km2, rules.stream_area_km2, path, first)
+    area_km2 = paths.area_km2
+    if rules.channels is not None:
+        area_km2 = np.where(rules.channels[paths.cells], np.inf, 0.0)
+    channel, sheet_end = kernel.regime_starts(bounds, distance, area_km2, rules.stream_area_km2, path, first)
     sheet, roughness, limited = _sheet(paths, classes, cover, sheet_end, rules)
 
     n_classes = len(cover.codes)

@@ -53,7 +53,9 @@ def segment_lines(grid: Grid, terrain: Terrain, paths: Paths, segments: dict[str
     return _lines(bounds, xy)
 
 
-def stream_reaches(grid: Grid, terrain: Terrain, stream_area_km2: float) -> dict[str, np.ndarray]:
+def stream_reaches(
+    grid: Grid, terrain: Terrain, stream_area_km2: float, channels: np.ndarray | None = None
+) -> dict[str, np.ndarray]:
     """The stream network of the whole raster, reach by reach.
 
     Parameters
@@ -62,6 +64,8 @@ def stream_reaches(grid: Grid, terrain: Terrain, stream_area_km2: float) -> dict
     terrain : Terrain
     stream_area_km2 : float [km2]
         Contributing area at which channels begin.
+    channels : bool array, shape (cells,), optional
+        The channels themselves; see `basinwright.terrain.network.channel_test`.
 
     Returns
     -------
@@ -70,7 +74,7 @@ def stream_reaches(grid: Grid, terrain: Terrain, stream_area_km2: float) -> dict
         ``strahler_order``, ``length_m``, ``drop_m``, ``top_area_km2``, ``area_km2``: see
         `basinwright.terrain.network.Reaches`.
     """
-    reaches = channel_reaches(terrain, stream_area_km2)
+    reaches = channel_reaches(terrain, stream_area_km2, channels)
     x, y = grid.xy(*terrain.rows_cols(reaches.cells))
     return {
         "geometry": _lines(reaches.bounds, np.column_stack([x, y])),

@@ -12,6 +12,7 @@ import numpy as np
 from basinwright.grid import Grid
 from basinwright.hydrology import Columns
 from basinwright.outputs.layers import keep_geometries, kept_geometries, write_layers
+from basinwright.pipeline import mapping
 from basinwright.pipeline.inputs import Inputs
 from basinwright.pipeline.terrain_half import TerrainHalf, keep_columns, kept_columns
 from basinwright.project import Project
@@ -104,7 +105,7 @@ def _draw(half: TerrainHalf, draft: Draft) -> None:
     keep_geometries(draft, "basins", by_outlet(whole))
     keep_geometries(draft, "subbasins", by_outlet(subbasins))
     keep_geometries(draft, "flow_paths", path_lines(grid, terrain, half.paths.record(Paths, "paths")))
-    streams = stream_reaches(grid, terrain, half.stream_area_km2)
+    streams = stream_reaches(grid, terrain, half.stream_area_km2, mapping.mapped_channels(half.channels))
     keep_geometries(draft, "streams", streams.pop("geometry"))
     keep_columns(draft, "streams", streams)
     draft.values(

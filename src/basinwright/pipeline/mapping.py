@@ -102,6 +102,11 @@ def _given(inputs: Inputs, elevation_m: NDArray[Any]) -> Terrain:
     raise InputRejected(problems)
 
 
+def mapped_channels(channels: Entry) -> NDArray[np.bool_] | None:
+    """Return the channels that begin where mapped lines begin, on padded cells; None where an area decides."""
+    return channels.array("channels") if channels.values("mapped") else None
+
+
 def constraints(hydrography: Entry | None) -> Constraints | None:
     """Return what routing has to obey; None where nothing is prescribed."""
     from basinwright.terrain import Constraints

@@ -165,7 +165,7 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
         "channels",
         "Finding where channels begin",
         {"routing": routing.key, "stream_area": project.terrain.stream_area},
-        lambda draft: _channels(inputs, routing.record(Terrain, "terrain"), draft),
+        lambda draft: _channels(inputs, routing.record(Terrain, "terrain"), hydrography, draft),
     )
     cover = store.stage(
         "cover",
@@ -353,17 +353,20 @@ def _routing(project: Project, grid: Grid, elevation: Entry, hydrography: Entry 
     draft.record(sink_spills(terrain, constraints), "sinks")
 
 
-def _channels(inputs: Inputs, terrain: Terrain, draft: Draft) -> None:
-    """Decide at which contributing area channels begin."""
-    from basinwright.terrain.network import FALLBACK_KM2, chosen_stream_area_km2, drop_test
+def _channels(inputs: Inputs, terrain: Terrain, hydrography: Entry | None, draft: Draft) -> None:
+    """Decide where channels begin: at which contributing area, or at the heads of mapped lines."""
+    from basinwright.terrain.network import FALLBACK_KM2, chosen_stream_area_km2, drop_test, mapped_channels
 
     given = inputs.project.terrain.stream_area
-    tested = drop_test(terrain) if isinstance(given, str) else []
+    draft.values("mapped", given == "mapped")
+    if given == "mapped" and hydrography is not None:
+        draft.array("channels", mapped_channels(terrain, hydrography.array("stream_mask")))
+    tested = drop_test(terrain) if given == "auto" else []
     chosen = chosen_stream_area_km2(tested)
     draft.values("stream_area_km2", given if not isinstance(given, str) else chosen or FALLBACK_KM2)
     draft.values("drop_test", [{**vars(entry), "passes": entry.passes} for entry in tested])
     words = ""
-    if isinstance(given, str) and chosen is None:
+    if given == "auto" and chosen is None:
         words = f"none of {len(tested)} tested areas passes the drop test: {FALLBACK_KM2} km2 stands in"
     elif tested and chosen == tested[0].stream_area_km2:
         words = f"the smallest tested area, {chosen:g} km2, passes the drop test: channels may begin higher up"
@@ -385,12 +388,15 @@ def _basins(inputs: Inputs, grid: Grid, elevation: Entry, routing: Entry, channe
         inputs.x,
         inputs.y,
         stream_area_km2=stream_area_km2,
+        channels=mapping.mapped_channels(channels),
         within_m=None if isinstance(within, str) else within,
         expected_area_km2=inputs.expected_area_km2,
     )
     basins = delineate(terrain, snapped.cell)
     measures = measure(grid, terrain, elevation.array("elevation_m"), basins)
-    measures["drainage_density_per_km"] = drainage_density_per_km(terrain, basins, stream_area_km2)
+    measures["drainage_density_per_km"] = drainage_density_per_km(
+        terrain, basins, stream_area_km2, mapping.mapped_channels(channels)
+    )
     measures["sink_area_km2"] = sink_areas_km2(terrain, basins, routing.record(Sinks, "sinks"))
     measures |= {f"contact_{side}_m": m for side, m in contact_lengths_m(grid, terrain, basins).items()}
     draft.record(snapped, "snapped")
@@ -484,9 +490,10 @@ def _tables(inputs: Inputs, stages: Mapping[str, Entry], hydrography: Entry | No
     depths = _mean_depths_mm(inputs, terrain, basins)
     stream_area_km2 = float(stages["channels"].values("stream_area_km2"))
     channel_n = mapping.channel_n(inputs, hydrography)
-    cut = _cut(inputs, terrain, paths, cover, stream_area_km2, channel_n)
+    channels = mapping.mapped_channels(stages["channels"])
+    cut = _cut(inputs, terrain, paths, cover, stream_area_km2, channels, channel_n)
     other_paths = _other_paths(inputs, stages, terrain, basins)
-    along_other = _cut(inputs, terrain, other_paths, cover, stream_area_km2, channel_n)
+    along_other = _cut(inputs, terrain, other_paths, cover, stream_area_km2, channels, channel_n)
 
     failed = _failures(snapped, measures, shares.failed, depths)
     fine = np.array([i not in failed for i in range(len(inputs.points))], dtype=bool)
@@ -522,6 +529,7 @@ def _cut(
     paths: Paths,
     cover: CoverLayer,
     stream_area_km2: float,
+    channels: NDArray[np.bool_] | None,
     channel_n: NDArray[np.float64] | None,
 ) -> Cut:
     """Cut the paths into segments where channels begin at an area."""
@@ -536,6 +544,7 @@ def _cut(
         slope_floor=project.flow_path.slope_floor,
         mccuen_spiess_m=sheet_limit_m,
         bankfull_width_m=partial(bankfull_width_m, relation=bankfull_relation_of(project)),
+        channels=channels,
     )
     on_grid = CoverOnGrid(
         cover.classes, cover.codes, cover.sheet_n(inputs.scheme), cover.open_water(inputs.scheme), channel_n
@@ -563,7 +572,7 @@ def _channel_starts(
     fine = np.array([outlet_id not in failed for outlet_id in inputs.points.ids], dtype=bool)
     for name, factor in zip(OTHER_STARTS, factors, strict=True):
         stream_area_km2 = factor * float(stages["channels"].values("stream_area_km2"))
-        cut = _cut(inputs, terrain, paths, cover, stream_area_km2, mapping.channel_n(inputs, hydrography))
+        cut = _cut(inputs, terrain, paths, cover, stream_area_km2, None, mapping.channel_n(inputs, hydrography))
         columns = _of_fine(cut.segments, ids, fine) | {"edited": None}
         draft.frame(name, _as_frame(SEGMENTS, columns, project))
 
@@ -663,11 +672,13 @@ def _time_area(inputs: Inputs, stages: Mapping[str, Entry], hydrography: Entry |
 
     terrain = stages["routing"].record(Terrain, "terrain")
     basins = stages["basins"].record(Basins, "basins")
+    channels = mapping.mapped_channels(stages["channels"])
     step_times = StepTimes(
         inputs.project,
         inputs.scheme,
         stages["cover"].record(CoverLayer, "cover"),
         float(stages["channels"].values("stream_area_km2")),
+        None if channels is None else terrain.grid(channels),
         mapping.channel_n(inputs, hydrography),
     )
     time_us = travel_times_us(terrain, step_times)

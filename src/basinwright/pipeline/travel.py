@@ -33,6 +33,8 @@ class StepTimes:
         On the working grid.
     stream_area_km2 : float
         Contributing area at which channels begin [km2].
+    channels : bool array, shape (nrows, ncols), optional
+        The channels themselves, whatever area they begin at.
     channel_n : float array, shape (nrows, ncols), optional
         Manning n of mapped channels, NaN elsewhere.
     """
@@ -43,12 +45,13 @@ class StepTimes:
         scheme: Scheme,
         cover: CoverLayer,
         stream_area_km2: float,
+        channels: NDArray[np.bool_] | None = None,
         channel_n: Floats | None = None,
     ) -> None:
         from basinwright.timing import shallow_coefficients_mps
 
         self.project, self.classes, self.stream_area_km2 = project, cover.classes, stream_area_km2
-        self.channel_n = channel_n
+        self.channels, self.channel_n = channels, channel_n
         self.relation = bankfull_relation_of(project)
         found = [scheme.find(code) for code in cover.codes]
         listed = np.array([entry is not None for entry in found], dtype=bool)
@@ -80,7 +83,8 @@ class StepTimes:
         moving = length_m > 0
         slope = np.maximum(fall_m / np.where(moving, length_m, 1.0), project.flow_path.slope_floor)
         water = self.open_water[classes]
-        channel = moving & ~water & (area_km2 >= self.stream_area_km2)
+        large = area_km2 >= self.stream_area_km2 if self.channels is None else self.channels[rows]
+        channel = moving & ~water & large
         sheet = moving & ~water & ~channel & source
         shallow = self.shallow_mps[classes] * np.sqrt(slope)
         hours = length_m / (3600.0 * shallow)

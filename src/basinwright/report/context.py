@@ -281,6 +281,8 @@ def settings(run: Run) -> list[tuple[str, str]]:
 
 def _channel_start(wanted: str, found_km2: float, system: System) -> str:
     """Say at which contributing area channels begin, and who says so."""
+    if wanted == "mapped":
+        return "the heads of mapped streams"
     area = _quantity(f"{found_km2} km2", "area", system)
     return f"{area}, by the drop test" if wanted == "auto" else area
 

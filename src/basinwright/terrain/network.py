@@ -19,6 +19,8 @@ T_LIMIT = 2.0
 FALLBACK_KM2 = 0.25
 """The stream area where no tested one passes."""
 
+_ANY_M2 = 1e-6
+"""Less than any cell's area and more than nothing."""
 _SERIES = (1.0, 1.25, 1.6, 2.0, 2.5, 3.15, 4.0, 5.0, 6.3, 8.0)
 """Preferred numbers, ten to a decade (ISO 3, R10): tested areas do not depend on the terrain."""
 
@@ -26,6 +28,50 @@ _SERIES = (1.0, 1.25, 1.6, 2.0, 2.5, 3.15, 4.0, 5.0, 6.3, 8.0)
 def stream_area_m2(stream_area_km2: float) -> float:
     """Stream area as the kernels compare it [m2]: 0.07 km2 is 70000 m2, not a hair more."""
     return round(stream_area_km2 * 1e6, 6)
+
+
+def mapped_channels(terrain: Terrain, mapped: np.ndarray) -> np.ndarray:
+    """Channels that begin where mapped lines begin: mapped cells and all below them.
+
+    Parameters
+    ----------
+    terrain : Terrain
+    mapped : bool array, shape (nrows, ncols)
+        Cells of mapped streams.
+
+    Returns
+    -------
+    bool array, shape (cells,)
+    """
+    from basinwright.kernels import VOID, network
+
+    mark = np.zeros(terrain.directions.size, np.uint8)
+    terrain.grid(mark)[...] = mapped & (terrain.directions_grid != VOID)
+    network.mark_below(terrain.directions, terrain.ncols, mark)
+    return mark == 2
+
+
+def channel_test(
+    terrain: Terrain, stream_area_km2: float, channels: np.ndarray | None = None
+) -> tuple[np.ndarray, float]:
+    """What the kernels compare to tell a channel: an area of every cell, and the area from which on it is a channel.
+
+    Parameters
+    ----------
+    terrain : Terrain
+    stream_area_km2 : float [km2]
+    channels : bool array, shape (cells,), optional
+        The channels themselves, as `mapped_channels` gives them; the stream area then does not matter.
+
+    Returns
+    -------
+    area_m2 : float64 array, shape (cells,) [m2]
+        The contributing area; 0 off the given channels.
+    least_m2 : float [m2]
+    """
+    if channels is None:
+        return terrain.area_m2, stream_area_m2(stream_area_km2)
+    return np.where(channels, terrain.area_m2, 0.0), _ANY_M2
 
 
 @dataclass(frozen=True, eq=False)
@@ -61,13 +107,15 @@ class Reaches:
     area_km2: np.ndarray
 
 
-def channel_reaches(terrain: Terrain, stream_area_km2: float) -> Reaches:
-    """Reaches of the channels that begin at a contributing area.
+def channel_reaches(terrain: Terrain, stream_area_km2: float, channels: np.ndarray | None = None) -> Reaches:
+    """Reaches of the channels that begin at a contributing area, or of given ones.
 
     Parameters
     ----------
     terrain : Terrain
     stream_area_km2 : float [km2]
+    channels : bool array, shape (cells,), optional
+        See `channel_test`.
 
     Returns
     -------
@@ -75,9 +123,8 @@ def channel_reaches(terrain: Terrain, stream_area_km2: float) -> Reaches:
     """
     from basinwright.kernels import network
 
-    cells, below = network.channel_graph(
-        terrain.directions, terrain.area_m2, terrain.ncols, stream_area_m2(stream_area_km2)
-    )
+    area_m2, least_m2 = channel_test(terrain, stream_area_km2, channels)
+    cells, below = network.channel_graph(terrain.directions, area_m2, terrain.ncols, least_m2)
     strahler, donors = network.strahler_orders(below, np.ones(cells.size, np.bool_))
     heads = np.flatnonzero((donors != 1) & (below >= 0))
     heads = heads[np.argsort(cells[heads])]
