@@ -242,7 +242,7 @@ class Terrain(Section):
     vertical_unit: Literal["m", "ft", "us-ft"] | None = None
     crs: str = "auto"
     fill_voids: AreaOrNone = _default("500 m2")
-    conditioning: Literal["fill", "breach"] = "fill"
+    conditioning: Literal["fill", "breach"] = "breach"
     breach_depth: Length = _default("5 m")
     breach_length: Length = _default("100 m")
     stream_lines: str | None = None

@@ -63,14 +63,32 @@ def breached(seed, pick):
     pick(breach.make_cuts)(z, mark, cell, level)
     failed = np.flatnonzero(state == breach.FAILED).astype(np.int32)
     out |= {"cut": cell, "to": level, "state": state.copy(), "failed": failed}
+    filled = z.copy()
+    pick(breach.fill_lakes)(filled, mark, NCOLS, members[bounds[failed]], np.zeros(n, np.int32), n)
+    lowest = pick(breach.block_minima)(filled, NROWS, NCOLS)
     again, at = pick(breach.breach_pools)(
-        z, mark, walls, True, True, NCOLS, members, bounds, failed, 0, failed.size, *limits, cut, before, state
+        z,
+        filled,
+        mark,
+        walls,
+        True,
+        True,
+        NCOLS,
+        lowest,
+        members,
+        bounds,
+        failed,
+        0,
+        failed.size,
+        *limits,
+        cut,
+        before,
+        state,
     )
     pick(breach.make_cuts)(z, mark, again, at)
     out |= {"cut again": again, "at": at, "state again": state}
-    pick(breach.fill_lakes)(z, mark, NCOLS, members[bounds[failed]], np.zeros(n, np.int32), n)
     pick(breach.close_voids)(z)
-    return out | {"breached": z}
+    return out | {"filled": filled, "breached": z}
 
 
 def everything(seed, pick):

@@ -5,7 +5,8 @@
 3. From each pit the way to lower ground that costs least is sought, cost being the root of the depth of the cut
    times the distance. It is cut to the level of the pit, so that every level of a cut stands in the terrain. Where
    cost ties, as across a level floor, the way nearest to the middle of the pit is taken.
-4. A pit from which no way lies within the limits is filled part of the way and sought from again.
+4. A pit from which no way lies within the limits is filled part of the way, as little as helps, and sought from
+   again for a way out of the lake that filling it would make.
 5. What still does not drain is filled, from each pit outwards only as far as its lake reaches.
 
 Every search reads the same surface and only notes its cuts; all are made at the end, the deepest counting where
@@ -59,6 +60,9 @@ MOST_COST = 1 << 27
 _WAY = 7  # in the byte of a cell in a search: the direction by which it was reached
 _SOURCE = 8  # it belongs to the pit or its pool
 _REACHED = 16
+_WET = 32  # in the pool, or at its edge
+_SHARES = (0.1, 0.25, 0.5, 0.75, 0.9)
+"""Parts of a lake's depth to which its pit is filled by and by."""
 
 
 @njit(cache=True, nogil=True)
@@ -283,7 +287,7 @@ def block_minima(z: np.ndarray, nrows: int, ncols: int) -> np.ndarray:
 
 
 @njit(cache=True, nogil=True)
-def _is_hopeless(lowest: np.ndarray, row0: int, row1: int, col0: int, col1: int, level: float) -> bool:
+def _is_hopeless(lowest: np.ndarray, row0: int, row1: int, col0: int, col1: int, level: np.floating) -> bool:
     """Whether no cell of a rectangle of the padded raster lies below a level."""
     for b in range(row0 // BLOCK, row1 // BLOCK + 1):
         for a in range(col0 // BLOCK, col1 // BLOCK + 1):
@@ -397,24 +401,42 @@ def _original(
 
 @njit(cache=True, nogil=True)
 def _search(
-    z: np.ndarray, mark: np.ndarray, walls: np.ndarray, walled: bool, marked: bool, stride: int,
-    cut_cell: np.ndarray, before: np.ndarray, level: float, start: int,
+    z: np.ndarray, drains_at: np.ndarray, mark: np.ndarray, walls: np.ndarray, walled: bool, marked: bool, stride: int,
+    cut_cell: np.ndarray, before: np.ndarray, level: np.floating, sources: np.ndarray, count: int,
     row0: int, col0: int, bits: int, step_mm: np.ndarray, limit_mm: int, depth_m: float, unit: float,
-    key: np.ndarray, about: np.ndarray, length: np.ndarray, touched: np.ndarray, touches: int, heap: np.ndarray,
+    key: np.ndarray, about: np.ndarray, length: np.ndarray, touched: np.ndarray, queue: np.ndarray, heap: np.ndarray,
 ) -> tuple[int | np.integer, int, bool, np.ndarray]:  # fmt: skip
-    """Find the way of least cost from the sources to lower ground.
+    """Find the way of least cost from the sources to lower ground; of several, the nearest to the sources' middle.
 
-    Returns the place where it ends or -1, the number of touched places, whether unknown ground was met, and the
-    heap, which may have grown.
+    It ends beside the outside or a cell that drains at an elevation below the level; a first search, which does not
+    know that, takes the elevation itself. Returns the place where it ends or -1, the number of touched places, whether
+    unknown ground was met, and the heap, which may have grown.
     """
     o = neighbours(stride)
     width = 1 << bits
     offsets = (-width, 1 - width, 1, width + 1, width, width - 1, -1, -width - 1)
     unknown = False
-    key[start] = start
-    length[start] = 0
-    heap[0] = start
-    size = 1
+    middle = _middle(sources, count, bits, about, length, queue)
+    size = 0
+    touches = 0
+    for i in range(count):
+        here = np.int64(sources[i])
+        touched[i] = here
+        inside = True
+        for k in range(8):
+            inside = inside and about[here + offsets[k]] & _SOURCE != 0
+        if inside:
+            continue
+        off_row = np.float64((here >> bits) - (middle >> bits))
+        off_col = np.float64((here & (width - 1)) - (middle & (width - 1)))
+        tie = min(np.uint64(16.0 * np.sqrt(off_row * off_row + off_col * off_col)), _MOST_TIE)
+        key[here] = tie << np.uint64(_PLACE_BITS) | np.uint64(here)
+        length[here] = 0
+        if size == heap.size:
+            heap = enlarged(heap, size, 2 * size)
+        _push(heap, size, key[here])
+        size += 1
+    touches = count
     while size > 0:
         top = _pop(heap, size)
         size -= 1
@@ -428,8 +450,10 @@ def _search(
         for k in range(8):
             n = c + o[k]
             height = z[n]
-            if height < level:
-                if not about[here + offsets[k]] & _SOURCE and (height == -np.inf or not _walled(walls, walled, c, k)):
+            if height == -np.inf:
+                return here, touches, unknown, heap
+            if drains_at[n] < level:
+                if not _walled(walls, walled, c, k):
                     return here, touches, unknown, heap
             elif marked and height == level and mark[n] & (END | FIXED) and not _walled(walls, walled, c, k):
                 return here, touches, unknown, heap
@@ -453,20 +477,18 @@ def _search(
                 continue
             there = here + offsets[k]
             step = step_mm[row - 1, k]
-            reach = 0
-            if not about[there] & _SOURCE:
-                reach = length[here] + step
-                if reach > limit_mm:
-                    continue
+            reach = length[here] + step
+            if about[there] & _SOURCE or reach > limit_mm:
+                continue
             cost = so_far + np.uint64(np.sqrt(depth) * step * unit)
-            tie = min(walked + np.uint64(7 if k & 1 else 5), _MOST_TIE)
+            tie = min(walked + np.uint64(23 if k & 1 else 16), _MOST_TIE)
             new = cost << np.uint64(_COST_SHIFT) | tie << np.uint64(_PLACE_BITS) | np.uint64(there)
             if new < key[there]:
-                if not about[there]:
+                if not about[there] & _REACHED:
                     touched[touches] = there
                     touches += 1
                 key[there] = new
-                about[there] = about[there] & _SOURCE | _REACHED | k
+                about[there] = about[there] & _WET | _REACHED | k
                 length[there] = reach
                 if size == heap.size:
                     heap = enlarged(heap, size, 2 * size)
@@ -477,7 +499,7 @@ def _search(
 
 @njit(cache=True, nogil=True)
 def _trace_back(
-    z: np.ndarray, stride: int, level: float, goal: int | np.integer, row0: int, col0: int, bits: int,
+    z: np.ndarray, stride: int, level: np.floating, goal: int | np.integer, row0: int, col0: int, bits: int,
     about: np.ndarray, cut_cell: np.ndarray, cut_level: np.ndarray, cuts: int,
 ) -> tuple[np.ndarray, np.ndarray, int]:  # fmt: skip
     """Note the cuts along the way to a place, which the search found."""
@@ -607,12 +629,10 @@ def breach_pits(
             row = cell // stride
             place = (row - row0) << bits | (cell - row * stride - col0)
             sources[i] = place
-            touched[i] = place
             about[place] = _SOURCE
-        start = _middle(sources, count, bits, about, length, queue)
         goal, touches, unknown, heap = _search(
-            z, mark, walls, walled, marked, stride, none_cell, none_level, level, start,
-            row0, col0, bits, step_mm, limit_mm, depth_m, unit, key, about, length, touched, count, heap,
+            z, z, mark, walls, walled, marked, stride, none_cell, none_level, level, sources, count,
+            row0, col0, bits, step_mm, limit_mm, depth_m, unit, key, about, length, touched, queue, heap,
         )  # fmt: skip
         if unknown:
             state[p] = OPEN
@@ -657,82 +677,82 @@ def _rank_of(bits: np.uint32) -> np.uint64:
     return np.uint64(bits | np.uint32(0x80000000))
 
 
-_SPILLS, _TOO_NARROW, _UNKNOWN, _CLOSED = range(4)
+_GROWN, _TOO_NARROW, _UNKNOWN, _STOPPED = range(4)
 
 
 @njit(cache=True, nogil=True)
-def _flood(
-    z: np.ndarray, z_bits: np.ndarray, mark: np.ndarray, walls: np.ndarray, walled: bool, stride: int, seed: int,
+def _let_rise(
+    z: np.ndarray, z_bits: np.ndarray, walls: np.ndarray, walled: bool, stride: int, seed: int, top: float,
     row0: int, col0: int, bits: int, north: int, south: int, west: int, east: int,
-    about: np.ndarray, heap: np.ndarray, pool: np.ndarray, pool_level: np.ndarray, touched: np.ndarray,
-) -> tuple[int, int, np.floating, int, np.ndarray]:  # fmt: skip
-    """Let the water rise from a cell until it spills to lower ground.
+    about: np.ndarray, queue: np.ndarray, queued: int, water: np.floating,
+    pool: np.ndarray, count: int, wet: np.ndarray, wetted: int,
+) -> tuple[int, np.ndarray, int, np.floating, int, int]:  # fmt: skip
+    """Let the water in a pit rise to the lowest elevation beside it that is not below `top`.
 
-    The window is too narrow where water comes beyond the given rows and columns of the padded raster. `pool` gets
-    the places in the order in which water reaches them, `pool_level` the water level then. Returns how
-    it ended, the number of places in the pool, the level of the spill, the number of touched places, and the heap.
+    It stops where a cell lies below the pit, or at its level and before it in memory: then that one's water is the
+    matter. The window is too narrow where water comes beyond the given rows and columns of the padded raster.
+
+    Returns how it ended, the queue of cells at the water's edge and its length, the level, the number of places in
+    the pool and of those that are wet or at the edge.
     """
     o = neighbours(stride)
     width = 1 << bits
     offsets = (-width, 1 - width, 1, width + 1, width, width - 1, -1, -width - 1)
-    row = seed // stride
-    place = (row - row0) << bits | (seed - row * stride - col0)
-    heap[0] = _rank_of(z_bits[seed]) << np.uint64(32) | np.uint64(place)
-    about[place] = _REACHED
-    touched[0] = place
-    touches = 1
-    size = 1
-    count = 0
-    water = np.float32(-np.inf)
-    while size > 0:
-        here = np.int64(_pop(heap, size) & np.uint64(0xFFFFFFFF))
-        size -= 1
-        in_row = row0 + (here >> bits)
-        in_col = col0 + (here & (width - 1))
-        if in_row < north or in_row > south or in_col < west or in_col > east:
-            return _TOO_NARROW, count, water, touches, heap
-        c = np.uint64(in_row * stride + in_col)
+    level = z[seed]
+    while queued > 0:
+        here = np.int64(queue[0] & np.uint64(0xFFFFFFFF))
+        row = row0 + (here >> bits)
+        col = col0 + (here & (width - 1))
+        c = np.uint64(row * stride + col)
+        if water >= top and z[c] > water:
+            return _GROWN, queue, queued, water, count, wetted
+        if row < north or row > south or col < west or col > east:
+            return _TOO_NARROW, queue, queued, water, count, wetted
+        _pop(queue, queued)
+        queued -= 1
         water = max(water, z[c])
-        if mark[c] & (END | FIXED):
-            return _SPILLS, count, water, touches, heap
+        pool[count] = here
+        count += 1
         for k in range(8):
             n = c + o[k]
             height = z[n]
             there = here + offsets[k]
-            if about[there] or (height > -np.inf and _walled(walls, walled, c, k)):
+            if about[there] & _WET or (height > -np.inf and _walled(walls, walled, c, k)):
                 continue
             if height != height:
-                return _UNKNOWN, count, water, touches, heap
-            if height < water:
-                return _SPILLS, count, water, touches, heap
-            about[there] = _REACHED
-            touched[touches] = there
-            touches += 1
-            if size == heap.size:
-                heap = enlarged(heap, size, 2 * size)
-            _push(heap, size, _rank_of(z_bits[n]) << np.uint64(32) | np.uint64(there))
-            size += 1
-        pool[count] = here
-        pool_level[count] = water
-        count += 1
-    return _CLOSED, count, water, touches, heap
+                return _UNKNOWN, queue, queued, water, count, wetted
+            if height < level or (height == level and np.int64(n) < seed):
+                return _STOPPED, queue, queued, water, count, wetted
+            about[there] |= _WET
+            wet[wetted] = there
+            wetted += 1
+            if queued == queue.size:
+                queue = enlarged(queue, queued, 2 * queued)
+            _push(queue, queued, _rank_of(z_bits[n]) << np.uint64(32) | np.uint64(there))
+            queued += 1
+    return _STOPPED, queue, queued, water, count, wetted
 
 
 @njit(cache=True, nogil=True)
 def breach_pools(
-    z: np.ndarray, mark: np.ndarray, walls: np.ndarray, walled: bool, marked: bool, ncols: int,
-    members: np.ndarray, bounds: np.ndarray, pits: np.ndarray, first: int, last: int,
+    z: np.ndarray, filled: np.ndarray, mark: np.ndarray, walls: np.ndarray, walled: bool, marked: bool, ncols: int,
+    lowest: np.ndarray, members: np.ndarray, bounds: np.ndarray, pits: np.ndarray, first: int, last: int,
     step_mm: np.ndarray, limit_mm: int, depth_m: float, cut_before: np.ndarray, before: np.ndarray, state: np.ndarray,
 ) -> tuple[np.ndarray, np.ndarray]:  # fmt: skip
-    """Fill some of the pits part of the way, and search a way out of their pools.
+    """Fill some of the pits part of the way, and search a way out of the lakes that they would become.
 
-    The water is raised to the level from which the greatest depth just cuts through to where the pool spills, and
-    to 50, 75 and 90 % of its depth: to the highest elevation under each, lowest first, until a search finds a way.
+    A pit is filled to some parts of the depth of its lake, lowest first, until a search finds a way to ground that
+    drains below that level. Levels from which the greatest depth does not cut down from where the lake spills are
+    passed over. All levels are elevations beside the pit. In a lake of several pits the lowest is breached.
 
     Parameters
     ----------
     z : float32 array, shape (cells,) [m]
         Elevations after the cuts of `breach_pits`; read only, as all arrays but `state`.
+    filled : float32 array, shape (cells,) [m]
+        The same, filled.
+    lowest : float32 array, shape (blocks, blocks) [m]
+        From `block_minima` of `filled`.
     mark, walls, walled, marked, ncols, members, bounds, step_mm, limit_mm, depth_m
         As for `breach_pits`; the cells that were cut are marked CUT.
     pits : int32 array
@@ -763,26 +783,46 @@ def breach_pools(
     length = np.empty(0, np.int32)
     touched = np.empty(0, np.int32)
     pool = np.empty(0, np.int32)
-    pool_level = np.empty(0, np.float32)
-    queue = np.empty(0, np.int32)
+    wet = np.empty(0, np.int32)
+    inner = np.empty(0, np.int32)
     heap = np.empty(256, np.uint64)
-    tops = np.empty(4)
+    queue = np.empty(256, np.uint64)
+    tops = np.empty(len(_SHARES) + 1)
     for i in range(first, last):
         p = pits[i]
         seed = members[bounds[p]]
         level = z[seed]
+        depth = np.float64(filled[seed]) - level
+        if depth <= 0.0:
+            state[p] = DRAINED
+            continue
+        least = np.float64(filled[seed]) - depth_m
+        for j in range(len(_SHARES)):
+            tops[j] = level + _SHARES[j] * depth
+        tops[len(_SHARES)] = least
+        tops.sort()
         row = seed // stride
         col = seed - row * stride
         down, across = _reach(row, row, step_mm, limit_mm)
         beyond = 24
-        while True:
+        at = 0
+        while at < tops.size and tops[at] < least:
+            at += 1
+        while at < tops.size:
             north, south, west, east = row - beyond, row + beyond, col - beyond, col + beyond
             row0, row1 = max(north - down, 0), min(south + down, step_mm.shape[0] + 1)
             col0, col1 = max(west - across, 0), min(east + across, stride - 1)
+            if row0 == 0:
+                north = 0
+            if row1 == step_mm.shape[0] + 1:
+                south = row1
+            if col0 == 0:
+                west = 0
+            if col1 == stride - 1:
+                east = col1
             bits = _bits_for(col1 - col0 + 1)
             places = (row1 - row0 + 1) << bits
             if places > 1 << _PLACE_BITS:
-                how = _CLOSED
                 break
             if places > key.size:
                 key = np.full(places, _UNREACHED)
@@ -790,61 +830,56 @@ def breach_pools(
                 length = np.full(places, np.int32(-1))
                 touched = np.empty(places, np.int32)
                 pool = np.empty(places, np.int32)
-                pool_level = np.empty(places, np.float32)
-                queue = np.empty(places, np.int32)
-            how, count, spill, touches, heap = _flood(
-                z, z_bits, mark, walls, walled, stride, seed, row0, col0, bits,
-                north if row0 > 0 else 0, south if row1 <= step_mm.shape[0] else stride * stride,
-                west if col0 > 0 else 0, east if col1 < stride - 1 else stride,
-                about, heap, pool, pool_level, touched,
-            )  # fmt: skip
-            for j in range(touches):
-                about[touched[j]] = 0
+                wet = np.empty(places, np.int32)
+                inner = np.empty(places, np.int32)
+            start = (row - row0) << bits | (col - col0)
+            about[start] = _WET
+            wet[0] = start
+            wetted = 1
+            queue[0] = _rank_of(z_bits[seed]) << np.uint64(32) | np.uint64(start)
+            queued = 1
+            count = 0
+            water = np.float32(-np.inf)
+            how = _GROWN
+            while at < tops.size:
+                last_water = water
+                how, queue, queued, water, count, wetted = _let_rise(
+                    z, z_bits, walls, walled, stride, seed, tops[at], row0, col0, bits, north, south, west, east,
+                    about, queue, queued, water, pool, count, wet, wetted,
+                )  # fmt: skip
+                if how != _GROWN or water >= filled[seed]:
+                    break
+                at += 1
+                if water == last_water or _is_hopeless(lowest, row0, row1, col0, col1, water):
+                    continue
+                for s in range(count):
+                    about[pool[s]] = _WET | _SOURCE
+                goal, touches, unknown, heap = _search(
+                    z, filled, mark, walls, walled, marked, stride, cut_before, before, water, pool, count,
+                    row0, col0, bits, step_mm, limit_mm, depth_m, unit, key, about, length, touched, inner, heap,
+                )  # fmt: skip
+                if unknown:
+                    how = _UNKNOWN
+                elif goal >= 0:
+                    state[p] = BREACHED_FROM_POOL
+                    how = _STOPPED
+                    cut_cell, cut_level, cuts = _trace_back(
+                        z, stride, water, goal, row0, col0, bits, about, cut_cell, cut_level, cuts
+                    )
+                for s in range(touches):
+                    place = touched[s]
+                    key[place] = _UNREACHED
+                    about[place] &= _WET
+                    length[place] = -1
+                if how != _GROWN:
+                    break
+            for s in range(wetted):
+                about[wet[s]] = 0
+            if how == _UNKNOWN:
+                state[p] = OPEN
             if how != _TOO_NARROW:
                 break
             beyond *= 2
-        if how == _UNKNOWN:
-            state[p] = OPEN
-            continue
-        if how != _SPILLS:
-            continue
-        if spill == level:
-            state[p] = DRAINED
-            continue
-        depth = np.float64(spill) - level
-        tops[0] = level + 0.50 * depth
-        tops[1] = level + 0.75 * depth
-        tops[2] = level + 0.90 * depth
-        tops[3] = spill - depth_m
-        tops.sort()
-        tried = level
-        for j in range(4):
-            sources = np.searchsorted(pool_level[:count], tops[j], side="right")
-            if sources == 0 or pool_level[sources - 1] <= tried:
-                continue
-            tried = pool_level[sources - 1]
-            for s in range(sources):
-                about[pool[s]] = _SOURCE
-                touched[s] = pool[s]
-            start = _middle(pool, sources, bits, about, length, queue)
-            goal, touches, unknown, heap = _search(
-                z, mark, walls, walled, marked, stride, cut_before, before, tried, start,
-                row0, col0, bits, step_mm, limit_mm, depth_m, unit, key, about, length, touched, sources, heap,
-            )  # fmt: skip
-            if unknown:
-                state[p] = OPEN
-            elif goal >= 0:
-                state[p] = BREACHED_FROM_POOL
-                cut_cell, cut_level, cuts = _trace_back(
-                    z, stride, tried, goal, row0, col0, bits, about, cut_cell, cut_level, cuts
-                )
-            for s in range(touches):
-                place = touched[s]
-                key[place] = _UNREACHED
-                about[place] = 0
-                length[place] = -1
-            if unknown or goal >= 0:
-                break
     return cut_cell[:cuts], cut_level[:cuts]
 
 
@@ -874,6 +909,8 @@ def fill_lakes(
         Whether all is filled.
     """
     o = neighbours(ncols + 2)
+    for seed in seeds:
+        mark[seed] &= _ALL - _RAISED
     z_bits = z.view(np.uint32)
     heap = np.empty(256, np.uint64)
     looked_at = 0

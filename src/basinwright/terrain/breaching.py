@@ -8,7 +8,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from basinwright.terrain.constraints import Constraints
+from basinwright.terrain.constraints import Constraints, levels
 
 _CHUNKS_PER_THREAD = 16
 _LOCAL_SHARE = 8
@@ -73,7 +73,6 @@ def breach(
     Pits
     """
     from basinwright.kernels import breach as kernel
-    from basinwright.kernels import fill
 
     mark, members, lake = work
     kernel.find_low_cells(z, nrows, ncols, mark)
@@ -100,21 +99,41 @@ def breach(
         before = z[cut_before]
         kernel.make_cuts(z, mark, cut_cell, cut_level)
         failed = np.flatnonzero(state == kernel.FAILED).astype(np.int32)
-
-        def search_again(first: int, last: int) -> tuple[np.ndarray, np.ndarray]:
-            return kernel.breach_pools(
-                z, mark, walls, walled, marked, ncols, members, bounds, failed, first, last,
-                step_mm, limit_mm, depth_m, cut_before, before, state,
-            )  # fmt: skip
-
-        kernel.make_cuts(z, mark, *_in_chunks(search_again, failed.size, threads))
-        if constraints is None:
+        if failed.size:
             seeds = members[bounds[failed]]
-            if not kernel.fill_lakes(z, mark, ncols, seeds, lake, z.size // _LOCAL_SHARE):
-                fill.fill_everywhere(z, nrows, ncols, mark, members, lake)
-                return _count(raised, state)
+
+            def filled_now() -> np.ndarray:
+                if constraints is not None:
+                    return levels(z, nrows, ncols, constraints)
+                return _filled(z, nrows, ncols, mark, seeds, lake)
+
+            filled = filled_now()
+            lowest_filled = kernel.block_minima(filled, nrows, ncols)
+
+            def search_again(first: int, last: int) -> tuple[np.ndarray, np.ndarray]:
+                return kernel.breach_pools(
+                    z, filled, mark, walls, walled, marked, ncols, lowest_filled, members, bounds, failed, first, last,
+                    step_mm, limit_mm, depth_m, cut_before, before, state,
+                )  # fmt: skip
+
+            kernel.make_cuts(z, mark, *_in_chunks(search_again, failed.size, threads))
+            if constraints is None:
+                z[:] = _filled(z, nrows, ncols, mark, seeds, lake)
     kernel.close_voids(z)
     return _count(raised, state)
+
+
+def _filled(z: np.ndarray, nrows: int, ncols: int, mark: np.ndarray, seeds: np.ndarray, lake: np.ndarray) -> np.ndarray:
+    """Filled elevations: from a cell of every pit, or of all terrain at once where the lakes are many."""
+    from basinwright.kernels import breach as kernel
+    from basinwright.kernels import fill
+
+    filled = z.copy()
+    if not kernel.fill_lakes(filled, mark, ncols, seeds, lake, z.size // _LOCAL_SHARE):
+        work = np.empty(z.size, np.uint8), np.empty(z.size, np.int32)
+        fill.fill_everywhere(filled, nrows, ncols, *work, lake)
+        np.copyto(filled, z, where=z == -np.inf)
+    return filled
 
 
 def _count(raised: int, state: np.ndarray) -> Pits:

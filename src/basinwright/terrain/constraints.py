@@ -54,6 +54,19 @@ class Constraints:
         return walls, fixed, ends
 
 
+def levels(z: np.ndarray, nrows: int, ncols: int, constraints: Constraints) -> np.ndarray:
+    """Elevations filled under constraints, -inf in voids and halo; see `drain` for the arguments."""
+    from basinwright.kernels import constraints as kernel
+
+    walls, fixed, ends = constraints.arrays(z.size)
+    void = np.isinf(z)
+    level = np.empty_like(z)
+    ground = np.where(void, np.float32(np.inf), z)
+    kernel.constrained_levels(ground, nrows, ncols, walls, fixed, ends & ~void, np.empty(z.size, np.int32), level)
+    level[void] = -np.inf
+    return level
+
+
 def drain(
     z: np.ndarray, nrows: int, ncols: int, dx_m: np.ndarray, dy_m: np.ndarray, constraints: Constraints
 ) -> tuple[np.ndarray, np.ndarray, int]:
