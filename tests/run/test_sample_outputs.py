@@ -306,7 +306,8 @@ def test_flags_in_both_tables(tables):
 def test_the_sample_shows_what_it_was_made_to_show(tables):
     """Its read-me says what each crossing teaches."""
     flags = {row["outlet_id"]: set(row["flags"].split()) for row in tables["outlets"]}
-    assert {"DEEP_FILL", "STORAGE_FILLED"} <= flags["TC-003"]
+    assert {"DEEP_FILL", "BREACH_INSIDE"} <= flags["TC-003"]
+    assert "STORAGE_FILLED" not in flags["TC-003"]
     assert {"SNAP_FAR", "AREAL_UNREDUCED"} <= flags["TC-004"]
     assert "LAKE_STORAGE" in flags["TC-005"]
     assert "EDGE_TOUCH" in flags["TC-006"]
@@ -399,6 +400,7 @@ def test_streams_have_the_stream_area(sample):
 
 RASTERS = {
     "conditioned": ("float32", "m"),
+    "conditioning_change": ("float32", "m"),
     "flow_direction": ("uint16", "degree"),
     "contributing_area": ("float64", "m2"),
 }
@@ -423,22 +425,30 @@ def test_rasters_agree_with_one_another_and_with_the_table(sample, tables):
     with rasterio.open(sample / "terrain" / "contributing_area.tif") as source:
         area = source.read(1)
     with rasterio.open(sample / "terrain" / "conditioned.tif") as source:
-        filled, void = source.read(1), source.nodata
+        conditioned, void = source.read(1), source.nodata
+    with rasterio.open(sample / "terrain" / "conditioning_change.tif") as source:
+        change = source.read(1)
     with rasterio.open(sample.parent / "dem.tif") as source:
         raw = source.read(1, masked=True)
 
     assert set(np.unique(direction)) <= {*range(0, 360, 45), 65534, 65535}
     missing = np.ma.getmaskarray(raw)
     np.testing.assert_array_equal(direction == 65535, missing)
-    np.testing.assert_array_equal(filled == void, missing)
+    np.testing.assert_array_equal(conditioned == void, missing)
+    np.testing.assert_array_equal(change == void, missing)
     np.testing.assert_array_equal(area < 0, missing)
-    assert (filled >= raw.data)[~missing].all()
+    np.testing.assert_array_equal(change[~missing], (conditioned - raw.data)[~missing])
+    assert change[~missing].min() >= -5.0  # breach_depth
+    about = json.loads((sample / "run.json").read_text(encoding="utf-8"))["terrain"]
+    assert about["cut_cells"] == (change[~missing] < 0).sum() > 100
+    assert about["filled_cells"] == (change[~missing] > 0).sum()
+    assert about["deepest_cut_m"] == -change[~missing].min()
 
     # Water never flows up; what leaves over all exits is the whole area; each cell passes its area on.
     row, col = np.nonzero(direction < 360)
     eighth = direction[row, col] // 45
     to = row + np.array([-1, -1, 0, 1, 1, 1, 0, -1])[eighth], col + np.array([0, 1, 1, 1, 0, -1, -1, -1])[eighth]
-    assert (filled[to] <= filled[row, col]).all()
+    assert (conditioned[to] <= conditioned[row, col]).all()
     assert area[direction == 65534].sum() == pytest.approx(100.0 * (~missing).sum(), rel=1e-12)
     passed_on = np.full(direction.shape, 100.0)
     np.add.at(passed_on, to, area[row, col])
