@@ -151,6 +151,10 @@ def condition_and_route_tiles(
     """
     if space.scratch is None:
         raise ValueError("tiles need a workspace with folders")
+    if conditioning.mode == "breach":
+        raise TerrainError(
+            'breaching by tiles is not yet in this version: set terrain.conditioning = "fill" or a larger compute.memory'
+        )
     scratch, workers = space.scratch, space.workers
     nrows, ncols = tiling.nrows, tiling.ncols
     dx, dy, cell_area = sizes_by_row(nrows, ncols, dx_m, dy_m, cell_area_m2)
