@@ -153,7 +153,7 @@ def condition_and_route_tiles(
         raise ValueError("tiles need a workspace with folders")
     if conditioning.mode == "breach":
         raise TerrainError(
-            'breaching by tiles is not yet in this version: set terrain.conditioning = "fill" or a larger compute.memory'
+            'breaching by tiles is not yet in this version: set terrain.conditioning = "fill" or more compute.memory'
         )
     scratch, workers = space.scratch, space.workers
     nrows, ncols = tiling.nrows, tiling.ncols
