@@ -5,6 +5,7 @@ import pytest
 
 from basinwright.basins import delineate
 from basinwright.basins.time_area import BIN_H, farthest_in_time, time_area_curves, travel_times_us
+from basinwright.kernels import forest, travel
 from basinwright.terrain import condition_and_route
 
 
@@ -108,3 +109,25 @@ def test_farthest_in_time_is_found_by_walking_too():
         terrain.grid(step_us)[:] = np.rint(slow * np.rint(steps * 1e6) / 1e6 / 3600.0 * 3.6e9)
         found = farthest_in_time(terrain, basins, travel_times_us(terrain, uneven))
         assert found.tolist() == brute_force(terrain, basins, step_us.tolist())
+
+
+def test_curves_are_thinned_alike_compiled_and_plain():
+    rng = np.random.default_rng(2)
+    sizes = rng.integers(1, 40, 12)
+    bounds = np.concatenate([[0], sizes.cumsum()]).astype(np.int64)
+    area, labels = rng.random(bounds[-1]), rng.permutation(12).astype(np.int32)
+    for function in (travel.thinned, travel.thinned.py_func):
+        curve, number, within = function(bounds, area, labels, 7)
+        for k, label in enumerate(labels):
+            total = np.cumsum(area[bounds[label] : bounds[label + 1]])
+            kept = np.arange(total.size - 1, -1, -(-(-total.size // 7)))[::-1]
+            assert np.array_equal(number[curve == k], kept)
+            assert np.array_equal(within[curve == k], total[kept])
+
+
+def test_largest_of_whole_basins_compiled_and_plain():
+    parent, order = np.array([2, 2, 4, 4, -1], np.int32), np.array([0, 1, 2, 3, 4], np.int32)
+    for function in (forest.combine_largest, forest.combine_largest.py_func):
+        largest = np.array([5, 9, 1, 3, 2], np.int64)
+        function(parent, order, largest)
+        assert largest.tolist() == [5, 9, 9, 3, 9]
