@@ -209,6 +209,9 @@ def test_ground_that_a_barrier_encloses_keeps_its_water_at_its_lowest_cell():
     assert found.facts["enclosed"] == 1
     assert np.argwhere(terrain.directions_grid == SINK).tolist() == [[39, AXIS]]
     assert cells_of(terrain)[39, AXIS] == 20 * 20
+    basins = delineate(terrain, terrain.cells_at(np.array([ROWS - 1]), np.array([AXIS])))
+    kept = sink_areas_km2(terrain, basins, sink_spills(terrain, found.constraints))
+    assert kept[0] * 1e4 == pytest.approx(400)  # over the levee at its lowest place, back into the valley
 
 
 def test_sinks_keep_their_water_and_the_area_that_would_spill_is_told():

@@ -15,6 +15,7 @@ from basinwright.kernels.constraints import offsets
 from basinwright.kernels.heap import enlarged, pop, push
 
 _TIE_CELLS = 1 << 31
+UNREACHED = -2
 
 
 @njit(cache=True, nogil=True, inline="always")
@@ -507,7 +508,8 @@ def spills(
     level : float32 array, shape (cells,)
         Work space.
     spill : int32 array, shape (sinks,)
-        Result: the first cell beyond the pass; -1 where it lies outside the raster or nowhere.
+        Result: the first cell beyond the pass; -1 where it lies outside the raster, `UNREACHED` where walls keep the
+        flood away.
     """
     stride = ncols + 2
     o = offsets(stride)
@@ -515,7 +517,7 @@ def spills(
     ties = np.empty(keys.size, np.int64)
     size = 0
     reached = np.zeros(spill.size, np.bool_)
-    spill[:] = NO_CELL
+    spill[:] = UNREACHED
     for c in range(z.size):
         level[c] = np.inf if z[c] == np.inf else np.nan
     for c in range(stride, z.size - stride):
@@ -534,8 +536,9 @@ def spills(
         size = pop(keys, ties, size)
         c = ties[size]
         flood = level[c]
-        if sink[c] >= 0:
+        if sink[c] >= 0 and not reached[sink[c]]:
             reached[sink[c]] = True
+            spill[sink[c]] = NO_CELL
         for k in range(8):
             n = c + o[k]
             back = (k + 4) & 7

@@ -239,7 +239,8 @@ class Sinks:
     cells : int32 array, shape (n,)
         Padded indices.
     spill_cells : int32 array, shape (n,)
-        The cell to which the sink's water would go if it rose until it spilt; -1 for out of the raster or nowhere.
+        The cell to which the sink's water would go if it rose until it spilt, over barriers only where they enclose
+        it; -1 for out of the raster.
         Cells that hang together are one sink.
     next_sink : int32 array, shape (n,)
         Position in `cells` of the one that the spilt water would come to next; -1 for none.
@@ -287,6 +288,11 @@ def sink_spills(terrain: Terrain, constraints: Constraints | None) -> Sinks:
     level = np.empty(sink.size, np.float32)
     spill = np.empty(int(number.max()) + 1, np.int32)
     kernel.spills(terrain.conditioned_m, terrain.nrows, terrain.ncols, walls, fixed, sink, level, spill)
+    if (enclosed := spill == kernel.UNREACHED).any():
+        over = np.empty_like(spill)
+        walls[:] = 0
+        kernel.spills(terrain.conditioned_m, terrain.nrows, terrain.ncols, walls, fixed, sink, level, over)
+        spill = np.where(enclosed, np.maximum(over, NO_CELL), spill)
     spill_cells = spill[number]
     next_sink = np.where(spill_cells >= 0, at_cell[spill_cells], NO_CELL).astype(np.int32)
     return Sinks(cells, spill_cells, next_sink)
