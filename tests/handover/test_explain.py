@@ -20,7 +20,7 @@ pytestmark = pytest.mark.xdist_group("sample")
 
 MEASURED = {
     "outlets": "snap centroid_length path_length_raw basin_slope_pct capacity reach_length reach_fall reach_area "
-    "critical_duration_h tc_longest_in_time_h drainage_density",
+    "critical_duration_h tc_longest_in_time_h drainage_density sink_area",
     "segments": "segment from to",
     "cover_shares": "area",
     "time_area": "travel_time_h area",
@@ -126,9 +126,11 @@ def test_each_regime_down_to_its_source(view):
         "open_water": ("travel time through lakes", "option channel.open_water_depth"),
     }
     for row in view.rows("segments", "TC-005"):
+        if row["regime"] not in sources:
+            continue
         found = explain(view, "TC-005", "segments.travel_time_h", depth=9, where={"segment": row["segment"]})
         text = as_text(found)
-        for words in sources.pop(row["regime"], ()):
+        for words in sources.pop(row["regime"]):
             assert words in text, (row["regime"], words)
     assert not sources
 

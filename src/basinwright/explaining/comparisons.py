@@ -8,7 +8,18 @@ import numpy as np
 
 from basinwright.explaining.reading import Here
 from basinwright.explaining.records import Choice, Get, How, Value, cell
-from basinwright.tables import CAPACITY, CELL_SIZES, OUTLETS, REGIONAL, SCENARIOS, SWINGS, UNCERTAINTY, read_csv
+from basinwright.tables import (
+    CAPACITY,
+    CELL_SIZES,
+    EDITS,
+    OUTLETS,
+    REGIONAL,
+    REVIEW,
+    SCENARIOS,
+    SWINGS,
+    UNCERTAINTY,
+    read_csv,
+)
 
 _OUTLET = How("the outlet that the row is of")
 _PERIOD = How("a return period of the project's storm")
@@ -184,7 +195,10 @@ CAPACITY_HOWS: Mapping[str, Choice] = {
     "capacity_basis": How("copied from outlets.csv"),
 }
 
+_BY_HAND = How("written down when a person changed or judged something, in review or in the tables")
+
 COMPARISON_HOWS: Mapping[str, Mapping[str, Choice]] = {
+    **{table.name: {column.stem: _BY_HAND for column in table.columns} for table in (EDITS, REVIEW)},
     SCENARIOS.name: SCENARIO_HOWS,
     CELL_SIZES.name: CELL_SIZE_HOWS,
     UNCERTAINTY.name: UNCERTAINTY_HOWS,

@@ -511,6 +511,10 @@ OUTLET_HOWS: Mapping[str, Choice] = {
         {"f": _areal, "A": cell("area", "km2")},
         source="G. Leclerc and J. C. Schaake, MIT Report 142, 1972",
     ),
+    "sink_area": How(
+        "true areas of the cells whose water ends in a polygon of terrain.sinks that would spill towards this outlet",
+        places=ground.basin_places,
+    ),
     "drainage_density": How(
         "length of the channels in the basin over its area; channels begin at terrain.stream_area",
         places=ground.basin_places,
