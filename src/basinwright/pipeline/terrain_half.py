@@ -498,19 +498,18 @@ def _tables(inputs: Inputs, stages: Mapping[str, Entry], hydrography: Entry | No
     failed = _failures(snapped, measures, shares.failed, depths)
     fine = np.array([i not in failed for i in range(len(inputs.points))], dtype=bool)
     ids = np.array(inputs.points.ids, dtype=object)
-    measures |= _times_of_both(
-        inputs, ids, _of_fine(cut.segments, ids, fine), _of_fine(along_other.segments, ids, fine)
+    segments, other_segments = (
+        _as_frame(SEGMENTS, _of_fine(each.segments, ids, fine) | {"edited": None}, project)
+        for each in (cut, along_other)
     )
+    measures |= _times_of_both(inputs, ids.tolist(), segments, other_segments)
     marks = {"sheet_limited": cut.sheet_limited, **vars(snapped), **measures}
     marks["unmapped_m"] = _unmapped_m(cut.segments, len(inputs.points)) if channel_n is not None else np.zeros(1)
     flags = _flags(inputs, marks, shares, failed, stages["channels"].values("doubt"))
-    tables = {
-        OUTLETS: _outlet_rows(inputs, grid, ids, snapped, measures, shares.open_water_pct, depths, fine),
-        SEGMENTS: _of_fine(cut.segments, ids, fine) | {"edited": None},
-        COVER_SHARES: _of_fine(shares.rows, ids, fine),
-    }
-    for table, columns in tables.items():
-        draft.frame(table.name, _as_frame(table, columns, project))
+    outlets = _outlet_rows(inputs, grid, ids, snapped, measures, shares.open_water_pct, depths, fine)
+    draft.frame(OUTLETS.name, _as_frame(OUTLETS, outlets, project))
+    draft.frame(SEGMENTS.name, segments)
+    draft.frame(COVER_SHARES.name, _as_frame(COVER_SHARES, _of_fine(shares.rows, ids, fine), project))
     draft.values("flags", [list(flag) for flag in flags])
     draft.values(
         "held",
@@ -589,15 +588,12 @@ def _other_paths(inputs: Inputs, stages: Mapping[str, Entry], terrain: Terrain, 
 
 
 def _times_of_both(
-    inputs: Inputs, ids: NDArray[Any], counted: Mapping[str, Any], other: Mapping[str, Any]
+    inputs: Inputs, ids: list[str], counted: pd.DataFrame, other: pd.DataFrame
 ) -> dict[str, NDArray[np.float64]]:
     """Return the travel times along the paths longest in length and longest in time, by their segments [h]."""
     project, design = inputs.project, inputs.design
     settings = Settings(project, inputs.scheme, design.storm, design.ddf)
-    own_h, other_h = (
-        path_times_h(_as_frame(SEGMENTS, {**columns, "edited": None}, project), ids.tolist(), settings)
-        for columns in (counted, other)
-    )
+    own_h, other_h = (path_times_h(segments, ids, settings) for segments in (counted, other))
     other_h = np.where(np.isnan(other_h), own_h, other_h)  # one path is the longest in both senses
     in_length_h, in_time_h = (own_h, other_h) if project.flow_path.farthest == "length" else (other_h, own_h)
     return {"tc_longest_in_length_h": in_length_h, "tc_longest_in_time_h": in_time_h}
