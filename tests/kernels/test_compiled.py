@@ -170,11 +170,10 @@ def everything(seed, pick):
     pick(travel.combine_curves)(parent, order, first_bin, curve_bounds, curve)
     out |= {"receives": receives, "length": length, "fall": fall, "source": source, "time": time_us, "curve": curve}
     channels, below = pick(network.channel_graph)(code, area, NCOLS, 2.5 * AREA[0])
-    strahler, donors = pick(network.strahler_orders)(below, area[channels] >= 3.5 * AREA[0])
+    strahler, donors = pick(network.strahler_orders)(below)
     stream, drop = pick(network.stream_drops)(below, strahler, z[channels].astype(np.float64))
-    _, joins = pick(network.strahler_orders)(below, np.ones(below.size, np.bool_))
-    heads = np.flatnonzero((joins != 1) & (below >= 0))
-    reach_bounds, reach_path, to_reach = pick(network.trace_reaches)(channels, below, joins, heads)
+    heads = np.flatnonzero((donors != 1) & (below >= 0))
+    reach_bounds, reach_path, to_reach = pick(network.trace_reaches)(channels, below, donors, heads)
     channel_um = np.zeros(k, np.int64)
     pick(network.add_channel_length)(code, area, label, NCOLS, step_um, 2.5 * AREA[0], channel_um)
     out |= {"channels": channels, "below": below, "strahler": strahler, "donors": donors, "stream": stream}

@@ -20,7 +20,7 @@ def random_tree(rng, cells):
 
 
 def whole(below):
-    return network.strahler_orders(below, np.ones(below.size, bool))
+    return network.strahler_orders(below)
 
 
 @pytest.mark.parametrize("order", [1, 2, 3, 6])

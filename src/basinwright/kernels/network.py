@@ -96,7 +96,7 @@ def mark_below(directions: np.ndarray, ncols: int, mark: np.ndarray) -> None:
 
 
 @njit(cache=True, nogil=True)
-def strahler_orders(below: np.ndarray, channel: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+def strahler_orders(below: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Strahler order of every channel cell, and how many channels join in it.
 
     A cell without channel above is of order 1; where two of the highest order that joins meet, the order rises by one
@@ -105,21 +105,16 @@ def strahler_orders(below: np.ndarray, channel: np.ndarray) -> tuple[np.ndarray,
     Parameters
     ----------
     below : int32 array, shape (m,)
-    channel : bool array, shape (m,)
-        The cells to look at; all that lie below one of them are among them.
 
     Returns
     -------
     strahler : uint8 array, shape (m,)
-        0 where not looked at.
     donors : uint8 array, shape (m,)
     """
     strahler = np.zeros(below.size, np.uint8)
     donors = np.zeros(below.size, np.uint8)
     twice = np.zeros(below.size, np.bool_)
     for i in range(below.size):
-        if not channel[i]:
-            continue
         if donors[i] == 0:
             strahler[i] = 1
         elif twice[i]:
@@ -143,7 +138,7 @@ def stream_drops(below: np.ndarray, strahler: np.ndarray, elevation_m: np.ndarra
     ----------
     below : int32 array, shape (m,)
     strahler : uint8 array, shape (m,)
-        As `strahler_orders` gives it: 0 where there is no channel.
+        As `strahler_orders` gives it.
     elevation_m : float64 array, shape (m,) [m]
 
     Returns
@@ -157,8 +152,6 @@ def stream_drops(below: np.ndarray, strahler: np.ndarray, elevation_m: np.ndarra
     drop_m = np.empty(below.size)
     found = 0
     for i in range(below.size):
-        if strahler[i] == 0:
-            continue
         if np.isnan(top_m[i]):
             top_m[i] = elevation_m[i]
         b = below[i]

@@ -125,7 +125,7 @@ def channel_reaches(terrain: Terrain, stream_area_km2: float, channels: np.ndarr
 
     area_m2, least_m2 = channel_test(terrain, stream_area_km2, channels)
     cells, below = network.channel_graph(terrain.directions, area_m2, terrain.ncols, least_m2)
-    strahler, donors = network.strahler_orders(below, np.ones(cells.size, np.bool_))
+    strahler, donors = network.strahler_orders(below)
     heads = np.flatnonzero((donors != 1) & (below >= 0))
     heads = heads[np.argsort(cells[heads])]
     bounds, path, to_reach = network.trace_reaches(cells, below, donors, heads)
@@ -216,7 +216,10 @@ def drop_test(terrain: Terrain) -> list[DropComparison]:
     area_m2, elevation_m = terrain.area_m2[cells], terrain.conditioned_m[cells].astype(np.float64)
     tested: list[DropComparison] = []
     for area_km2 in candidates:
-        strahler, _ = network.strahler_orders(below, area_m2 >= stream_area_m2(area_km2))
+        kept = area_m2 >= stream_area_m2(area_km2)  # all below a kept cell are kept too
+        below = np.append(np.cumsum(kept, dtype=np.int32) - 1, np.int32(-1))[below[kept]]
+        area_m2, elevation_m = area_m2[kept], elevation_m[kept]
+        strahler, _ = network.strahler_orders(below)
         order, drop_m = network.stream_drops(below, strahler, elevation_m)
         first, higher = drop_m[order == 1], drop_m[order > 1]
         if first.size < LEAST_STREAMS[0] or higher.size < LEAST_STREAMS[1]:
