@@ -82,6 +82,8 @@ class Explanation:
         How it came to be.
     formula, filled : str
         The formula, and the same with the numbers in the place of the symbols; empty where it was measured or given.
+    formula_unit : str
+        Unit of what the formula gives, where it is not the column's.
     recomputed : float or None
         What the formula gives, in the unit of the column.
     agrees : bool or None
@@ -110,6 +112,7 @@ class Explanation:
     words: str
     formula: str = ""
     filled: str = ""
+    formula_unit: str = ""
     recomputed: float | None = None
     agrees: bool | None = None
     source: str = ""
@@ -231,6 +234,7 @@ def _explained(here: Here, depth: int, with_flags: bool = False) -> Explanation:
         words=record.words if here.text else f"empty: {_why_empty(here)} ({record.words})",
         formula=readable(record.formula) if values else "",
         filled=filled(record.formula, numbers) if values else "",
+        formula_unit=record.unit if values and record.unit != here.unit else "",
         recomputed=recomputed,
         agrees=None if recomputed is None else _agrees(here.text, recomputed),
         source=str(record.source),

@@ -27,7 +27,14 @@ def _lines(e: Explanation, level: int) -> list[str]:
     unit = "" if e.unit in ("", "1") else f" {e.unit}"
     lines = [f"{e.column} = {_shown(e.value)}{unit}    [{where}]"]
     facts: list[tuple[str, str]] = [("is", e.meaning), ("how", e.words)]
-    facts += [("formula", f"{e.column} = {e.formula}"), ("filled", e.filled)] if e.formula else []
+    facts += (
+        [
+            ("formula", f"{e.column} = {e.formula}" + (f"  [{e.formula_unit}]" if e.formula_unit else "")),
+            ("filled", e.filled),
+        ]
+        if e.formula
+        else []
+    )
     if e.recomputed is not None:
         verdict = "the table's figure" if e.agrees else f"NOT the table's {e.value}"
         facts.append(("gives", f"{figure(e.recomputed)}{unit}: {verdict}"))
