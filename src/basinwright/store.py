@@ -11,6 +11,7 @@ the new one stands. `RunFolder.recover` puts right whatever a crash left.
 
 from __future__ import annotations
 
+import errno
 import fcntl
 import hashlib
 import json
@@ -34,6 +35,7 @@ if TYPE_CHECKING:
 T = TypeVar("T")
 
 STORE = ".store"
+_TRIAL_BYTES = 4_000_000
 MANIFEST = "run.json"
 
 
@@ -110,10 +112,21 @@ class Draft:
         self.folder = folder
 
     def array(self, name: str, array: np.ndarray) -> None:
-        """Keep an array."""
+        """Keep an array.
+
+        Raises
+        ------
+        OSError
+            Where the disk did not take all of it.
+        """
         import numpy as np
 
-        np.save(self.folder / f"{name}.npy", array, allow_pickle=False)
+        path = self.folder / f"{name}.npy"
+        np.save(path, array, allow_pickle=False)
+        try:  # numpy does not notice when its last few kilobytes are not taken
+            np.load(path, mmap_mode="r", allow_pickle=False)
+        except (ValueError, EOFError):
+            raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC)) from None
 
     def frame(self, name: str, frame: pd.DataFrame) -> None:
         """Keep a table of numbers and texts."""
@@ -434,6 +447,48 @@ class RunFolder:
             elif source.exists():
                 _link(source, self.partial / name)
         return self.partial
+
+    @contextmanager
+    def building(self, *, keep: bool = False) -> Iterator[None]:
+        """Build the run: whatever a library makes of a full disk is told as that, and nothing is put in place.
+
+        Parameters
+        ----------
+        keep : bool
+            Whether what stands of an unfinished run stays, to be continued.
+
+        Raises
+        ------
+        PublishError
+            Where the place cannot be written.
+        """
+        try:
+            yield
+        except Exception as error:
+            full = self._unwritable() or (error if isinstance(error, OSError) else None)
+            if not keep:
+                self.discard()
+            if full is None:
+                raise
+            raise PublishError(self._no_room(full)) from error
+
+    def _unwritable(self) -> OSError | None:
+        """Try to write a few megabytes, and return what the system says where it cannot."""
+        trial = self.partial / "trial"
+        try:
+            trial.write_bytes(b"\1" * _TRIAL_BYTES)
+        except OSError as error:
+            return error
+        finally:
+            with suppress(OSError):
+                trial.unlink()
+        return None
+
+    def _no_room(self, error: OSError) -> str:
+        reason = error.strerror or str(error)
+        free = shutil.disk_usage(next(folder for folder in self.final.parents if folder.is_dir())).free
+        told = f"{self.final}: folder: cannot be written ({reason}; {free / 1e6:,.0f} MB free)"
+        return f"{told}: make room, then repeat the command (run: with --resume)"
 
     def discard(self) -> None:
         """Take away what was built, and the folders that were made for it."""

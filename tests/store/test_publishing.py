@@ -3,6 +3,8 @@
 import json
 import os
 import random
+import re
+import resource
 import shutil
 import signal
 import sys
@@ -57,6 +59,13 @@ def county(tmp_path_factory):
     file = make_project(folder, v_valley(40, 31, 0.05, 0.02) + rough, {"A": (39, 15), "B": (20, 15)})
     pipeline.run(file, summary_only=True)
     return folder
+
+
+@pytest.fixture(scope="module")
+def whole(county, tmp_path_factory):
+    """The files of a run with layers, rasters and report."""
+    out = tmp_path_factory.mktemp("whole") / "out"
+    return files_of(pipeline.run(county / "project.toml", out=out).folder)
 
 
 @pytest.fixture
@@ -201,7 +210,7 @@ class TestCrash:
         total = count_steps(work)
         reset()
         steps = sorted({*range(0, total, max(1, total // 4)), *range(total - 6, total)})
-        seen = self.check(work, mend, final, before, after, reset, steps, kills=4, seconds=seconds)
+        seen = self.check(work, mend, final, before, after, reset, steps, kills=10, seconds=seconds)
         assert {"old", "new"} <= seen
 
     def test_first_run(self, project):
@@ -219,8 +228,32 @@ class TestCrash:
             shutil.rmtree(final, ignore_errors=True)
 
         total = count_steps(work)
-        seen = self.check(work, mend, final, None, after, reset, range(0, total, max(1, total // 6)), kills=2)
+        seen = self.check(work, mend, final, None, after, reset, range(0, total, max(1, total // 6)), kills=6)
         assert "none" in seen
+
+    def test_a_run_with_everything(self, project):
+        """Layers, rasters, report, a scenario and a coarser cell size, killed at random moments."""
+        with project.open("a", encoding="utf-8") as stream:
+            stream.write('[[scenario]]\nname = "wet"\nrunoff = { moisture = "III" }\n')
+        final = project.parent / "out"
+        shutil.rmtree(final)
+
+        def work():
+            pipeline.run(project, also_at=["20 m"])
+
+        def mend():
+            pipeline.run(project, also_at=["20 m"], resume=True)
+
+        def reset():
+            shutil.rmtree(final, ignore_errors=True)
+
+        work()
+        reset()
+        started = time.monotonic()
+        work()
+        seconds = time.monotonic() - started
+        after = files_of(final)
+        self.check(work, mend, final, None, after, reset, [], kills=4, seconds=seconds)
 
     @pytest.mark.parametrize("complete", [True, False])
     def test_between_the_two_renames(self, project, complete):
@@ -237,6 +270,52 @@ class TestCrash:
         assert ((folder.final / "outlets.csv").read_text() == "new") == complete
         assert complete or files_of(folder.final) == old
         assert not folder.previous.exists()
+
+
+class TestFullDisk:
+    """A disk that takes no more: nothing is put in place, the words say what to do, and the run goes on afterwards."""
+
+    @pytest.mark.parametrize("most_bytes", [1_000, 9_000, 30_000, 150_000])
+    def test_run(self, project, whole, most_bytes):
+        final, said = project.parent / "out", project.parent / "said"
+        before = files_of(final)
+
+        def work():
+            resource.setrlimit(resource.RLIMIT_FSIZE, (most_bytes, most_bytes))
+            try:
+                pipeline.run(project, overwrite=True)
+            except PublishError as error:
+                said.write_text(str(error))
+
+        assert in_a_fork(work) == 0
+        what = r"out: folder: cannot be written \(File too large; [\d,]+ MB free\): make room, then .*--resume"
+        assert re.search(what, said.read_text())
+        assert files_of(final) == before
+        pipeline.run(project, resume=True)
+        assert files_of(final) == whole
+
+    def test_retime_leaves_nothing_behind(self, project):
+        final = project.parent / "out"
+        before = files_of(final)
+
+        def work():
+            resource.setrlimit(resource.RLIMIT_FSIZE, (1_000, 1_000))
+            with pytest.raises(PublishError, match="File too large"):
+                pipeline.retime(final)
+
+        assert in_a_fork(work) == 0
+        assert files_of(final) == before
+        assert around(final) == []
+
+    def test_what_is_no_matter_of_the_disk_is_not_told_as_one(self, project, monkeypatch):
+        from basinwright.outputs import writing
+
+        def failing(*_):
+            raise ZeroDivisionError
+
+        monkeypatch.setattr(writing, "write_tables", failing)
+        with pytest.raises(ZeroDivisionError):
+            pipeline.run(project, overwrite=True, summary_only=True)
 
 
 class TestResume:

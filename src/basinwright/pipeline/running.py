@@ -9,7 +9,7 @@ from importlib.resources import files
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from basinwright.errors import BasinwrightError, InputRejected, PublishError, RangeError
+from basinwright.errors import BasinwrightError, InputRejected, RangeError
 from basinwright.outputs.summary import Outcome
 from basinwright.store import STORE, RunFolder, Store
 from basinwright.tables import OUTLETS, as_text
@@ -89,7 +89,8 @@ def run(
         edits = _edits_of(folder.final) if resume and not overwrite else None
         partial = folder.begin(keep=resume)
         try:
-            outcome = _build(inputs, folder, partial, resume, summary_only, sizes, edits, say)
+            with folder.building(keep=True):
+                outcome = _build(inputs, folder, partial, resume, summary_only, sizes, edits, say)
         except InputRejected:
             folder.discard()
             raise
@@ -97,8 +98,6 @@ def run(
             folder.discard()
             what, fix = f"cannot be computed: {error}", "change what it names"
             raise InputRejected.one(project_file.name, "options", what, fix) from error
-        except OSError as error:
-            raise PublishError(_no_room(folder.final, error)) from error
         folder.publish()
     return outcome
 
@@ -145,11 +144,6 @@ def _refuse_strangers(edits: Edited, record: Record, ground: Ground) -> None:
             what = f"holds a person's edits of outlet {outlet_id!r}, whose basin or path is another one now"
             fix = "drop the edits by adding --overwrite, or run into another folder"
             raise InputRejected.one("run", "folder", what, fix)
-
-
-def _no_room(place: Path, error: OSError) -> str:
-    reason = error.strerror or str(error)
-    return f"{place}: folder: cannot be written ({reason}): make room, then repeat the command (run: with --resume)"
 
 
 def _build(
@@ -266,7 +260,7 @@ def retime(run_dir: Path, *, revise: Callable[[Path], None] | None = None, say: 
             what, fix = f"cannot be computed: {error}", "undo the edit that gave this number"
             raise InputRejected.one(str(folder.final), "tables", what, fix) from error
         say("Writing")
-        try:
+        with folder.building():
             partial = place if revise is not None else folder.begin_copy()
             scenarios = []
             for name, scenario in kept.items():
@@ -291,8 +285,6 @@ def retime(run_dir: Path, *, revise: Callable[[Path], None] | None = None, say: 
                 say("Writing the report")
                 write_report(partial, about, jobs=project.compute.jobs, say=say)
             manifest.write(partial, about)
-        except OSError as error:
-            raise PublishError(_no_room(folder.final, error)) from error
         folder.publish()
     return Outcome(folder.final, project, results.tables["outlets"], results.flags, variants.told(scenarios))
 
@@ -335,7 +327,7 @@ def report(run_dir: Path, outlet_id: str | None = None, *, say: Say = _silent) -
                 what, fix = "was edited after it was computed", f"run: basinwright retime {run_dir}"
                 raise InputRejected.one(str(path), "file", what, fix)
         say("Writing the report")
-        try:
+        with folder.building():
             partial = folder.begin_copy()
             if outlet_id is None:
                 write_report(partial, about, jobs=int(about["project"]["compute"]["jobs"]), say=say)
@@ -343,11 +335,6 @@ def report(run_dir: Path, outlet_id: str | None = None, *, say: Say = _silent) -
             else:
                 page = write_outlet_page(partial, about, outlet_id).relative_to(partial)
             manifest.write(partial, about)
-        except InputRejected:
-            folder.discard()
-            raise
-        except OSError as error:
-            raise PublishError(_no_room(folder.final, error)) from error
         folder.publish()
     return folder.final / page
 
