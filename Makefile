@@ -3,7 +3,7 @@ PYTHON ?= python3
 BIN := .venv/bin
 OUT ?= basinwright-demo
 
-.PHONY: demo test lint format bench docs mutants lock clean
+.PHONY: demo test lint format bench docs packages mutants lock clean
 
 demo: .venv/runtime-ready
 	$(BIN)/basinwright demo $(OUT)
@@ -23,6 +23,10 @@ format: .venv/dev-ready
 
 bench: .venv/dev-ready
 	$(BIN)/python tests/bench/bench.py --out bench.json
+
+# Wheel and source distribution in bare environments of every supported Python that is here: a quarter of an hour.
+packages: .venv/dev-ready
+	.ci/packages
 
 # The generated pages of docs/.
 docs: .venv/dev-ready
