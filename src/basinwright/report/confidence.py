@@ -33,13 +33,16 @@ def input_name(key: str) -> str:
     return _INPUTS.get(key, plain(key))
 
 
-def _end(key: str, value: float) -> str:
+def _end(row: Row, value: float) -> str:
     """Return an end of an input's range as it is applied, in a word."""
+    key = row["input"]
+    if key == "cell_size":
+        return f"{figure(value)} {row['applied'].rpartition(', ')[2]}"
     if key == "curve_number":
         return f"{value:+g}".replace("-", "−")
     if key == "stage":
         return "bankfull" if value == 1.0 else f"{value:g} of it"
-    return f"{value:g}" if key in ("peak_rate_factor", "cell_size") else f"× {value:.3g}"
+    return f"{value:g}" if key == "peak_rate_factor" else f"× {value:.3g}"
 
 
 def bands(run: Run, outlet: Outlet) -> dict[str, Any] | None:
@@ -121,7 +124,7 @@ def _tornado(rows: list[Row], ends: tuple[str, str], at: float, title: str, unit
     for i, row in enumerate(rows):
         y = top + step * i
         name, first, second = input_name(row["input"]), row[ends[0]], row[ends[1]]
-        labels = {first: _end(row["input"], row["low"]), second: _end(row["input"], row["high"])}
+        labels = {first: _end(row, row["low"]), second: _end(row, row["high"])}
         small, large = min(first, second), max(first, second)
         parts.append(text(left - 8, y + 19, name if row["sampled"] else f"{name} *", anchor="end"))
         told.append(f"{name} {labels.get(small, '')}: {figure(small)}, {labels.get(large, '')}: {figure(large)} {unit}")
