@@ -482,6 +482,17 @@ def cover_land(rng: np.random.Generator, at: Setting) -> NDArray[np.uint8]:
     return cover
 
 
+def grow_town(cover: NDArray[np.uint8]) -> NDArray[np.uint8]:
+    """The same land with the town grown over fields and pasture to 1.5 km round its middle, denser inside 0.9 km."""
+    x, y = cell_centres(cover.shape)
+    from_middle = np.hypot(x - TOWN[0], 1.3 * (y - TOWN[1]))
+    open_land = np.isin(cover, (71, 81, 82))
+    grown = cover.copy()
+    grown[open_land & (from_middle < 1.5)] = 22
+    grown[(open_land | np.isin(cover, (21, 22))) & (from_middle < 0.9)] = 23
+    return grown
+
+
 SOIL_GROUPS = ("A", "B", "C", "D", "A/D", "B/D", "C/D")
 
 
@@ -609,7 +620,9 @@ def main(folder: Path) -> None:
     natural = measure(errors, z, lake)
     setting = describe(z, floor, lake)
     write_terrain(folder / "dem.tif", deliver(build_embankment(natural)))
-    write_cover(folder / "landcover.tif", cover_land(cover, setting))
+    land = cover_land(cover, setting)
+    write_cover(folder / "landcover.tif", land)
+    write_cover(folder / "landcover_proposed.tif", grow_town(land))
     write_soils(folder / "soils.gpkg", lay_soils(soils, setting))
     write_layer(folder / "outlets.gpkg", "outlets", place_crossings(drain(natural, CELL_M)))
 
