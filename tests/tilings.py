@@ -11,7 +11,10 @@ from basinwright.terrain.tiling import Tiling
 from basinwright.terrain.workspace import Workspace
 
 SAME = ("conditioned_m", "directions", "area_m2", "step_um", "row_area_m2")
-SAME_FACTS = ("data_cells", "flat_cells", "filled_cells", "filled_volume_m3", "deepest_fill_m", "largest_rounding_m")
+SAME_FACTS = (
+    "data_cells", "flat_cells", "filled_cells", "filled_volume_m3", "deepest_fill_m", "cut_cells", "cut_volume_m3",
+    "deepest_cut_m", "raised_pits", "pits", "breached", "breached_second", "failed", "largest_rounding_m",
+)  # fmt: skip
 
 
 def cell_sizes(nrows, geographic=False):

@@ -94,6 +94,7 @@ Time = Annotated[float, _read("time"), _positive, _write("time")]
 TimeOrNone = Annotated[float, _read("time"), Field(ge=0), _write("time")]
 TimeOrAuto = Annotated[float | str, _read("time", "auto"), _positive, _write("time")]
 Share = Annotated[float, _read("share"), Field(ge=0, le=1), _write("share")]
+MemoryOrAuto = Annotated[float | str, _read("memory", "auto"), _positive, _write("memory")]
 Plain = Annotated[float, Field(allow_inf_nan=False, strict=True)]
 
 
@@ -467,7 +468,7 @@ class Compute(Section):
 
     jobs: Annotated[int, Field(ge=1, strict=True)] = 2
     scheduler: str = ""
-    memory: str = "auto"
+    memory: MemoryOrAuto = "auto"
 
 
 _SCENARIO_NAME = re.compile(r"\w([\w .+-]{0,58}\w)?")
@@ -521,13 +522,6 @@ class Project(Section):
     def resolved(self) -> dict[str, Any]:
         """Return every option with its value, quantities with units: itself the content of a project file."""
         return self.model_dump(mode="json", exclude_none=True)
-
-
-LATER: tuple[tuple[str, str, Callable[[Any], bool], str], ...] = (
-    ("compute", "scheduler", lambda value: value != "", "leave it empty"),
-    ("compute", "memory", lambda value: value != "auto", 'use "auto"'),
-)
-"""Options of later versions: section, key, whether a value asks for what is not served yet, what to do instead."""
 
 
 @dataclass(frozen=True)
@@ -609,11 +603,6 @@ def read_content(data: dict[str, Any], file: str) -> Reading:
         project = _sound_part(data, entries)
     for key, what, fix in _conflicts(data):
         problems.setdefault(key, Problem(file, key, what, fix))
-    for section, key, asks, fix in LATER:
-        owner = getattr(project, section) if section else project
-        if owner is not None and asks(getattr(owner, key)):
-            name = f"{section}.{key}".lstrip(".")
-            problems.setdefault(name, Problem(file, name, "not yet in this version", fix))
     base = list(problems.values())
     scenarios = [_read_scenario(data, entry, number, file, base) for number, entry in enumerate(_scenarios(data), 1)]
     found = [problem for scenario in scenarios for problem in scenario.problems]

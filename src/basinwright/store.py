@@ -110,9 +110,11 @@ class Draft:
 
     def __init__(self, folder: Path) -> None:
         self.folder = folder
+        self.workers_peak_mb = 0.0
+        """What other processes held for this stage at most."""
 
     def array(self, name: str, array: np.ndarray) -> None:
-        """Keep an array.
+        """Keep an array; one that was made in its place, by mapping that file, is there already.
 
         Raises
         ------
@@ -122,6 +124,9 @@ class Draft:
         import numpy as np
 
         path = self.folder / f"{name}.npy"
+        mapped = isinstance(array, np.memmap) and not isinstance(array.base, np.ndarray)  # nor a part of one
+        if mapped and array.filename == path.resolve():  # type: ignore[attr-defined]
+            return
         np.save(path, array, allow_pickle=False)
         try:  # numpy does not notice when its last few kilobytes are not taken
             np.load(path, mmap_mode="r", allow_pickle=False)
@@ -230,9 +235,11 @@ class Store:
             draft = _draft(final)
             shutil.rmtree(draft, ignore_errors=True)
             draft.mkdir()
-            _reset_peak_memory()
-            make(Draft(draft))
-            peak = _peak_memory_mb()
+            reset_peak_memory()
+            work = Draft(draft)
+            make(work)
+            own_peak = peak_memory_mb()
+            peak = None if own_peak is None else round(own_peak + work.workers_peak_mb, 1)
             draft.rename(final)
         self._record(name, key, reused, started, peak)
         return Entry(name, key, final)
@@ -248,9 +255,9 @@ class Store:
         """
         self._say(title)
         started = time.perf_counter()
-        _reset_peak_memory()
+        reset_peak_memory()
         yield
-        self._record(name, _key(name, depends_on), False, started, _peak_memory_mb())
+        self._record(name, _key(name, depends_on), False, started, peak_memory_mb())
 
     @contextmanager
     def running(self, variant: str) -> Iterator[None]:
@@ -288,12 +295,14 @@ def _key(name: str, depends_on: Mapping[str, Any]) -> str:
     return hashlib.sha256(canonical([name, code_version(), depends_on])).hexdigest()[:20]
 
 
-def _reset_peak_memory() -> None:
+def reset_peak_memory() -> None:
+    """Forget the most memory that this process has held, where the system can."""
     with suppress(OSError):  # Linux: forget the high-water mark, so that each stage has its own
         Path("/proc/self/clear_refs").write_text("5")
 
 
-def _peak_memory_mb() -> float | None:
+def peak_memory_mb() -> float | None:
+    """Return the most memory that this process has held since the last reset [MB], mapped files included."""
     try:
         status = Path("/proc/self/status").read_text()
     except OSError:

@@ -1,8 +1,8 @@
 """The closed table of units: what a user may write, and the two systems in which results appear.
 
 Inside, lengths are metres, areas km2, rainfall depths mm, times hours, speeds m/s, flows m3/s, shares
-fractions. Factors are exact by definition: international foot 0.3048 m and inch 25.4 mm (NIST SP 811, 2008
-edition, appendix B.8), mile 5280 ft, acre 43 560 ft2.
+fractions, computer memory MB (a million bytes). Factors are exact by definition: international foot 0.3048 m and
+inch 25.4 mm (NIST SP 811, 2008 edition, appendix B.8), mile 5280 ft, acre 43 560 ft2.
 """
 
 from __future__ import annotations
@@ -47,6 +47,8 @@ UNITS: dict[str, tuple[str, float]] = {
     "m3/s": ("flow", 1.0),
     "cfs": ("flow", M3S_PER_CFS),
     "%": ("share", 0.01),
+    "MB": ("memory", 1.0),
+    "GB": ("memory", 1000.0),
 }
 
 INSIDE = {
@@ -57,6 +59,7 @@ INSIDE = {
     "speed": "m/s",
     "flow": "m3/s",
     "share": "1",
+    "memory": "MB",
 }
 """The unit used inside, by dimension."""
 

@@ -15,7 +15,7 @@ def uneven(rows, length_m, fall_m, area_km2, source):
     return (length_m + 7.0 * fall_m + np.where(source, 11.0, 3.0)) / 3600.0 / (1.0 + area_km2)
 
 
-@settings(max_examples=30, deadline=None)
+@settings(max_examples=20, deadline=None)
 @given(case=cut_terrains(), count=st.integers(0, 12), seed=st.integers(0, 99))
 def test_labels_paths_and_curves_do_not_depend_on_the_tiling(tmp_path_factory, case, count, seed):
     z, tiling = case

@@ -53,7 +53,7 @@ def breached(seed, pick):
     bounds, state = pick(breach.group_pits)(z, mark, walls, True, NROWS, NCOLS, members)
     lowest = pick(breach.block_minima)(z, NROWS, NCOLS)
     out |= {"bounds": bounds, "members": members[: bounds[-1]].copy(), "lowest": lowest}
-    limits = step_mm, 60_000, 2.0
+    limits = step_mm, 60_000, 2.0, np.array([0, NROWS + 1, 0, NCOLS + 1])
     pits = state.size
     cell, level = pick(breach.breach_pits)(
         z, mark, walls, True, True, NCOLS, lowest, members, bounds, 0, pits, *limits, state

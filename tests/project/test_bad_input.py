@@ -352,18 +352,7 @@ def test_an_option_that_is_none(rejected, tmp_path, overrides, words):
     assert any(line.startswith("project.toml: ") and words in line for line in lines), lines
 
 
-LATER = [
-    ("compute", "scheduler", "tcp://x:1"), ("compute", "memory", "4 GB"),
-]  # fmt: skip
-
-
-@pytest.mark.parametrize(("section", "key", "value"), LATER, ids=str)
-def test_options_of_later_versions(rejected, tmp_path, section, key, value):
-    line = one(rejected(project(tmp_path, **{section: {key: value}})), "not yet in this version")
-    assert line.startswith(f"project.toml: {section}")
-
-
-def test_options_of_later_versions_at_their_default(tmp_path):
+def test_options_at_their_default(tmp_path):
     file = project(
         tmp_path,
         terrain={"length_correction": "none"},

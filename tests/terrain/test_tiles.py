@@ -8,7 +8,7 @@ from tilings import by_tiles, cell_sizes, check_same, cut_terrains
 
 from basinwright.errors import TerrainError
 from basinwright.kernels import tiles
-from basinwright.terrain import condition_and_route
+from basinwright.terrain import Conditioning, condition_and_route
 from basinwright.terrain.tiling import Tiling
 
 
@@ -30,7 +30,7 @@ def check_order(terrain):
         assert (position[below] > position[flowing])[inside].all()
 
 
-@settings(max_examples=40, deadline=None)
+@settings(max_examples=25, deadline=None)
 @given(case=cut_terrains(), geographic=st.booleans())
 def test_any_tiling_gives_the_bits_of_the_whole(tmp_path_factory, case, geographic):
     z, tiling = case
@@ -38,6 +38,16 @@ def test_any_tiling_gives_the_bits_of_the_whole(tmp_path_factory, case, geograph
     tiled = by_tiles(tmp_path_factory.mktemp("tiles"), z, tiling, sizes)
     check_same(tiled, condition_and_route(z, *sizes))
     check_order(tiled)
+
+
+@settings(max_examples=25, deadline=None)
+@given(case=cut_terrains(), geographic=st.booleans(), depth=st.sampled_from([0.5, 2.0, 50.0]), cells=st.integers(0, 9))
+def test_any_tiling_breaches_to_the_bits_of_the_whole(tmp_path_factory, case, geographic, depth, cells):
+    z, tiling = case
+    sizes = cell_sizes(len(z), geographic)
+    limits = Conditioning("breach", depth, 30.0 * cells)
+    tiled = by_tiles(tmp_path_factory.mktemp("tiles"), z, tiling, sizes, conditioning=limits)
+    check_same(tiled, condition_and_route(z, *sizes, limits))
 
 
 def test_a_winding_lake_is_drained_through_many_tiles(tmp_path):

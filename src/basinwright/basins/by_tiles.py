@@ -14,9 +14,9 @@ import numpy as np
 
 from basinwright.kernels import NO_CELL, VOID
 from basinwright.terrain import Terrain
-from basinwright.terrain.tiled import Scratch, read_tile, write_tile
+from basinwright.terrain.tiled import read_tile, write_tile
 from basinwright.terrain.tiling import Tile, frame
-from basinwright.terrain.workspace import Workspace, file_of
+from basinwright.terrain.workspace import Scratch, Workspace, file_of
 
 
 @dataclass(frozen=True)

@@ -30,7 +30,7 @@ def contact_lengths_m(grid: Grid, terrain: Terrain, basins: Basins) -> dict[str,
     """
     lengths_um = np.zeros((basins.n_labels, len(SIDES)))  # whole micrometres: sums are exact in any order
     label = basins.label.reshape(terrain.nrows + 2, terrain.ncols + 2)[1:-1, 1:-1]
-    void = terrain.directions.reshape(terrain.nrows + 2, terrain.ncols + 2) == VOID
+    directions = terrain.directions.reshape(terrain.nrows + 2, terrain.ncols + 2)
     dx_um, dy_um = np.rint(grid.dx_m * 1e6), np.rint(grid.dy_m * 1e6)
 
     def add(side: str, labels: np.ndarray, um: np.ndarray) -> None:
@@ -44,8 +44,9 @@ def contact_lengths_m(grid: Grid, terrain: Terrain, basins: Basins) -> dict[str,
     for first in range(0, terrain.nrows, _BLOCK_ROWS):
         rows = np.arange(first, min(first + _BLOCK_ROWS, terrain.nrows))
         here = label[rows[0] : rows[-1] + 1]
+        void = directions[rows[0] : rows[-1] + 3] == VOID
         for drow, dcol, um in ((-1, 0, dx_um), (1, 0, dx_um), (0, -1, dy_um), (0, 1, dy_um)):
-            beside = void[rows[0] + 1 + drow : rows[-1] + 2 + drow, 1 + dcol : terrain.ncols + 1 + dcol].copy()
+            beside = void[1 + drow : len(rows) + 1 + drow, 1 + dcol : terrain.ncols + 1 + dcol].copy()
             if drow and (edge := -rows[0] if drow < 0 else terrain.nrows - 1 - rows[0]) in range(len(rows)):
                 beside[edge] = False  # off the raster, which is counted by its side
             if dcol:

@@ -145,9 +145,11 @@ class _Extremes:
 def _quanta(grid: Grid, terrain: Terrain, elevation_m: np.ndarray) -> dict[str, float]:
     """Steps of the fixed-point sums: from bounds that hold for the raster, whatever the outlets are."""
     total_m2 = float(terrain.row_area_m2.sum()) * terrain.ncols
-    finite = np.isfinite(elevation_m)
-    low = float(np.min(elevation_m, initial=np.inf, where=finite))
-    high = float(np.max(elevation_m, initial=-np.inf, where=finite))
+    low, high = np.inf, -np.inf
+    for row in elevation_m:
+        finite = row[np.isfinite(row)]
+        low = min(low, float(np.min(finite, initial=np.inf)))
+        high = max(high, float(np.max(finite, initial=-np.inf)))
     # A gradient spans at most twice the relief over a cell in both directions: under 200 % of relief / size.
     steepest_pct = 200.0 * (high - low) / min(grid.dx_m.min(), grid.dy_m.min())
     return {

@@ -13,6 +13,7 @@ from basinwright.grid import Grid
 from basinwright.io.rasters import Location, align_record, read_blocks_onto
 from basinwright.io.vectors import as_text, code_order, rasterize_polygons
 from basinwright.schemes import GROUPS, Scheme
+from basinwright.terrain.workspace import IN_MEMORY, Workspace
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -88,6 +89,7 @@ def align_cover(
     vector: Location | None = None,
     field: str | None = None,
     layer: str | None = None,
+    space: Workspace = IN_MEMORY,
 ) -> CoverLayer:
     """Bring land cover onto the grid: of a raster the cell under the centre, of polygons the one around it.
 
@@ -101,6 +103,8 @@ def align_cover(
         One of the two.
     field, layer : str, optional
         Of the vector: the column of the class, and the layer where there are several.
+    space : Workspace
+        Where the classes lie, as ``cover.classes``.
 
     Raises
     ------
@@ -112,8 +116,9 @@ def align_cover(
         entry = scheme.find(text)
         return entry.code if entry else text
 
-    classes, texts, record = _read(grid, raster, vector, field, layer)
-    classes, codes = _relabelled(classes, texts, canonical)
+    cells = space.result("cover.classes", grid.shape, np.int16)
+    classes, texts, record = _read(grid, cells, raster, vector, field, layer)
+    codes = _relabel(classes, texts, canonical)
     return CoverLayer(classes, codes, record)
 
 
@@ -128,6 +133,7 @@ def align_soils(
     groups: Mapping[str, str] | None = None,
     dual_groups: Literal["undrained", "drained"] = "undrained",
     missing: str | None = None,
+    space: Workspace = IN_MEMORY,
 ) -> SoilLayer:
     """Bring hydrologic soil groups onto the grid.
 
@@ -148,6 +154,8 @@ def align_soils(
         section 630.0702: the first letter applies to the drained condition, the second to the undrained).
     missing : str, optional
         The group that stands in where the layer has none.
+    space : Workspace
+        Where the groups lie, as ``soils.groups``.
 
     Raises
     ------
@@ -155,9 +163,10 @@ def align_soils(
         Where the layer cannot be read or holds no classes.
     """
     known = (*GROUPS, ASSUMED)
+    cells = space.result("soils.groups", grid.shape, np.int16)
     if group is not None:
-        everywhere = np.full(grid.shape, GROUPS.index(group), dtype=np.int16)
-        return SoilLayer(everywhere, known, missing, {"group": group, "method": "one group everywhere"})
+        cells[:] = GROUPS.index(group)
+        return SoilLayer(cells, known, missing, {"group": group, "method": "one group everywhere"})
 
     def resolved(text: str) -> str:
         found = (groups or {}).get(text, text)
@@ -165,28 +174,37 @@ def align_soils(
             return text
         return found[-1] if dual_groups == "undrained" else found[0]
 
-    cells, texts, record = _read(grid, raster, vector, field, layer)
-    cells, labels = _relabelled(cells, texts, resolved, first=known)
+    cells, texts, record = _read(grid, cells, raster, vector, field, layer)
+    labels = _relabel(cells, texts, resolved, first=known)
     if missing is not None:
-        unmapped = cells == NONE
-        cells[unmapped] = known.index(ASSUMED)
-        record = {**record, "assumed_group": missing, "assumed_cells": int(unmapped.sum())}
+        assumed = 0
+        for rows in cells:
+            unmapped = rows == NONE
+            rows[unmapped] = known.index(ASSUMED)
+            assumed += int(unmapped.sum())
+        record = {**record, "assumed_group": missing, "assumed_cells": assumed}
     return SoilLayer(cells, labels, missing, {**record, "dual_groups": dual_groups})
 
 
 def _read(
-    grid: Grid, raster: Location | None, vector: Location | None, field: str | None, layer: str | None
+    grid: Grid,
+    cells: NDArray[np.int16],
+    raster: Location | None,
+    vector: Location | None,
+    field: str | None,
+    layer: str | None,
 ) -> tuple[NDArray[np.int16], list[str], dict[str, Any]]:
     """Return positions (-1 none), the texts they stand for, and the record for the manifest."""
     if raster is not None:
-        cells, texts = _read_classes(raster, grid)
-        return cells, texts, align_record(raster, grid)
+        return cells, _read_classes(raster, grid, cells), align_record(raster, grid)
     if vector is None or field is None:
         raise ValueError("give a raster, or a vector with its field")
     counted, texts, record = rasterize_polygons(vector, field, grid, layer)
     if len(texts) > MAX_CLASSES:
         raise _no_classes(vector, f"column {field}", len(texts))
-    return counted.astype(np.int16) - np.int16(1), texts, record
+    for into, numbers in zip(cells, counted, strict=True):
+        into[:] = numbers.astype(np.int16) - np.int16(1)
+    return cells, texts, record
 
 
 def _no_classes(path: Location, where: str, count: int) -> InputRejected:
@@ -194,9 +212,9 @@ def _no_classes(path: Location, where: str, count: int) -> InputRejected:
     return InputRejected.one(str(path), where, what, "name a layer of classes")
 
 
-def _read_classes(path: Location, grid: Grid) -> tuple[NDArray[np.int16], list[str]]:
-    """Read a raster of classes onto the grid: positions in the list of its values as text."""
-    cells = np.full(grid.shape, NONE, dtype=np.int16)
+def _read_classes(path: Location, grid: Grid, cells: NDArray[np.int16]) -> list[str]:
+    """Read a raster of classes onto the grid: positions in the list of its values as text, which is returned."""
+    cells[:] = NONE
     position: dict[Any, int] = {}
     for first, block in read_blocks_onto(path, grid):
         filled = ~np.ma.getmaskarray(block)
@@ -208,7 +226,7 @@ def _read_classes(path: Location, grid: Grid) -> tuple[NDArray[np.int16], list[s
         of_value = np.array([position[value] for value in values.tolist()], dtype=np.int16)
         if values.size:
             cells[first : first + len(block)][filled] = of_value[np.searchsorted(values, block.data[filled])]
-    return cells, [as_text(value) for value in position]
+    return [as_text(value) for value in position]
 
 
 def _values_of(cells: NDArray[Any]) -> NDArray[Any]:
@@ -221,13 +239,15 @@ def _values_of(cells: NDArray[Any]) -> NDArray[Any]:
     return np.unique(cells)
 
 
-def _relabelled(
+def _relabel(
     cells: NDArray[np.int16], texts: Sequence[str], canonical: Callable[[str], str], first: Sequence[str] = ()
-) -> tuple[NDArray[np.int16], tuple[str, ...]]:
-    """Return positions in the sorted list of canonical texts, which begins with those of `first`."""
+) -> tuple[str, ...]:
+    """Turn cells, in place, into positions in the sorted list of canonical texts, those of `first` before all."""
     named = [canonical(text) for text in texts]
     labels = (*first, *sorted(set(named) - set(first), key=code_order))
     place = {label: index for index, label in enumerate(labels)}
     # The last entry is for cells without a class: their position is -1.
     lookup = np.array([*(place[name] for name in named), NONE], dtype=np.int16)
-    return lookup[cells], labels
+    for rows in cells:
+        rows[:] = lookup[rows]
+    return labels

@@ -11,6 +11,7 @@ import numpy as np
 from basinwright.cover.layers import ASSUMED, CoverLayer, SoilLayer
 from basinwright.io.rasters import BLOCK_CELLS
 from basinwright.schemes import ANY_GROUP, GROUPS, CoverClass, Scheme
+from basinwright.terrain.workspace import IN_MEMORY, Workspace
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -41,17 +42,19 @@ class Patches:
         return len(self.cover)
 
 
-def combine(cover: CoverLayer, soils: SoilLayer) -> Patches:
+def combine(cover: CoverLayer, soils: SoilLayer, space: Workspace = IN_MEMORY) -> Patches:
     """Cross land cover with soils: one patch for each pair that occurs.
 
     Parameters
     ----------
     cover, soils : CoverLayer, SoilLayer
         Of one grid.
+    space : Workspace
+        Where the cells lie, as long as it does.
     """
     kinds = len(soils.labels) + 1
     nrows, ncols = cover.classes.shape
-    cells = np.empty((nrows, ncols), dtype=np.int32)
+    cells = space.temporary("patches", (nrows, ncols), np.int32)
     counts = np.zeros((len(cover.codes) + 1) * kinds, dtype=np.int64)
     for block in _row_blocks(nrows, ncols):
         cells[block] = (cover.classes[block].astype(np.int32) + 1) * kinds + (soils.groups[block] + 1)

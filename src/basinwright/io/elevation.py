@@ -28,6 +28,7 @@ from basinwright.io.rasters import (
     read_header,
     short_name,
 )
+from basinwright.terrain.workspace import IN_MEMORY, Workspace
 from basinwright.units import M_PER_FT
 
 if TYPE_CHECKING:
@@ -154,11 +155,14 @@ def plan_terrain(
 
 
 def open_terrain(
-    paths: Sequence[Location], crs: str = "auto", vertical_unit: VerticalUnit | None = None
+    paths: Sequence[Location],
+    crs: str = "auto",
+    vertical_unit: VerticalUnit | None = None,
+    space: Workspace = IN_MEMORY,
 ) -> TerrainInput:
-    """Read the terrain (parameters as in `plan_terrain`).
+    """Read the terrain (parameters as in `plan_terrain`), window by window.
 
-    Where tiles overlap, the first listed wins wherever it has data.
+    Where tiles overlap, the first listed wins wherever it has data. The elevations lie in `space`, as ``elevation_m``.
 
     Raises
     ------
@@ -168,15 +172,17 @@ def open_terrain(
     plan, problems = plan_terrain(paths, crs, vertical_unit)
     if plan is None:
         raise InputRejected(problems)
-    elevation = np.full(plan.native.shape, np.nan, dtype=_float_type(plan.headers))
+    make = space.temporary if plan.reason else space.result
+    elevation = make("native" if plan.reason else "elevation_m", plan.native.shape, _float_type(plan.headers))
+    elevation[:] = np.nan
     for header in plan.headers:
         problems += _read_tile(header, plan, elevation)
-    if not problems and not np.isfinite(elevation).any():
+    if not problems and not any(np.isfinite(rows).any() for rows in elevation):
         what = "every cell is void" if len(plan.headers) == 1 else "every cell of the mosaic is void"
         problems.append(Problem(str(paths[0]), "cells", what, "check the file and its nodata value"))
     if problems:
         raise InputRejected(problems)
-    return TerrainInput(_resampled(elevation, plan) if plan.reason else elevation, plan)
+    return TerrainInput(_resampled(elevation, plan, space) if plan.reason else elevation, plan)
 
 
 def _read_crs(text: str) -> tuple[CRS | None, list[Problem]]:
@@ -322,11 +328,12 @@ def _resampled_grid(native: Grid, target: CRS) -> Grid:
     return Grid(nrows, ncols, transform, wkt)
 
 
-def _resampled(elevation: NDArray[np.floating[Any]], plan: TerrainPlan) -> NDArray[np.floating[Any]]:
+def _resampled(elevation: NDArray[np.floating[Any]], plan: TerrainPlan, space: Workspace) -> NDArray[np.floating[Any]]:
     from rasterio.enums import Resampling
     from rasterio.warp import reproject
 
-    out = np.full(plan.grid.shape, np.nan, dtype=elevation.dtype)
+    out = space.result("elevation_m", plan.grid.shape, elevation.dtype)
+    out[:] = np.nan
     reproject(
         elevation, out, src_transform=plan.native.transform, src_crs=plan.native.crs_wkt, src_nodata=np.nan,
         dst_transform=plan.grid.transform, dst_crs=plan.grid.crs_wkt, dst_nodata=np.nan,

@@ -5,7 +5,7 @@ from __future__ import annotations
 import glob
 import re
 import warnings
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from functools import cache
@@ -397,7 +397,7 @@ def on_lattice(one: Affine, other: Affine, tolerance: float = LATTICE_TOLERANCE)
 
 def write_cog(
     path: Path,
-    array: NDArray[Any],
+    array: NDArray[Any] | Callable[[slice], NDArray[Any]],
     grid: Grid,
     *,
     meaning: str,
@@ -406,14 +406,14 @@ def write_cog(
     tags: Mapping[str, str] | None = None,
     overview_resampling: Resampling = "nearest",
 ) -> None:
-    """Write an array as a cloud-optimised GeoTIFF; the same input gives the same bytes.
+    """Write an array as a cloud-optimised GeoTIFF, window by window; the same input gives the same bytes.
 
     Parameters
     ----------
     path : Path
         The file to write; its folder exists.
-    array : ndarray, shape (nrows, ncols)
-        The values; need not be contiguous.
+    array : ndarray, shape (nrows, ncols), or callable
+        The values, which need not be contiguous; or what makes those of some rows.
     grid : Grid
         Where they lie.
     meaning : str
@@ -431,18 +431,19 @@ def write_cog(
     from rasterio.shutil import copy
     from rasterio.windows import Window
 
-    if array.shape != grid.shape:
+    if not callable(array) and array.shape != grid.shape:
         raise ValueError(f"the array has shape {array.shape}, the grid {grid.shape}")
     # The bytes of a file written by window depend on the order of writing; those of its copy do not.
     draft = path.with_name(f".{path.name}.draft.tif")
+    values = array if callable(array) else array.__getitem__
     rows = max(1, BLOCK_CELLS // grid.ncols)
     try:
         with rasterio.open(
-            draft, "w", driver="GTiff", height=grid.nrows, width=grid.ncols, count=1, dtype=array.dtype,
+            draft, "w", driver="GTiff", height=grid.nrows, width=grid.ncols, count=1, dtype=values(slice(0, 1)).dtype,
             crs=grid.crs_wkt, transform=grid.transform, nodata=nodata, BIGTIFF="IF_SAFER",
         ) as out:  # fmt: skip
             for first in range(0, grid.nrows, rows):
-                block = array[first : first + rows]
+                block = values(slice(first, first + rows))
                 out.write(block, 1, window=Window(0, first, grid.ncols, len(block)))
             out.set_band_description(1, meaning)
             out.units = (unit,)

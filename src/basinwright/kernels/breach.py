@@ -287,10 +287,12 @@ def block_minima(z: np.ndarray, nrows: int, ncols: int) -> np.ndarray:
 
 
 @njit(cache=True, nogil=True)
-def _is_hopeless(lowest: np.ndarray, row0: int, row1: int, col0: int, col1: int, level: np.floating) -> bool:
-    """Whether no cell of a rectangle of the padded raster lies below a level."""
-    for b in range(row0 // BLOCK, row1 // BLOCK + 1):
-        for a in range(col0 // BLOCK, col1 // BLOCK + 1):
+def _is_hopeless(
+    lowest: np.ndarray, stride: int, row0: int, row1: int, col0: int, col1: int, level: np.floating
+) -> bool:
+    """Whether no cell of a rectangle of the padded raster lies below a level; it may reach beyond what is known."""
+    for b in range(max(row0, 0) // BLOCK, min(row1 // BLOCK + 1, lowest.shape[0])):
+        for a in range(max(col0, 0) // BLOCK, min(col1, stride - 1) // BLOCK + 1):
             if lowest[b, a] < level:
                 return False
     return True
@@ -541,7 +543,7 @@ def _reach(row0: int, row1: int, step_mm: np.ndarray, limit_mm: int) -> tuple[in
 def breach_pits(
     z: np.ndarray, mark: np.ndarray, walls: np.ndarray, walled: bool, marked: bool, ncols: int,
     lowest: np.ndarray, members: np.ndarray, bounds: np.ndarray, first: int, last: int,
-    step_mm: np.ndarray, limit_mm: int, depth_m: float, state: np.ndarray,
+    step_mm: np.ndarray, limit_mm: int, depth_m: float, edges: np.ndarray, state: np.ndarray,
 ) -> tuple[np.ndarray, np.ndarray]:  # fmt: skip
     """Search a way out of some of the pits.
 
@@ -567,6 +569,8 @@ def breach_pits(
         Longest way from the edge of a pit, on the ground.
     depth_m : float [m]
         Deepest cut.
+    edges : int64 array, shape (4,)
+        First and last row, first and last column of the padded raster; beyond those of `z` where that is a window.
     state : uint8 array, shape (pits,)
         Result for pits that were TO_DO: BREACHED, FAILED or OPEN.
 
@@ -607,13 +611,13 @@ def breach_pits(
             col0 = min(col0, col)
             col1 = max(col1, col)
         down, across = _reach(row0, row1, step_mm, limit_mm)
-        row0 = max(row0 - down, 0)
-        row1 = min(row1 + down, step_mm.shape[0] + 1)
-        col0 = max(col0 - across, 0)
-        col1 = min(col1 + across, stride - 1)
+        row0 = max(row0 - down, edges[0])
+        row1 = min(row1 + down, edges[1])
+        col0 = max(col0 - across, edges[2])
+        col1 = min(col1 + across, edges[3])
         bits = _bits_for(col1 - col0 + 1)
         places = (row1 - row0 + 1) << bits
-        if places > 1 << _PLACE_BITS or _is_hopeless(lowest, row0, row1, col0, col1, level):
+        if places > 1 << _PLACE_BITS or _is_hopeless(lowest, stride, row0, row1, col0, col1, level):
             state[p] = FAILED
             continue
         if places > key.size:
@@ -737,7 +741,8 @@ def _let_rise(
 def breach_pools(
     z: np.ndarray, filled: np.ndarray, mark: np.ndarray, walls: np.ndarray, walled: bool, marked: bool, ncols: int,
     lowest: np.ndarray, members: np.ndarray, bounds: np.ndarray, pits: np.ndarray, first: int, last: int,
-    step_mm: np.ndarray, limit_mm: int, depth_m: float, cut_before: np.ndarray, before: np.ndarray, state: np.ndarray,
+    step_mm: np.ndarray, limit_mm: int, depth_m: float, edges: np.ndarray, cut_before: np.ndarray, before: np.ndarray,
+    state: np.ndarray,
 ) -> tuple[np.ndarray, np.ndarray]:  # fmt: skip
     """Fill some of the pits part of the way, and search a way out of the lakes that they would become.
 
@@ -753,7 +758,7 @@ def breach_pools(
         The same, filled.
     lowest : float32 array, shape (blocks, blocks) [m]
         From `block_minima` of `filled`.
-    mark, walls, walled, marked, ncols, members, bounds, step_mm, limit_mm, depth_m
+    mark, walls, walled, marked, ncols, members, bounds, step_mm, limit_mm, depth_m, edges
         As for `breach_pits`; the cells that were cut are marked CUT.
     pits : int32 array
         Numbers of the pits, of which those from `first` up to and without `last` are looked at.
@@ -810,15 +815,15 @@ def breach_pools(
             at += 1
         while at < tops.size:
             north, south, west, east = row - beyond, row + beyond, col - beyond, col + beyond
-            row0, row1 = max(north - down, 0), min(south + down, step_mm.shape[0] + 1)
-            col0, col1 = max(west - across, 0), min(east + across, stride - 1)
-            if row0 == 0:
-                north = 0
-            if row1 == step_mm.shape[0] + 1:
+            row0, row1 = max(north - down, edges[0]), min(south + down, edges[1])
+            col0, col1 = max(west - across, edges[2]), min(east + across, edges[3])
+            if row0 == edges[0]:
+                north = row0
+            if row1 == edges[1]:
                 south = row1
-            if col0 == 0:
-                west = 0
-            if col1 == stride - 1:
+            if col0 == edges[2]:
+                west = col0
+            if col1 == edges[3]:
                 east = col1
             bits = _bits_for(col1 - col0 + 1)
             places = (row1 - row0 + 1) << bits
@@ -850,7 +855,7 @@ def breach_pools(
                 if how != _GROWN or water >= filled[seed]:
                     break
                 at += 1
-                if water == last_water or _is_hopeless(lowest, row0, row1, col0, col1, water):
+                if water == last_water or _is_hopeless(lowest, stride, row0, row1, col0, col1, water):
                     continue
                 for s in range(count):
                     about[pool[s]] = _WET | _SOURCE

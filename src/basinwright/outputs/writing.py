@@ -102,12 +102,21 @@ def write_terrain(folder: Path, grid: Grid, terrain: Terrain, elevation_m: NDArr
         The terrain before conditioning.
     """
     from basinwright.io.rasters import write_cog
+    from basinwright.terrain.encoding import to_azimuth
 
     folder.mkdir()
-    conditioned = terrain.conditioned_grid
+    void = np.float32(-9999.0)
+
+    def or_void(values: NDArray[Any], rows: slice) -> NDArray[Any]:
+        return np.where(np.isfinite(terrain.conditioned_grid[rows]), values, void)
+
+    def area_m2(rows: slice) -> NDArray[Any]:
+        area = terrain.area_grid[rows]
+        return np.where(area > 0, area, -1.0)
+
     write_cog(
         folder / "conditioned.tif",
-        np.where(np.isfinite(conditioned), conditioned, np.float32(-9999.0)),
+        lambda rows: or_void(terrain.conditioned_grid[rows], rows),
         grid,
         meaning="elevation after conditioning: depressions breached or filled",
         unit="m",
@@ -115,7 +124,7 @@ def write_terrain(folder: Path, grid: Grid, terrain: Terrain, elevation_m: NDArr
     )
     write_cog(
         folder / "conditioning_change.tif",
-        np.where(np.isfinite(conditioned), terrain.change_m(elevation_m), np.float32(-9999.0)),
+        lambda rows: or_void(terrain.change_m(elevation_m, rows), rows),
         grid,
         meaning="change of elevation by conditioning: negative where cut, positive where filled",
         unit="m",
@@ -123,17 +132,16 @@ def write_terrain(folder: Path, grid: Grid, terrain: Terrain, elevation_m: NDArr
     )
     write_cog(
         folder / "flow_direction.tif",
-        terrain.azimuths(),
+        lambda rows: to_azimuth(terrain.directions_grid[rows]),
         grid,
         meaning="azimuth of the downstream neighbour on the grid, clockwise from grid north; "
         "65534: water leaves here; 65533: declared sink",
         unit="degree",
         nodata=65535,
     )
-    area = terrain.area_grid
     write_cog(
         folder / "contributing_area.tif",
-        np.where(area > 0, area, -1.0),
+        area_m2,
         grid,
         meaning="contributing area, the cell's own included",
         unit="m2",

@@ -17,6 +17,7 @@ from basinwright.errors import InputRejected, Problem, RangeError
 from basinwright.io.rasters import check_raster, expand_paths, is_remote, refers_to_remote
 from basinwright.pipeline import design_storm, regional
 from basinwright.pipeline.design_storm import DesignStorm
+from basinwright.pipeline.machine import scheduler_problems
 from basinwright.project import SCENARIO_SECTIONS, Cover, Project, Reading, Soils, read_project, scenario_field
 from basinwright.registry import methods
 from basinwright.schemes import SHIPPED
@@ -437,6 +438,8 @@ def _look_at_options(look: _Looking) -> None:
     from basinwright.timing import bankfull_regions
 
     project = look.project
+    if project.compute is not None:
+        look.found += scheduler_problems(look.file.name, project.compute.scheduler)
     asked = (
         (project.timing, "timing", "adopt", list(methods("timing"))),
         (project.unit_hydrograph, "unit_hydrograph", "shape", list(methods("unit_hydrograph"))),

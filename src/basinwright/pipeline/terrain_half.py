@@ -5,19 +5,23 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from functools import partial
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from basinwright.errors import InputRejected
 from basinwright.flags import Flag
 from basinwright.grid import Grid
 from basinwright.hydrology import OTHER_STARTS, Settings, bankfull_relation_of, path_times_h
 from basinwright.paths.tracing import DEEP_FILL_M
 from basinwright.pipeline import mapping
 from basinwright.pipeline.inputs import Inputs
+from basinwright.pipeline.machine import Machine
 from basinwright.project import Project
 from basinwright.store import Draft, Entry, Store
 from basinwright.tables import COVER_SHARES, OUTLETS, SEGMENTS, TIME_AREA, Table, texts
+from basinwright.terrain.workspace import file_of
 from basinwright.units import KM2_PER_MI2, M_PER_FT, MM_PER_IN, UNITS
 
 if TYPE_CHECKING:
@@ -127,6 +131,17 @@ class TerrainHalf:
 
 def run(inputs: Inputs, store: Store) -> TerrainHalf:
     """Run every stage of the terrain half that is not in the store yet."""
+    with Machine(inputs.project.compute, inputs.plan.grid) as machine:
+        if inputs.mapped and machine.tiling is not None:
+            what = (
+                f"allows {machine.budget_gb:.3g} GB, but mapped {', '.join(inputs.mapped)} need all terrain in memory"
+            )
+            fix = f"give it {machine.needed_gb:.3g} GB, or cut the terrain to the basins"
+            raise InputRejected.one(inputs.file.name, "compute.memory", what, fix)
+        return _run(inputs, store, machine)
+
+
+def _run(inputs: Inputs, store: Store, machine: Machine) -> TerrainHalf:
     from basinwright.terrain import Terrain
 
     project = inputs.project
@@ -139,7 +154,7 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
             "vertical_unit": project.terrain.vertical_unit,
             "fill_voids": project.terrain.fill_voids,
         },
-        lambda draft: _elevation(inputs, draft),
+        lambda draft: _elevation(inputs, machine, draft),
     )
     grid = inputs.plan.grid
     if inputs.coarsened > 1:
@@ -153,13 +168,13 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
     hydrography = mapping.run(inputs, elevation, store) if inputs.mapped else None
     routing = store.stage(
         "routing",
-        f"Conditioning and routing {grid.nrows * grid.ncols / 1e6:.2f} million cells{_compiling()}",
+        f"Conditioning and routing {grid.nrows * grid.ncols / 1e6:.2f} million cells{machine.plan()}{_compiling()}",
         {
             "elevation": elevation.key,
             "conditioning": vars(_conditioning(project)),
             "hydrography": hydrography.key if hydrography else None,
         },
-        lambda draft: _routing(project, grid, elevation, hydrography, draft),
+        lambda draft: _routing(project, grid, elevation, hydrography, machine, draft),
     )
     channels = store.stage(
         "channels",
@@ -176,7 +191,7 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
             "soils": [*inputs.sha256(inputs.soils), project.soils.model_dump(mode="json")],
             "scheme": inputs.scheme.to_rows(),
         },
-        lambda draft: _cover(inputs, draft),
+        lambda draft: _cover(inputs, machine, draft),
     )
     outlets = {
         "ids": list(inputs.points.ids),
@@ -189,7 +204,7 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
         "basins",
         f"Snapping {len(inputs.points)} outlets and delineating their basins",
         {"routing": routing.key, "channels": channels.key, "outlets": outlets},
-        lambda draft: _basins(inputs, grid, elevation, routing, channels, draft),
+        lambda draft: _basins(inputs, grid, elevation, routing, channels, machine, draft),
     )
     time_area = store.stage(
         "time_area",
@@ -202,7 +217,11 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
             "two_year_depth": project.storm.two_year_depth_mm,
         },
         lambda draft: _time_area(
-            inputs, {"routing": routing, "channels": channels, "cover": cover, "basins": basins}, hydrography, draft
+            inputs,
+            {"routing": routing, "channels": channels, "cover": cover, "basins": basins},
+            hydrography,
+            machine,
+            draft,
         ),
     )
     paths = store.stage(
@@ -248,6 +267,7 @@ def run(inputs: Inputs, store: Store) -> TerrainHalf:
                 "paths": paths,
             },
             hydrography,
+            machine,
             draft,
         ),
     )
@@ -304,15 +324,16 @@ def _compiling() -> str:
     return " (first run on this machine: compiling, under a minute)" if cache_is_cold() else ""
 
 
-def _elevation(inputs: Inputs, draft: Draft) -> None:
+def _elevation(inputs: Inputs, machine: Machine, draft: Draft) -> None:
     from basinwright.io.elevation import open_terrain
     from basinwright.terrain.voids import fill_small_voids
 
     project = inputs.project
-    terrain = open_terrain(inputs.dem, project.terrain.crs, project.terrain.vertical_unit)
+    with machine.space(draft) as space:
+        terrain = open_terrain(inputs.dem, project.terrain.crs, project.terrain.vertical_unit, space)
     grid, largest_m2 = terrain.grid, project.terrain.fill_voids * 1e6
-    elevation, facts = fill_small_voids(terrain.elevation_m, grid.dx_m, grid.dy_m, grid.cell_area_m2, largest_m2)
-    draft.array("elevation_m", elevation)
+    facts = fill_small_voids(terrain.elevation_m, grid.dx_m, grid.dy_m, grid.cell_area_m2, largest_m2)
+    draft.array("elevation_m", terrain.elevation_m)
     draft.values("voids", facts)
     draft.values("alignment", terrain.plan.alignment)
 
@@ -333,22 +354,22 @@ def _coarser(elevation: Entry, cells: int, draft: Draft) -> None:
     draft.values("alignment", elevation.values("alignment"))
 
 
-def _routing(project: Project, grid: Grid, elevation: Entry, hydrography: Entry | None, draft: Draft) -> None:
+def _routing(
+    project: Project, grid: Grid, elevation: Entry, hydrography: Entry | None, machine: Machine, draft: Draft
+) -> None:
     from basinwright.terrain import condition_and_route
     from basinwright.terrain.hydrography import sink_spills
+    from basinwright.terrain.tiled import condition_and_route_tiles
 
+    sizes, conditioning = (grid.dx_m, grid.dy_m, grid.cell_area_m2), _conditioning(project)
     constraints = mapping.constraints(hydrography)
     terrain = mapping.given_terrain(hydrography)
-    if terrain is None:
-        terrain = condition_and_route(
-            elevation.array("elevation_m"),
-            grid.dx_m,
-            grid.dy_m,
-            grid.cell_area_m2,
-            _conditioning(project),
-            constraints,
-            threads=project.compute.jobs,
-        )
+    given = elevation.array("elevation_m")
+    if terrain is None and machine.tiling is not None:
+        with machine.space(draft) as space:
+            terrain = condition_and_route_tiles(Path(file_of(given)), *sizes, machine.tiling, space, conditioning)
+    elif terrain is None:
+        terrain = condition_and_route(given, *sizes, conditioning, constraints, threads=project.compute.jobs)
     draft.record(terrain, "terrain")
     draft.record(sink_spills(terrain, constraints), "sinks")
 
@@ -373,7 +394,9 @@ def _channels(inputs: Inputs, terrain: Terrain, hydrography: Entry | None, draft
     draft.values("doubt", words)
 
 
-def _basins(inputs: Inputs, grid: Grid, elevation: Entry, routing: Entry, channels: Entry, draft: Draft) -> None:
+def _basins(
+    inputs: Inputs, grid: Grid, elevation: Entry, routing: Entry, channels: Entry, machine: Machine, draft: Draft
+) -> None:
     from basinwright.basins import delineate, drainage_density_per_km, measure, snap
     from basinwright.basins.contact import contact_lengths_m, sink_areas_km2
     from basinwright.terrain import Terrain
@@ -392,7 +415,8 @@ def _basins(inputs: Inputs, grid: Grid, elevation: Entry, routing: Entry, channe
         within_m=None if isinstance(within, str) else within,
         expected_area_km2=inputs.expected_area_km2,
     )
-    basins = delineate(terrain, snapped.cell)
+    with machine.space(draft, terrain) as space:
+        basins = delineate(terrain, snapped.cell, space)
     measures = measure(grid, terrain, elevation.array("elevation_m"), basins)
     measures["drainage_density_per_km"] = drainage_density_per_km(
         terrain, basins, stream_area_km2, mapping.mapped_channels(channels)
@@ -429,29 +453,32 @@ def _paths(
     keep_columns(draft, "reaches", reach_measures(terrain, basins, correction))
 
 
-def _cover(inputs: Inputs, draft: Draft) -> None:
+def _cover(inputs: Inputs, machine: Machine, draft: Draft) -> None:
     from basinwright.cover import align_cover, align_soils
 
     project, grid = inputs.project, inputs.plan.grid
     is_raster = project.cover.raster is not None
-    cover = align_cover(
-        grid,
-        inputs.scheme,
-        raster=inputs.cover if is_raster else None,
-        vector=None if is_raster else inputs.cover,
-        field=project.cover.field,
-    )
     section = project.soils
-    soils = align_soils(
-        grid,
-        raster=inputs.soils if section.raster is not None else None,
-        vector=inputs.soils if section.vector is not None else None,
-        field=section.field,
-        group=section.group,
-        groups=section.groups,
-        dual_groups=section.dual_groups,
-        missing=section.missing,
-    )
+    with machine.space(draft) as space:
+        cover = align_cover(
+            grid,
+            inputs.scheme,
+            raster=inputs.cover if is_raster else None,
+            vector=None if is_raster else inputs.cover,
+            field=project.cover.field,
+            space=space,
+        )
+        soils = align_soils(
+            grid,
+            raster=inputs.soils if section.raster is not None else None,
+            vector=inputs.soils if section.vector is not None else None,
+            field=section.field,
+            group=section.group,
+            groups=section.groups,
+            dual_groups=section.dual_groups,
+            missing=section.missing,
+            space=space,
+        )
     draft.record(cover, "cover")
     draft.record(soils, "soils")
     draft.values("alignment", [cover.record, soils.record])
@@ -464,7 +491,9 @@ def _unmapped_m(segments: Mapping[str, NDArray[Any]], count: int) -> NDArray[np.
     return np.bincount(segments["outlet"], lengths, count).astype(np.float64)
 
 
-def _tables(inputs: Inputs, stages: Mapping[str, Entry], hydrography: Entry | None, draft: Draft) -> None:
+def _tables(
+    inputs: Inputs, stages: Mapping[str, Entry], hydrography: Entry | None, machine: Machine, draft: Draft
+) -> None:
     """Make the three tables, with the flags of the terrain half and the cells that the user supplied."""
     from basinwright.basins import Basins, Snapped
     from basinwright.cover import CoverLayer, SoilLayer, combine, cover_shares
@@ -479,14 +508,15 @@ def _tables(inputs: Inputs, stages: Mapping[str, Entry], hydrography: Entry | No
     measures = kept_columns(stages["basins"], "measures") | kept_columns(stages["paths"], "profile")
     measures |= kept_columns(stages["paths"], "reaches")
     cover = stages["cover"].record(CoverLayer, "cover")
-    patches = combine(cover, stages["cover"].record(SoilLayer, "soils"))
-    shares = cover_shares(
-        _patch_areas_km2(terrain, basins, patches.cells, len(patches)),
-        patches,
-        inputs.scheme,
-        project.cover.gap_limit,
-        _impervious(inputs, terrain, basins, patches.cells, len(patches)),
-    )
+    with machine.space(draft, terrain) as space:
+        patches = combine(cover, stages["cover"].record(SoilLayer, "soils"), space)
+        shares = cover_shares(
+            _patch_areas_km2(terrain, basins, patches.cells, len(patches)),
+            patches,
+            inputs.scheme,
+            project.cover.gap_limit,
+            _impervious(inputs, terrain, basins, patches.cells, len(patches)),
+        )
     depths = _mean_depths_mm(inputs, terrain, basins)
     stream_area_km2 = float(stages["channels"].values("stream_area_km2"))
     channel_n = mapping.channel_n(inputs, hydrography)
@@ -658,7 +688,9 @@ def _mean_depths_mm(inputs: Inputs, terrain: Terrain, basins: Basins) -> dict[st
     return means
 
 
-def _time_area(inputs: Inputs, stages: Mapping[str, Entry], hydrography: Entry | None, draft: Draft) -> None:
+def _time_area(
+    inputs: Inputs, stages: Mapping[str, Entry], hydrography: Entry | None, machine: Machine, draft: Draft
+) -> None:
     """Find the cells farthest in time, and draw the time-area curves as the table that the hydrology reads."""
     from basinwright.basins import Basins
     from basinwright.basins.time_area import farthest_in_time, time_area_curves, travel_times_us
@@ -677,9 +709,10 @@ def _time_area(inputs: Inputs, stages: Mapping[str, Entry], hydrography: Entry |
         None if channels is None else terrain.grid(channels),
         mapping.channel_n(inputs, hydrography),
     )
-    time_us = travel_times_us(terrain, step_times)
-    draft.array("farthest_cell", farthest_in_time(terrain, basins, time_us))
-    curves = time_area_curves(terrain, basins, time_us)
+    with machine.space(draft, terrain) as space:
+        time_us = travel_times_us(terrain, step_times, space)
+        draft.array("farthest_cell", farthest_in_time(terrain, basins, time_us))
+        curves = time_area_curves(terrain, basins, time_us)
     ids = np.array(inputs.points.ids, dtype=object)
     columns = {"outlet_id": ids[curves["outlet"]], **{k: v for k, v in curves.items() if k != "outlet"}}
     draft.frame(TIME_AREA.name, _as_frame(TIME_AREA, columns, inputs.project))

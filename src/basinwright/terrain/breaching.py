@@ -85,13 +85,14 @@ def breach(
     bounds, state = kernel.group_pits(z, mark, walls, walled, nrows, ncols, members)
     step_mm = np.rint(step_um / 1000).astype(np.int32)
     limit_mm = int(length_m * 1000)
+    edges = np.array([0, nrows + 1, 0, ncols + 1])
     if state.size:
         lowest = kernel.block_minima(z, nrows, ncols)
 
         def search(first: int, last: int) -> tuple[np.ndarray, np.ndarray]:
             return kernel.breach_pits(
                 z, mark, walls, walled, marked, ncols, lowest, members, bounds, first, last,
-                step_mm, limit_mm, depth_m, state,
+                step_mm, limit_mm, depth_m, edges, state,
             )  # fmt: skip
 
         cut_cell, cut_level = _in_chunks(search, state.size, threads)
@@ -113,7 +114,7 @@ def breach(
             def search_again(first: int, last: int) -> tuple[np.ndarray, np.ndarray]:
                 return kernel.breach_pools(
                     z, filled, mark, walls, walled, marked, ncols, lowest_filled, members, bounds, failed, first, last,
-                    step_mm, limit_mm, depth_m, cut_before, before, state,
+                    step_mm, limit_mm, depth_m, edges, cut_before, before, state,
                 )  # fmt: skip
 
             kernel.make_cuts(z, mark, *_in_chunks(search_again, failed.size, threads))

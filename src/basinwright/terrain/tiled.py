@@ -18,7 +18,7 @@ A step may be repeated: it reads only what earlier steps wrote.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import NamedTuple
 
@@ -26,8 +26,10 @@ import numpy as np
 
 from basinwright.errors import TerrainError
 from basinwright.kernels import FLAT, NO_CELL, VOID
+from basinwright.terrain.breaching import Pits
 from basinwright.terrain.routing import Conditioning, Terrain, measure_conditioning, pad, sizes_by_row, step_lengths_um
 from basinwright.terrain.summable import summable_areas_m2
+from basinwright.terrain.tiled_breaching import breach_tiles
 from basinwright.terrain.tiling import (
     RimLines,
     Strips,
@@ -39,15 +41,9 @@ from basinwright.terrain.tiling import (
     strips_around,
     strips_of,
 )
-from basinwright.terrain.workspace import Workers, Workspace, file_of
+from basinwright.terrain.workspace import Scratch, Workers, Workspace, file_of, padded_raster
 
 _FILL = Conditioning()
-
-
-def padded_raster(file: str, tiling: Tiling, *, write: bool = False) -> np.ndarray:
-    """Map a flat padded array, as a raster of shape (nrows + 2, ncols + 2)."""
-    mapped = np.load(file, mmap_mode="r+" if write else "r")
-    return mapped.reshape(tiling.nrows + 2, tiling.stride)
 
 
 def write_tile(file: str, tiling: Tiling, tile: Tile, padded: np.ndarray) -> None:
@@ -61,38 +57,6 @@ def read_tile(file: str, tiling: Tiling, tile: Tile, outside: float) -> np.ndarr
     window = np.array(padded_raster(file, tiling)[tile.padded])
     window[0], window[-1], window[:, 0], window[:, -1] = outside, outside, outside, outside
     return window.reshape(-1)
-
-
-@dataclass(frozen=True)
-class Scratch:
-    """What the steps hand each other, tile by tile.
-
-    Parameters
-    ----------
-    tiling : Tiling
-    scratch : str
-        Folder.
-    """
-
-    tiling: Tiling
-    scratch: str
-
-    def keep(self, tile: Tile, name: str, **arrays: np.ndarray) -> None:
-        """Keep arrays of a tile for a later step."""
-        for part, array in arrays.items():
-            np.save(self._scratch(tile, name, part), array, allow_pickle=False)
-
-    def kept(self, tile: Tile, name: str, part: str) -> np.ndarray:
-        """Read what was kept."""
-        return np.load(self._scratch(tile, name, part), allow_pickle=False)
-
-    def drop(self, name: str) -> None:
-        """Remove what all tiles kept under a name."""
-        for path in Path(self.scratch).glob(f"{name}-*.npy"):
-            path.unlink()
-
-    def _scratch(self, tile: Tile, name: str, part: str) -> str:
-        return str(Path(self.scratch, f"{name}-{part}-{tile.index}.npy"))
 
 
 @dataclass(frozen=True)
@@ -151,10 +115,6 @@ def condition_and_route_tiles(
     """
     if space.scratch is None:
         raise ValueError("tiles need a workspace with folders")
-    if conditioning.mode == "breach":
-        raise TerrainError(
-            'breaching by tiles is not yet in this version: set terrain.conditioning = "fill" or more compute.memory'
-        )
     scratch, workers = space.scratch, space.workers
     nrows, ncols = tiling.nrows, tiling.ncols
     dx, dy, cell_area = sizes_by_row(nrows, ncols, dx_m, dy_m, cell_area_m2)
@@ -169,7 +129,22 @@ def condition_and_route_tiles(
         halo[0], halo[-1], halo[:, 0], halo[:, -1] = outside, outside, outside, outside
 
     files = Files(tiling, str(scratch), str(elevation_file), file_of(conditioned), file_of(directions), file_of(area))
-    data_cells, largest_rounding = _fill(files, workers)
+    pits, step_um = Pits(), step_lengths_um(dx, dy)
+    if conditioning.mode == "breach":
+        given = np.load(elevation_file, mmap_mode="r").shape
+        breached = file_of(space.temporary("breached", given, np.float32))
+        cut = replace(files, elevation=breached)
+        pits, drains, largest_rounding = breach_tiles(
+            files, files.elevation, breached, files.conditioned, step_um, conditioning, workers,
+            lambda: _fill(cut, workers),
+        )  # fmt: skip
+        if drains:
+            data_cells = np.array(workers.map(_take_over, [(cut, tile) for tile in tiling]))
+        else:
+            data_cells, _ = _fill(cut, workers)
+        space.discard("breached")
+    else:
+        data_cells, largest_rounding = _fill(files, workers)
     if data_cells.sum() == 0:
         raise TerrainError("no cell of the terrain has an elevation: is its nodata value right?")
     order = space.result("terrain.order", (int(data_cells.sum()),), np.int32)
@@ -186,10 +161,11 @@ def condition_and_route_tiles(
         area_m2=area,
         order=order,
         row_area_m2=row_area,
-        step_um=step_lengths_um(dx, dy),
+        step_um=step_um,
         data_cells=int(data_cells.sum()),
         flat_cells=flat_cells,
         **measure_conditioning(elevation, conditioned, row_area),
+        **vars(pits),
         largest_rounding_m=largest_rounding,
         row_edges=np.array(tiling.row_edges),
         col_edges=np.array(tiling.col_edges),
@@ -303,6 +279,16 @@ def _raise(files: Files, tile: Tile, terminal_spill: np.ndarray) -> None:
     )
     raise_to_levels(z, label, level)
     write_tile(files.conditioned, files.tiling, tile, z)
+
+
+def _take_over(files: Files, tile: Tile) -> int:
+    """Take a tile as it is, since it drains; returns its cells with elevation."""
+    from basinwright.kernels.breach import close_voids
+
+    z, _ = pad(np.load(files.elevation, mmap_mode="r")[tile.rows, tile.cols])
+    close_voids(z)
+    write_tile(files.conditioned, files.tiling, tile, z)
+    return int(np.count_nonzero(z < np.inf))
 
 
 # 2. Directions

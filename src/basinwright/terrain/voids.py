@@ -7,8 +7,8 @@ import numpy as np
 
 def fill_small_voids(
     elevation_m: np.ndarray, dx_m: np.ndarray, dy_m: np.ndarray, cell_area_m2: np.ndarray, largest_m2: float
-) -> tuple[np.ndarray, dict[str, int]]:
-    """Interpolate voids inside the terrain up to a size.
+) -> dict[str, int]:
+    """Interpolate voids inside the terrain up to a size, in place.
 
     A void becomes a membrane stretched between the cells around it: each of its cells is the mean of its four
     neighbours, weighted by the inverse square of their distance (Laplace's equation by finite differences). A plane is
@@ -25,17 +25,15 @@ def fill_small_voids(
 
     Returns
     -------
-    elevation_m : array, as given
-        The same array where nothing is filled, else a copy.
-    facts : dict of str to int
+    dict of str to int
         ``voids_filled``, ``void_cells_filled`` and ``voids_left`` (inside the terrain).
     """
     from scipy.ndimage import find_objects, label
 
-    void = np.isnan(elevation_m)
     facts = {"voids_filled": 0, "void_cells_filled": 0, "voids_left": 0}
-    if not void.any():
-        return elevation_m, facts
+    if not any(np.isnan(row).any() for row in elevation_m):
+        return facts
+    void = np.isnan(elevation_m)
     number, count = label(void, structure=np.ones((3, 3)))
     area = np.bincount(number.ravel(), np.broadcast_to(cell_area_m2[:, None], void.shape).ravel(), count + 1)
     at_rim = np.unique(np.concatenate([number[0], number[-1], number[:, 0], number[:, -1]]))
@@ -43,17 +41,16 @@ def fill_small_voids(
     small = inner[area[inner] <= largest_m2]
     facts["voids_left"] = int(inner.size - small.size)
     if small.size == 0:
-        return elevation_m, facts
-    filled = elevation_m.copy()
+        return facts
     places = find_objects(number)
     for void_number in small.tolist():
         rows, cols = places[void_number - 1]
         window = (slice(rows.start - 1, rows.stop + 1), slice(cols.start - 1, cols.stop + 1))
         mask = number[window] == void_number
-        filled[window][mask] = _membrane(filled[window], mask, dx_m[window[0]], dy_m[window[0]])
+        elevation_m[window][mask] = _membrane(elevation_m[window], mask, dx_m[window[0]], dy_m[window[0]])
         facts["void_cells_filled"] += int(mask.sum())
     facts["voids_filled"] = int(small.size)
-    return filled, facts
+    return facts
 
 
 def _membrane(around_m: np.ndarray, mask: np.ndarray, dx_m: np.ndarray, dy_m: np.ndarray) -> np.ndarray:

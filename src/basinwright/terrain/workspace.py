@@ -2,12 +2,15 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any, Protocol
 
 import numpy as np
+
+from basinwright.terrain.tiling import Tile, Tiling
 
 
 class Workers(Protocol):
@@ -64,7 +67,11 @@ IN_MEMORY = Workspace()
 def _array(folder: Path | None, name: str, shape: tuple[int, ...], dtype: Any) -> np.ndarray:
     if folder is None:
         return np.empty(shape, dtype)
-    return np.lib.format.open_memmap(folder / f"{name}.npy", mode="w+", shape=shape, dtype=dtype)
+    file = folder / f"{name}.npy"
+    array = np.lib.format.open_memmap(file, mode="w+", shape=shape, dtype=dtype)
+    with file.open("r+b") as stream:  # a full disk is an error now, not the death of whoever writes a page later
+        os.posix_fallocate(stream.fileno(), 0, max(file.stat().st_size, 1))
+    return array
 
 
 def file_of(array: np.ndarray) -> str:
@@ -81,3 +88,41 @@ def file_of(array: np.ndarray) -> str:
             return str(here.filename)
         here = getattr(here, "base", None)
     raise ValueError("the array lies in memory, not in a file")
+
+
+@dataclass(frozen=True)
+class Scratch:
+    """What the steps hand each other, tile by tile.
+
+    Parameters
+    ----------
+    tiling : Tiling
+    scratch : str
+        Folder.
+    """
+
+    tiling: Tiling
+    scratch: str
+
+    def keep(self, tile: Tile, name: str, **arrays: np.ndarray) -> None:
+        """Keep arrays of a tile for a later step."""
+        for part, array in arrays.items():
+            np.save(self._scratch(tile, name, part), array, allow_pickle=False)
+
+    def kept(self, tile: Tile, name: str, part: str) -> np.ndarray:
+        """Read what was kept."""
+        return np.load(self._scratch(tile, name, part), allow_pickle=False)
+
+    def drop(self, name: str) -> None:
+        """Remove what all tiles kept under a name."""
+        for path in Path(self.scratch).glob(f"{name}-*.npy"):
+            path.unlink()
+
+    def _scratch(self, tile: Tile, name: str, part: str) -> str:
+        return str(Path(self.scratch, f"{name}-{part}-{tile.index}.npy"))
+
+
+def padded_raster(file: str, tiling: Tiling, *, write: bool = False) -> np.ndarray:
+    """Map a flat padded array, as a raster of shape (nrows + 2, ncols + 2)."""
+    mapped = np.load(file, mmap_mode="r+" if write else "r")
+    return mapped.reshape(tiling.nrows + 2, tiling.stride)
