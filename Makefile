@@ -3,7 +3,7 @@ PYTHON ?= python3
 BIN := .venv/bin
 OUT ?= basinwright-demo
 
-.PHONY: demo test lint format bench docs packages mutants lock clean
+.PHONY: demo test lint format bench bench-large docs packages mutants lock clean
 
 demo: .venv/runtime-ready
 	$(BIN)/basinwright demo $(OUT)
@@ -27,6 +27,10 @@ bench: .venv/dev-ready
 # Wheel and source distribution in bare environments of every supported Python that is here: a quarter of an hour.
 packages: .venv/dev-ready
 	.ci/packages
+
+# 1,024 million cells, made and processed by tiles: about 60 GB of disk. BENCH_LARGE="--side 8000" for a look.
+bench-large: .venv/dev-ready
+	$(BIN)/python tests/bench/large.py $(BENCH_LARGE)
 
 # The generated pages of docs/.
 docs: .venv/dev-ready
@@ -64,4 +68,4 @@ OURSELVES := $(PIP) --no-deps --no-build-isolation --editable .
 	@touch $@ .venv/runtime-ready
 
 clean:
-	rm -rf .venv build dist bench.json $(OUT)
+	rm -rf .venv build dist bench.json bench-large.json $(OUT)

@@ -69,8 +69,9 @@ def _array(folder: Path | None, name: str, shape: tuple[int, ...], dtype: Any) -
         return np.empty(shape, dtype)
     file = folder / f"{name}.npy"
     array = np.lib.format.open_memmap(file, mode="w+", shape=shape, dtype=dtype)
-    with file.open("r+b") as stream:  # a full disk is an error now, not the death of whoever writes a page later
-        os.posix_fallocate(stream.fileno(), 0, max(file.stat().st_size, 1))
+    if hasattr(os, "posix_fallocate"):  # a full disk is an error now, not the death of whoever writes a page later
+        with file.open("r+b") as stream:
+            os.posix_fallocate(stream.fileno(), 0, file.stat().st_size)
     return array
 
 
