@@ -104,10 +104,13 @@ class TerrainInput:
         Elevation [m], float32 or float64 as the files need, NaN in voids.
     plan : TerrainPlan
         Grid, unit and alignment.
+    damaged : tuple of Problem
+        Tiles of a mosaic whose cells could not all be read: what could not be is void.
     """
 
     elevation_m: NDArray[np.floating[Any]]
     plan: TerrainPlan
+    damaged: tuple[Problem, ...] = ()
 
     @property
     def grid(self) -> Grid:
@@ -163,11 +166,12 @@ def open_terrain(
     """Read the terrain (parameters as in `plan_terrain`), window by window.
 
     Where tiles overlap, the first listed wins wherever it has data. The elevations lie in `space`, as ``elevation_m``.
+    Of a mosaic, what cannot be read of a damaged tile is void, and the rest goes on.
 
     Raises
     ------
     InputRejected
-        With every problem of the headers, or of the cells: damaged, all void, impossible elevations.
+        With every problem of the headers, or of the cells: damaged all, all void, impossible elevations.
     """
     plan, problems = plan_terrain(paths, crs, vertical_unit)
     if plan is None:
@@ -175,14 +179,21 @@ def open_terrain(
     make = space.temporary if plan.reason else space.result
     elevation = make("native" if plan.reason else "elevation_m", plan.native.shape, _float_type(plan.headers))
     elevation[:] = np.nan
+    damaged: list[Problem] = []
     for header in plan.headers:
-        problems += _read_tile(header, plan, elevation)
+        try:
+            problems += _read_tile(header, plan, elevation)
+        except InputRejected as error:
+            damaged += error.problems
+    if len(damaged) == len(plan.headers):
+        problems += damaged
     if not problems and not any(np.isfinite(rows).any() for rows in elevation):
         what = "every cell is void" if len(plan.headers) == 1 else "every cell of the mosaic is void"
         problems.append(Problem(str(paths[0]), "cells", what, "check the file and its nodata value"))
     if problems:
         raise InputRejected(problems)
-    return TerrainInput(_resampled(elevation, plan, space) if plan.reason else elevation, plan)
+    working = _resampled(elevation, plan, space) if plan.reason else elevation
+    return TerrainInput(working, plan, tuple(damaged))
 
 
 def _read_crs(text: str) -> tuple[CRS | None, list[Problem]]:

@@ -135,7 +135,7 @@ class Machine:
                 self._client = self._open.enter_context(Client(self.compute.scheduler, timeout=_PATIENCE))
             else:
                 cluster = LocalCluster(
-                    n_workers=self.compute.jobs, threads_per_worker=1, processes=True, dashboard_address=None,
+                    n_workers=self.compute.jobs, threads_per_worker=1, processes=True, dashboard_address=":0",
                     memory_limit=0, silence_logs=50, local_directory=tempfile.gettempdir(),
                 )  # fmt: skip
                 self._open.enter_context(cluster)

@@ -353,7 +353,9 @@ def check(project_file: Path) -> list[str]:
 
     inputs = inspect(project_file)
     mapping.check(inputs)
-    open_terrain(inputs.dem, inputs.project.terrain.crs, inputs.project.terrain.vertical_unit)  # all void, impossible
+    terrain = open_terrain(inputs.dem, inputs.project.terrain.crs, inputs.project.terrain.vertical_unit)
+    if terrain.damaged:
+        raise InputRejected(terrain.damaged)
     grid = inputs.plan.grid.describe()
     return [
         f"{project_file}: ready to run",

@@ -156,6 +156,8 @@ def _run(inputs: Inputs, store: Store, machine: Machine) -> TerrainHalf:
         },
         lambda draft: _elevation(inputs, machine, draft),
     )
+    for problem in elevation.values("damaged"):
+        store.on_stage(f"{problem}; until then it is void")
     grid = inputs.plan.grid
     if inputs.coarsened > 1:
         fine = elevation
@@ -335,7 +337,9 @@ def _elevation(inputs: Inputs, machine: Machine, draft: Draft) -> None:
     facts = fill_small_voids(terrain.elevation_m, grid.dx_m, grid.dy_m, grid.cell_area_m2, largest_m2)
     draft.array("elevation_m", terrain.elevation_m)
     draft.values("voids", facts)
-    draft.values("alignment", terrain.plan.alignment)
+    draft.values("damaged", [str(problem) for problem in terrain.damaged])
+    damaged = {Path(problem.file).name: {"damaged": problem.what} for problem in terrain.damaged}
+    draft.values("alignment", [entry | damaged.get(entry["path"], {}) for entry in terrain.plan.alignment])
 
 
 def _conditioning(project: Project) -> Conditioning:
