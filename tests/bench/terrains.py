@@ -75,6 +75,60 @@ def river_like(n: int, seed: int = 1, cell_m: float = 10.0, noise_m: float = 0.1
     return (terrain.grid(z) + noise_m * noise).astype(np.float32)
 
 
+def quarried(n: int, seed: int = 1) -> np.ndarray:
+    """`river_like` with a round quarry 30 m deep and 30 cells across on every four million cells: no cut leads out."""
+    z = river_like(n, seed)
+    rng = np.random.default_rng(seed + 2)
+    row, col = np.mgrid[-15:16, -15:16]
+    for r, c in rng.integers(200, n - 200, (max(1, n * n // 4_000_000), 2)):
+        pit = z[r - 15 : r + 16, c - 15 : c + 16]
+        pit -= 30.0 * (row * row + col * col < 225)
+    return z
+
+
+def noisy_plain(n: int, seed: int = 1) -> np.ndarray:
+    """A plain that falls by 2 mm a cell under white noise of 0.1 m: every ninth cell lies below all its neighbours."""
+    noise = np.random.default_rng(seed).standard_normal((n, n), np.float32)
+    return 0.1 * noise + np.linspace(0.002 * n, 0.0, n, dtype=np.float32)[:, None]
+
+
+def graded_roads(
+    n: int, seed: int = 1, every: int = 250, grade_cells: float = 10.0
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Gentle `river_like` ground under a net of roads three cells wide, each graded by a Gaussian along it.
+
+    Hillsides of up to 22 %; the fills over streams are some 5 m high, one in ten over 8 m.
+
+    Parameters
+    ----------
+    n, seed : int
+    every : int
+        Cells from road to road, in both directions.
+    grade_cells : float
+        Standard deviation of the Gaussian.
+
+    Returns
+    -------
+    elevation_m, area_cells : float arrays, shape (n, n)
+        With roads; and what drains through each cell of the network that the ground was built from.
+    road : bool array, shape (n, n)
+    """
+    from scipy.ndimage import gaussian_filter1d
+
+    from basinwright.terrain import condition_and_route
+
+    ground = river_like(n, seed, noise_m=0.0)
+    size = np.full(n, 10.0)
+    area = condition_and_route(ground, size, size, size * size).area_grid / 100.0
+    z = 0.15 * ground + 0.1 * np.random.default_rng(seed + 1).standard_normal((n, n), np.float32)
+    road = np.zeros((n, n), bool)
+    for line in range(every // 2, n - 2, every):
+        for across, mask in ((z, road), (z.T, road.T)):
+            across[line - 1 : line + 2] = gaussian_filter1d(across[line], grade_cells)
+            mask[line - 1 : line + 2] = True
+    return z, area, road
+
+
 def whole_metres(n: int, seed: int = 1) -> np.ndarray:
     """`rough` in whole metres: flats on every slope."""
     return np.rint(rough(n, seed))
@@ -105,4 +159,6 @@ TERRAINS = {
     "river-like": river_like,
     "whole-metre": whole_metres,
     "stationary": stationary,
+    "quarried": quarried,
+    "noisy plain": noisy_plain,
 }

@@ -51,12 +51,14 @@ def breached(seed, pick):
     pick(breach.raise_single_cells)(z, mark, walls, True, NROWS, NCOLS)
     out = {"raised": z.copy(), "low": mark.copy()}
     bounds, state = pick(breach.group_pits)(z, mark, walls, True, NROWS, NCOLS, members)
+    around = np.full(n, np.inf, np.float32)
+    pick(breach.lowest_around)(z, NROWS, NCOLS, around)
     lowest = pick(breach.block_minima)(z, NROWS, NCOLS)
-    out |= {"bounds": bounds, "members": members[: bounds[-1]].copy(), "lowest": lowest}
+    out |= {"bounds": bounds, "members": members[: bounds[-1]].copy(), "around": around.copy(), "lowest": lowest}
     limits = step_mm, 60_000, 2.0, np.array([0, NROWS + 1, 0, NCOLS + 1])
-    pits = state.size
+    first_last = 0, state.size
     cell, level = pick(breach.breach_pits)(
-        z, mark, walls, True, True, NCOLS, lowest, members, bounds, 0, pits, *limits, state
+        z, mark, walls, True, True, NCOLS, around, lowest, members, bounds, *first_last, *limits, state
     )
     cut = np.unique(cell)
     before = z[cut]
@@ -65,26 +67,13 @@ def breached(seed, pick):
     out |= {"cut": cell, "to": level, "state": state.copy(), "failed": failed}
     filled = z.copy()
     pick(breach.fill_lakes)(filled, mark, NCOLS, members[bounds[failed]], np.zeros(n, np.int32), n)
+    pick(breach.lowest_around)(filled, NROWS, NCOLS, around)
     lowest = pick(breach.block_minima)(filled, NROWS, NCOLS)
+    first_last = 0, failed.size
     again, at = pick(breach.breach_pools)(
-        z,
-        filled,
-        mark,
-        walls,
-        True,
-        True,
-        NCOLS,
-        lowest,
-        members,
-        bounds,
-        failed,
-        0,
-        failed.size,
-        *limits,
-        cut,
-        before,
-        state,
-    )
+        z, filled, around, mark, walls, True, True, NCOLS, lowest, members, bounds, failed, *first_last, *limits,
+        cut, before, state,
+    )  # fmt: skip
     pick(breach.make_cuts)(z, mark, again, at)
     out |= {"cut again": again, "at": at, "state again": state}
     pick(breach.close_voids)(z)

@@ -27,7 +27,7 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from basinwright.kernels.geometry import neighbours
+from basinwright.kernels.geometry import neighbours, steps
 from basinwright.kernels.heap import enlarged
 
 # What is noted of a cell, as bits of a byte.
@@ -252,6 +252,31 @@ def group_pits(
 
 
 @njit(cache=True, nogil=True)
+def lowest_around(z: np.ndarray, nrows: int, ncols: int, lowest: np.ndarray) -> None:
+    """Lowest of each cell and its eight neighbours; nothing for the halo.
+
+    Parameters
+    ----------
+    z : float32 array, shape (cells,) [m]
+    nrows, ncols : int
+    lowest : float32 array, shape (cells,) [m]
+        Result.
+    """
+    stride = ncols + 2
+    for row in range(1, nrows + 1):
+        start = row * stride
+        above = z[start - stride : start]
+        here = z[start : start + stride]
+        below = z[start + stride : start + 2 * stride]
+        out = lowest[start : start + stride]
+        for i in range(1, ncols + 1):
+            out[i] = min(
+                above[i - 1], above[i], above[i + 1], here[i - 1], here[i], here[i + 1],
+                below[i - 1], below[i], below[i + 1],
+            )  # fmt: skip
+
+
+@njit(cache=True, nogil=True)
 def block_minima(z: np.ndarray, nrows: int, ncols: int) -> np.ndarray:
     """Lowest elevation of every block of the padded raster, -inf where the outside or unknown ground is in it.
 
@@ -403,10 +428,11 @@ def _original(
 
 @njit(cache=True, nogil=True)
 def _search(
-    z: np.ndarray, drains_at: np.ndarray, mark: np.ndarray, walls: np.ndarray, walled: bool, marked: bool, stride: int,
-    cut_cell: np.ndarray, before: np.ndarray, level: np.floating, sources: np.ndarray, count: int,
-    row0: int, col0: int, bits: int, step_mm: np.ndarray, limit_mm: int, depth_m: float, unit: float,
-    key: np.ndarray, about: np.ndarray, length: np.ndarray, touched: np.ndarray, queue: np.ndarray, heap: np.ndarray,
+    z: np.ndarray, drains_at: np.ndarray, around: np.ndarray, mark: np.ndarray, walls: np.ndarray, walled: bool,
+    marked: bool, stride: int, cut_cell: np.ndarray, before: np.ndarray, level: np.floating, sources: np.ndarray,
+    count: int, row0: int, col0: int, bits: int, step_mm: np.ndarray, limit_mm: int, depth_m: float, unit: float,
+    key: np.ndarray, about: np.ndarray, length: np.ndarray, touched: np.ndarray, queue: np.ndarray,
+    heap: np.ndarray,
 ) -> tuple[int | np.integer, int, bool, np.ndarray]:  # fmt: skip
     """Find the way of least cost from the sources to lower ground; of several, the nearest to the sources' middle.
 
@@ -414,54 +440,65 @@ def _search(
     know that, takes the elevation itself. Returns the place where it ends or -1, the number of touched places, whether
     unknown ground was met, and the heap, which may have grown.
     """
-    o = neighbours(stride)
+    o = steps(stride)
     width = 1 << bits
-    offsets = (-width, 1 - width, 1, width + 1, width, width - 1, -1, -width - 1)
+    offsets = steps(width)
     unknown = False
     middle = _middle(sources, count, bits, about, length, queue)
     size = 0
     touches = 0
     for i in range(count):
-        here = np.int64(sources[i])
+        here = np.uint64(sources[i])
         touched[i] = here
         inside = True
         for k in range(8):
             inside = inside and about[here + offsets[k]] & _SOURCE != 0
         if inside:
             continue
-        off_row = np.float64((here >> bits) - (middle >> bits))
-        off_col = np.float64((here & (width - 1)) - (middle & (width - 1)))
+        off_row = np.float64((sources[i] >> bits) - (middle >> bits))
+        off_col = np.float64((sources[i] & (width - 1)) - (middle & (width - 1)))
         tie = min(np.uint64(16.0 * np.sqrt(off_row * off_row + off_col * off_col)), _MOST_TIE)
-        key[here] = tie << np.uint64(_PLACE_BITS) | np.uint64(here)
+        key[here] = tie << np.uint64(_PLACE_BITS) | here
         length[here] = 0
         if size == heap.size:
             heap = enlarged(heap, size, 2 * size)
         _push(heap, size, key[here])
         size += 1
     touches = count
+    nearest = _UNREACHED  # key of the first place found to end at; what comes after it need not be looked at
     while size > 0:
         top = _pop(heap, size)
         size -= 1
-        here = np.int64(top & _PLACE)
+        here = top & _PLACE
         if key[here] != top:
             continue
-        row = row0 + (here >> bits)
-        c = np.uint64(row * stride + col0 + (here & (width - 1)))
+        row = row0 + (np.int64(here) >> bits)
+        c = np.uint64(row * stride + col0 + (np.int64(here) & (width - 1)))
+        in_table = np.uint64(row - 1)
         if marked and mark[c] & END:
-            return here, touches, unknown, heap
-        for k in range(8):
+            return np.int64(here), touches, unknown, heap
+        if not walled and around[c] < level:
+            return np.int64(here), touches, unknown, heap
+        for k in range(np.uint64(8 if walled or marked else 0)):
             n = c + o[k]
             height = z[n]
             if height == -np.inf:
-                return here, touches, unknown, heap
+                return np.int64(here), touches, unknown, heap
             if drains_at[n] < level:
                 if not _walled(walls, walled, c, k):
-                    return here, touches, unknown, heap
+                    return np.int64(here), touches, unknown, heap
             elif marked and height == level and mark[n] & (END | FIXED) and not _walled(walls, walled, c, k):
-                return here, touches, unknown, heap
+                return np.int64(here), touches, unknown, heap
         so_far = top >> np.uint64(_COST_SHIFT)
         walked = (top >> np.uint64(_PLACE_BITS)) & _MOST_TIE
-        for k in range(8):
+        for k in range(np.uint64(8)):
+            there = here + offsets[k]
+            if key[there] < top or about[there] & _SOURCE:
+                continue
+            step = step_mm[in_table, k]
+            reach = length[here] + step
+            if reach > limit_mm:
+                continue
             n = c + o[k]
             depth = np.float64(z[n]) - level
             if not depth <= depth_m:
@@ -477,15 +514,12 @@ def _search(
                     continue
             if _walled(walls, walled, c, k):
                 continue
-            there = here + offsets[k]
-            step = step_mm[row - 1, k]
-            reach = length[here] + step
-            if about[there] & _SOURCE or reach > limit_mm:
-                continue
             cost = so_far + np.uint64(np.sqrt(depth) * step * unit)
             tie = min(walked + np.uint64(23 if k & 1 else 16), _MOST_TIE)
-            new = cost << np.uint64(_COST_SHIFT) | tie << np.uint64(_PLACE_BITS) | np.uint64(there)
-            if new < key[there]:
+            new = cost << np.uint64(_COST_SHIFT) | tie << np.uint64(_PLACE_BITS) | there
+            if new < key[there] and new < nearest:
+                if not walled and around[n] < level:
+                    nearest = new
                 if not about[there] & _REACHED:
                     touched[touches] = there
                     touches += 1
@@ -542,7 +576,7 @@ def _reach(row0: int, row1: int, step_mm: np.ndarray, limit_mm: int) -> tuple[in
 @njit(cache=True, nogil=True)
 def breach_pits(
     z: np.ndarray, mark: np.ndarray, walls: np.ndarray, walled: bool, marked: bool, ncols: int,
-    lowest: np.ndarray, members: np.ndarray, bounds: np.ndarray, first: int, last: int,
+    around: np.ndarray, lowest: np.ndarray, members: np.ndarray, bounds: np.ndarray, first: int, last: int,
     step_mm: np.ndarray, limit_mm: int, depth_m: float, edges: np.ndarray, state: np.ndarray,
 ) -> tuple[np.ndarray, np.ndarray]:  # fmt: skip
     """Search a way out of some of the pits.
@@ -557,6 +591,8 @@ def breach_pits(
     walled, marked : bool
         Whether there are walls; whether any cell is marked END or FIXED.
     ncols : int
+    around : float32 array, shape (cells,) [m]
+        From `lowest_around`.
     lowest : float32 array, shape (blocks, blocks) [m]
         From `block_minima`.
     members, bounds : int32 arrays
@@ -635,7 +671,7 @@ def breach_pits(
             sources[i] = place
             about[place] = _SOURCE
         goal, touches, unknown, heap = _search(
-            z, z, mark, walls, walled, marked, stride, none_cell, none_level, level, sources, count,
+            z, z, around, mark, walls, walled, marked, stride, none_cell, none_level, level, sources, count,
             row0, col0, bits, step_mm, limit_mm, depth_m, unit, key, about, length, touched, queue, heap,
         )  # fmt: skip
         if unknown:
@@ -739,10 +775,10 @@ def _let_rise(
 
 @njit(cache=True, nogil=True)
 def breach_pools(
-    z: np.ndarray, filled: np.ndarray, mark: np.ndarray, walls: np.ndarray, walled: bool, marked: bool, ncols: int,
-    lowest: np.ndarray, members: np.ndarray, bounds: np.ndarray, pits: np.ndarray, first: int, last: int,
-    step_mm: np.ndarray, limit_mm: int, depth_m: float, edges: np.ndarray, cut_before: np.ndarray, before: np.ndarray,
-    state: np.ndarray,
+    z: np.ndarray, filled: np.ndarray, around: np.ndarray, mark: np.ndarray, walls: np.ndarray, walled: bool,
+    marked: bool, ncols: int, lowest: np.ndarray, members: np.ndarray, bounds: np.ndarray, pits: np.ndarray,
+    first: int, last: int, step_mm: np.ndarray, limit_mm: int, depth_m: float, edges: np.ndarray,
+    cut_before: np.ndarray, before: np.ndarray, state: np.ndarray,
 ) -> tuple[np.ndarray, np.ndarray]:  # fmt: skip
     """Fill some of the pits part of the way, and search a way out of the lakes that they would become.
 
@@ -756,6 +792,8 @@ def breach_pools(
         Elevations after the cuts of `breach_pits`; read only, as all arrays but `state`.
     filled : float32 array, shape (cells,) [m]
         The same, filled.
+    around : float32 array, shape (cells,) [m]
+        From `lowest_around` of `filled`.
     lowest : float32 array, shape (blocks, blocks) [m]
         From `block_minima` of `filled`.
     mark, walls, walled, marked, ncols, members, bounds, step_mm, limit_mm, depth_m, edges
@@ -860,7 +898,7 @@ def breach_pools(
                 for s in range(count):
                     about[pool[s]] = _WET | _SOURCE
                 goal, touches, unknown, heap = _search(
-                    z, filled, mark, walls, walled, marked, stride, cut_before, before, water, pool, count,
+                    z, filled, around, mark, walls, walled, marked, stride, cut_before, before, water, pool, count,
                     row0, col0, bits, step_mm, limit_mm, depth_m, unit, key, about, length, touched, inner, heap,
                 )  # fmt: skip
                 if unknown:

@@ -87,19 +87,21 @@ def breach(
     limit_mm = int(length_m * 1000)
     edges = np.array([0, nrows + 1, 0, ncols + 1])
     if state.size:
+        around = lake.view(np.float32)
+        kernel.lowest_around(z, nrows, ncols, around)
         lowest = kernel.block_minima(z, nrows, ncols)
 
         def search(first: int, last: int) -> tuple[np.ndarray, np.ndarray]:
             return kernel.breach_pits(
-                z, mark, walls, walled, marked, ncols, lowest, members, bounds, first, last,
+                z, mark, walls, walled, marked, ncols, around, lowest, members, bounds, first, last,
                 step_mm, limit_mm, depth_m, edges, state,
             )  # fmt: skip
 
         cut_cell, cut_level = _in_chunks(search, state.size, threads)
-        cut_before = np.unique(cut_cell)
+        failed = np.flatnonzero(state == kernel.FAILED).astype(np.int32)
+        cut_before = np.unique(cut_cell if failed.size else cut_cell[:0])
         before = z[cut_before]
         kernel.make_cuts(z, mark, cut_cell, cut_level)
-        failed = np.flatnonzero(state == kernel.FAILED).astype(np.int32)
         if failed.size:
             seeds = members[bounds[failed]]
 
@@ -109,12 +111,15 @@ def breach(
                 return _filled(z, nrows, ncols, mark, seeds, lake)
 
             filled = filled_now()
+            around_filled = np.empty_like(z)
+            kernel.lowest_around(filled, nrows, ncols, around_filled)
             lowest_filled = kernel.block_minima(filled, nrows, ncols)
 
             def search_again(first: int, last: int) -> tuple[np.ndarray, np.ndarray]:
                 return kernel.breach_pools(
-                    z, filled, mark, walls, walled, marked, ncols, lowest_filled, members, bounds, failed, first, last,
-                    step_mm, limit_mm, depth_m, edges, cut_before, before, state,
+                    z, filled, around_filled, mark, walls, walled, marked, ncols, lowest_filled, members, bounds,
+                    failed, first, last, step_mm, limit_mm, depth_m, edges,
+                    cut_before, before, state,
                 )  # fmt: skip
 
             kernel.make_cuts(z, mark, *_in_chunks(search_again, failed.size, threads))

@@ -259,9 +259,11 @@ def _breached(
     if not mine.any():
         none = np.empty(0, np.int64)
         return none, np.empty(0, np.float32), none, np.empty(0, np.uint8)
+    around = np.empty_like(window.z)
+    kernel.lowest_around(window.z, *window.shape, around)
     cells, levels = kernel.breach_pits(
         window.z, window.mark, _NO_WALLS, False, False, window.shape[1],
-        kernel.block_minima(window.z, *window.shape), members, bounds, 0, state.size,
+        around, kernel.block_minima(window.z, *window.shape), members, bounds, 0, state.size,
         ground.step_mm[window.rows], ground.limit_mm, ground.depth_m, window.edges, state,
     )  # fmt: skip
     seeds = window.in_raster(members[bounds[:-1][mine]])
@@ -333,8 +335,10 @@ def _breached_pools(
     members, _ = window.in_window(seeds)
     state = np.full(seeds.size, kernel.FAILED, np.uint8)
     number = np.arange(seeds.size + 1, dtype=np.int32)
+    around = np.empty_like(filled)
+    kernel.lowest_around(filled, *window.shape, around)
     cells, levels = kernel.breach_pools(
-        window.z, filled, window.mark, _NO_WALLS, False, False, window.shape[1],
+        window.z, filled, around, window.mark, _NO_WALLS, False, False, window.shape[1],
         kernel.block_minima(filled, *window.shape), members, number, number[:-1], 0, seeds.size,
         ground.step_mm[window.rows], ground.limit_mm, ground.depth_m, window.edges, cut_before, before, state,
     )  # fmt: skip
