@@ -476,7 +476,7 @@ class TestTheFolder:
         monkeypatch.setattr(Draft, step, refuse)
         status, lines = command("run", file)
         assert status == 2
-        assert "cannot be written (refused by the test)" in lines[-1]
+        assert "cannot be written (refused by the test" in lines[-1]
         assert not (tmp_path / "out").exists()
         monkeypatch.undo()
 
