@@ -311,17 +311,19 @@ def _route(files: Files, workers: Workers) -> int:
     flat_cells = sum(cells for cells, _, _ in found)
     nearer, away = RimLines(tiling, np.int32, NO_FLAT), RimLines(tiling, np.int32, NO_FLAT)
     steps: dict[int, _Flats] = {tile.index: flats for tile, (_, _, flats) in zip(tiles, found, strict=True) if flats}
-    told = dict(steps)
+    told, known = dict(steps), dict[int, _Around]()
     while told:
         for i, flats in told.items():
             nearer.put(tiles[i], flats.nearer)
             away.put(tiles[i], flats.away)
-        asked = [tiles[i] for i in sorted(steps) if any(_beside(tiling, i, j) for j in told)]
-        answers = workers.map(_spread, [(files, tile, nearer.around(tile), away.around(tile)) for tile in asked])
+        around = {i: _Around(nearer.around(tiles[i]), away.around(tiles[i])) for i in sorted(steps)}
+        asked = [i for i, now in around.items() if i not in known or _differ_around(now, known[i])]
+        answers = workers.map(_spread, [(files, tiles[i], *around[i]) for i in asked])
+        known = around
         told = {
-            tile.index: flats
-            for tile, flats in zip(asked, answers, strict=True)
-            if _differ(flats.nearer, steps[tile.index].nearer) or _differ(flats.away, steps[tile.index].away)
+            i: flats
+            for i, flats in zip(asked, answers, strict=True)
+            if _differ(flats.nearer, steps[i].nearer) or _differ(flats.away, steps[i].away)
         }
         steps |= told
     open_tiles = [tiles[i] for i in sorted(steps)]
@@ -334,10 +336,15 @@ def _route(files: Files, workers: Workers) -> int:
     return flat_cells
 
 
-def _beside(tiling: Tiling, i: int, j: int) -> bool:
-    """Whether two tiles touch, or are one."""
-    (row, col), (other_row, other_col) = divmod(i, tiling.tiles_across), divmod(j, tiling.tiles_across)
-    return abs(row - other_row) <= 1 and abs(col - other_col) <= 1
+class _Around(NamedTuple):
+    """The same of the cells around a tile."""
+
+    nearer: Strips
+    away: Strips
+
+
+def _differ_around(one: _Around, other: _Around) -> bool:
+    return _differ(one.nearer, other.nearer) or _differ(one.away, other.away)
 
 
 def _differ(one: Strips, other: Strips) -> bool:
