@@ -12,7 +12,8 @@ from basinwright.terrain.constraints import Constraints, levels
 
 _CHUNKS_PER_THREAD = 16
 _LOCAL_SHARE = 8
-"""Lakes are filled one by one while they cover less than this part of the terrain."""
+_CELLS_PER_LAKE = 50_000
+"""Lakes are filled one by one where they are few: one to so many cells, and less than an eighth of the terrain."""
 
 _NONE = np.zeros(1, np.uint8)
 
@@ -135,7 +136,8 @@ def _filled(z: np.ndarray, nrows: int, ncols: int, mark: np.ndarray, seeds: np.n
     from basinwright.kernels import fill
 
     filled = z.copy()
-    if not kernel.fill_lakes(filled, mark, ncols, seeds, lake, z.size // _LOCAL_SHARE):
+    few = seeds.size <= 16 + z.size // _CELLS_PER_LAKE
+    if not (few and kernel.fill_lakes(filled, mark, ncols, seeds, lake, z.size // _LOCAL_SHARE)):
         work = np.empty(z.size, np.uint8), np.empty(z.size, np.int32)
         fill.fill_everywhere(filled, nrows, ncols, *work, lake)
         np.copyto(filled, z, where=z == -np.inf)
