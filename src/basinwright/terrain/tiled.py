@@ -381,47 +381,52 @@ def _descend(files: Files, tile: Tile) -> tuple[int, int, _Flats | None]:
     padded_raster(files.directions, files.tiling, write=True)[1:-1, 1:-1][tile.rows, tile.cols] = core
     if cells.size == of_ring:
         return flat_cells, undrained, None
-    kept = slice(of_ring, None)
-    files.keep(tile, "flats", cells=cells[kept], towards=towards[kept], beside_higher=beside_higher[kept])
+    rowwise = of_ring + np.argsort(cells[of_ring:])
+    files.keep(tile, "flats", cells=cells[rowwise], towards=towards[rowwise], beside_higher=beside_higher[rowwise])
+    _first_steps(files, tile)
     unknown = np.full((nrows + 4, ncols + 4), tiles.NO_FLAT, np.int32)
     unknown.reshape(-1)[cells[:of_ring]] = tiles.UNREACHED
     around = strips_around(unknown[1:-1, 1:-1])
-    return flat_cells, undrained, _spread(files, tile, around, around)
+    return flat_cells, undrained, _spread(files, tile, around, around, begin=True)
 
 
-def _steps(files: Files, tile: Tile, around: Strips, first: np.ndarray) -> np.ndarray:
-    """Steps across the open flats of a tile, from where they begin and from beyond the rim; two cells wider."""
-    from basinwright.kernels import tiles
-
+def _field(files: Files, tile: Tile, around: Strips, steps: np.ndarray) -> np.ndarray:
+    """Steps of the open flats of a tile and of the cells around it, flat, two cells wider than the tile."""
     nrows, ncols = tile.shape
     field = np.zeros((nrows + 4, ncols + 4), np.int32)  # NO_FLAT
     set_around(field[1:-1, 1:-1], around)
     flat = field.reshape(-1)
-    ring = frame(nrows + 4, ncols + 4, 1)
-    ring = ring[(flat[ring] != tiles.NO_FLAT) & (flat[ring] != tiles.UNREACHED)]
-    flat[files.kept(tile, "flats", "cells")] = tiles.UNREACHED
-    flat[first] = 1
-    sources = np.concatenate([first, ring])
-    sources = sources[np.argsort(flat[sources], kind="stable")].astype(np.int32)
-    tiles.spread_steps(flat, ncols + 4, sources, np.empty(flat.size, np.int32))
-    return field
+    flat[files.kept(tile, "flats", "cells")] = steps
+    return flat
 
 
-def _both_steps(files: Files, tile: Tile, nearer: Strips, away: Strips) -> tuple[np.ndarray, np.ndarray]:
-    from basinwright.kernels.tiles import NO_CODE
+def _first_steps(files: Files, tile: Tile) -> None:
+    """Start counting: 1 where the open flats of a tile have lower or higher ground beside them."""
+    from basinwright.kernels import tiles
 
+    drains = files.kept(tile, "flats", "towards") != tiles.NO_CODE
+    for name, begins in (("nearer", drains), ("away", files.kept(tile, "flats", "beside_higher"))):
+        files.keep(tile, "flats", **{name: np.where(begins, 1, tiles.UNREACHED).astype(np.int32)})
+
+
+def _spread(files: Files, tile: Tile, nearer: Strips, away: Strips, begin: bool = False) -> _Flats:
+    """Begin counting, or go on, knowing what lies around; to do the same again changes nothing."""
+    from basinwright.kernels import tiles
+
+    nrows, ncols = tile.shape
     cells = files.kept(tile, "flats", "cells")
-    drains = files.kept(tile, "flats", "towards") != NO_CODE
-    return (
-        _steps(files, tile, nearer, cells[drains]),
-        _steps(files, tile, away, cells[files.kept(tile, "flats", "beside_higher")]),
-    )
-
-
-def _spread(files: Files, tile: Tile, nearer: Strips, away: Strips) -> _Flats:
-    """Count the steps again, knowing what lies around."""
-    fields = _both_steps(files, tile, nearer, away)
-    return _Flats(*(strips_of(field[2:-2, 2:-2]) for field in fields))
+    queue = np.empty((nrows + 4) * (ncols + 4), np.int32)
+    ring = frame(nrows + 4, ncols + 4, 1)
+    told = []
+    for name, around in (("nearer", nearer), ("away", away)):
+        steps = files.kept(tile, "flats", name)
+        flat = _field(files, tile, around, steps)
+        known = ring[(flat[ring] != tiles.NO_FLAT) & (flat[ring] != tiles.UNREACHED)]
+        sources = np.concatenate([cells[steps == 1], known]) if begin else known
+        tiles.spread_steps(flat, ncols + 4, sources[np.argsort(flat[sources], kind="stable")].astype(np.int32), queue)
+        files.keep(tile, "flats", **{name: flat[cells]})
+        told.append(strips_of(flat.reshape(nrows + 4, -1)[2:-2, 2:-2]))
+    return _Flats(*told)
 
 
 def _drain(files: Files, tile: Tile, nearer: Strips, away: Strips) -> int:
@@ -429,12 +434,13 @@ def _drain(files: Files, tile: Tile, nearer: Strips, away: Strips) -> int:
     from basinwright.kernels import tiles
 
     nrows, ncols = tile.shape
-    to_lower, from_higher = _both_steps(files, tile, nearer, away)
     cells = files.kept(tile, "flats", "cells")
     code = np.zeros((nrows + 4) * (ncols + 4), np.uint8)
     undrained = tiles.drain_open_flats(
-        code, ncols + 4, cells, files.kept(tile, "flats", "towards"), to_lower.reshape(-1), from_higher.reshape(-1)
-    )
+        code, ncols + 4, cells, files.kept(tile, "flats", "towards"),
+        _field(files, tile, nearer, files.kept(tile, "flats", "nearer")),
+        _field(files, tile, away, files.kept(tile, "flats", "away")),
+    )  # fmt: skip
     into = padded_raster(files.directions, files.tiling, write=True)[1:-1, 1:-1][tile.rows, tile.cols]
     row, col = np.divmod(cells, ncols + 4)
     into[row - 2, col - 2] = code[cells]
