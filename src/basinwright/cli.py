@@ -6,13 +6,13 @@ Heavy libraries are imported inside the commands, so that ``--help`` answers at 
 from __future__ import annotations
 
 import sys
-import time
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
 
 import typer
 
 from basinwright.errors import BasinwrightError
+from basinwright.outputs.screen import Screen
 
 if TYPE_CHECKING:
     from basinwright.pipeline import Outcome
@@ -31,17 +31,6 @@ app = typer.Typer(
 
 ProjectFile = Annotated[Path, typer.Argument(metavar="PROJECT.toml", help="The project file.")]
 RunDir = Annotated[Path, typer.Argument(metavar="RUN_DIR", help="The folder of a finished run.")]
-
-
-class Screen:
-    """Says on standard error what is happening, one line for each step."""
-
-    def __init__(self) -> None:
-        self.started = time.monotonic()
-
-    def __call__(self, text: str) -> None:
-        """Print a line with the time since the start."""
-        print(f"[{time.monotonic() - self.started:6.1f} s] {text}", file=sys.stderr, flush=True)
 
 
 def _print_version(wanted: bool) -> None:
@@ -71,10 +60,10 @@ def demo(
     """Copy the sample project to DIR and run it there."""
     from basinwright import pipeline
 
-    screen = Screen()
-    project_file = pipeline.copy_sample(folder)
-    screen(f"The sample project is in {folder}")
-    outcome = pipeline.run(project_file, overwrite=True, say=screen)
+    with Screen() as screen:
+        project_file = pipeline.copy_sample(folder)
+        screen(f"The sample project is in {folder}")
+        outcome = pipeline.run(project_file, overwrite=True, say=screen)
     return _report(outcome)
 
 
@@ -124,16 +113,17 @@ def run(
     """Do the whole job: terrain to flood hydrographs, for every outlet."""
     from basinwright import pipeline
 
-    outcome = pipeline.run(
-        project,
-        out=out,
-        jobs=jobs,
-        resume=resume,
-        overwrite=overwrite,
-        summary_only=summary_only,
-        also_at=also_at or (),
-        say=Screen(),
-    )
+    with Screen() as screen:
+        outcome = pipeline.run(
+            project,
+            out=out,
+            jobs=jobs,
+            resume=resume,
+            overwrite=overwrite,
+            summary_only=summary_only,
+            also_at=also_at or (),
+            say=screen,
+        )
     return _report(outcome)
 
 
@@ -142,7 +132,9 @@ def retime(folder: RunDir) -> int:
     """Compute timing, runoff and hydrographs again from a run's tables, edited or not; no raster is read."""
     from basinwright import pipeline
 
-    return _report(pipeline.retime(folder, say=Screen()))
+    with Screen() as screen:
+        outcome = pipeline.retime(folder, say=screen)
+    return _report(outcome)
 
 
 @app.command()
@@ -155,7 +147,9 @@ def report(
     """Make the HTML report of a finished run again."""
     from basinwright import pipeline
 
-    print(pipeline.report(folder, outlet_id, say=Screen()))
+    with Screen() as screen:
+        page = pipeline.report(folder, outlet_id, say=screen)
+    print(page)
     return DONE
 
 

@@ -276,6 +276,15 @@ class Store:
         """Return what the manifest says of the stages of a variant."""
         return [record.describe() for record in self.records if record.variant == variant]
 
+    def most_memory(self) -> str:
+        """Say how much memory the run took at most, and in which stage."""
+        measured = [record for record in self.records if record.peak_memory_mb is not None]
+        if not measured:
+            return "Done"
+        most = max(measured, key=lambda record: record.peak_memory_mb or 0.0)
+        stage = f"{most.variant}: {most.name}" if most.variant else most.name
+        return f"Done; at most {most.peak_memory_mb:,.0f} MB of memory, in stage {stage} (run.json: all stages)"
+
     def _take_over(self, final: Path) -> bool:
         source = self.earlier / final.name if self.earlier else None
         if source is None or not source.is_dir():

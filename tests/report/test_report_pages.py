@@ -21,6 +21,7 @@ from basinwright.cli import app
 from basinwright.errors import InputRejected
 from basinwright.flags import FLAGS
 from basinwright.numbers import three_figures
+from basinwright.progress import heard_by
 from basinwright.report import write_report
 
 pytestmark = pytest.mark.xdist_group("report")
@@ -238,10 +239,11 @@ def same(one: Path, other: Path) -> bool:
 def test_pages_do_not_depend_on_the_number_of_processes(many: Path, tmp_path: Path) -> None:
     run = tmp_path / "elsewhere"
     shutil.copytree(many, run)
-    told: list[str] = []
-    write_report(run, json.loads(read(run / "run.json")), jobs=1, say=told.append)
+    told: list[tuple[float, float, str]] = []
+    with heard_by(lambda *far: told.append(far)):
+        write_report(run, json.loads(read(run / "run.json")), jobs=1)
     assert same(run / "report", many / "report")
-    assert told[-1].startswith("Report: 27 of 27 pages")
+    assert told == [(done, 27, "pages") for done in range(1, 28)]
     assert str(tmp_path) not in read(run / "report" / "index.html")
 
 

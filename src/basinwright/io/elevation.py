@@ -28,6 +28,7 @@ from basinwright.io.rasters import (
     read_header,
     short_name,
 )
+from basinwright.progress import tell
 from basinwright.terrain.workspace import IN_MEMORY, Workspace
 from basinwright.units import M_PER_FT
 
@@ -180,11 +181,13 @@ def open_terrain(
     elevation = make("native" if plan.reason else "elevation_m", plan.native.shape, _float_type(plan.headers))
     elevation[:] = np.nan
     damaged: list[Problem] = []
-    for header in plan.headers:
+    for number, header in enumerate(plan.headers, start=1):
         try:
             problems += _read_tile(header, plan, elevation)
         except InputRejected as error:
             damaged += error.problems
+        if len(plan.headers) > 1:
+            tell(number, len(plan.headers), "files")
     if len(damaged) == len(plan.headers):
         problems += damaged
     if not problems and not any(np.isfinite(rows).any() for rows in elevation):
@@ -385,6 +388,8 @@ def _read_tile(header: Header, plan: TerrainPlan, elevation: NDArray[np.floating
             highest = max(highest, np.fmax.reduce(block, axis=None, initial=-np.inf))
             into = elevation[top + first : top + first + height, left : left + header.ncols]
             np.copyto(into, block, where=np.isnan(into))
+            if len(plan.headers) == 1:
+                tell(first + height, header.nrows, "rows")
     if undeclared or lowest < _LOWEST_M or highest > _HIGHEST_M:
         what = f"elevations run from {lowest:g} to {highest:g} m, which no land does"
         return [Problem(str(header.path), "cells", what, "declare its nodata value, and check its unit")]

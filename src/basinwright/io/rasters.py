@@ -17,6 +17,7 @@ from affine import Affine
 
 from basinwright.errors import InputRejected, Problem
 from basinwright.grid import Grid
+from basinwright.progress import tell
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -341,6 +342,7 @@ def read_blocks_onto(
                 window = Window(0, first, grid.ncols, min(rows, grid.nrows - first))
                 block = warped.read(1, window=window, masked=True)
                 yield first, np.ma.masked_invalid(block, copy=False) if block.dtype.kind == "f" else block
+                tell(first + len(block), grid.nrows, "rows")
 
 
 def read_onto(

@@ -14,6 +14,7 @@ from typing import TYPE_CHECKING, Any
 
 from basinwright.errors import BasinwrightError, Problem
 from basinwright.grid import Grid
+from basinwright.progress import tell
 from basinwright.project import Compute
 from basinwright.store import Draft, peak_memory_mb, reset_peak_memory
 from basinwright.terrain.tiling import Tiling
@@ -30,8 +31,12 @@ BYTES_PER_CELL = 64
 """Of the largest stage where all of the terrain is in memory, the rasters that the system may map included."""
 TILE_BYTES_PER_CELL = 48
 """Of the largest step on a tile."""
-SCRATCH_BYTES_PER_CELL = 40
-"""On disk, for the rasters of the store and what the steps on tiles hand each other."""
+STORE_BYTES_PER_CELL, RASTER_BYTES_PER_CELL = 31, 8
+"""On disk: the arrays of the store, and the terrain rasters with what is drawn from them."""
+SCRATCH_BYTES_PER_CELL = 20
+"""On disk, for what the steps on tiles hand each other."""
+PROCESS_BYTES = 3.5e8
+"""Of a process before any terrain: libraries and compiled kernels."""
 LARGEST_SIDE, SMALLEST_SIDE = 4096, 64
 ATTEMPTS = 3
 """How often a step on one tile may lose its worker."""
@@ -70,14 +75,36 @@ class Machine:
     def __exit__(self, *error: object) -> None:
         self._open.close()
 
-    def plan(self) -> str:
-        """Say in a few words how the terrain is processed; empty where it simply fits."""
-        if self.tiling is None:
-            return ""
-        rows, cols = next(iter(self.tiling)).shape
-        disk_gb = self._cells * SCRATCH_BYTES_PER_CELL / 1e9
-        who = f"the cluster at {self.compute.scheduler}" if self.compute.scheduler else f"{self.compute.jobs} workers"
-        return f" in {len(self.tiling)} tiles of {rows} x {cols} on {who} (about {disk_gb:.2g} GB of disk)"
+    def plan(self, place: Path, coarser: Sequence[int], *, rasters: bool) -> str:
+        """Say what the run will take.
+
+        Parameters
+        ----------
+        place : Path
+            Where it is built.
+        coarser : sequence of int
+            Cells along a side of those that the job is repeated on.
+        rasters : bool
+            Whether rasters and layers are written too.
+        """
+        disk = self._cells * (
+            STORE_BYTES_PER_CELL * (1 + sum(k**-2 for k in coarser)) + RASTER_BYTES_PER_CELL * rasters
+        )
+        memory = PROCESS_BYTES + self._cells * BYTES_PER_CELL
+        how = "in memory"
+        if self.tiling is not None:
+            rows, cols = next(iter(self.tiling)).shape
+            jobs, at = self.compute.jobs, self.compute.scheduler
+            who = f"the cluster at {at}" if at else f"{jobs} workers"
+            how = f"in {len(self.tiling)} tiles of {rows} x {cols} on {who}"
+            memory = (jobs + 1) * (PROCESS_BYTES + rows * cols * TILE_BYTES_PER_CELL)
+            disk += self._cells * SCRATCH_BYTES_PER_CELL
+        free = shutil.disk_usage(place).free
+        short = "; that is more than is free: make room, or choose another --out" if disk > free else ""
+        return (
+            f"Plan: {self._cells / 1e6:,.3g} million cells {how}; about {memory / 1e9:.2g} GB of memory and "
+            f"{disk / 1e9:.2g} GB of disk ({free / 1e9:.3g} GB free){short}"
+        )
 
     @contextmanager
     def space(self, draft: Draft, terrain: Terrain | None = None) -> Iterator[Workspace]:
@@ -107,12 +134,14 @@ class Machine:
         BasinwrightError
             Where a step loses its worker again and again.
         """
-        from distributed import KilledWorker
+        from distributed import KilledWorker, as_completed
 
         client = self._started()
         with warnings.catch_warnings():
             warnings.filterwarnings("ignore", message="Sending large graph")  # what a tile must be told is told so
             futures = client.map(_measured, [function] * len(calls), calls, pure=False)
+        for done, _ in enumerate(as_completed(futures), start=1):
+            tell(done, len(futures), "tiles")
         results = []
         try:
             for result, worker, peak_mb in client.gather(futures):

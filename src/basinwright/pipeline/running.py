@@ -160,10 +160,12 @@ def _build(
     from basinwright.editing import Edited
     from basinwright.outputs import writing
     from basinwright.pipeline import cell_sizes, geometry, manifest, second_opinion, terrain_half, variants
+    from basinwright.pipeline.machine import Machine
     from basinwright.report import write_report
 
     project, series = inputs.project, not summary_only
     store = Store(partial / STORE, folder.final / STORE if resume else None, say)
+    say(Machine(project.compute, inputs.plan.grid).plan(partial, [size.cells for size in sizes], rasters=series))
     half = terrain_half.run(inputs, store)
     flags = half.flags()
     if project.audit.second_opinion != "none":
@@ -200,8 +202,9 @@ def _build(
     about = manifest.describe(inputs, half, store, base, first, own.held, results, scenarios, size_runs, summary_only)
     if not summary_only:
         say("Writing the report")
-        write_report(partial, about, jobs=project.compute.jobs, say=say)
+        write_report(partial, about, jobs=project.compute.jobs)
     manifest.write(partial, about)
+    say(store.most_memory())
     return Outcome(folder.final, project, results.tables["outlets"], results.flags, variants.told(scenarios))
 
 
@@ -283,7 +286,7 @@ def retime(run_dir: Path, *, revise: Callable[[Path], None] | None = None, say: 
             about = manifest.retimed(about, record, edits.held, results, scenarios)
             if not summary_only:
                 say("Writing the report")
-                write_report(partial, about, jobs=project.compute.jobs, say=say)
+                write_report(partial, about, jobs=project.compute.jobs)
             manifest.write(partial, about)
         folder.publish()
     return Outcome(folder.final, project, results.tables["outlets"], results.flags, variants.told(scenarios))
@@ -330,7 +333,7 @@ def report(run_dir: Path, outlet_id: str | None = None, *, say: Say = _silent) -
         with folder.building():
             partial = folder.begin_copy()
             if outlet_id is None:
-                write_report(partial, about, jobs=int(about["project"]["compute"]["jobs"]), say=say)
+                write_report(partial, about, jobs=int(about["project"]["compute"]["jobs"]))
                 page = Path("report", "index.html")
             else:
                 page = write_outlet_page(partial, about, outlet_id).relative_to(partial)

@@ -170,7 +170,7 @@ def _run(inputs: Inputs, store: Store, machine: Machine) -> TerrainHalf:
     hydrography = mapping.run(inputs, elevation, store) if inputs.mapped else None
     routing = store.stage(
         "routing",
-        f"Conditioning and routing {grid.nrows * grid.ncols / 1e6:.2f} million cells{machine.plan()}{_compiling()}",
+        f"Conditioning and routing {grid.nrows * grid.ncols / 1e6:.2f} million cells{_compiling()}",
         {
             "elevation": elevation.key,
             "conditioning": vars(_conditioning(project)),

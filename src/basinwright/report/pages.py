@@ -11,7 +11,7 @@ import shutil
 import subprocess
 import sys
 import tempfile
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Iterator, Mapping
 from contextlib import ExitStack
 from dataclasses import replace
 from functools import cache
@@ -22,6 +22,7 @@ from typing import TYPE_CHECKING, Any
 from markupsafe import Markup
 
 from basinwright.errors import BasinwrightError
+from basinwright.progress import tell
 from basinwright.report import charts, comparisons, confidence, context, maps, palette, words
 from basinwright.report.reading import Outlet, Run, read_run
 
@@ -32,14 +33,8 @@ ONE_FILE = 25
 """Up to so many outlets the report is one file; above, an index and a page for each."""
 FOLDER, PAGES, INDEX = "report", "outlets", "index.html"
 
-Say = Callable[[str], None]
 
-
-def _silent(text: str) -> None:
-    del text
-
-
-def write_report(folder: Path, about: Mapping[str, Any], *, jobs: int = 1, say: Say = _silent) -> None:
+def write_report(folder: Path, about: Mapping[str, Any], *, jobs: int = 1) -> None:
     """Write the report of a run into its folder, in place of an earlier one.
 
     Parameters
@@ -50,8 +45,6 @@ def write_report(folder: Path, about: Mapping[str, Any], *, jobs: int = 1, say: 
         The manifest.
     jobs : int
         Processes that make pages where there are many; the pages do not depend on it.
-    say : callable
-        Told how far it is.
 
     Raises
     ------
@@ -69,7 +62,7 @@ def write_report(folder: Path, about: Mapping[str, Any], *, jobs: int = 1, say: 
         return
     _write(target / INDEX, _index(run, []))
     (target / PAGES).mkdir()
-    _write_pages(run, target / PAGES, jobs, say)
+    _write_pages(run, target / PAGES, jobs)
 
 
 def write_outlet_page(folder: Path, about: Mapping[str, Any], outlet_id: str) -> Path:
@@ -218,15 +211,12 @@ _NEEDED = ("name", "project", "grid", "scheme")
 """What a page alone needs of the manifest."""
 
 
-def _write_pages(run: Run, target: Path, jobs: int, say: Say) -> None:
+def _write_pages(run: Run, target: Path, jobs: int) -> None:
     """Write a page for each outlet, in processes of their own."""
     tasks = [(outlet, _neighbours(run, outlet)) for outlet in run.outlets]
     lean = replace(run, about={key: run.about[key] for key in _NEEDED}, outlets=[])
-    told = 0
     for done, _ in enumerate(_in_processes(lean, tasks, target, max(1, min(jobs, os.cpu_count() or 1))), start=1):
-        if done * 10 // len(tasks) > told:
-            told = done * 10 // len(tasks)
-            say(f"Report: {done:,} of {len(tasks):,} pages {'█' * told}{'░' * (10 - told)}")
+        tell(done, len(tasks), "pages")
 
 
 def _in_processes(run: Run, tasks: list[tuple[Outlet, dict[str, Any]]], target: Path, jobs: int) -> Iterator[str]:

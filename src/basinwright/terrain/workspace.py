@@ -10,6 +10,7 @@ from typing import Any, Protocol
 
 import numpy as np
 
+from basinwright.progress import tell
 from basinwright.terrain.tiling import Tile, Tiling
 
 
@@ -25,7 +26,11 @@ class InProcess:
 
     def map(self, function: Callable[..., Any], calls: Sequence[tuple[Any, ...]]) -> list[Any]:
         """Call the function for each, one after the other."""
-        return [function(*call) for call in calls]
+        results = []
+        for call in calls:
+            results.append(function(*call))
+            tell(len(results), len(calls), "tiles")
+        return results
 
 
 @dataclass(frozen=True)
