@@ -256,6 +256,7 @@ def run(
     resume: bool = False,
     overwrite: bool = False,
     summary_only: bool = False,
+    also_at: Sequence[str] = (),
     say: Callable[[str], None] = lambda text: None,
 ) -> Outcome:
     """Do the whole job of a project.
@@ -274,6 +275,8 @@ def run(
         Replace the run that the folder holds.
     summary_only : bool
         Tables only: no polygons, no terrain rasters, no hydrograph series.
+    also_at : sequence of str
+        Coarser cell sizes, such as ``30 m``, on which to repeat the job and compare.
     say : callable
         Told what is happening.
 
@@ -303,6 +306,7 @@ def run(
         resume=resume,
         overwrite=overwrite,
         summary_only=summary_only,
+        also_at=also_at,
         say=say,
     )
 
