@@ -157,15 +157,15 @@ def srtm():
     return ground, down, surface, cells
 
 
-@pytest.mark.parametrize(("mode", "share"), [("fill", 0.90), ("breach", 0.85)])
-def test_pysheds_has_the_same_area_at_random_channel_cells(srtm, mode, share):
+@pytest.mark.parametrize(("mode", "share", "near"), [("fill", 0.90, 0.95), ("breach", 0.85, 0.90)])
+def test_pysheds_has_the_same_area_at_random_channel_cells(srtm, mode, share, near):
     """Within 1 % at nine of ten where both fill; every other cell with a cause, and a flat, a tie or a cut it is."""
     ground, down, surface, cells = srtm
     off, causes = parting(
         down[mode], kit.pysheds(ground).down, cells, (surface[mode], surface["fill"]), ground.elevation_m
     )
     assert (off <= 0.01).mean() >= share
-    assert (off <= 0.05).mean() >= 0.95
+    assert (off <= 0.05).mean() >= near
     assert len(causes) == (off > 0.01).sum()
     assert set(causes) <= {"edge", "flat", "tie"} | ({"cut"} if mode == "breach" else set())
 

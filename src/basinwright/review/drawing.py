@@ -49,13 +49,20 @@ class Drawing:
     def __init__(self, session: Session) -> None:
         self.session = session
         self._of: tuple[str, str] | None = None
+        self._held: tuple[Run, Outlet, Outlet | None]
 
     def _run(self, outlet_id: str) -> tuple[Run, Outlet, Outlet | None]:
         """Return the run with the geometries of an outlet, that outlet, and the outlet as the run first computed it."""
         session = self.session
         session.state(outlet_id)  # refuses an unknown one
         if self._of != (session.identity, outlet_id):
-            run = read_run(session.folder, session.about, rows_only=True)
+            if self._of is None or self._of[0] != session.identity:
+                run = read_run(session.folder, session.about, rows_only=True)
+            else:
+                run = self._held[0]
+                left = self._held[1]  # what was drawn of it is not kept
+                left.basin = left.subbasin = left.path = None
+                left.lines, left.streams, left.neighbours = {}, [], []
             read_layers(run, outlet_id)
             base = run.outlet(outlet_id)
             first = None if base.failed else self._computed(outlet_id, session.first(outlet_id))

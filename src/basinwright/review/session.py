@@ -148,6 +148,7 @@ class Session:
         self.ids: list[str] = self.record.written["outlets"]["outlet_id"].tolist()
         self.identity = _fingerprint(self.record.written)
         self.ground = manifest.ground(self.about, self.record, self.settings)
+        self._written_rows, self._first_rows = _Rows(self.record.written), _Rows(self.record.first)
         self._states: dict[str, State] = {}
         self._marks = self._stored_marks()
         self.__dict__.pop("shapes", None)
@@ -177,18 +178,18 @@ class Session:
         if outlet_id not in self._states:
             if outlet_id not in self.ids:
                 raise InputRejected.one("outlets.csv", "outlet_id", f"has no {outlet_id!r}", "choose one of its list")
-            return State(self._decided(self.record.written, self.record.held, outlet_id), self._stored(outlet_id))
+            return State(self._decided(self._written_rows, self.record.held, outlet_id), self._mark(outlet_id))
         return self._states[outlet_id]
 
     def first(self, outlet_id: str) -> State:
         """Return an outlet as the run first wrote it."""
-        return State(self._decided(self.record.first, self.record.supplied, outlet_id), self._mark(outlet_id))
+        return State(self._decided(self._first_rows, self.record.supplied, outlet_id), self._mark(outlet_id))
 
-    def _decided(self, frames: Mapping[str, pd.DataFrame], held: set[Cell], outlet_id: str) -> dict[str, list[Row]]:
+    def _decided(self, tables: _Rows, held: set[Cell], outlet_id: str) -> dict[str, list[Row]]:
         """Return the rows of an outlet with every cell empty that is computed: what a person decides, and no more."""
         decided = {}
         for name in TABLES:
-            rows = _rows_of(frames[name], outlet_id)
+            rows = tables.of(name, outlet_id)
             for place, row in enumerate(rows, start=1):
                 key = {"segments": row.get("segment", ""), "outlets": "", "cover_shares": str(place)}[name]
                 for stem in _DEPENDENT[name]:
@@ -200,12 +201,9 @@ class Session:
     def _column(self, table: str, stem: str) -> str:
         return _EDITABLE[table].column(stem).name(self.system)
 
-    def _stored(self, outlet_id: str) -> Mark:
-        return self._marks.get(outlet_id, Mark())
-
     def shown(self, outlet_id: str, table: str) -> list[Row]:
         """Return the rows of an outlet as last written, computed cells and all."""
-        return _rows_of(self.record.written[table], outlet_id)
+        return self._written_rows.of(table, outlet_id)
 
     def standing(self, outlet_id: str, state: State) -> dict[str, list[Row]]:
         """Return the rows of a state as they would stand in the files: with the cells that nobody may edit."""
@@ -213,7 +211,8 @@ class Session:
                 state.rows.items()}  # fmt: skip
 
     def _mark(self, outlet_id: str) -> Mark:
-        return self.state(outlet_id).mark
+        standing = self._states.get(outlet_id)
+        return self._marks.get(outlet_id, Mark()) if standing is None else standing.mark
 
     def joints(self, outlet_id: str) -> list[Joint]:
         """Return the joints of an outlet's path that may be moved."""
@@ -516,8 +515,20 @@ _EDITABLE = {table.name: table for table in editing.EDITABLE}
 _DEPENDENT = {name: editing.dependent_stems(name) for name in TABLES}
 
 
-def _rows_of(frame: pd.DataFrame, outlet_id: str) -> list[Row]:
-    return _plain_rows(frame[frame["outlet_id"] == outlet_id])
+class _Rows:
+    """The rows of tables, found by outlet."""
+
+    def __init__(self, frames: Mapping[str, pd.DataFrame]) -> None:
+        self._names = {name: [str(column) for column in frame.columns] for name, frame in frames.items()}
+        self._cells = {name: frame.to_numpy(object) for name, frame in frames.items()}
+        self._places = {name: frame.groupby("outlet_id", sort=False).indices for name, frame in frames.items()}
+
+    def of(self, table: str, outlet_id: str) -> list[Row]:
+        """Return the rows of an outlet, in their order; none where the table has none."""
+        places = self._places[table].get(outlet_id)
+        if places is None:
+            return []
+        return [dict(zip(self._names[table], row, strict=True)) for row in self._cells[table][places].tolist()]
 
 
 def _plain_rows(frame: pd.DataFrame) -> list[Row]:
