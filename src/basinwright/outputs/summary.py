@@ -76,7 +76,7 @@ def show(outcome: Outcome) -> None:
     for name in names:
         grid.add_column(name.replace("_", " "), justify="right")
     for i, outlet_id in enumerate(ids[:_MOST_ROWS]):
-        grid.add_row(escape(str(outlet_id)), *(_figure(columns[name][i]) for name in names))
+        grid.add_row(escape(str(outlet_id)), *(_cell(name, columns[name][i]) for name in names))
     console.print(grid)
     if len(ids) > _MOST_ROWS:
         console.print(f"... and {len(ids) - _MOST_ROWS} more outlets in outlets.csv")
@@ -120,6 +120,11 @@ def _number(value: object) -> float:
 
 def _some(names: list[str]) -> str:
     return ", ".join(names[:8]) + (f" and {len(names) - 8} more" if len(names) > 8 else "")
+
+
+def _cell(name: str, value: object) -> str:
+    """Return a cell of the screen's table: a return period as it was written, other numbers by three figures."""
+    return str(value or "") if name == "exceeded_at_yr" else _figure(value)
 
 
 def _figure(value: object) -> str:
