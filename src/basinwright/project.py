@@ -839,6 +839,11 @@ def _depth_range_conflicts(ranges: Uncertainty, storm: dict[str, Any]) -> Iterat
             continue  # the model names it
         if not low <= used <= high:
             yield f"{key}.{period}", f"the limits do not hold the depth in use, {depths[period]}", "check both"
+    limits = sorted((float(period), *ends) for period, ends in ranges.depths.items() if period in depths)
+    for (_, *common), (years, *rarer) in itertools.pairwise(limits):
+        if rarer[0] < common[0] or rarer[1] < common[1]:
+            what = "a limit is below that of a shorter return period"
+            yield f"{key}.{years:g}", what, "let both limits rise with the return period"
 
 
 def _correlation_conflicts(ranges: Uncertainty) -> Iterator[tuple[str, str, str]]:

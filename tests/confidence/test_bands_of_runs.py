@@ -316,3 +316,10 @@ class TestCapacity:
         rows = read_table(folder, "capacity")
         assert [(row["outlet_id"], row["rank"]) for row in rows] == [("A", "1"), ("off", "")]
         assert rows[1]["verdict"] == "unknown: not computed"
+
+
+def test_an_open_basin_is_not_set_against_the_region(sample):
+    rows = [row for row in read_table(sample, "regional") if row["outlet_id"] == "TC-006"]  # EDGE_TOUCH
+    assert rows
+    assert {row["applicable"] for row in rows} == {"false"}
+    assert all("beyond the terrain" in row["reason"] for row in rows)

@@ -48,6 +48,9 @@ REFUSED = {
     "limits beside the depth": (
         {"depths": {"2": ["3.2 in", "4 in"], "10": ["4 in", "5 in"]}}, "uncertainty.depths.2", "do not hold the depth",
     ),
+    "limits that fall": (
+        {"depths": {"2": ["3 in", "6 in"], "10": ["4 in", "5 in"]}}, "uncertainty.depths.10", "of a shorter return",
+    ),
     "limits reversed": (
         {"depths": {"2": ["4 in", "3 in"], "10": ["4 in", "5 in"]}}, "uncertainty.depths", "empty or reversed",
     ),

@@ -53,6 +53,7 @@ def regional(
     periods = project.storm.periods
     rows: dict[str, list[Any]] = {column.stem: [] for column in REGIONAL.columns}
     outside: dict[int, list[str]] = {}
+    open_ended = flags.raised("EDGE_TOUCH")
     for i, outlet_id in enumerate(ids):
         for equation in equations:
             peak = float(peak_m3s[i, periods.index(equation.period)])
@@ -60,6 +61,8 @@ def regional(
                 continue
             values = {entry: float(known[entry.stem][i]) / entry.factor for entry in equation.exponents}
             reason = _not_applicable(equation, values)
+            if open_ended[i]:
+                reason = "; ".join(filter(None, ["the basin goes on beyond the terrain", reason]))
             usable = all(value > 0 for value in values.values())
             estimate = low = high = np.nan
             if usable:

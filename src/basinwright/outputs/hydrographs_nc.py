@@ -53,7 +53,7 @@ def write_hydrographs(path: Path, tables: Mapping[str, Columns], project: Projec
     path : Path
         The file; one that is there is replaced.
     tables : mapping of str to columns
-        ``outlets`` and ``hydrographs``.
+        ``outlets`` and ``hydrographs``; these must hold at least one series.
     project : Project
         Gives units and name.
     """
@@ -70,9 +70,8 @@ def write_hydrographs(path: Path, tables: Mapping[str, Columns], project: Projec
     with netcdf_file(path, "w", version=2) as file:
         for key, text in {**_ABOUT, "title": f"Design flood hydrographs: {project.project.name}"}.items():
             setattr(file, key, text.encode("utf-8"))
-        # A dimension of length 0 would be one that grows: a run without hydrographs has one empty series.
-        file.createDimension("timeseries", max(begins.size, 1))
-        file.createDimension("obs", max(ids.size, 1))
+        file.createDimension("timeseries", begins.size)
+        file.createDimension("obs", ids.size)
 
         def add(name: str, dimensions: tuple[str, ...], values: NDArray[Any], **attributes: str) -> None:
             variable = file.createVariable(name, values.dtype, dimensions)
@@ -110,8 +109,8 @@ def write_hydrographs(path: Path, tables: Mapping[str, Columns], project: Projec
 
 def _letters(texts: Sequence[str]) -> NDArray[Any]:
     """Return texts as a CF character array, shape (texts, letters), UTF-8 padded with nulls."""
-    packed = np.array([text.encode("utf-8") for text in texts] or [b""])
-    return packed.view("S1").reshape(packed.size, -1)[: len(texts)]
+    packed = np.array([text.encode("utf-8") for text in texts])
+    return packed.view("S1").reshape(packed.size, -1)
 
 
 def _begins(ids: NDArray[Any], periods: NDArray[np.float64]) -> NDArray[np.int64]:

@@ -89,6 +89,11 @@ def show(outcome: Outcome) -> None:
                     console.print(f"    {kind.remedy}", style="dim", highlight=False)
     for name, outlets in outcome.scenarios.items():
         console.print(f"scenario {escape(name)}: {_against(columns, outlets, names[len(_STEMS) :])}", highlight=False)
+        pairs = zip(ids, columns["status"], outlets["status"], strict=True)
+        lost = [str(outlet_id) for outlet_id, before, after in pairs if after == "failed" and before != "failed"]
+        if lost:
+            where = f"scenarios/{name}/flags.csv says why"
+            console.print(f"    not computed: {escape(_some(lost))} ({escape(where)})", style="red", highlight=False)
     status: Counter[str] = Counter(columns["status"])
     console.print(
         f"\n{len(ids)} outlets: {status['ok']} ok, {status['flagged']} flagged, {status['failed']} failed.\n"

@@ -41,8 +41,9 @@ def write_tables(folder: Path, tables: Mapping[str, Columns], project: Project) 
     outlets the hydrographs stand in the netCDF file only (`hydrograph_files`).
     """
     system = project.project.units
-    series = hydrograph_files(len(tables["outlets"]["outlet_id"]))
-    if "hydrographs" in tables:
+    series = hydrograph_files(tables)
+    (folder / hydrographs_nc.FILE).unlink(missing_ok=True)
+    if hydrographs_nc.FILE in series:
         hydrographs_nc.write_hydrographs(folder / hydrographs_nc.FILE, tables, project)
     resources = []
     for table in ALL:
@@ -70,9 +71,13 @@ def write_tables(folder: Path, tables: Mapping[str, Columns], project: Project) 
     (folder / "tables.json").write_text(json.dumps(package, indent=1, ensure_ascii=False) + "\n", encoding="utf-8")
 
 
-def hydrograph_files(outlets: int) -> list[str]:
-    """Return the files in which the hydrographs of a run of so many outlets stand."""
-    return [hydrographs_nc.FILE, *(["hydrographs.csv"] if outlets <= hydrographs_nc.MOST_OUTLETS_IN_CSV else [])]
+def hydrograph_files(tables: Mapping[str, Columns]) -> list[str]:
+    """Return the files in which the hydrographs of a run stand: of one without any, the table with its header alone."""
+    if HYDROGRAPHS.name not in tables:
+        return []
+    some = len(tables[HYDROGRAPHS.name]["outlet_id"]) > 0
+    few = len(tables["outlets"]["outlet_id"]) <= hydrographs_nc.MOST_OUTLETS_IN_CSV
+    return [*([hydrographs_nc.FILE] if some else []), *([f"{HYDROGRAPHS.name}.csv"] if few or not some else [])]
 
 
 def _resource(table: Table, schema: Mapping[str, Any]) -> dict[str, Any]:

@@ -86,7 +86,7 @@ def describe(
         ],  # in the working CRS, in the order of outlets.csv
         "stages": store.described(),
         "summary_only": summary_only,
-        "hydrographs": [] if summary_only else hydrograph_files(len(results.status)),
+        "hydrographs": hydrograph_files(results.tables),
         **_counts(results, scenarios),
         "scheme": {"name": inputs.scheme.name, "classes": inputs.scheme.to_rows()},
         "storm_tables": inputs.design.tables,
