@@ -445,9 +445,11 @@ def basinwright(ground: Ground, mode: str = "breach") -> Routed:
 def pysheds(ground: Ground) -> Routed:
     """Route with pysheds: pits, depressions and flats filled by its own rules."""
     from pyproj import Proj
+    from pysheds import _sgrid
     from pysheds.grid import Grid
     from pysheds.view import Raster, ViewFinder
 
+    _sgrid.count.recompile()  # numba cannot compile callers of a generator that it found in its cache
     if ground.mapped:
         raise NotOfferedError
     z = np.pad(ground.elevation_m, 1, constant_values=np.nan)  # it treats the outermost cells unlike the others

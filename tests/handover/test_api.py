@@ -5,6 +5,7 @@ import importlib.metadata
 import inspect
 import subprocess
 import sys
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -37,6 +38,8 @@ def test_every_public_name_has_an_example_that_runs(name):
     tests = [test for test in doctest.DocTestFinder(recurse=False).find(thing, name, module) if test.examples]
     assert tests, "an example"
     runner = doctest.DocTestRunner(optionflags=doctest.ELLIPSIS)
+    if name == "retime" and not Path("screening").exists():  # the folder that the example of `run` leaves
+        bw.run("basinwright-demo/project.toml", out="screening", summary_only=True)
     for test in tests:
         test.globs = {**vars(module), **{other: getattr(bw, other) for other in bw.__all__}}
         assert runner.run(test).failed == 0
