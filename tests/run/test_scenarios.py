@@ -229,6 +229,18 @@ def test_over_capacity_is_told_by_scenario(tmp_path):
     assert {row["over_capacity"] for row in of(read_table(outcome.folder, "scenarios"), "B")} == {""}
 
 
+def test_no_verdict_where_peaks_fall_in_the_scenario_alone(tmp_path):
+    """A 2-year depth that the outlet layer supplies, under the 10-year depth of the base and over the scenario's."""
+    supplied = {"capacity_m3s": {"A": "1.2"}, "depth_2yr_mm": {"A": "100"}}
+    file, _ = valley(tmp_path, columns=supplied, overrides={"outlets": {"capacity": "capacity_m3s"}})
+    drier = '[[scenario]]\nname = "drier"\nstorm = { depths = { "2" = "60 mm", "10" = "90 mm", "100" = "95 mm" } }\n'
+    outcome = pipeline.run(add(file, drier), summary_only=True)
+    (row,) = of(read_table(outcome.folder / "scenarios" / "drier", "outlets"), "A")
+    assert "PEAKS_FALL" in row["flags"]
+    assert row["exceeded_at_yr"] == "unknown"
+    assert {row["over_capacity"] for row in of(read_table(outcome.folder, "scenarios"), "A")} == {"unknown"}
+
+
 # Edits
 
 

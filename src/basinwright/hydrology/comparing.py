@@ -18,7 +18,9 @@ if TYPE_CHECKING:
 
 SAFE_PCT = 10.0
 """How far area and peaks may move for a cell size to count as safe for screening: as far as AREA_MISMATCH allows."""
-_NO_VERDICT = "EDGE_TOUCH"
+_OPEN = "EDGE_TOUCH"
+_NO_VERDICT = (_OPEN, "PEAKS_FALL")
+"""Doubts with which no capacity verdict is given."""
 _STANDS = ("curve_number", "tc_h")
 """What, where a person or the outlet layer supplied it, is the same in every scenario."""
 
@@ -75,7 +77,7 @@ def _scenario_columns(before: _Outlets, after: _Outlets, period: str) -> dict[st
         columns[f"{stem}_change_h"] = columns[f"{stem}_h"] - columns[f"base_{stem}_h"]
     if "capacity" in before:
         over = _over(before, peak), _over(after, peak)
-        columns["over_capacity"] = np.array([_OVER.get(pair, "") for pair in zip(*over, strict=True)], dtype=object)
+        columns["over_capacity"] = np.array([_told(*pair) for pair in zip(*over, strict=True)], dtype=object)
     return columns
 
 
@@ -84,8 +86,12 @@ _OVER = {
     (False, True): "scenario",
     (True, False): "base",
     (True, True): "both",
-    ("unknown", "unknown"): "unknown",
 }
+
+
+def _told(base: Any, scenario: Any) -> str:
+    """Say which of base and scenario is over the capacity; ``unknown`` where either has no verdict."""
+    return "" if "" in (base, scenario) else _OVER.get((base, scenario), "unknown")
 
 
 def _over(outlets: _Outlets, peak: str) -> list[Any]:
@@ -94,7 +100,10 @@ def _over(outlets: _Outlets, peak: str) -> list[Any]:
     told: list[Any] = (flow > capacity).tolist()
     for i in np.flatnonzero(np.isnan(capacity) | np.isnan(flow)).tolist():
         told[i] = ""
-    return ["unknown" if told[i] != "" and outlets.flagged(i, _NO_VERDICT) else told[i] for i in range(len(told))]
+    return [
+        "unknown" if verdict != "" and any(outlets.flagged(i, key) for key in _NO_VERDICT) else verdict
+        for i, verdict in enumerate(told)
+    ]
 
 
 def cell_sizes_table(base: Columns, sizes: Iterable[tuple[float, Columns]], project: Project) -> Columns:
@@ -207,7 +216,7 @@ def _verdict(
     for outlets, name in ((before, "on the base's cells"), (after, "on these cells")):
         if outlets.columns["status"][i] == "failed":
             return ("not safe" if outlets is after else "unknown"), f"could not be computed {name}"
-        if outlets.flagged(i, _NO_VERDICT):
+        if outlets.flagged(i, _OPEN):
             return "unknown", f"the basin goes on beyond the terrain {name}"
     moved = {stem.replace("_", " "): float(columns[change][i]) for stem, change in changes.items()}
     far = [f"{stem} {pct:+.3g} %" for stem, pct in moved.items() if not abs(pct) <= SAFE_PCT]

@@ -76,6 +76,8 @@ def _told(run: Run, outlet: Outlet, rows: list[dict[str, str]]) -> str:
     for row, drivers in ((rows[-1], _drivers(run, outlet, "rank")), (rows[0], _drivers(run, outlet, "tc_rank"))):
         by = f"; the {drivers[0]} moves it most{f', then the {drivers[1]}' if drivers[1:] else ''}" if drivers else ""
         sentences.append(f"{row['name'].capitalize()}: {row['p05']} to {row['p95']} {row['unit']}{by}.")
+    if outlet.open_ended:
+        sentences.append("All of this is of the part of the basin on the terrain: it goes on beyond.")
     return " ".join(sentences)
 
 
